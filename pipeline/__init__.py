@@ -1,0 +1,37 @@
+"""Patchwalk: a big spin glass solved through small clusters, each handed to a swappable subsolver.
+
+The public names are imported when they are first used, so that ``import patchwalk`` costs nothing.
+"""
+
+from __future__ import annotations
+
+import importlib
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from patchwalk.commands.solving import Solution, solve
+    from patchwalk.problem.families import make
+    from patchwalk.problem.files import read_problem, write_problem
+    from patchwalk.problem.ising import Problem, ProblemError
+
+_HOMES = {
+    "Problem": "patchwalk.problem.ising",
+    "ProblemError": "patchwalk.problem.ising",
+    "Solution": "patchwalk.commands.solving",
+    "make": "patchwalk.problem.families",
+    "read_problem": "patchwalk.problem.files",
+    "solve": "patchwalk.commands.solving",
+    "write_problem": "patchwalk.problem.files",
+}
+
+__all__ = ["Problem", "ProblemError", "Solution", "make", "read_problem", "solve", "write_problem"]
+
+
+def __getattr__(name: str) -> Any:
+    if name in _HOMES:
+        return getattr(importlib.import_module(_HOMES[name]), name)
+    raise AttributeError(f"module 'patchwalk' has no attribute {name!r}")
+
+
+def __dir__() -> list[str]:
+    return sorted([*globals(), *_HOMES])

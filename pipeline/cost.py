@@ -1,0 +1,36 @@
+"""Fixed prices of counted work: what decisions rest on, so that no decision ever rests on the clock.
+
+The prices are round figures in seconds for one core of a present-day machine, computed here with
+``tests/bench/bench_prices.py``. They need only be right within a factor of a few: they cut batches into slices and
+say which calls are dear enough to be recorded one by one.
+"""
+
+from __future__ import annotations
+
+import numpy as np
+
+from patchwalk.subsolvers.contract import F64, Work
+
+PRICES = {
+    "amplitude_updates": 1.5e-9,
+    "spin_updates": 8e-9,
+    "energies": 1.5e-9,
+    "table_entries": 2e-9,
+}
+"""Seconds per counted unit."""
+
+DEAR_SECONDS = 4e-6
+"""A call at this price or above has a row of its own in the run file; cheaper ones a seeded share and exact tallies."""
+
+SLICE_SECONDS = 1.0
+"""A slice of a batch is meant to last no longer than this, or one call."""
+
+
+def priced(work: Work, rows: int) -> F64:
+    """Seconds (rows,) that each call's counted work costs at the fixed prices."""
+    seconds = np.zeros(rows)
+    for name, price in PRICES.items():
+        counted = getattr(work, name)
+        if counted is not None:
+            seconds += price * counted
+    return seconds

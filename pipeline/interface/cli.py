@@ -1,0 +1,84 @@
+"""The command line: ``patchwalk COMMAND``. A command is imported only when asked for, so that help is instant."""
+
+from __future__ import annotations
+
+import importlib
+import json
+import sys
+from typing import Any
+
+import click
+
+COMMANDS = {
+    "solve": ("patchwalk.interface.solve_options:solve_command", "Search for the lowest energy of a problem."),
+    "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
+}
+
+
+class LateGroup(click.Group):
+    """A group that knows its commands' names and one-line help without importing them."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:  # noqa: ARG002 - the signature is click's
+        return list(COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:  # noqa: ARG002
+        if cmd_name not in COMMANDS:
+            return None
+        module, _, attribute = COMMANDS[cmd_name][0].partition(":")
+        command: click.Command = getattr(importlib.import_module(module), attribute)
+        return command
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:  # noqa: ARG002
+        with formatter.section("Commands"):
+            formatter.write_dl([(name, help_text) for name, (_, help_text) in COMMANDS.items()])
+
+
+@click.group(cls=LateGroup, context_settings={"help_option_names": ["-h", "--help"]})
+@click.version_option(package_name="patchwalk", message="patchwalk %(version)s")
+def program() -> None:
+    """Solve big spin glasses through small clusters, each answered by a swappable subsolver.
+
+    \b
+    patchwalk make lattice2d --size 16 -o glass.txt
+    patchwalk solve glass.txt --subsolver walk --cluster-size 10 --calls 500
+    patchwalk solve configs/quillmere.toml
+    """
+
+
+def exit_code(error: Exception) -> int | None:
+    """The exit code that tells what kind of mistake this was; None for one that is ours."""
+    from patchwalk.evidence.runfile import RunFileError
+    from patchwalk.problem.ising import ProblemError
+    from patchwalk.settings import SettingsError
+    from patchwalk.subsolvers.registry import SubsolverError
+
+    codes: dict[type[Exception], int] = {
+        SettingsError: 2,
+        SubsolverError: 2,
+        ProblemError: 3,
+        MemoryError: 4,
+        RunFileError: 1,
+    }
+    return next((code for kind, code in codes.items() if isinstance(error, kind)), None)
+
+
+def fail(error: Exception, as_json: bool) -> None:
+    """Say what went wrong, on standard error and as JSON where that was asked for, and leave with its exit code."""
+    code = exit_code(error)
+    if code is None:
+        raise error
+    for line in str(error).splitlines():
+        click.echo(f"patchwalk: {line}", err=True)
+    if as_json:
+        print_json({"status": "error", "message": str(error)})
+    sys.exit(code)
+
+
+def print_json(value: dict[str, Any]) -> None:
+    """One JSON object on standard output."""
+    click.echo(json.dumps(value, allow_nan=False))
+
+
+def main() -> None:
+    """The console script."""
+    program()

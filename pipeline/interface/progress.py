@@ -1,0 +1,103 @@
+"""How a run shows itself: a table that grows slowly, on standard error, and on a terminal a live last line.
+
+Nothing but the result ever goes to standard output.
+"""
+
+from __future__ import annotations
+
+import time
+
+from rich.console import Console
+from rich.live import Live
+from rich.text import Text
+
+from patchwalk.problem.ising import Problem
+from patchwalk.records import Round
+from patchwalk.search.neighbourhood import NeighbourhoodSearch
+from patchwalk.subsolvers.registry import spelled
+
+COLUMNS = (("time", 8), ("calls", 10), ("sweeps", 10), ("temperature", 12), ("{now}", 15), ("{best}", 15),
+           ("acceptance", 11), ("found by", 10))  # fmt: skip
+LIVE_SECONDS = 0.2
+SLOWEST_LINE_SECONDS = 60.0
+
+
+class Narrator:
+    """Tells a person at a terminal, or a log file, how a solve is going."""
+
+    def __init__(self, quiet: bool = False) -> None:
+        self._console = Console(stderr=True, highlight=False, quiet=quiet)
+        self._live: Live | None = None
+        self._finder = "start"
+
+    def understood(self, lines: list[str]) -> None:
+        for line in lines:
+            self._say(line)
+
+    def compiling(self) -> None:
+        self._compile_note = time.perf_counter()
+        if self._console.is_terminal:
+            self._live = Live(Text("compiling ...", style="dim"), console=self._console, transient=True)
+            self._live.start()
+        else:
+            self._say("compiling (the first time takes seconds, later runs find it done) ...")
+
+    def compiled(self, seconds: float) -> None:
+        self._stop_live()
+        self._say(f"compiled and prepared in {seconds:.1f} s, which no budget counts")
+
+    def began(self, problem: Problem, seed: int, start_energy: float | None) -> None:
+        self._problem, self._finder = problem, "start"
+        self._calls_seen = self._accepted = 0
+        self._next_line, self._next_live = 0.0, 0.0
+        self._say(f"seed {seed}")
+        if start_energy is not None:
+            word = problem.objective_name
+            self._say(f"start accepted, {word} {problem.objective(start_energy):,.6g}")
+        self._say(self._header())
+        if self._console.is_terminal:
+            self._live = Live(console=self._console, auto_refresh=False, transient=True)
+            self._live.start()
+
+    def moved(self, search: NeighbourhoodSearch, round_: Round) -> None:
+        if round_.improvements:
+            self._finder = round_.improvements[-1].finder
+        for calls in round_.calls:
+            self._calls_seen += len(calls)
+            self._accepted += int(calls.accepted.sum())
+        now = search.elapsed
+        if now >= self._next_line:
+            self._next_line = now + min(SLOWEST_LINE_SECONDS, max(1.0, now))
+            self._say(self._line(search, round_.temperature))
+            self._calls_seen = self._accepted = 0
+        if self._live is not None and now >= self._next_live:
+            self._next_live = now + LIVE_SECONDS
+            self._live.update(Text(self._line(search, round_.temperature), style="bold"), refresh=True)
+
+    def stopping(self) -> None:
+        self._say("stopping after the slice in flight; Ctrl-C once more stops at once")
+
+    def ended(self, search: NeighbourhoodSearch) -> None:
+        self._stop_live()
+        self._say(f"{spelled(search.subsolver)}: {search.message}")
+
+    def _header(self) -> str:
+        word = self._problem.objective_name
+        return "".join(f"{name.format(now=word, best=f'best {word}'):>{width}}" for name, width in COLUMNS)
+
+    def _line(self, search: NeighbourhoodSearch, temperature: float) -> str:
+        objective = search.problem.objective
+        share = f"{100 * self._accepted / self._calls_seen:.1f} %" if self._calls_seen else "-"
+        cells = (
+            f"{search.elapsed:.1f} s", f"{search.calls:,}", f"{search.sweeps:,}", f"{temperature:.4g}",
+            f"{objective(search.energy):,.8g}", f"{objective(search.best_energy):,.8g}", share, self._finder,
+        )  # fmt: skip
+        return "".join(f"{cell:>{width}}" for cell, (_, width) in zip(cells, COLUMNS, strict=True))
+
+    def _say(self, line: str) -> None:
+        self._console.print(line, markup=False, soft_wrap=True)
+
+    def _stop_live(self) -> None:
+        if self._live is not None:
+            self._live.stop()
+            self._live = None

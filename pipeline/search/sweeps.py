@@ -1,0 +1,87 @@
+"""Single-spin Metropolis sweeps over the whole problem: the classical carrier between cluster calls.
+
+Local fields are carried along, so that a refused flip costs one comparison and an accepted one a walk over the
+spin's neighbours. Metropolis et al., J. Chem. Phys. 21 (1953) 1087.
+"""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import numpy.typing as npt
+
+from patchwalk.subsolvers.compiled import compiled
+from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
+from patchwalk.subsolvers.draws import next_unit
+
+
+@compiled
+def flip(spin: int, row_starts: I64, neighbours: I32, couplings: F64, spins: I8, local_fields: F64) -> None:
+    """Turn one spin over and bring its neighbours' local fields up to date."""
+    spins[spin] = -spins[spin]
+    turned = 2.0 * spins[spin]
+    for edge in range(row_starts[spin], row_starts[spin + 1]):
+        local_fields[neighbours[edge]] += turned * couplings[edge]
+
+
+@compiled
+def metropolis_sweep(
+    row_starts: I64,
+    neighbours: I32,
+    couplings: F64,
+    spins: I8,
+    local_fields: F64,
+    temperature: float,
+    stream: U64,
+) -> float:
+    """One sweep over all spins in order, in place; returns the energy change.
+
+    Where a flip leaves the energy as it is, it is made; at temperature zero no flip that raises it is.
+    """
+    change = 0.0
+    hopeless = 40.0 * temperature  # exp(-40) is below any chance worth a random number
+    for spin in range(len(spins)):
+        rise = -2.0 * spins[spin] * local_fields[spin]
+        if rise > 0.0 and (rise >= hopeless or next_unit(stream) >= math.exp(-rise / temperature)):
+            continue
+        change += rise
+        flip(spin, row_starts, neighbours, couplings, spins, local_fields)
+    return change
+
+
+@compiled
+def descend(row_starts: I64, neighbours: I32, couplings: F64, spins: I8, local_fields: F64, tolerance: float) -> float:
+    """Flip spins in order while any flip lowers the energy by more than ``tolerance``; returns the energy change."""
+    change = 0.0
+    moving = True
+    while moving:
+        moving = False
+        for spin in range(len(spins)):
+            rise = -2.0 * spins[spin] * local_fields[spin]
+            if rise < -tolerance:
+                change += rise
+                flip(spin, row_starts, neighbours, couplings, spins, local_fields)
+                moving = True
+    return change
+
+
+@compiled
+def flip_accepted(
+    row_starts: I64,
+    neighbours: I32,
+    couplings: F64,
+    spins: I8,
+    local_fields: F64,
+    members: I32,
+    outcomes: I8,
+    chosen: I64,
+    accepted: npt.NDArray[np.bool_],
+) -> None:
+    """Put the chosen outcomes (B, m, k) of all accepted calls into the configuration."""
+    for row in range(len(members)):
+        if not accepted[row]:
+            continue
+        for i in range(members.shape[1]):
+            if spins[members[row, i]] != outcomes[row, chosen[row], i]:
+                flip(members[row, i], row_starts, neighbours, couplings, spins, local_fields)
