@@ -70,7 +70,7 @@ def _address(context: Any, builder: Any, array_type: Any, array: Any, index: Any
 
 
 @_instruction
-def load(_typing: Any, array: Any, index: Any) -> Any:
+def load(_typing: Any, array: Any, _index: Any) -> Any:
     """The block array[index : index + WIDTH]. Bounds are not checked; a multiple of 64 bytes is the fast place."""
     _require_array(array)
 
@@ -81,7 +81,7 @@ def load(_typing: Any, array: Any, index: Any) -> Any:
 
 
 @_instruction
-def store(_typing: Any, array: Any, index: Any, block: Any) -> Any:
+def store(_typing: Any, array: Any, _index: Any, block: Any) -> Any:
     """Write a block to array[index : index + WIDTH]."""
     _require_array(array)
 

@@ -30,6 +30,9 @@ from patchwalk.subsolvers.contract import (
 from patchwalk.subsolvers.draws import next_unit
 from patchwalk.subsolvers.uniform import require_shots
 
+TIE_CHANCE = 0.9
+"""A flip that leaves the energy as it is gets made this often; always, and domain walls would travel with the sweep."""
+
 
 @dataclass(frozen=True)
 class Metropolis:
@@ -159,7 +162,10 @@ def _sweep(
     """One Metropolis sweep in place; ``local`` holds h_i + sum_j J_ij s_j and is kept up to date."""
     for i in range(len(chain)):
         rise = -2.0 * chain[i] * local[i]
-        if rise <= 0.0 or (temperature > 0.0 and next_unit(stream) < np.exp(-rise / temperature)):
-            chain[i] = -chain[i]
-            for place in range(starts[i], starts[i + 1]):
-                local[neighbours[place]] += 2.0 * strengths[place] * chain[i]
+        if rise >= 0.0:
+            chance = TIE_CHANCE if rise == 0.0 else np.exp(-rise / temperature)
+            if next_unit(stream) >= chance:
+                continue
+        chain[i] = -chain[i]
+        for place in range(starts[i], starts[i + 1]):
+            local[neighbours[place]] += 2.0 * strengths[place] * chain[i]

@@ -1,0 +1,121 @@
+"""Clusters do not touch, have the size asked for, and conditioned on the rest they tell energy changes exactly."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from patchwalk.clusters.conditioning import condition
+from patchwalk.clusters.rules import RULES, Marks, cluster_rule
+from patchwalk.problem.families import make
+from patchwalk.problem.ising import Problem
+from patchwalk.subsolvers.contract import I8, I32, ClusterBatch
+
+
+def random_problem(size: int, degree: float, seed: int) -> Problem:
+    """A random graph with Gaussian couplings and fields."""
+    rng = np.random.default_rng(seed)
+    count = int(size * degree / 2)
+    heads, tails = rng.integers(0, size, (2, count))
+    apart = heads != tails
+    return Problem.from_arrays(
+        heads[apart], tails[apart], rng.normal(size=int(apart.sum())), size=size, fields=rng.normal(size=size), offset=2.5
+    )  # fmt: skip
+
+
+def conditioned(problem: Problem, members: I32, spins: I8) -> ClusterBatch:
+    places = np.full(len(problem), -1, np.int32)
+    batch = condition(
+        problem, members, spins, problem.local_fields(spins), 1.0, np.arange(len(members), dtype=np.uint64), places
+    )
+    assert np.all(places == -1), "the scratch is left as it was found"
+    return batch
+
+
+def cluster_energy(batch: ClusterBatch, row: int, spins: I8) -> float:
+    """The cluster's own energy, from either form of its couplings."""
+    energy = float(batch.fields[row] @ spins)
+    if batch.couplings is not None:
+        return energy + 0.5 * float(spins @ batch.couplings[row] @ spins)
+    assert batch.edges is not None
+    own = batch.edges.rows(row, row + 1)
+    return energy + float((own.weights * spins[own.pairs[:, 0]] * spins[own.pairs[:, 1]]).sum())
+
+
+@pytest.mark.parametrize("rule", sorted(RULES))
+@pytest.mark.parametrize(
+    ("problem", "size"),
+    [
+        (make("lattice2d", 20, seed=1), 10),
+        (make("lattice3d", 6, seed=1), 7),
+        (make("sk", 40, seed=1), 12),
+        (random_problem(200, 1.2, 3), 9),
+        (random_problem(30, 0.0, 3), 5),
+    ],
+    ids=["square", "cubic", "dense", "many components", "no couplings"],
+)
+def test_clusters_of_a_round_do_not_touch(rule: str, problem: Problem, size: int) -> None:
+    marks = Marks.for_problem(problem)
+    for seed in range(30):
+        members = cluster_rule(rule).pick(problem, size, 64, seed, marks)
+        assert members.shape[1] == size
+        assert 1 <= len(members) <= max(1, len(problem) // size)
+        assert np.all(np.diff(members, axis=1) > 0), "members rise, so none occurs twice"
+        owner = np.full(len(problem), -1)
+        for row, cluster in enumerate(members):
+            assert np.all(owner[cluster] == -1)
+            owner[cluster] = row
+        rows = np.repeat(np.arange(len(problem)), np.diff(problem.row_starts))
+        ends = owner[rows], owner[problem.neighbours]
+        assert not np.any((ends[0] >= 0) & (ends[1] >= 0) & (ends[0] != ends[1]))
+
+
+@pytest.mark.parametrize("rule", sorted(RULES))
+def test_rules_are_seeded_and_know_no_history(rule: str) -> None:
+    problem, marks = make("lattice2d", 12, seed=1), None
+    first = cluster_rule(rule).pick(problem, 8, 16, 7, Marks.for_problem(problem))
+    marks = Marks.for_problem(problem)
+    for seed in range(5):
+        cluster_rule(rule).pick(problem, 8, 16, seed, marks)
+    assert np.array_equal(cluster_rule(rule).pick(problem, 8, 16, 7, marks), first)
+    assert not np.array_equal(cluster_rule(rule).pick(problem, 8, 16, 8, marks), first)
+
+
+@pytest.mark.parametrize("rule", sorted(RULES))
+def test_the_whole_problem_can_be_one_cluster(rule: str) -> None:
+    problem = random_problem(15, 1.0, 2)
+    members = cluster_rule(rule).pick(problem, 15, 64, 1, Marks.for_problem(problem))
+    assert members.tolist() == [list(range(15))]
+
+
+def test_a_ball_is_connected_and_every_spin_gets_its_turn() -> None:
+    problem, marks = make("lattice2d", 10, seed=1), None
+    marks = Marks.for_problem(problem)
+    seen = np.zeros(len(problem), int)
+    for seed in range(300):
+        members = cluster_rule("ball").pick(problem, 9, 1, seed, marks)
+        inside = problem.matrix[members[0]][:, members[0]]
+        reached = np.linalg.matrix_power(np.abs(inside.toarray()) + np.eye(9), 9)
+        assert np.all(reached > 0)
+        seen[members[0]] += 1
+    assert seen.min() > 5
+
+
+@settings(max_examples=60, deadline=None)
+@given(st.integers(0, 10**6), st.sampled_from([3, 8, 30, 70]), st.sampled_from([1.5, 6.0, 60.0]), st.data())
+def test_cluster_changes_are_changes_of_the_whole(seed: int, size: int, degree: float, data: st.DataObject) -> None:
+    problem = random_problem(80, degree, seed % 50)
+    rng = np.random.default_rng(seed)
+    spins = rng.choice(np.array([-1, 1], np.int8), len(problem))
+    rule = data.draw(st.sampled_from(sorted(RULES)))
+    members = cluster_rule(rule).pick(problem, size, 4, seed, Marks.for_problem(problem))
+    batch = conditioned(problem, members, spins)
+    assert (batch.couplings is None) == (size > 64)
+    for row, cluster in enumerate(members):
+        assert np.array_equal(batch.spins[row], spins[cluster])
+        flipped = spins.copy()
+        flipped[cluster] = rng.choice(np.array([-1, 1], np.int8), size)
+        inside = cluster_energy(batch, row, flipped[cluster]) - cluster_energy(batch, row, spins[cluster])
+        assert inside == pytest.approx(problem.energy(flipped) - problem.energy(spins), abs=1e-10)

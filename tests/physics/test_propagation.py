@@ -1,0 +1,209 @@
+"""Quantum evolution under the transverse field is exact, whatever the diagonal, the start and the measuring times."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import numpy.typing as npt
+import pytest
+from scipy.linalg import expm
+from scipy.sparse import csr_array, diags_array
+from scipy.sparse.linalg import expm_multiply
+
+from patchwalk.subsolvers.contract import F64
+from patchwalk.subsolvers.propagate import evolve, expected_applications, times_together, walk_law
+
+UNORDERED_TIMES = np.array([2.9, 0.0, 7.3, 1e-12, 0.4])
+
+
+def single_flips(size: int) -> csr_array:
+    """The matrix sum_i X_i on ``size`` configurations."""
+    numbers = np.arange(size)
+    flips = [numbers ^ (1 << bit) for bit in range(size.bit_length() - 1)]
+    rows = np.tile(numbers, len(flips))
+    return csr_array((np.ones(len(rows)), (rows, np.concatenate(flips))), shape=(size, size))
+
+
+def starting_vector(size: int, start: int | None) -> F64:
+    if start is None:
+        return np.full(size, size**-0.5)
+    return np.eye(1, size, start)[0]
+
+
+def law_of(diagonal: F64, hopping: float, times: F64, start: int = -1) -> F64:
+    law = np.empty((len(times), len(diagonal)))
+    walk_law(diagonal, hopping, start, times, law)
+    return law
+
+
+def distances(size: int, target: int) -> npt.NDArray[np.uint8]:
+    """Hamming distance of every configuration from ``target``."""
+    return np.bitwise_count(np.arange(size) ^ target)
+
+
+@pytest.mark.parametrize("spins", range(1, 9))
+def test_amplitudes_are_those_of_the_matrix_exponential(spins: int) -> None:
+    size = 1 << spins
+    draw = np.random.default_rng(spins)
+    for width, centre, hopping in ((1.0, 0.0, 0.7), (4.0, 5.0, 0.3), (0.2, -2.0, 1.5)):
+        diagonal = centre + width * draw.normal(size=size)
+        matrix = np.diag(diagonal) - hopping * single_flips(size).toarray()
+        exponentials = [expm(-1j * time * matrix) for time in UNORDERED_TIMES]
+        for start in (None, int(draw.integers(size))):
+            expected = [exponential @ starting_vector(size, start) for exponential in exponentials]
+            amplitudes = evolve(diagonal, hopping, UNORDERED_TIMES, start)
+            np.testing.assert_allclose(amplitudes, expected, rtol=0, atol=1e-9)
+            law = law_of(diagonal, hopping, UNORDERED_TIMES, -1 if start is None else start)
+            variation = 0.5 * np.abs(law - np.abs(expected) ** 2).sum(axis=1)
+            assert variation.max() < 1e-10
+
+
+def test_twelve_spins_against_sparse_exponential() -> None:
+    spins, hopping, time = 12, 0.4, 9.0
+    size = 1 << spins
+    diagonal = np.random.default_rng(3).normal(size=size) * 3.0
+    generator = -1j * (diags_array(diagonal) - hopping * single_flips(size))
+    for start in (None, 77):
+        vector = starting_vector(size, start).astype(complex)
+        expected = expm_multiply(time * generator, vector, traceA=-1j * time * diagonal.sum())
+        np.testing.assert_allclose(evolve(diagonal, hopping, time, start)[0], expected, rtol=0, atol=1e-11)
+
+
+@pytest.mark.parametrize("spins", [1, 2, 4, 5, 6, 7, 10, 13])
+def test_free_walk_has_its_closed_form(spins: int) -> None:
+    """Amplitude cos(t)^(n-d) (i sin t)^d at Hamming distance d: Moore & Russell, RANDOM 2002."""
+    size, start = 1 << spins, (1 << spins) // 3
+    times = np.array([0.3, math.pi / 4, math.pi / 2, 11.0, 40.0])
+    apart = distances(size, start).astype(int)
+    amplitudes = evolve(np.zeros(size), 1.0, times, start)
+    for row, time in enumerate(times):
+        expected = math.cos(time) ** (spins - apart) * (1j * math.sin(time)) ** apart
+        np.testing.assert_allclose(amplitudes[row], expected, rtol=0, atol=1e-12)
+    np.testing.assert_allclose(np.abs(amplitudes[1]) ** 2, 1 / size, rtol=0, atol=1e-12)
+    assert abs(amplitudes[2, size - 1 - start]) ** 2 == pytest.approx(1.0, abs=1e-12)
+
+
+def test_times_that_do_not_fit_in_one_recursion() -> None:
+    """The closed form once more, where the sums of all times together would take too much memory."""
+    spins = 20
+    times = np.linspace(1.0, 0.2, 9)
+    assert times_together(spins, len(times)) < len(times)
+    law = law_of(np.zeros(1 << spins), 1.0, times, start=1)
+    apart = distances(1 << spins, 1).astype(int)
+    for row, time in enumerate(times):
+        by_distance = math.cos(time) ** (2 * (spins - np.arange(spins + 1))) * math.sin(time) ** (
+            2 * np.arange(spins + 1)
+        )
+        assert 0.5 * np.abs(law[row] - by_distance[apart]).sum() < 1e-12
+
+
+def search_law(spins: int, hopping: float, times: F64) -> F64:
+    """Probability of the marked configuration under H = hopping (n - sum X) - P_marked, from the uniform start."""
+    marked = 5
+    diagonal = np.full(1 << spins, hopping * spins)
+    diagonal[marked] -= 1.0
+    return law_of(diagonal, hopping, times)[:, marked]
+
+
+def search_hopping(spins: int) -> float:
+    return sum(math.comb(spins, r) / (2 * r) for r in range(1, spins + 1)) / 2**spins
+
+
+@pytest.mark.parametrize(
+    ("spins", "hopping", "success", "peak"),
+    [(8, 0.1470726, 0.7546, 27.5), (10, 0.1144429, 0.8122, 55.0), (12, 0.0929834, 0.8414, 108.1)],
+)
+def test_search_on_the_hypercube(spins: int, hopping: float, success: float, peak: float) -> None:
+    """Childs & Goldstone, Phys. Rev. A 70 (2004) 022314."""
+    assert search_hopping(spins) == pytest.approx(hopping, abs=1e-7)
+    times = np.arange(0.7 * peak, 1.3 * peak, 0.05)
+    found = search_law(spins, search_hopping(spins), times)
+    assert found.max() == pytest.approx(success, abs=1e-4)
+    assert times[found.argmax()] == pytest.approx(peak, abs=0.1)
+
+
+def test_search_fails_under_the_other_convention_of_the_hopping_rate() -> None:
+    """The same source: without the 1/2, gamma belongs to the driver (1 - X)/2."""
+    found = search_law(12, 2 * search_hopping(12), np.linspace(0.0, 220.0, 600))
+    assert found.max() < 0.003
+
+
+@pytest.mark.parametrize("spins", [3, 7, 11])
+def test_probability_is_kept(spins: int) -> None:
+    diagonal = np.random.default_rng(spins).normal(size=1 << spins) * 2.0
+    for start in (-1, 2):
+        law = law_of(diagonal, 0.5, np.array([0.0, 1.0, 30.0, 150.0]), start)
+        assert law.min() >= 0.0
+        np.testing.assert_allclose(law.sum(axis=1), 1.0, rtol=0, atol=1e-12)
+
+
+@pytest.mark.parametrize("spins", [2, 6, 9])
+@pytest.mark.parametrize("factor", [2.0**20, 2.0**-20])
+def test_a_power_of_two_changes_no_bit(spins: int, factor: float) -> None:
+    draw = np.random.default_rng(spins)
+    diagonal, hopping = draw.normal(size=1 << spins), draw.uniform()
+    for start in (-1, 3):
+        plain = law_of(diagonal, hopping, UNORDERED_TIMES, start)
+        scaled = law_of(factor * diagonal, factor * hopping, UNORDERED_TIMES / factor, start)
+        np.testing.assert_array_equal(plain, scaled)
+
+
+@pytest.mark.parametrize("spins", [4, 10])
+def test_times_share_a_recursion_without_touching_each_other(spins: int) -> None:
+    diagonal = np.random.default_rng(spins).normal(size=1 << spins)
+    together = law_of(diagonal, 0.6, UNORDERED_TIMES)
+    for row in range(len(UNORDERED_TIMES)):
+        alone = law_of(diagonal, 0.6, UNORDERED_TIMES[row : row + 1])
+        np.testing.assert_allclose(together[row], alone[0], rtol=0, atol=1e-12)
+
+
+def test_going_back_in_time_returns_to_the_start() -> None:
+    diagonal = np.random.default_rng(1).normal(size=256)
+    forward, backward = evolve(diagonal, 0.5, [4.0, -4.0], start=9)
+    np.testing.assert_allclose(backward, forward.conj(), rtol=0, atol=1e-13)
+    assert np.abs(forward.imag).max() > 0.01
+
+
+@pytest.mark.parametrize("spins", [3, 8])
+def test_nothing_moves_without_hopping(spins: int) -> None:
+    diagonal = np.random.default_rng(1).normal(size=1 << spins)
+    for levels in (diagonal, np.full(1 << spins, 0.7)):
+        amplitudes = evolve(levels, 0.0, [0.0, 5.0])
+        expected = np.exp(-1j * np.outer([0.0, 5.0], levels)) / math.sqrt(1 << spins)
+        np.testing.assert_allclose(amplitudes, expected, rtol=0, atol=1e-13)
+
+
+def test_work_is_forecast_from_the_span_alone() -> None:
+    draw = np.random.default_rng(4)
+    for spins in (2, 6, 9):
+        diagonal = np.ascontiguousarray(draw.normal(size=1 << spins))
+        law = np.empty((3, 1 << spins))
+        counted = walk_law(diagonal, 0.3, -1, np.array([2.0, 25.0, 0.0]), law)
+        assert counted == expected_applications(float(np.ptp(diagonal)), spins, 0.3, 25.0)
+
+
+def test_read_only_diagonals_are_accepted() -> None:
+    diagonal = np.random.default_rng(2).normal(size=64)
+    expected = law_of(diagonal, 0.5, UNORDERED_TIMES)
+    diagonal.flags.writeable = False
+    np.testing.assert_array_equal(law_of(diagonal, 0.5, UNORDERED_TIMES), expected)
+
+
+@pytest.mark.parametrize(
+    ("arguments", "sentence"),
+    [
+        (([0.0, 1.0, 2.0], 1.0, 1.0, None), "one entry for each of 2, 4, 8"),
+        (([0.0, math.nan], 1.0, 1.0, None), "diagonal holds nan"),
+        (([0.0, 1.0], math.inf, 1.0, None), "hopping holds nan"),
+        (([0.0, 1.0], 1.0, [0.0, math.inf], None), "times holds nan"),
+        (([0.0, 1.0], 1.0, [], None), "times has shape"),
+        (([0.0, 1.0], 1.0, 1.0, 2), "from 0 to 1"),
+        (([0.0, 1.0], 1.0, 1.0, -1), "from 0 to 1"),
+    ],
+)
+def test_unusable_input_is_named(
+    arguments: tuple[npt.ArrayLike, float, npt.ArrayLike, int | None], sentence: str
+) -> None:
+    with pytest.raises(ValueError, match=sentence):
+        evolve(*arguments)
