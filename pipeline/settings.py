@@ -66,7 +66,7 @@ class SolveSettings(BaseModel):
     clusters_per_round: int = Field(
         64, ge=1, le=65536, description="At most this many clusters a round, no two of which touch."
     )
-    sweeps: int = Field(1, ge=0, description="Metropolis sweeps of the whole problem after each round; 0 for none.")
+    sweeps: int = Field(2, ge=0, description="Metropolis sweeps of the whole problem after each round; 0 for none.")
     seconds: float | None = Field(
         None, gt=0, allow_inf_nan=False,
         description=f"Stop after so many seconds, compiling apart; {DEFAULT_SECONDS:g} where no other budget is given.",
@@ -94,7 +94,7 @@ class SolveSettings(BaseModel):
         "auto (all, unless a call is very cheap).",
     )
     hot: float = Field(
-        0.7, ge=0, allow_inf_nan=False, description="Temperature at the beginning, in units of the typical local field."
+        0.5, ge=0, allow_inf_nan=False, description="Temperature at the beginning, in units of the typical local field."
     )  # fmt: skip
     cold: float = Field(0.07, ge=0, allow_inf_nan=False, description="Temperature at the end, in the same units.")
     failures: int = Field(100, ge=1, description="Give up after so many failed calls in a row.")
@@ -156,8 +156,11 @@ def checked_settings(
 
     Raises :class:`SettingsError` with every complaint at once.
     """
+    rivals = {"seed": "seeds", "seeds": "seed"}
+    overridden = {rivals[key] for key in given if key in rivals}
+    kept = {key: value for key, value in table.items() if key not in overridden}
     try:
-        return SolveSettings.model_validate({**table, **given})
+        return SolveSettings.model_validate({**kept, **given})
     except ValidationError as error:
         complaints = []
         for detail in error.errors():

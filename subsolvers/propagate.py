@@ -7,10 +7,11 @@ Chebyshev propagation (Tal-Ezer & Kosloff, J. Chem. Phys. 81 (1984) 3967). With 
 
 H and the start are real, and so are the vectors ``T_m |start>``: the even ones add up to the real part, the odd ones
 to the imaginary part, and any number of measuring times are sums over the same vectors. Two vectors are held, each
-overwritten by the next but one; every second pair of passes adds four of them to the sums while they are in registers.
+overwritten by the next but one. Of every four passes the last two add two vectors each to the sums, while these are
+in registers anyway. Only ``_advanced`` and ``_advance_few`` know that the moving part of H flips single spins.
 
-Every decision rests on this diagonal, hopping and list of times alone, and on products that a common power of two
-leaves unchanged to the last bit.
+Every decision rests on this diagonal, hopping and list of times alone, through products that a common power of two
+leaves unchanged to the last bit. A measuring time is answered with the same bits whatever other times are asked for.
 """
 
 from __future__ import annotations
@@ -22,13 +23,13 @@ import numpy.typing as npt
 
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I64
-from patchwalk.subsolvers.lanes import WIDTH, Block, add, fma, fms, load, splat, store, swap
+from patchwalk.subsolvers.lanes import CACHE_LINE, WIDTH, Block, add, fma, fms, load, prefetch, splat, store, swap
 
 UNIFORM = -1
 """The ``start`` that stands for the uniform superposition."""
 
-NEGLECTED = 32.0
-"""The series ends where its Bessel functions have fallen below exp(-NEGLECTED), about 1e-14."""
+NEGLECTED = 28.0
+"""The series ends where its Bessel functions have fallen below exp(-NEGLECTED), about 1e-12, by a generous bound."""
 
 VANISHED = 74.0
 """The downward recurrence for the Bessel functions begins where they have fallen below exp(-VANISHED)."""
@@ -39,16 +40,13 @@ TINY_ARGUMENT = 1e-9
 SUMS_BYTES = 1 << 27
 """Memory for the sums of one recursion; more measuring times than fit are split over several recursions."""
 
-LINE = 8
-"""Doubles in a cache line, which is also the widest register."""
-
 
 @compiled
 def _order_reaching(x: float, decay: float) -> int:
     """An order beyond ``x`` from which on J_n(x) < exp(-decay).
 
     Debye's bound: J_n(x) < exp(-n (a - tanh a)) where n = x cosh a. The exponent is convex in n, so that Newton's
-    iteration, begun on the right, comes down to the root without passing it.
+    iteration steps to the right of the root at once, and from there comes down without passing it.
     """
     if x <= TINY_ARGUMENT:
         return 2
@@ -57,14 +55,14 @@ def _order_reaching(x: float, decay: float) -> int:
         angle = math.acosh(order / x)
         step = (order * angle - math.sqrt((order - x) * (order + x)) - decay) / angle
         order -= step
-        if step < 0.25:
+        if 0.0 <= step < 0.25:
             break
     return max(2, math.ceil(order))
 
 
 @compiled
 def _terms(x: float) -> int:
-    """Chebyshev vectors needed, T_0 included: a multiple of four, as four are added to the sums at a time."""
+    """Chebyshev vectors needed, T_0 included: a multiple of four, as four passes make one round of summing."""
     return (_order_reaching(x, NEGLECTED) + 4) // 4 * 4
 
 
@@ -87,12 +85,13 @@ def times_together(spins: int, times: int) -> int:
 @compiled
 def _padded(size: int) -> int:
     """Distance between vectors: whole cache lines, but no multiple of a page, where they would evict one another."""
-    return (size + LINE - 1) // LINE * LINE + 9 * LINE
+    return (size + CACHE_LINE - 1) // CACHE_LINE * CACHE_LINE + 9 * CACHE_LINE
 
 
+@compiled
 def workspace_bytes(spins: int, times: int) -> int:
     """Memory that :func:`walk_law` holds for itself, beside its arguments and the table of coefficients."""
-    return 8 * (LINE + (3 + 2 * times_together(spins, times)) * _padded(1 << spins))
+    return 8 * (CACHE_LINE + (3 + 2 * times_together(spins, times)) * _padded(1 << spins))
 
 
 @compiled
@@ -113,9 +112,7 @@ def _fill_bessel(x: float, values: F64) -> None:
             total += 2.0 * here
         above, here = here, order * slope * here - above
     values[0] = here
-    total += here
-    for order in range(len(values)):
-        values[order] /= total
+    values /= total + here
 
 
 @compiled
@@ -131,7 +128,7 @@ def _coefficients(half_width: float, times: F64, terms: I64) -> F64:
         x = half_width * times[row]
         _fill_bessel(abs(x), table[row, : terms[row]])
         for term in range(1, terms[row]):
-            # (-i)^m = 1, -i, -1, i, ...; odd orders also change sign with x
+            # (-i)^m runs through 1, -i, -1, i; odd orders change sign with x
             table[row, term] *= 2.0 if (term + 1) % 4 < 2 else -2.0
             if x < 0.0 and term % 2 == 1:
                 table[row, term] = -table[row, term]
@@ -172,7 +169,7 @@ def _advance_and_sum(
 ) -> None:
     """The same, adding ``earlier`` (T_{term-2}) and its successor (T_term) to the first ``rows`` sums on the way.
 
-    ``sums`` is flat, one padded vector a row.
+    ``sums`` is flat, one padded vector a row, and uninitialised in the first round.
     """
     stride = _padded(len(diagonal))
     for first in range(0, len(diagonal), WIDTH):
@@ -181,6 +178,7 @@ def _advance_and_sum(
         store(earlier, first, new)
         for row in range(rows):
             place = row * stride + first
+            prefetch(sums, place + WIDTH)
             total = load(sums, place) if term >= 4 else splat(0.0)
             total = fma(splat(weights[row, term - 2]), old, total)
             store(sums, place, fma(splat(weights[row, term]), new, total))
@@ -207,22 +205,17 @@ def _advance_few(
 
 
 @compiled
-def _sum_series(
-    diagonal: F64, pull: float, now: F64, other: F64, sums: F64, weights: F64, terms: I64
-) -> None:
-    """Run the recursion from T_0 in ``now``; real sums of all rows come first in ``sums``, then imaginary ones.
+def _sum_series(diagonal: F64, pull: float, now: F64, earlier: F64, sums: F64, weights: F64, terms: I64) -> None:
+    """Run the recursion from T_0 in ``now``. The real sums of all rows come first in ``sums``, then the imaginary ones.
 
     Rows are ordered with the longest series first, so that the shorter ones drop out from the end.
     """
     imaginary = sums[len(sums) // 2 :]
-    other[:] = 0.0
-    earlier = other
-    active = 0
+    earlier[:] = 0.0
+    active = len(terms)
     for term in range(1, terms[0]):
-        if term % 4 == 2:
-            active = 0
-            while active < len(terms) and terms[active] > term:
-                active += 1
+        while terms[active - 1] <= term:
+            active -= 1
         part = imaginary if term % 2 == 1 else sums
         rows = active if term % 4 >= 2 else 0
         if len(diagonal) < WIDTH:
@@ -232,8 +225,7 @@ def _sum_series(
         else:
             _advance(diagonal, pull, now, earlier)
         if term == 1:
-            for number in range(len(diagonal)):
-                earlier[number] *= 0.5
+            earlier *= 0.5  # T_1 = H T_0, without the factor of two
         now, earlier = earlier, now
 
 
@@ -252,26 +244,42 @@ def _longest_first(times: F64) -> I64:
 
 @compiled
 def _aligned(size: int) -> F64:
-    """An uninitialised vector that starts on a cache line."""
-    memory = np.empty(size + LINE)
-    shift = (-(memory.ctypes.data // 8)) % LINE
+    """An uninitialised vector that begins on a cache line."""
+    memory = np.empty(size + CACHE_LINE)
+    shift = (-(memory.ctypes.data // 8)) % CACHE_LINE
     return memory[shift : shift + size]
 
 
 @compiled
-def _propagate(
-    diagonal: F64, hopping: float, start: int, times: F64, real: F64, imaginary: F64, law_only: bool
-) -> int:
-    """Fill ``real`` with the law, or both parts with the amplitudes; returns the applications of H."""
-    size, spins = len(diagonal), 0
-    while 1 << spins < size:
-        spins += 1
+def _centre_and_half_width(diagonal: F64, reach: float) -> tuple[float, float]:
+    """An interval that holds the whole spectrum; ``reach`` bounds the moving part of H."""
     lowest = highest = diagonal[0]
     for level in diagonal:
         lowest = min(lowest, level)
         highest = max(highest, level)
-    centre = 0.5 * lowest + 0.5 * highest
-    half_width = 0.5 * highest - 0.5 * lowest + spins * abs(hopping)
+    return 0.5 * lowest + 0.5 * highest, 0.5 * highest - 0.5 * lowest + reach
+
+
+@compiled
+def _write(even: F64, odd: F64, phase: float, real: F64, imaginary: F64, law_only: bool) -> None:
+    """Turn the two sums of one time into its law, or into its amplitudes times exp(-i phase)."""
+    if law_only:
+        for number in range(len(even)):
+            real[number] = even[number] * even[number] + odd[number] * odd[number]
+        return
+    cosine, sine = math.cos(phase), math.sin(phase)
+    for number in range(len(even)):
+        real[number] = even[number] * cosine + odd[number] * sine
+        imaginary[number] = odd[number] * cosine - even[number] * sine
+
+
+@compiled
+def _propagate(diagonal: F64, hopping: float, start: int, times: F64, real: F64, imaginary: F64, law_only: bool) -> int:
+    """Fill ``real`` with the law, or both parts with the amplitudes; returns the applications of H."""
+    size, spins = len(diagonal), 0
+    while 1 << spins < size:
+        spins += 1
+    centre, half_width = _centre_and_half_width(diagonal, spins * abs(hopping))
     twice = 2.0 / half_width if half_width > 0.0 else 0.0
 
     stride = _padded(size)
@@ -287,24 +295,19 @@ def _propagate(
         group = order[begin : begin + together]
         terms = np.empty(len(group), np.int64)
         weights = _coefficients(half_width, times[group], terms)
-        sums = workspace[3 * stride :][: 2 * len(group) * stride]
-        now[:] = 0.0 if start >= 0 else math.sqrt(1.0 / size)
-        if start >= 0:
-            now[start] = 1.0
-        _sum_series(scaled, hopping * twice, now, other, sums, weights, terms)
         applications += terms[0] - 1
+        if start < 0:
+            now[:] = math.sqrt(1.0 / size)
+        else:
+            now[:] = 0.0
+            now[start] = 1.0
+        even = workspace[3 * stride :][: 2 * len(group) * stride]
+        odd = even[len(group) * stride :]
+        _sum_series(scaled, hopping * twice, now, other, even, weights, terms)
         for row in range(len(group)):
-            target = group[row]
-            even = sums[row * stride :][:size]
-            odd = sums[(len(group) + row) * stride :][:size]
-            if law_only:
-                for number in range(size):
-                    real[target, number] = even[number] * even[number] + odd[number] * odd[number]
-                continue
-            cosine, sine = math.cos(centre * times[target]), math.sin(centre * times[target])
-            for number in range(size):
-                real[target, number] = even[number] * cosine + odd[number] * sine
-                imaginary[target, number] = odd[number] * cosine - even[number] * sine
+            target, place = group[row], row * stride
+            phase = centre * times[target]
+            _write(even[place:][:size], odd[place:][:size], phase, real[target], imaginary[target], law_only)
     return applications
 
 

@@ -209,10 +209,13 @@ class Problem:
 
     @cached_property
     def field_scale(self) -> float:
-        """Root mean square over spins of sqrt(h_i^2 + sum_j J_ij^2), the size of a typical local field."""
+        """The size of a typical local field: the median over spins of sqrt(h_i^2 + sum_j J_ij^2), free spins left out.
+
+        The median, so that a few huge penalties do not set the temperature for everybody else.
+        """
         squares = np.square(self.fields)
         squares += np.asarray(self.matrix.power(2).sum(axis=1)).ravel()
-        return float(np.sqrt(squares.mean()))
+        return float(np.sqrt(np.median(squares[squares > 0]))) if np.any(squares) else 0.0
 
     @cached_property
     def tie_tolerance(self) -> float:

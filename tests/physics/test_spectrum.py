@@ -105,9 +105,7 @@ def test_rows_of_a_read_only_batch_are_accepted() -> None:
         seeds=np.zeros(2, np.uint64),
     )
     assert batch.couplings is not None
-    np.testing.assert_array_equal(
-        energies_of(batch.fields[1], batch.couplings[1]), energies_of(-fields, couplings)
-    )
+    np.testing.assert_array_equal(energies_of(batch.fields[1], batch.couplings[1]), energies_of(-fields, couplings))
 
 
 def test_antiferromagnetic_triangle() -> None:
