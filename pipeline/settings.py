@@ -96,7 +96,7 @@ class SolveSettings(BaseModel):
     hot: float = Field(
         0.5, ge=0, allow_inf_nan=False, description="Temperature at the beginning, in units of the typical local field."
     )  # fmt: skip
-    cold: float = Field(0.07, ge=0, allow_inf_nan=False, description="Temperature at the end, in the same units.")
+    cold: float = Field(0.05, ge=0, allow_inf_nan=False, description="Temperature at the end, in the same units.")
     failures: int = Field(100, ge=1, description="Give up after so many failed calls in a row.")
 
     @model_validator(mode="after")

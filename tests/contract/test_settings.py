@@ -1,0 +1,95 @@
+"""Settings: one table for file, command line and Python; all mistakes at once, each with its place."""
+
+from __future__ import annotations
+
+from pathlib import Path
+from typing import Any
+
+import pytest
+from click.testing import CliRunner
+
+from patchwalk.interface.solve_options import solve_command
+from patchwalk.settings import DEFAULT_SECONDS, SettingsError, SolveSettings, checked_settings, read_settings
+
+
+def test_every_setting_is_an_option_of_the_same_name() -> None:
+    options = {parameter.name for parameter in solve_command.params}
+    assert set(SolveSettings.model_fields) <= options
+    help_text = CliRunner().invoke(solve_command, ["--help"]).output
+    for name in SolveSettings.model_fields:
+        assert f"--{name.replace('_', '-')}" in help_text
+
+
+def test_what_is_given_overrides_the_file() -> None:
+    settings = checked_settings({"sweeps": 3, "calls": 5}, {"sweeps": 0}, "a.toml")
+    assert (settings.sweeps, settings.calls) == (0, 5)
+    assert checked_settings({"seed": 4}, {"seeds": "1..3"}, "a.toml").every_seed == [1, 2, 3]
+    assert checked_settings({"seeds": [4, 5]}, {"seed": 2}, "a.toml").every_seed == [2]
+
+
+def test_all_mistakes_are_reported_at_once_with_their_places() -> None:
+    table = {"cluster_sise": 3, "sweeps": -1, "hot": "warm", "calls": 10}
+    with pytest.raises(SettingsError) as caught:
+        checked_settings(table, {"calls": 0, "rule": "bal"}, "a.toml", "--{}")
+    complaints = caught.value.complaints
+    assert len(complaints) == 5
+    for place, words in (
+        ("a.toml: cluster_sise", "did you mean 'cluster_size'"),
+        ("a.toml: sweeps", "greater than or equal to 0"),
+        ("a.toml: hot", "valid number"),
+        ("--calls", "greater than or equal to 1"),
+        ("--rule", "'ball'"),
+    ):
+        assert any(line.startswith(place) and words in line for line in complaints), (place, complaints)
+
+
+@pytest.mark.parametrize(
+    ("given", "words"),
+    [
+        ({"seed": 1, "seeds": "1..2"}, "cannot both be given"),
+        ({"seeds": "5..2"}, "is empty"),
+        ({"seeds": "1,1"}, "twice"),
+        ({"seeds": "one"}, "write seeds as"),
+        ({"hot": 0.1, "cold": 0.2}, "above hot"),
+        ({"sweeps": 0, "total_sweeps": 9}, "never be reached"),
+        ({"seconds": float("nan")}, "seconds"),
+        ({"seconds": 0}, "greater than 0"),
+        ({"target": float("inf")}, "target"),
+        ({"seed": -1}, "seed"),
+    ],
+)
+def test_what_cannot_be_is_refused(given: dict[str, Any], words: str) -> None:
+    with pytest.raises(SettingsError, match=words):
+        checked_settings({}, given, "")
+
+
+def test_seeds_can_be_written_three_ways() -> None:
+    for written in ("1..3", "1,2,3", [1, 2, 3]):
+        assert checked_settings({}, {"seeds": written}, "").every_seed == [1, 2, 3]
+    assert checked_settings({}, {}, "").every_seed == [1]
+
+
+def test_sixty_seconds_only_where_nothing_else_ends_the_run() -> None:
+    assert checked_settings({}, {}, "").time_limit == DEFAULT_SECONDS
+    assert checked_settings({}, {"target": 3.0}, "").time_limit == DEFAULT_SECONDS
+    assert checked_settings({}, {"calls": 10}, "").time_limit is None
+    assert checked_settings({}, {"calls": 10, "seconds": 5}, "").time_limit == 5
+
+
+def test_paths_in_a_file_are_relative_to_it(tmp_path: Path) -> None:
+    path = tmp_path / "task.toml"
+    path.write_text('input = "glass.txt"\nstart = "begin.txt"\nrun = "out/run.sqlite"\n')
+    source, table = read_settings(path)
+    assert source == tmp_path / "glass.txt"
+    assert table == {"start": tmp_path / "begin.txt", "run": tmp_path / "out/run.sqlite"}
+
+
+@pytest.mark.parametrize(
+    ("text", "words"), [("calls = ", "not a TOML file"), ("calls = 3", "needs a key input"), ("input = 3", "needs a key")]
+)  # fmt: skip
+def test_a_broken_file_is_named(tmp_path: Path, text: str, words: str) -> None:
+    path = tmp_path / "task.toml"
+    path.write_text(text)
+    with pytest.raises(SettingsError, match=words) as caught:
+        read_settings(path)
+    assert str(path) in str(caught.value)
