@@ -2,8 +2,8 @@
 
     python tests/bench/bench_outer.py
 
-Prints figures and ratios; asserts nothing. Aims: at most 20 microseconds outside the subsolver per call with ``uniform`` at
-k = 10 on a 10,000-spin lattice; time per sweep and memory linear in the number of spins.
+Prints figures and ratios; asserts nothing. Aims: at most 20 microseconds outside the subsolver per call with
+``uniform`` at k = 10 on a 10,000-spin lattice; time per sweep and memory linear in the number of spins.
 """
 
 from __future__ import annotations

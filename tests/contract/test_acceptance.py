@@ -8,7 +8,7 @@ from scipy.stats import binomtest
 
 from patchwalk.acceptance import judge
 from patchwalk.engine import ask
-from patchwalk.subsolvers.contract import ClusterBatch, Edges, Forecast, I8, Proposals, Status, Work, all_well
+from patchwalk.subsolvers.contract import I8, ClusterBatch, Edges, Forecast, Proposals, Status, Work, all_well
 
 
 def one_field(rows: int, field: float, temperature: float) -> ClusterBatch:
@@ -53,9 +53,8 @@ def test_the_energy_is_recomputed_alike_from_matrix_and_edges() -> None:
     common = {"fields": rng.normal(size=(5, 6)), "spins": spins, "temperature": np.ones(5), "seeds": np.arange(5)}
     dense = ClusterBatch(**common, couplings=couplings + couplings.transpose(0, 2, 1))
     first, second = np.triu_indices(6, 1)
-    edges = Edges(
-        np.arange(6) * len(first), np.tile(np.stack([first, second], axis=1), (5, 1)), couplings[:, first, second].ravel()
-    )  # fmt: skip
+    pairs = np.tile(np.stack([first, second], axis=1), (5, 1))
+    edges = Edges(np.arange(6) * len(first), pairs, couplings[:, first, second].ravel())
     proposals = Proposals(outcomes, Work(), *all_well(5))
     for one, other in zip(judge(dense, proposals), judge(ClusterBatch(**common, edges=edges), proposals), strict=True):
         np.testing.assert_allclose(one, other, atol=1e-12)

@@ -20,9 +20,8 @@ def random_problem(size: int, degree: float, seed: int) -> Problem:
     count = int(size * degree / 2)
     heads, tails = rng.integers(0, size, (2, count))
     apart = heads != tails
-    return Problem.from_arrays(
-        heads[apart], tails[apart], rng.normal(size=int(apart.sum())), size=size, fields=rng.normal(size=size), offset=2.5
-    )  # fmt: skip
+    weights, fields = rng.normal(size=int(apart.sum())), rng.normal(size=size)
+    return Problem.from_arrays(heads[apart], tails[apart], weights, size=size, fields=fields, offset=2.5)
 
 
 def conditioned(problem: Problem, members: I32, spins: I8) -> ClusterBatch:

@@ -49,7 +49,7 @@ def test_units_are_uniform_and_whole_numbers_even() -> None:
     """Kolmogorov-Smirnov and chi-square with a fixed seed; p below 1e-4 would be a false alarm once in ten thousand."""
     stream = stream_for(5, 1)
     units = np.array([next_unit(stream) for _ in range(20_000)])
-    assert 0.0 <= units.min()
+    assert units.min() >= 0.0
     assert units.max() < 1.0
     assert kstest(units, "uniform").pvalue > 1e-4
     counts = np.bincount([next_below(stream, 7) for _ in range(20_000)], minlength=7)

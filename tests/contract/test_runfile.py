@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import json
 import sqlite3
 from collections.abc import Iterator
@@ -42,9 +43,8 @@ def test_a_row_is_enough_to_ask_again(tmp_path: Path) -> None:
         spins = np.frombuffer(row["spins_before"], np.int8)
         proposal = np.frombuffer(row["proposal"], np.int8)
         couplings = GLASS.matrix[members][:, members].toarray()
-        batch = ClusterBatch(
-            fields[None], spins[None], np.array([row["temperature"]]), np.array([row["seed"]], np.uint64), couplings[None]
-        )  # fmt: skip
+        temperature, seed = np.array([row["temperature"]]), np.array([row["seed"]], np.uint64)
+        batch = ClusterBatch(fields[None], spins[None], temperature, seed, couplings[None])
         again = subsolver.propose(batch)
         assert any(np.array_equal(shot, proposal) for shot in again.outcomes[0])
         assert again.hit_probability is not None
@@ -62,7 +62,7 @@ def test_energies_in_rows_follow_each_other(tmp_path: Path) -> None:
     with opened(solution.run_path) as database:
         rows = database.execute("SELECT * FROM calls ORDER BY round, place").fetchall()
         incumbents = database.execute("SELECT energy, finder FROM incumbents ORDER BY calls").fetchall()
-    for row, following in zip(rows, rows[1:], strict=False):
+    for row, following in itertools.pairwise(rows):
         expected = row["energy_before"] + (row["change"] if row["accepted"] else 0.0)
         assert following["energy_before"] == pytest.approx(expected, abs=1e-8)
     energies = [row["energy"] for row in incumbents]

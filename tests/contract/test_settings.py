@@ -85,8 +85,9 @@ def test_paths_in_a_file_are_relative_to_it(tmp_path: Path) -> None:
 
 
 @pytest.mark.parametrize(
-    ("text", "words"), [("calls = ", "not a TOML file"), ("calls = 3", "needs a key input"), ("input = 3", "needs a key")]
-)  # fmt: skip
+    ("text", "words"),
+    [("calls = ", "not a TOML file"), ("calls = 3", "needs a key input"), ("input = 3", "needs a key")],
+)
 def test_a_broken_file_is_named(tmp_path: Path, text: str, words: str) -> None:
     path = tmp_path / "task.toml"
     path.write_text(text)
