@@ -16,8 +16,10 @@ from patchwalk.records import Round
 from patchwalk.search.neighbourhood import NeighbourhoodSearch
 from patchwalk.subsolvers.registry import spelled
 
-COLUMNS = (("time", 8), ("calls", 10), ("sweeps", 10), ("temperature", 12), ("{now}", 15), ("{best}", 15),
-           ("acceptance", 11), ("found by", 10))  # fmt: skip
+COLUMNS = (("time", 7), ("calls", 10), ("spent", 6), ("temperature", 12), ("{objective}", 13), ("best", 12),
+           ("acceptance", 11), ("found by", 9))  # fmt: skip
+"""Whole words, 80 characters in all; ``spent`` is the share of the budget."""
+
 LIVE_SECONDS = 0.2
 SLOWEST_LINE_SECONDS = 60.0
 
@@ -83,14 +85,14 @@ class Narrator:
 
     def _header(self) -> str:
         word = self._problem.objective_name
-        return "".join(f"{name.format(now=word, best=f'best {word}'):>{width}}" for name, width in COLUMNS)
+        return "".join(f"{name.format(objective=word):>{width}}" for name, width in COLUMNS)
 
     def _line(self, search: NeighbourhoodSearch, temperature: float) -> str:
         objective = search.problem.objective
         share = f"{100 * self._accepted / self._calls_seen:.1f} %" if self._calls_seen else "-"
         cells = (
-            f"{search.elapsed:.1f} s", f"{search.calls:,}", f"{search.sweeps:,}", f"{temperature:.4g}",
-            f"{objective(search.energy):,.8g}", f"{objective(search.best_energy):,.8g}", share, self._finder,
+            f"{search.elapsed:.1f} s", f"{search.calls:,}", f"{100 * search.stage:.0f} %", f"{temperature:.4g}",
+            f"{objective(search.energy):,.7g}", f"{objective(search.best_energy):,.7g}", share, self._finder,
         )  # fmt: skip
         return "".join(f"{cell:>{width}}" for cell, (_, width) in zip(cells, COLUMNS, strict=True))
 

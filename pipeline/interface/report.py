@@ -18,7 +18,7 @@ def in_words(solution: Solution) -> str:
     if len(solution.runs) > 1:
         lines.append(f"best of {len(solution.runs)} runs, seed {solution.seed}")
         lines.extend(f"  seed {run.seed}: {run.objective_name} {run.objective:,.8g}" for run in solution.runs)
-    lines.append(f"{solution.objective_name} {solution.objective:,.8g}  ({solution.status}: {solution.message})")
+    lines.append(f"{solution.objective_name} {solution.objective:,.10g}; {solution.message}")
     lines.append(
         f"{solution.calls:,} cluster calls and {solution.sweeps:,} sweeps in {solution.seconds:.1f} s "
         f"(compiling {solution.compile_seconds:.1f} s apart); no lower bound was computed"

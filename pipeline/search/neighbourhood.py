@@ -17,7 +17,7 @@ import numpy as np
 from patchwalk.acceptance import judge
 from patchwalk.clusters.conditioning import condition
 from patchwalk.clusters.rules import ClusterRule, Marks
-from patchwalk.engine import Answered, answers
+from patchwalk.engine import Answered, answers, failed
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
 from patchwalk.search.sweeps import descend, flip_accepted, metropolis_sweep
@@ -87,12 +87,13 @@ class NeighbourhoodSearch:
 
     def prepare(self) -> None:
         """Compile everything and let the subsolver calibrate on sample clusters, before the clock starts."""
-        sample = self._question(0.0, self._members(self.plan.clusters_per_round))
-        self.subsolver = self.subsolver.prepare(sample)
-        trial = NeighbourhoodSearch(self.problem, self.subsolver, self.plan, self.seed, self.spins)
-        trial._call(0.0, 1)
-        descend(*self._graph, trial.spins, trial.local_fields, self.problem.tie_tolerance)
-        metropolis_sweep(*self._graph, trial.spins, trial.local_fields, 0.0, stream_for(0))
+        members = self._members(self.plan.clusters_per_round)
+        self.subsolver = self.subsolver.prepare(self._question(0.0, members))
+        rehearsal = NeighbourhoodSearch(_ring(2 * self.plan.cluster_size + 2), self.subsolver, self.plan, self.seed)
+        batch = rehearsal._question(0.0, rehearsal._members(1))
+        rehearsal._settle(rehearsal._members(1), Answered(0, batch, failed(batch, "rehearsal"), 0.0))
+        rehearsal._sweep(0.0)
+        rehearsal._polish()
 
     def rounds(self) -> Iterator[Round]:
         """Search until an end is reached, one round at a time."""
@@ -234,6 +235,12 @@ class NeighbourhoodSearch:
             self._improvements.append(
                 Improvement(self.energy, finder, self.round, self.calls, self.sweeps, self.elapsed)
             )
+
+
+def _ring(size: int) -> Problem:
+    """A small problem to compile the loop's kernels on."""
+    spins = np.arange(size)
+    return Problem.from_arrays(spins, np.roll(spins, -1), np.ones(size))
 
 
 def _random_spins(size: int, seed: int) -> I8:
