@@ -163,9 +163,10 @@ def test_scales_and_energies_follow_a_power_of_two_to_the_last_bit(case, exponen
     assert scaled.field_scale == factor * problem.field_scale
 
 
-def test_field_scale_is_the_root_mean_square_of_typical_local_fields():
-    problem = Problem.from_arrays([0, 1], [1, 2], [3, 4], fields=[0, 0, 2])
-    assert problem.field_scale == pytest.approx(np.sqrt((9 + 25 + 20) / 3))
+def test_field_scale_is_the_median_of_typical_local_fields():
+    problem = Problem.from_arrays([0, 1], [1, 2], [3, 4], size=5, fields=[0, 0, 2, 0, 0])
+    assert problem.field_scale == pytest.approx(np.sqrt(20))  # of 9, 20 and 25; the two free spins do not count
+    assert Problem.from_arrays([], [], [], size=2).field_scale == 0.0
 
 
 def test_arrays_are_locked_and_fingerprints_tell_problems_apart():
