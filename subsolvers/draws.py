@@ -10,6 +10,8 @@ In kernels a stream is a one-element uint64 array that the drawing functions adv
 
 from __future__ import annotations
 
+import math
+
 import numpy as np
 import numpy.typing as npt
 
@@ -46,6 +48,18 @@ def next_word(stream: U64) -> np.uint64:
 def next_unit(stream: U64) -> float:
     """A number in [0, 1) with 53 random bits."""
     return float(next_word(stream) >> np.uint64(11)) * 1.1102230246251565e-16
+
+
+@compiled
+def happens(stream: U64, exponent: float) -> bool:
+    """True with probability exp(-exponent), for exponents above zero, and mostly without computing the exponential.
+
+    The first terms of the series of exp lie below it, so that they alone can tell most refusals.
+    """
+    unit = next_unit(stream)
+    if unit * (1.0 + exponent * (1.0 + exponent * (0.5 + exponent * 0.16666666666666666))) >= 1.0:
+        return False
+    return unit < math.exp(-exponent)
 
 
 @compiled

@@ -22,6 +22,9 @@ OURS: Mapping[str, str] = {
     "walk": "patchwalk.subsolvers.walk:Walk",
     "enumeration": "patchwalk.subsolvers.enumeration:Enumeration",
     "metropolis": "patchwalk.subsolvers.metropolis:Metropolis",
+    "tabu": "patchwalk.subsolvers.tabu:Tabu",
+    "descent": "patchwalk.subsolvers.descent:Descent",
+    "external": "patchwalk.subsolvers.external:External",
     "uniform": "patchwalk.subsolvers.uniform:Uniform",
 }
 ENTRY_POINT_GROUP = "patchwalk.subsolvers"

@@ -6,14 +6,12 @@ spin's neighbours. Metropolis et al., J. Chem. Phys. 21 (1953) 1087.
 
 from __future__ import annotations
 
-import math
-
 import numpy as np
 import numpy.typing as npt
 
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
-from patchwalk.subsolvers.draws import next_unit
+from patchwalk.subsolvers.draws import happens, next_unit
 
 TIE_CHANCE = 0.9
 """How often a flip that leaves the energy as it is gets made; any chance keeps detailed balance."""
@@ -46,13 +44,14 @@ def metropolis_sweep(
     """
     change = 0.0
     hopeless = 40.0 * temperature  # exp(-40) is below any chance worth a random number
+    coldness = 1.0 / temperature
     for spin in range(len(spins)):
         rise = -2.0 * spins[spin] * local_fields[spin]
-        if rise >= 0.0:
-            if rise > hopeless:
+        if rise > 0.0:
+            if rise > hopeless or not happens(stream, rise * coldness):
                 continue
-            if next_unit(stream) >= (math.exp(-rise / temperature) if rise > 0.0 else TIE_CHANCE):
-                continue
+        elif rise == 0.0 and next_unit(stream) >= TIE_CHANCE:
+            continue
         change += rise
         flip(spin, row_starts, neighbours, couplings, spins, local_fields)
     return change

@@ -20,6 +20,10 @@ TABLE: list[tuple[str, dict[str, Any]]] = [
     ("enumeration", {"draw": "boltzmann"}),
     ("enumeration", {"draw": "boltzmann", "shots": 2}),
     ("metropolis", {"sweeps": 7}),
+    ("metropolis", {"draw": "boltzmann", "sweeps": 4}),
+    ("tabu", {"shots": 2}),
+    ("tabu", {"steps": 9, "tenure": 3}),
+    ("descent", {"restarts": 2}),
     ("uniform", {"shots": 4}),
 ]
 IDS = [",".join([name, *(f"{key}={value}" for key, value in parameters.items())]) for name, parameters in TABLE]
@@ -194,7 +198,7 @@ def test_oversize_is_refused_with_the_limit(name: str) -> None:
             ask(batch)
 
 
-@pytest.mark.parametrize("name", ["metropolis", "uniform"])
+@pytest.mark.parametrize("name", ["metropolis", "tabu", "descent", "uniform"])
 def test_large_clusters_come_as_edges(name: str) -> None:
     size = 100
     ring = np.stack([np.arange(size), np.roll(np.arange(size), -1)], axis=1)
@@ -208,7 +212,7 @@ def test_large_clusters_come_as_edges(name: str) -> None:
     whole = subsolver.propose(batch)
     assert whole.outcomes.shape == (2, 1, size)
     same_bits(whole, joined([subsolver.propose(batch.rows(row, row + 1)) for row in range(2)]))
-    if name == "metropolis":
+    if name != "uniform":
         assert np.all((whole.outcomes[:, 0] * np.roll(whole.outcomes[:, 0], 1, axis=1)).sum(axis=1) < -size // 2)
 
 
@@ -227,6 +231,9 @@ def test_large_clusters_come_as_edges(name: str) -> None:
         ("enumeration", {"draw": "maximum"}, "minimum or boltzmann"),
         ("metropolis", {"sweeps": 0}, "sweeps is 0"),
         ("metropolis", {"hot": 0.1, "cold": 1.0}, "hot >= cold"),
+        ("metropolis", {"draw": "boltzmann", "sweeps": 3}, "even number"),
+        ("tabu", {"steps": -1}, "steps is -1"),
+        ("descent", {"restarts": 0}, "restarts is 0"),
         ("uniform", {"shots": True}, "shots is True"),
         ("no.such.module:Thing", {}, "module:Object"),
         ("math:pi", {}, "math:pi"),
