@@ -1,7 +1,9 @@
 """Calling a subsolver: in slices of about a second, and so that whatever it does wrong becomes a failed row.
 
 A batch is cut by the subsolver's own forecast at the fixed prices of :mod:`patchwalk.cost`. Rows are independent of
-each other, so the cut changes no bit of any answer; it bounds how long a time limit or an interrupt has to wait.
+each other, so the cut changes no bit of any answer; it bounds how long a time limit or an interrupt has to wait. A
+subsolver with a ``largest_batch``, such as a device that takes so many clusters at once, is asked one such batch at a
+time. Whoever has a ``close`` is told when a run is over.
 """
 
 from __future__ import annotations
@@ -13,7 +15,15 @@ from typing import NamedTuple
 import numpy as np
 
 from patchwalk.cost import SLICE_SECONDS, priced
-from patchwalk.subsolvers.contract import ClusterBatch, Proposals, Status, Subsolver, Work
+from patchwalk.subsolvers.contract import (
+    WORK_FIELDS,
+    ClusterBatch,
+    Proposals,
+    Status,
+    Subsolver,
+    Work,
+)
+from patchwalk.subsolvers.registry import SubsolverError
 
 
 class Answered(NamedTuple):
@@ -25,9 +35,42 @@ class Answered(NamedTuple):
     seconds: float
 
 
+BAD_NEWS = (Exception, SystemExit)
+"""What a stranger's code may raise without ending the run; an interrupt is none of it."""
+
+
+def prepared(subsolver: Subsolver, sample: ClusterBatch) -> Subsolver:
+    """The subsolver to use, compiled and calibrated.
+
+    Raises :class:`SubsolverError` with a sentence where it fails to get ready.
+    """
+    try:
+        ready = subsolver.prepare(sample)
+    except (SubsolverError, MemoryError):
+        raise
+    except BAD_NEWS as error:
+        raise SubsolverError(f"{subsolver.name}: could not get ready: {type(error).__name__}: {error}") from error
+    if not isinstance(ready, Subsolver):
+        raise SubsolverError(f"{subsolver.name}: prepare gave back a {type(ready).__name__}, which is no subsolver")
+    return ready
+
+
+def release(subsolver: Subsolver) -> None:
+    """Let go of whatever the subsolver keeps running beside us."""
+    close = getattr(subsolver, "close", None)
+    if callable(close):
+        close()
+
+
 def answers(subsolver: Subsolver, batch: ClusterBatch) -> Iterator[Answered]:
     """The batch slice by slice; the caller may stop between slices."""
-    for start, stop in slice_bounds(subsolver, batch):
+    try:
+        bounds = slice_bounds(subsolver, batch)
+    except BAD_NEWS as error:
+        sentence = f"{subsolver.name}: its forecast failed: {type(error).__name__}: {error}"
+        yield Answered(0, batch, failed(batch, sentence), 0.0)
+        return
+    for start, stop in bounds:
         part = batch.rows(start, stop)
         began = time.perf_counter()
         proposals = ask(subsolver, part)
@@ -37,14 +80,13 @@ def answers(subsolver: Subsolver, batch: ClusterBatch) -> Iterator[Answered]:
 def slice_bounds(subsolver: Subsolver, batch: ClusterBatch) -> list[tuple[int, int]]:
     """Row ranges whose forecast price is at most a slice each, or one row."""
     rows = len(batch)
-    if rows == 1:
-        return [(0, 1)]
     prices = priced(subsolver.forecast(batch).work, rows)
-    if prices.sum() <= SLICE_SECONDS:
+    longest = getattr(subsolver, "largest_batch", rows)
+    if prices.sum() <= SLICE_SECONDS and rows <= longest:
         return [(0, rows)]
     bounds, start, spent = [], 0, 0.0
     for row, price in enumerate(prices):
-        if row > start and spent + price > SLICE_SECONDS:
+        if row > start and (spent + price > SLICE_SECONDS or row - start >= longest):
             bounds.append((start, row))
             start, spent = row, 0.0
         spent += price
@@ -55,7 +97,7 @@ def ask(subsolver: Subsolver, batch: ClusterBatch) -> Proposals:
     """The subsolver's proposals; an exception or an answer of the wrong shape becomes failed rows with a sentence."""
     try:
         proposals = subsolver.propose(batch)
-    except Exception as error:
+    except BAD_NEWS as error:
         return failed(batch, f"{subsolver.name}: {type(error).__name__}: {error}")
     complaint = _complaint(proposals, batch)
     return failed(batch, f"{subsolver.name}: {complaint}") if complaint else proposals
@@ -74,13 +116,36 @@ def failed(batch: ClusterBatch, sentence: str) -> Proposals:
 
 def _complaint(proposals: Proposals, batch: ClusterBatch) -> str:
     """What is wrong with the answer, or nothing."""
+    if not isinstance(proposals, Proposals):
+        return f"propose gave back a {type(proposals).__name__}, expected Proposals"
     outcomes, rows = proposals.outcomes, len(batch)
     if not isinstance(outcomes, np.ndarray) or outcomes.dtype != np.int8 or outcomes.ndim != 3:
         return "outcomes must be an int8 array (B, m, k)"
     if outcomes.shape[0] != rows or outcomes.shape[1] < 1 or outcomes.shape[2] != batch.size:
         return f"outcomes has shape {outcomes.shape}, expected ({rows}, shots, {batch.size})"
-    if not np.all(np.abs(outcomes) == 1):
+    if not np.all((outcomes == 1) | (outcomes == -1)):
         return "outcomes holds numbers other than +1 and -1"
     if np.shape(proposals.status) != (rows,) or len(proposals.messages) != rows:
         return f"status and messages must have {rows} entries, one per call"
+    if not np.all(np.isin(proposals.status, list(Status))) or not all(isinstance(m, str) for m in proposals.messages):
+        return "status must hold 0, 1 or 2 and messages sentences"
+    return _complaint_about_extras(proposals, rows)
+
+
+def _complaint_about_extras(proposals: Proposals, rows: int) -> str:
+    """What is wrong with the optional members and the counted work, or nothing; nan marks a call that has none."""
+    expected: dict[str, tuple[object, tuple[int, ...]]] = {
+        name: (getattr(proposals, name), (rows,)) for name in ("log_ratio", "hit_probability", "noiseless_hit")
+    }
+    expected["times"] = (proposals.times, proposals.outcomes.shape[:2])
+    expected |= {f"work.{name}": (getattr(proposals.work, name, None), (rows,)) for name in WORK_FIELDS}
+    for name, (values, shape) in expected.items():
+        if values is None:
+            continue
+        if not isinstance(values, np.ndarray) or values.dtype.kind not in "iuf" or values.shape != shape:
+            return f"{name} must be an array of {shape} numbers"
+        if name != "log_ratio" and np.any(values < 0):
+            return f"{name} holds a negative number"
+        if name.endswith(("hit_probability", "noiseless_hit")) and np.any(values > 1 + 1e-6):
+            return f"{name} holds a probability above 1"
     return ""

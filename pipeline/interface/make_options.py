@@ -31,7 +31,7 @@ FAMILIES = ("sk", "lattice2d", "lattice3d", "beacons")
     help="Signs alone or Gaussian; sk is Gaussian by default, lattices pm1.",
 )
 @click.option("--open", "open_", is_flag=True, help="Free boundaries; without it a lattice closes on itself.")
-@click.option("--fields", is_flag=True, help="sk: fields of the same variance as the couplings.")
+@click.option("--fields", is_flag=True, help="Fields of the same law as the couplings (sk and lattices).")
 @click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Same seed, same instance.")
 @click.option("--force", is_flag=True, help="Overwrite FILE if it is there.")
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")

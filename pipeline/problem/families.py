@@ -62,7 +62,7 @@ def make(
     family: str,
     size: int,
     *,
-    seed: int = 0,
+    seed: int = 1,
     couplings: str | None = None,
     open: bool = False,  # noqa: A002 - the keyword and the option --open bear one name
     fields: bool = False,

@@ -17,7 +17,7 @@ import numpy as np
 from patchwalk.acceptance import judge
 from patchwalk.clusters.conditioning import condition
 from patchwalk.clusters.rules import ClusterRule, Marks
-from patchwalk.engine import Answered, answers, failed
+from patchwalk.engine import Answered, answers, failed, prepared, release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
 from patchwalk.search.sweeps import descend, flip_accepted, metropolis_sweep
@@ -88,7 +88,7 @@ class NeighbourhoodSearch:
     def prepare(self) -> None:
         """Compile everything and let the subsolver calibrate on sample clusters, before the clock starts."""
         members = self._members(self.plan.clusters_per_round)
-        self.subsolver = self.subsolver.prepare(self._question(0.0, members))
+        self.subsolver = prepared(self.subsolver, self._question(0.0, members))
         rehearsal = NeighbourhoodSearch(_ring(2 * self.plan.cluster_size + 2), self.subsolver, self.plan, self.seed)
         batch = rehearsal._question(0.0, rehearsal._members(1))
         rehearsal._settle(rehearsal._members(1), Answered(0, batch, failed(batch, "rehearsal"), 0.0))
@@ -96,10 +96,13 @@ class NeighbourhoodSearch:
         rehearsal._polish()
 
     def rounds(self) -> Iterator[Round]:
-        """Search until an end is reached, one round at a time."""
+        """Search until an end is reached, one round at a time; then the subsolver is let go."""
         self._began = time.perf_counter()
-        while not self._ended():
-            yield self._one_round()
+        try:
+            while not self._ended():
+                yield self._one_round()
+        finally:
+            release(self.subsolver)
         if self.plan.sweeps_per_round:
             self._polish()
 
