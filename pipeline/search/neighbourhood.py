@@ -172,8 +172,7 @@ class NeighbourhoodSearch:
 
     def _members(self, wanted: int) -> I32:
         seed = seed_for(self.seed, RULE, self.round)
-        members = self.plan.rule.pick(self.problem, self.plan.cluster_size, wanted, seed, self._marks)
-        return members[:wanted]
+        return self.plan.rule.pick(self.problem, self.plan.cluster_size, wanted, seed, self._marks)
 
     def _question(self, temperature: float, members: I32) -> ClusterBatch:
         base = np.uint64(seed_for(self.seed, CALL, 0, self.round))  # 0: the one replica

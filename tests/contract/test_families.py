@@ -119,4 +119,4 @@ def test_a_faulty_request_is_refused_with_all_its_faults(family, size, options, 
 def test_the_recipe_names_every_option():
     problem = make("lattice3d", 3, seed=9, couplings="gaussian", open=True, fields=True)
     assert problem.details["recipe"] == ("make lattice3d --size 3 --couplings gaussian --open --fields --seed 9",)
-    assert make("beacons", 20).details["recipe"] == ("make beacons --size 20 --seed 0",)
+    assert make("beacons", 20).details["recipe"] == ("make beacons --size 20 --seed 1",)
