@@ -16,8 +16,12 @@ PRICES = {
     "spin_updates": 8e-9,
     "energies": 1.5e-9,
     "table_entries": 2e-9,
+    "load_s": 1.0,
+    "evolve_s": 1.0,
+    "read_s": 1.0,
+    "wait_s": 1.0,
 }
-"""Seconds per counted unit."""
+"""Seconds per counted unit; seconds that a device reports or forecasts about itself count as they are."""
 
 DEAR_SECONDS = 4e-6
 """A call at this price or above has a row of its own in the run file; cheaper ones a seeded share and exact tallies."""

@@ -15,14 +15,8 @@ from typing import NamedTuple
 import numpy as np
 
 from patchwalk.cost import SLICE_SECONDS, priced
-from patchwalk.subsolvers.contract import (
-    WORK_FIELDS,
-    ClusterBatch,
-    Proposals,
-    Status,
-    Subsolver,
-    Work,
-)
+from patchwalk.subsolvers.complaints import shape_complaint, value_complaint
+from patchwalk.subsolvers.contract import ClusterBatch, Forecast, Proposals, Status, Subsolver, Work
 from patchwalk.subsolvers.registry import SubsolverError
 
 
@@ -55,6 +49,14 @@ def prepared(subsolver: Subsolver, sample: ClusterBatch) -> Subsolver:
     return ready
 
 
+def forecast_of(subsolver: Subsolver, batch: ClusterBatch) -> Forecast | None:
+    """The subsolver's forecast, or None where it cannot give one."""
+    try:
+        return subsolver.forecast(batch)
+    except BAD_NEWS:
+        return None
+
+
 def release(subsolver: Subsolver) -> None:
     """Let go of whatever the subsolver keeps running beside us."""
     close = getattr(subsolver, "close", None)
@@ -80,6 +82,8 @@ def answers(subsolver: Subsolver, batch: ClusterBatch) -> Iterator[Answered]:
 def slice_bounds(subsolver: Subsolver, batch: ClusterBatch) -> list[tuple[int, int]]:
     """Row ranges whose forecast price is at most a slice each, or one row."""
     rows = len(batch)
+    if rows == 1:
+        return [(0, 1)]
     prices = priced(subsolver.forecast(batch).work, rows)
     longest = getattr(subsolver, "largest_batch", rows)
     if prices.sum() <= SLICE_SECONDS and rows <= longest:
@@ -99,7 +103,7 @@ def ask(subsolver: Subsolver, batch: ClusterBatch) -> Proposals:
         proposals = subsolver.propose(batch)
     except BAD_NEWS as error:
         return failed(batch, f"{subsolver.name}: {type(error).__name__}: {error}")
-    complaint = _complaint(proposals, batch)
+    complaint = shape_complaint(proposals, batch) or value_complaint(proposals)
     return failed(batch, f"{subsolver.name}: {complaint}") if complaint else proposals
 
 
@@ -107,45 +111,8 @@ def failed(batch: ClusterBatch, sentence: str) -> Proposals:
     """Proposals that leave every cluster as it was, because of ``sentence``."""
     rows = len(batch)
     return Proposals(
-        outcomes=batch.spins[:, None, :],
+        outcomes=batch.spins[:, None, :].copy(),  # writable, as answers are: kernels are compiled for one kind
         work=Work(),
         status=np.full(rows, Status.FAILED, np.uint8),
         messages=(sentence,) * rows,
     )
-
-
-def _complaint(proposals: Proposals, batch: ClusterBatch) -> str:
-    """What is wrong with the answer, or nothing."""
-    if not isinstance(proposals, Proposals):
-        return f"propose gave back a {type(proposals).__name__}, expected Proposals"
-    outcomes, rows = proposals.outcomes, len(batch)
-    if not isinstance(outcomes, np.ndarray) or outcomes.dtype != np.int8 or outcomes.ndim != 3:
-        return "outcomes must be an int8 array (B, m, k)"
-    if outcomes.shape[0] != rows or outcomes.shape[1] < 1 or outcomes.shape[2] != batch.size:
-        return f"outcomes has shape {outcomes.shape}, expected ({rows}, shots, {batch.size})"
-    if not np.all((outcomes == 1) | (outcomes == -1)):
-        return "outcomes holds numbers other than +1 and -1"
-    if np.shape(proposals.status) != (rows,) or len(proposals.messages) != rows:
-        return f"status and messages must have {rows} entries, one per call"
-    if not np.all(np.isin(proposals.status, list(Status))) or not all(isinstance(m, str) for m in proposals.messages):
-        return "status must hold 0, 1 or 2 and messages sentences"
-    return _complaint_about_extras(proposals, rows)
-
-
-def _complaint_about_extras(proposals: Proposals, rows: int) -> str:
-    """What is wrong with the optional members and the counted work, or nothing; nan marks a call that has none."""
-    expected: dict[str, tuple[object, tuple[int, ...]]] = {
-        name: (getattr(proposals, name), (rows,)) for name in ("log_ratio", "hit_probability", "noiseless_hit")
-    }
-    expected["times"] = (proposals.times, proposals.outcomes.shape[:2])
-    expected |= {f"work.{name}": (getattr(proposals.work, name, None), (rows,)) for name in WORK_FIELDS}
-    for name, (values, shape) in expected.items():
-        if values is None:
-            continue
-        if not isinstance(values, np.ndarray) or values.dtype.kind not in "iuf" or values.shape != shape:
-            return f"{name} must be an array of {shape} numbers"
-        if name != "log_ratio" and np.any(values < 0):
-            return f"{name} holds a negative number"
-        if name.endswith(("hit_probability", "noiseless_hit")) and np.any(values > 1 + 1e-6):
-            return f"{name} holds a probability above 1"
-    return ""

@@ -60,8 +60,10 @@ class SolveSettings(BaseModel):
         "(ours: walk, enumeration, metropolis, uniform).",
     )
     cluster_size: int = Field(12, ge=1, description="Spins in each cluster.")
-    rule: Literal["ball", "scattered"] = Field(
-        "ball", description="Which spins make a cluster: ball (a breadth-first ball round a random spin) or scattered."
+    rule: Literal["ball", "scattered", "strip"] = Field(
+        "ball",
+        description="Which spins make a cluster: ball (a breadth-first ball round a random spin), scattered, or strip "
+        "(long and thin enough for elimination).",
     )
     clusters_per_round: int = Field(
         64, ge=1, le=65536, description="At most this many clusters a round, no two of which touch."

@@ -77,13 +77,12 @@ def call_seeds(base: np.uint64, count: int) -> U64:
     return seeds
 
 
-@compiled
-def one_in(share: int, seeds: U64, word: np.uint64) -> npt.NDArray[np.bool_]:
+def one_in(share: int, seeds: U64, word: int) -> npt.NDArray[np.bool_]:
     """Whether each seed belongs to the one in ``share`` that a purpose (``word``) picks: bool (B,)."""
-    picked = np.empty(len(seeds), np.bool_)
-    for index in range(len(seeds)):
-        picked[index] = combine(seeds[index], word) % np.uint64(share) == 0
-    return picked
+    z = (seeds ^ np.uint64(_mix((word + int(GOLDEN)) & MASK))) + GOLDEN
+    z = (z ^ (z >> np.uint64(30))) * np.uint64(0xBF58476D1CE4E5B9)
+    z = (z ^ (z >> np.uint64(27))) * np.uint64(0x94D049BB133111EB)
+    return np.asarray((z ^ (z >> np.uint64(31))) % np.uint64(share) == 0)
 
 
 def _mix(z: int) -> int:

@@ -1,15 +1,16 @@
 """Blocks of neighbouring numbers as one value that a kernel can hold in registers.
 
 numba compiles scalar loops and leaves vectors to the optimiser, which gives up on butterfly-shaped access. A block
-is an LLVM vector of ``WIDTH`` doubles with just the operations that the walk kernel needs. It is wider than any
-register on purpose: the code generator cuts it into registers of the size the processor has, a swap of far lanes
+is an LLVM vector of 64 doubles or 128 floats with just the operations that the walk kernel needs. It is wider than
+any register on purpose: the code generator cuts it into registers of the size the processor has, a swap of far lanes
 then costs no more than a change of names, and a sum that two registers share is formed once.
 
-A twin for another element type needs its own ``LanesType``, ``load`` and ``splat``; the rest is generic.
+The type of the array or number that a block comes from decides which of the two it is; the rest is generic.
 """
 
 from __future__ import annotations
 
+import functools
 from collections.abc import Callable
 from typing import Any, cast
 
@@ -20,7 +21,7 @@ from numba.core.errors import TypingError
 from numba.extending import intrinsic, models, register_model
 
 WIDTH = 64
-"""Numbers in one block, a power of two. Measured with 8 doubles a register: 16, 32 and 128 are 10 to 40 % slower."""
+"""Doubles in one block, a power of two. Measured with 8 doubles a register: 16, 32 and 128 are 10 to 40 % slower."""
 
 CACHE_LINE = 8
 """Doubles in one cache line, and in the widest register."""
@@ -54,7 +55,8 @@ class _LanesModel(models.PrimitiveModel):
         super().__init__(manager, lanes, lanes.llvm)  # type: ignore[no-untyped-call, unused-ignore]
 
 
-DOUBLES = LanesType(types.float64, WIDTH)
+BLOCKS = {types.float64: LanesType(types.float64, WIDTH), types.float32: LanesType(types.float32, 2 * WIDTH)}
+"""The block of each element type: eight registers of 512 bits."""
 
 
 def _instruction(typing: Callable[..., Any]) -> Callable[..., Any]:
@@ -62,14 +64,15 @@ def _instruction(typing: Callable[..., Any]) -> Callable[..., Any]:
     return cast(Callable[..., Any], intrinsic(typing))
 
 
-def _require_array(array: Any) -> None:
-    if not (isinstance(array, types.Array) and array.layout == "C" and array.dtype == DOUBLES.element):
-        raise TypingError(f"blocks live in contiguous {DOUBLES.element} arrays; this is {array}")
+def _block_of(array: Any) -> LanesType:
+    if not (isinstance(array, types.Array) and array.layout == "C" and array.dtype in BLOCKS):
+        raise TypingError(f"blocks live in contiguous arrays of float64 or float32; this is {array}")
+    return BLOCKS[array.dtype]
 
 
 def _address(context: Any, builder: Any, array_type: Any, array: Any, index: Any) -> Any:
     data = context.make_array(array_type)(context, builder, array).data
-    return builder.bitcast(builder.gep(data, [index]), DOUBLES.llvm.as_pointer())
+    return builder.bitcast(builder.gep(data, [index]), BLOCKS[array_type.dtype].llvm.as_pointer())
 
 
 def _declared(builder: Any, name: str, result: Any, operands: list[Any]) -> Any:
@@ -78,23 +81,37 @@ def _declared(builder: Any, name: str, result: Any, operands: list[Any]) -> Any:
 
 
 @_instruction
+def width_in(_typing: Any, array: Any) -> Any:
+    """How many numbers of this array make one block."""
+    width = _block_of(array).width
+
+    def generate(context: Any, _builder: Any, _signature: Any, _args: Any) -> Any:
+        return context.get_constant(types.intp, width)
+
+    return types.intp(array), generate
+
+
+@_instruction
 def load(_typing: Any, array: Any, _index: Any) -> Any:
-    """The block array[index : index + WIDTH]. Bounds are not checked; a multiple of 64 bytes is the fast place."""
-    _require_array(array)
+    """The block that begins at array[index]. Bounds are not checked; a multiple of 64 bytes is the fast place."""
+    block = _block_of(array)
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
-        return builder.load(_address(context, builder, signature.args[0], *args), align=8)
+        address = _address(context, builder, signature.args[0], *args)
+        return builder.load(address, align=block.element.bitwidth // 8)
 
-    return DOUBLES(array, types.intp), generate
+    return block(array, types.intp), generate
 
 
 @_instruction
 def store(_typing: Any, array: Any, _index: Any, block: Any) -> Any:
-    """Write a block to array[index : index + WIDTH]."""
-    _require_array(array)
+    """Write a block to the array, beginning at array[index]."""
+    if _block_of(array) != block:
+        raise TypingError(f"{block} does not fit into {array}")
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
-        builder.store(args[2], _address(context, builder, signature.args[0], *args[:2]), align=8)
+        address = _address(context, builder, signature.args[0], *args[:2])
+        builder.store(args[2], address, align=block.element.bitwidth // 8)
         return context.get_dummy_value()
 
     return types.void(array, types.intp, block), generate
@@ -103,14 +120,15 @@ def store(_typing: Any, array: Any, _index: Any, block: Any) -> Any:
 @_instruction
 def prefetch(_typing: Any, array: Any, _index: Any) -> Any:
     """Ask for the block at array[index] ahead of its use; an index beyond the array does no harm."""
-    _require_array(array)
+    block = _block_of(array)
+    line_length = 8 * CACHE_LINE * 8 // block.element.bitwidth
     byte, number = ir.IntType(8).as_pointer(), ir.IntType(32)
     to_read_in_all_caches = [ir.Constant(number, flag) for flag in (0, 3, 1)]
 
     def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
         function = _declared(builder, "llvm.prefetch.p0", ir.VoidType(), [byte, number, number, number])
         data = context.make_array(signature.args[0])(context, builder, args[0]).data
-        for line in range(0, WIDTH, CACHE_LINE):
+        for line in range(0, block.width, line_length):
             place = builder.gep(data, [builder.add(args[1], ir.Constant(args[1].type, line))])
             builder.call(function, [builder.bitcast(place, byte), *to_read_in_all_caches])
         return context.get_dummy_value()
@@ -119,15 +137,21 @@ def prefetch(_typing: Any, array: Any, _index: Any) -> Any:
 
 
 @_instruction
-def splat(_typing: Any, _value: Any) -> Any:
-    """A block with this number in every lane."""
+def splat(_typing: Any, value: Any) -> Any:
+    """A block with this number in every lane: of floats for a float32, of doubles for anything else."""
+    block = BLOCKS[value if value == types.float32 else types.float64]
 
     def generate(_context: Any, builder: Any, _signature: Any, args: Any) -> Any:
-        nothing = ir.Constant(DOUBLES.llvm, ir.Undefined)
+        nothing = ir.Constant(block.llvm, ir.Undefined)
         first = builder.insert_element(nothing, args[0], ir.Constant(ir.IntType(32), 0))
-        return builder.shuffle_vector(first, nothing, DOUBLES.order([0] * WIDTH))
+        return builder.shuffle_vector(first, nothing, block.order([0] * block.width))
 
-    return DOUBLES(DOUBLES.element), generate
+    return block(block.element), generate
+
+
+def _swapped(builder: Any, block: LanesType, value: Any, mask: int) -> Any:
+    order = block.order([lane ^ mask for lane in range(block.width)])
+    return builder.shuffle_vector(value, ir.Constant(block.llvm, ir.Undefined), order)
 
 
 @_instruction
@@ -135,12 +159,45 @@ def swap(_typing: Any, block: Any, mask: Any) -> Any:
     """The block whose lane i is lane ``i ^ mask`` of the given one; ``mask`` is a literal number."""
     if not isinstance(mask, types.IntegerLiteral):
         raise TypingError("the mask of a lane swap must be a literal number")
-    order = block.order([lane ^ mask.literal_value for lane in range(block.width)])
 
     def generate(_context: Any, builder: Any, _signature: Any, args: Any) -> Any:
-        return builder.shuffle_vector(args[0], ir.Constant(block.llvm, ir.Undefined), order)
+        return _swapped(builder, block, args[0], mask.literal_value)
 
     return block(block, mask), generate
+
+
+@_instruction
+def neighbours(_typing: Any, block: Any) -> Any:
+    """The block whose lane i sums all lanes whose number differs from i in one bit.
+
+    Swaps of whole registers are summed apart from those within: the first two sums are the same for two registers.
+    """
+
+    def generate(_context: Any, builder: Any, _signature: Any, args: Any) -> Any:
+        def summed(masks: list[int]) -> Any:
+            blocks = [_swapped(builder, block, args[0], mask) for mask in masks]
+            return functools.reduce(builder.fadd, blocks)
+
+        masks = [1 << bit for bit in range(block.width.bit_length() - 1)]
+        within = 8 * CACHE_LINE * 8 // block.element.bitwidth
+        near, far = [mask for mask in masks if mask < within], [mask for mask in masks if mask >= within]
+        return builder.fadd(summed(near), summed(far))
+
+    return block(block), generate
+
+
+@_instruction
+def total(_typing: Any, block: Any) -> Any:
+    """The sum of all lanes, added up by halves."""
+
+    def generate(_context: Any, builder: Any, _signature: Any, args: Any) -> Any:
+        value, mask = args[0], block.width // 2
+        while mask:
+            value = builder.fadd(value, _swapped(builder, block, value, mask))
+            mask //= 2
+        return builder.extract_element(value, ir.Constant(ir.IntType(32), 0))
+
+    return block.element(block), generate
 
 
 @_instruction

@@ -1,17 +1,15 @@
-"""exp(-iHt) without a matrix, for H = -hopping * sum_i X_i + diag(diagonal) on k spins (hbar = 1).
+"""exp(-iHt) without a matrix, for H = -hopping * D + diag(diagonal) on k spins, D a driver of drivers.py (hbar = 1).
 
-Chebyshev propagation (Tal-Ezer & Kosloff, J. Chem. Phys. 81 (1984) 3967). With the spectrum inside
-``centre +- half_width`` and ``x = half_width * t``,
+Chebyshev propagation (Tal-Ezer & Kosloff, J. Chem. Phys. 81 (1984) 3967): the series is in coefficients.py, one step
+of it in hamiltonian.py. H and the start are real, and so are the vectors ``T_m |start>``: the even ones add up to the
+real part, the odd ones to the imaginary part, and any number of measuring times are sums over the same vectors. Two
+vectors are held, each overwritten by the next but one. Of every four steps the last two add two vectors each to the
+sums, while these are in registers anyway. A time of which only a few amplitudes are wanted needs no sums over whole
+vectors: these amplitudes are *watched* as the vectors go by.
 
-    exp(-iHt) = exp(-i centre t) sum_m (2 - [m=0]) (-i)^m J_m(x) T_m((H - centre) / half_width).
-
-H and the start are real, and so are the vectors ``T_m |start>``: the even ones add up to the real part, the odd ones
-to the imaginary part, and any number of measuring times are sums over the same vectors. Two vectors are held, each
-overwritten by the next but one. Of every four passes the last two add two vectors each to the sums, while these are
-in registers anyway. Only ``_advanced`` and ``_advance_few`` know that the moving part of H flips single spins.
-
-Every decision rests on this diagonal, hopping and list of times alone, through products that a common power of two
-leaves unchanged to the last bit. A measuring time is answered with the same bits whatever other times are asked for.
+The element type of the workspace decides the precision of the vectors. Every decision rests on this diagonal,
+hopping and list of times alone, through products that a common power of two leaves unchanged to the last bit. A
+measuring time is answered with the same bits whatever other times are asked for.
 """
 
 from __future__ import annotations
@@ -21,216 +19,87 @@ import math
 import numpy as np
 import numpy.typing as npt
 
+from patchwalk.subsolvers.coefficients import DOUBLE_DECAY, series_coefficients, series_terms
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I64
-from patchwalk.subsolvers.lanes import CACHE_LINE, WIDTH, Block, add, fma, fms, load, prefetch, splat, store, swap
+from patchwalk.subsolvers.drivers import DRIVERS, PAIRS, driver_range
+from patchwalk.subsolvers.hamiltonian import (
+    Number,
+    Vector,
+    advance,
+    advance_few,
+    aligned,
+    diagonal_vectors,
+    half_width_within,
+    held_vectors,
+    padded,
+    spins_of,
+    times_together,
+    workspace_size,
+)
+from patchwalk.subsolvers.lanes import width_in
+from patchwalk.subsolvers.spectrum import cluster_energies
 
 UNIFORM = -1
 """The ``start`` that stands for the uniform superposition."""
 
-NEGLECTED = 28.0
-"""The series ends where its Bessel functions have fallen below exp(-NEGLECTED), about 1e-12, by a generous bound."""
 
-VANISHED = 74.0
-"""The downward recurrence for the Bessel functions begins where they have fallen below exp(-VANISHED)."""
-
-TINY_ARGUMENT = 1e-9
-"""Up to here J_0(x) = 1 and J_1(x) = x/2 to machine precision, and nothing else counts."""
-
-SUMS_BYTES = 1 << 27
-"""Memory for the sums of one recursion; more measuring times than fit are split over several recursions."""
+@compiled
+def expected_applications(x: float, decay: float) -> int:
+    """Applications of H in one recursion that reaches ``x`` = half width times longest time."""
+    return series_terms(x, decay) - 1
 
 
 @compiled
-def _order_reaching(x: float, decay: float) -> int:
-    """An order beyond ``x`` from which on J_n(x) < exp(-decay).
+def _watch(vector: Vector, watched: I64, weights: F64, term: int, amplitudes: F64) -> None:
+    """Add the watched entries of T_term to amplitudes (2, W, M): even terms to the real part, odd ones to the other."""
+    for place in range(len(watched)):
+        value = float(vector[watched[place]])
+        for column in range(weights.shape[1]):
+            amplitudes[term % 2, place, column] += weights[term, column] * value
 
-    Debye's bound: J_n(x) < exp(-n (a - tanh a)) where n = x cosh a. The exponent is convex in n, so that Newton's
-    iteration steps to the right of the root at once, and from there comes down without passing it.
+
+@compiled
+def sum_series(
+    driver: int, size: int, diagonal: Vector, pull: Number, start: int, vectors: Vector, weights: F64, terms: I64,
+    columns: I64, watched: I64, amplitudes: F64,
+) -> int:  # fmt: skip
+    """One recursion: sums over whole vectors for ``columns``, single amplitudes of all columns for ``watched``.
+
+    ``diagonal`` and ``pull`` are those of 2 (H - centre) / half_width on ``size`` configurations. ``vectors`` is flat,
+    padded vectors one after the other: two for the recursion, one more for the pairs, then the real sums of all
+    columns, then the imaginary ones. Columns are ordered with the longest series first, so that the shorter ones drop
+    out from the end. ``amplitudes`` f64 (2, W, M), real and imaginary, starts from zero. Returns the applications of
+    H.
     """
-    if x <= TINY_ARGUMENT:
-        return 2
-    order = x + decay + 2.0
-    for _ in range(50):
-        angle = math.acosh(order / x)
-        step = (order * angle - math.sqrt((order - x) * (order + x)) - decay) / angle
-        order -= step
-        if 0.0 <= step < 0.25:
-            break
-    return max(2, math.ceil(order))
-
-
-@compiled
-def _terms(x: float) -> int:
-    """Chebyshev vectors needed, T_0 included: a multiple of four, as four passes make one round of summing."""
-    return (_order_reaching(x, NEGLECTED) + 4) // 4 * 4
-
-
-@compiled
-def expected_applications(span_of_diagonal: float, spins: int, hopping: float, longest_time: float) -> int:
-    """Applications of H in one recursion, from the span of the diagonal (largest minus smallest entry).
-
-    Up to :func:`times_together` measuring times share one recursion.
-    """
-    half_width = 0.5 * span_of_diagonal + spins * abs(hopping)
-    return _terms(half_width * abs(longest_time)) - 1
-
-
-@compiled
-def times_together(spins: int, times: int) -> int:
-    """How many of so many measuring times share one recursion: all of them, unless 2^spins is very large."""
-    return max(1, min(times, SUMS_BYTES // (16 << spins)))
-
-
-@compiled
-def _padded(size: int) -> int:
-    """Distance between vectors: whole cache lines, but no multiple of a page, where they would evict one another."""
-    return (size + CACHE_LINE - 1) // CACHE_LINE * CACHE_LINE + 9 * CACHE_LINE
-
-
-@compiled
-def workspace_bytes(spins: int, times: int) -> int:
-    """Memory that :func:`walk_law` holds for itself, beside its arguments and the table of coefficients."""
-    return 8 * (CACHE_LINE + (3 + 2 * times_together(spins, times)) * _padded(1 << spins))
-
-
-@compiled
-def _fill_bessel(x: float, values: F64) -> None:
-    """values[m] = J_m(x) for x >= 0, by downward recurrence, normalised by J_0 + 2 J_2 + 2 J_4 + ... = 1."""
-    if x <= TINY_ARGUMENT:
-        values[:] = 0.0
-        values[0] = 1.0
-        values[1] = 0.5 * x
-        return
-    top = max(_order_reaching(x, VANISHED), len(values))
-    slope = 2.0 / x
-    above, here, total = 0.0, 1e-60, 0.0
-    for order in range(top, 0, -1):
-        if order < len(values):
-            values[order] = here
-        if order % 2 == 0:
-            total += 2.0 * here
-        above, here = here, order * slope * here - above
-    values[0] = here
-    values /= total + here
-
-
-@compiled
-def _coefficients(half_width: float, times: F64, terms: I64) -> F64:
-    """What each Chebyshev vector (column) adds to each time's sums (row), signs included.
-
-    ``terms`` (M,) is filled with the number of columns that count in each row; the others are zero.
-    """
-    for row in range(len(times)):
-        terms[row] = _terms(half_width * abs(times[row]))
-    table = np.zeros((len(times), terms.max()))
-    for row in range(len(times)):
-        x = half_width * times[row]
-        _fill_bessel(abs(x), table[row, : terms[row]])
-        for term in range(1, terms[row]):
-            # (-i)^m runs through 1, -i, -1, i; odd orders change sign with x
-            table[row, term] *= 2.0 if (term + 1) % 4 < 2 else -2.0
-            if x < 0.0 and term % 2 == 1:
-                table[row, term] = -table[row, term]
-    return table
-
-
-@compiled
-def _advanced(diagonal: F64, pull: float, now: F64, earlier: Block, first: int) -> Block:
-    """One block of 2 H now - earlier: near neighbours from registers, far ones loaded.
-
-    Far neighbours go in turn to an addition and to a multiply-add, which have separate units in the processor.
-    """
-    hop = splat(-pull)
-    here = load(now, first)
-    result = fms(load(diagonal, first), here, earlier)
-    near = add(add(swap(here, 1), swap(here, 2)), swap(here, 4))
-    neighbours = add(add(near, swap(here, 32)), add(swap(here, 8), swap(here, 16)))
-    distance = WIDTH
-    while distance < len(diagonal):
-        neighbours = add(neighbours, load(now, first ^ distance))
-        distance *= 2
-        if distance < len(diagonal):
-            result = fma(hop, load(now, first ^ distance), result)
-            distance *= 2
-    return fma(hop, neighbours, result)
-
-
-@compiled
-def _advance(diagonal: F64, pull: float, now: F64, earlier: F64) -> None:
-    """Overwrite ``earlier`` by 2 H now - earlier; ``diagonal`` and ``pull`` are doubled already."""
-    for first in range(0, len(diagonal), WIDTH):
-        store(earlier, first, _advanced(diagonal, pull, now, load(earlier, first), first))
-
-
-@compiled
-def _advance_and_sum(
-    diagonal: F64, pull: float, now: F64, earlier: F64, sums: F64, weights: F64, term: int, rows: int
-) -> None:
-    """The same, adding ``earlier`` (T_{term-2}) and its successor (T_term) to the first ``rows`` sums on the way.
-
-    ``sums`` is flat, one padded vector a row, and uninitialised in the first round.
-    """
-    stride = _padded(len(diagonal))
-    for first in range(0, len(diagonal), WIDTH):
-        old = load(earlier, first)
-        new = _advanced(diagonal, pull, now, old, first)
-        store(earlier, first, new)
-        for row in range(rows):
-            place = row * stride + first
-            prefetch(sums, place + WIDTH)
-            total = load(sums, place) if term >= 4 else splat(0.0)
-            total = fma(splat(weights[row, term - 2]), old, total)
-            store(sums, place, fma(splat(weights[row, term]), new, total))
-
-
-@compiled
-def _advance_few(
-    diagonal: F64, pull: float, now: F64, earlier: F64, sums: F64, weights: F64, term: int, rows: int
-) -> None:
-    """Both of the above for vectors shorter than one block."""
-    size = len(diagonal)
-    for number in range(size):
-        neighbours = 0.0
-        distance = 1
-        while distance < size:
-            neighbours += now[number ^ distance]
-            distance *= 2
-        old = earlier[number]
-        earlier[number] = diagonal[number] * now[number] - old - pull * neighbours
-        for row in range(rows):
-            place = row * _padded(size) + number
-            total = sums[place] if term >= 4 else 0.0
-            sums[place] = total + weights[row, term - 2] * old + weights[row, term] * earlier[number]
-
-
-@compiled
-def _sum_series(diagonal: F64, pull: float, now: F64, earlier: F64, sums: F64, weights: F64, terms: I64) -> None:
-    """Run the recursion from T_0 in ``now``. The real sums of all rows come first in ``sums``, then the imaginary ones.
-
-    Rows are ordered with the longest series first, so that the shorter ones drop out from the end.
-    """
-    imaginary = sums[len(sums) // 2 :]
+    stride = padded(size, diagonal.itemsize)
+    now, earlier, spare = vectors[:size], vectors[stride:][:size], vectors[2 * stride :][:size]
+    sums = vectors[held_vectors(driver) * stride :]
     earlier[:] = 0.0
-    active = len(terms)
-    for term in range(1, terms[0]):
-        while terms[active - 1] <= term:
+    now[:] = math.sqrt(1.0 / size) if start == UNIFORM else 0.0
+    if start != UNIFORM:
+        now[start] = 1.0
+    _watch(now, watched, weights, 0, amplitudes)
+    last = len(weights) if len(watched) else terms[columns[0]]
+    active = len(columns)
+    for term in range(1, last):
+        while active and terms[columns[active - 1]] <= term:
             active -= 1
-        part = imaginary if term % 2 == 1 else sums
-        rows = active if term % 4 >= 2 else 0
-        if len(diagonal) < WIDTH:
-            _advance_few(diagonal, pull, now, earlier, part, weights, term, rows)
-        elif rows > 0:
-            _advance_and_sum(diagonal, pull, now, earlier, part, weights, term, rows)
+        base = (term % 2) * len(columns) * stride
+        summed = active if term % 4 >= 2 else 0
+        if size < width_in(now):
+            advance_few(driver, diagonal, pull, now, spare, earlier, sums, base, weights, columns, summed, term)
         else:
-            _advance(diagonal, pull, now, earlier)
+            advance(driver, diagonal, pull, now, spare, earlier, sums, base, weights, columns, summed, term)
         if term == 1:
-            earlier *= 0.5  # T_1 = H T_0, without the factor of two
+            earlier *= diagonal.dtype.type(0.5)  # T_1 = H T_0, without the factor of two
+        _watch(earlier, watched, weights, term, amplitudes)
         now, earlier = earlier, now
+    return last - 1
 
 
 @compiled
-def _longest_first(times: F64) -> I64:
+def longest_first(times: F64) -> I64:
     """The order of the times by falling length; equal ones stay in line."""
     order = np.empty(len(times), np.int64)
     for index in range(len(times)):
@@ -243,102 +112,123 @@ def _longest_first(times: F64) -> I64:
 
 
 @compiled
-def _aligned(size: int) -> F64:
-    """An uninitialised vector that begins on a cache line."""
-    memory = np.empty(size + CACHE_LINE)
-    shift = (-(memory.ctypes.data // 8)) % CACHE_LINE
-    return memory[shift : shift + size]
+def scale_spectrum(diagonal: F64, driver: int, hopping: float, scaled: Vector) -> tuple[float, float, float]:
+    """Centre and half width of an interval that holds the spectrum of H, and the pull that goes with ``scaled``.
 
-
-@compiled
-def _centre_and_half_width(diagonal: F64, reach: float) -> tuple[float, float]:
-    """An interval that holds the whole spectrum; ``reach`` bounds the moving part of H."""
+    ``scaled`` is filled with the diagonal of 2 (H - centre) / half_width, as :func:`sum_series` wants it.
+    """
     lowest = highest = diagonal[0]
     for level in diagonal:
         lowest = min(lowest, level)
         highest = max(highest, level)
-    return 0.5 * lowest + 0.5 * highest, 0.5 * highest - 0.5 * lowest + reach
-
-
-@compiled
-def _write(even: F64, odd: F64, phase: float, real: F64, imaginary: F64, law_only: bool) -> None:
-    """Turn the two sums of one time into its law, or into its amplitudes times exp(-i phase)."""
-    if law_only:
-        for number in range(len(even)):
-            real[number] = even[number] * even[number] + odd[number] * odd[number]
-        return
-    cosine, sine = math.cos(phase), math.sin(phase)
-    for number in range(len(even)):
-        real[number] = even[number] * cosine + odd[number] * sine
-        imaginary[number] = odd[number] * cosine - even[number] * sine
-
-
-@compiled
-def _propagate(diagonal: F64, hopping: float, start: int, times: F64, real: F64, imaginary: F64, law_only: bool) -> int:
-    """Fill ``real`` with the law, or both parts with the amplitudes; returns the applications of H."""
-    size, spins = len(diagonal), 0
-    while 1 << spins < size:
-        spins += 1
-    centre, half_width = _centre_and_half_width(diagonal, spins * abs(hopping))
+    spins = spins_of(len(diagonal))
+    low, high = driver_range(driver, spins)
+    downward, upward = (high, -low) if hopping >= 0.0 else (-low, high)
+    centre = 0.5 * lowest + 0.5 * highest + 0.5 * (upward - downward) * abs(hopping)
+    half_width = half_width_within(driver, spins, hopping, highest - lowest)
+    if hopping != 0.0 and half_width > 0.0:  # a little wider, so that the pull is a number of this precision exactly
+        half_width *= 1.0 + 2.0**-22
+        half_width = 2.0 * hopping / float(scaled.dtype.type(2.0 * hopping / half_width))
     twice = 2.0 / half_width if half_width > 0.0 else 0.0
+    pull = hopping * twice
+    constant = 0.0
+    if driver == PAIRS:
+        pull *= 0.5
+        constant = pull * spins
+    for number in range(len(diagonal)):
+        entry = (diagonal[number] - centre) * twice + constant
+        scaled[number] = entry
+        if scaled.itemsize == 4:
+            scaled[padded(len(diagonal), 4) + number] = entry - float(scaled[number])
+    return centre, half_width, pull
 
-    stride = _padded(size)
-    together = times_together(spins, len(times))
-    workspace = _aligned((3 + 2 * together) * stride)
-    scaled, now, other = workspace[:size], workspace[stride:][:size], workspace[2 * stride :][:size]
-    for number in range(size):
-        scaled[number] = (diagonal[number] - centre) * twice
 
-    order = _longest_first(times)
+@compiled
+def _propagate(
+    diagonal: F64, driver: int, hopping: float, start: int, times: F64, decay: float, workspace: Vector, real: F64,
+    imaginary: F64, law_only: bool,
+) -> int:  # fmt: skip
+    """Fill ``real`` (M, N) with the law, or both parts with the amplitudes; returns the applications of H."""
+    size = len(diagonal)
+    workspace = aligned(workspace)
+    stride = padded(size, workspace.itemsize)
+    behind = diagonal_vectors(workspace.itemsize) * stride
+    scaled, vectors = workspace[:behind], workspace[behind:]
+    centre, half_width, pull = scale_spectrum(diagonal, driver, hopping, scaled)
+    terms = np.empty(len(times), np.int64)
+    weights = series_coefficients(half_width, times, decay, terms)
+    order, together = longest_first(times), times_together(spins_of(size), len(times), workspace.itemsize)
+    nothing, nowhere = np.empty(0, np.int64), np.empty((2, 0, 0))
     applications = 0
     for begin in range(0, len(times), together):
         group = order[begin : begin + together]
-        terms = np.empty(len(group), np.int64)
-        weights = _coefficients(half_width, times[group], terms)
-        applications += terms[0] - 1
-        if start < 0:
-            now[:] = math.sqrt(1.0 / size)
-        else:
-            now[:] = 0.0
-            now[start] = 1.0
-        even = workspace[3 * stride :][: 2 * len(group) * stride]
+        applications += sum_series(
+            driver, size, scaled, scaled.dtype.type(pull), start, vectors, weights, terms, group, nothing, nowhere
+        )
+        even = vectors[held_vectors(driver) * stride :]
         odd = even[len(group) * stride :]
-        _sum_series(scaled, hopping * twice, now, other, even, weights, terms)
         for row in range(len(group)):
             target, place = group[row], row * stride
-            phase = centre * times[target]
-            _write(even[place:][:size], odd[place:][:size], phase, real[target], imaginary[target], law_only)
+            phase = 0.0 if law_only else centre * times[target]
+            cosine, sine = math.cos(phase), math.sin(phase)
+            for number in range(size):
+                here, there = float(even[place + number]), float(odd[place + number])
+                if law_only:
+                    real[target, number] = here * here + there * there
+                else:
+                    real[target, number] = here * cosine + there * sine
+                    imaginary[target, number] = there * cosine - here * sine
     return applications
 
 
-@compiled
-def walk_law(diagonal: F64, hopping: float, start: int, times: F64, law: F64) -> int:
+def new_workspace(driver: int, spins: int, times: int, single: bool = False) -> Vector:
+    """Memory for the walks of clusters of one size, one after the other."""
+    dtype = np.float32 if single else np.float64
+    return np.empty(workspace_size(driver, spins, times, np.dtype(dtype).itemsize), dtype)
+
+
+def level_table(fields: F64, couplings: F64) -> F64:
+    """The diagonal of one cluster: all its energies, f64 (2^k,)."""
+    energies = np.empty(1 << len(fields))
+    cluster_energies(fields, couplings, energies)
+    return energies
+
+
+def walk_law(
+    diagonal: F64,
+    hopping: float,
+    start: int,
+    times: F64,
+    law: F64,
+    driver: int = 0,
+    workspace: Vector | None = None,
+    decay: float = DOUBLE_DECAY,
+) -> int:
     """Outcome probabilities of a walk: law[m, x] = |<x| exp(-iHt_m) |start>|^2.
 
     ``diagonal`` f64 (N,) with N = 2^k and ``hopping`` are energies; ``start`` is the number of a configuration, or -1
     for the uniform superposition; ``times`` f64 (M,) are in units of 1/energy, in any order; ``law`` is f64 (M, N).
-    Returns the number of applications of H. Nothing is checked: see :func:`evolve`.
+    Double precision, unless another ``workspace`` and ``decay`` of the series are given. Returns the number of
+    applications of H. Nothing is checked: see :func:`evolve`.
     """
-    return _propagate(diagonal, hopping, start, times, law, law, True)
-
-
-@compiled
-def walk_amplitudes(diagonal: F64, hopping: float, start: int, times: F64, real: F64, imaginary: F64) -> int:
-    """Amplitudes of exp(-iHt_m)|start>, global phase included, into ``real`` and ``imaginary`` f64 (M, N).
-
-    Other arguments and the result as for :func:`walk_law`.
-    """
-    return _propagate(diagonal, hopping, start, times, real, imaginary, False)
+    if workspace is None:
+        workspace = new_workspace(driver, len(diagonal).bit_length() - 1, len(times))
+    return _propagate(diagonal, driver, hopping, start, times, decay, workspace, law, law, True)
 
 
 def evolve(
-    diagonal: npt.ArrayLike, hopping: float, times: npt.ArrayLike, start: int | None = None
+    diagonal: npt.ArrayLike,
+    hopping: float,
+    times: npt.ArrayLike,
+    start: int | None = None,
+    driver: str = "hypercube",
 ) -> npt.NDArray[np.complex128]:
-    """Amplitudes complex (M, N) of exp(-iHt)|start> for H = -hopping * sum_i X_i + diag(diagonal).
+    """Amplitudes complex (M, N) of exp(-iHt)|start> for H = -hopping * D + diag(diagonal), in double precision.
 
     ``diagonal`` (N,) with N = 2^k and ``hopping`` are energies, ``times`` (M,) or a single time in units of 1/energy;
-    ``start`` is the number of a configuration, or None for the uniform superposition. Raises ``ValueError`` for a
-    diagonal whose length is no power of two, for values that are not finite and for a start outside the diagonal.
+    ``start`` is the number of a configuration, or None for the uniform superposition; ``driver`` names D. Raises
+    ``ValueError`` for a diagonal whose length is no power of two, for values that are not finite, for a start outside
+    the diagonal and for an unknown driver.
 
     A spin in a transverse field turns over in half a period:
 
@@ -347,8 +237,8 @@ def evolve(
     >>> bool(numpy.allclose(amplitudes, [[0, 1j]]))
     True
     """
-    levels = np.ascontiguousarray(diagonal, np.float64)
-    moments = np.atleast_1d(np.ascontiguousarray(times, np.float64))
+    levels = np.array(diagonal, np.float64)
+    moments = np.atleast_1d(np.array(times, np.float64))
     size = levels.size
     if levels.ndim != 1 or size < 2 or size & (size - 1):
         raise ValueError(f"diagonal has shape {levels.shape}; give one entry for each of 2, 4, 8, ... configurations")
@@ -359,7 +249,11 @@ def evolve(
             raise ValueError(f"{name} holds nan or infinity; give finite numbers")
     if start is not None and not 0 <= start < size:
         raise ValueError(f"start is {start}; give a configuration number from 0 to {size - 1}, or None")
+    if driver not in DRIVERS:
+        raise ValueError(f"driver is {driver!r}; it is one of {', '.join(DRIVERS)}")
+    kind, origin = DRIVERS.index(driver), UNIFORM if start is None else start
     real = np.empty((len(moments), size))
     imaginary = np.empty_like(real)
-    walk_amplitudes(levels, float(hopping), UNIFORM if start is None else start, moments, real, imaginary)
+    workspace = new_workspace(kind, size.bit_length() - 1, len(moments))
+    _propagate(levels, kind, float(hopping), origin, moments, DOUBLE_DECAY, workspace, real, imaginary, False)
     return real + 1j * imaginary

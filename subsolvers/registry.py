@@ -20,7 +20,11 @@ from patchwalk.subsolvers.contract import Subsolver
 
 OURS: Mapping[str, str] = {
     "walk": "patchwalk.subsolvers.walk:Walk",
+    "forward": "patchwalk.subsolvers.anneal:Forward",
+    "reverse": "patchwalk.subsolvers.anneal:Reverse",
+    "blend": "patchwalk.subsolvers.anneal:Blend",
     "enumeration": "patchwalk.subsolvers.enumeration:Enumeration",
+    "elimination": "patchwalk.subsolvers.elimination:Elimination",
     "metropolis": "patchwalk.subsolvers.metropolis:Metropolis",
     "tabu": "patchwalk.subsolvers.tabu:Tabu",
     "descent": "patchwalk.subsolvers.descent:Descent",

@@ -6,11 +6,16 @@ significant first) is 0, and ``s_i = -1`` where it is 1. A constant offset is le
 
 from __future__ import annotations
 
+import numpy as np
+
 from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import F64, I8
+from patchwalk.subsolvers.contract import F64, I8, I64
 
 TIE_SHARE = 1e-9
 """Two energies of a cluster are tied when they differ by at most this share of the sum of all absolute weights."""
+
+LANES = 64
+"""Numbers side by side in loops that reduce many to one: enough for any vector unit."""
 
 
 @compiled
@@ -50,6 +55,58 @@ def tie_tolerance(fields: F64, couplings: F64) -> float:
         for other in range(spin):
             total += abs(couplings[other, spin])
     return TIE_SHARE * total
+
+
+@compiled
+def lowest_of(energies: F64) -> float:
+    """The lowest of 2^k energies."""
+    lanes = energies[: min(LANES, len(energies))].copy()
+    for first in range(len(lanes), len(energies), len(lanes)):
+        here = energies[first : first + len(lanes)]
+        for x in range(len(lanes)):
+            lanes[x] = here[x] if here[x] < lanes[x] else lanes[x]
+    return float(lanes.min())
+
+
+@compiled
+def count_ties(energies: F64, ceiling: float, ties: I64) -> None:
+    """Fill ``ties`` i64 (B,) with how many energies of each of B equal parts are at or below ``ceiling``."""
+    part = len(energies) // len(ties)
+    for index in range(len(ties)):
+        count = 0
+        for energy in energies[index * part : (index + 1) * part]:
+            count += 1 if energy <= ceiling else 0
+        ties[index] = count
+
+
+@compiled
+def boltzmann_factor(exponent: float) -> float:
+    """exp(-exponent) for exponent >= 0, to 3e-16 of itself, and zero from 708 on.
+
+    The library's exponential keeps a loop from being vectorised; this one does not. The exponent is a multiple n of
+    ln 2, split in two so that the product is exact, and a rest below 0.35 for the power series; adding ``shift``
+    rounds to n and leaves it in the low bits of the sum, from where it is moved to the exponent of the result.
+    """
+    shift = 6755399441055744.0
+    capped = exponent if exponent < 708.0 else 708.0
+    shifted = np.float64(capped * -1.4426950408889634 + shift)
+    n = shifted - shift
+    rest = -capped - n * 0.693145751953125 - n * 1.4286068203094172e-06
+    series = 1.0 + rest / 13.0
+    series = 1.0 + rest * (1.0 / 12.0) * series
+    series = 1.0 + rest * (1.0 / 11.0) * series
+    series = 1.0 + rest * (1.0 / 10.0) * series
+    series = 1.0 + rest * (1.0 / 9.0) * series
+    series = 1.0 + rest * (1.0 / 8.0) * series
+    series = 1.0 + rest * (1.0 / 7.0) * series
+    series = 1.0 + rest * (1.0 / 6.0) * series
+    series = 1.0 + rest * (1.0 / 5.0) * series
+    series = 1.0 + rest * (1.0 / 4.0) * series
+    series = 1.0 + rest * (1.0 / 3.0) * series
+    series = 1.0 + rest * (1.0 / 2.0) * series
+    series = 1.0 + rest * series
+    power_of_two = np.int64((shifted.view(np.int64) + 1023) << 52).view(np.float64)
+    return series * power_of_two if exponent < 708.0 else 0.0
 
 
 @compiled

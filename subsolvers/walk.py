@@ -1,41 +1,39 @@
 """A continuous-time quantum walk on a cluster's configurations, simulated exactly.
 
-The walker starts in the uniform superposition, or in the incumbent, and moves under ``H = -hopping * sum_i X_i + H_P``
-with the cluster's energies on the diagonal (Farhi & Gutmann, PRA 58 (1998) 915, from memory; walks on spin glasses
+The walker starts in the uniform superposition, or in the incumbent, and moves under ``H = -hopping * D + H_P`` with
+the cluster's energies on the diagonal of H_P (Farhi & Gutmann, PRA 58 (1998) 915, from memory; walks on spin glasses
 are common practice). It is measured once per shot, at a time drawn from a few equally spaced ones.
 """
 
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import ClassVar, Literal, Self
 
 import numpy as np
+import numpy.typing as npt
 
-from patchwalk.subsolvers.compiled import compiled
+from patchwalk.subsolvers.calibration import best_factor, few_clusters
 from patchwalk.subsolvers.contract import (
     F64,
-    I8,
     I64,
-    U64,
+    U8,
     Balance,
     ClusterBatch,
     Forecast,
     Proposals,
+    Status,
     Work,
-    all_well,
     refuse_oversize,
 )
-from patchwalk.subsolvers.draws import next_below, next_unit
-from patchwalk.subsolvers.drivers import heuristic_hopping, level_spread
-from patchwalk.subsolvers.propagate import expected_applications, walk_law
-from patchwalk.subsolvers.spectrum import (
-    cluster_energies,
-    configuration_number,
-    tie_tolerance,
-    write_configuration,
-)
+from patchwalk.subsolvers.drivers import DRIVERS, Driver, heuristic_hopping, hop_scale, level_spread
+from patchwalk.subsolvers.hamiltonian import times_together, workspace_size
+from patchwalk.subsolvers.longtime import DENSE_SPINS, long_time_bytes, long_time_law, long_time_updates
+from patchwalk.subsolvers.measured import measure_laws, walk_and_measure, watched_entries
+from patchwalk.subsolvers.precision import DOUBLE_FLOOR, Plan, applications_needed, plan_calls
+from patchwalk.subsolvers.propagate import level_table, new_workspace, walk_law
+from patchwalk.subsolvers.spectrum import configuration_number
 from patchwalk.subsolvers.uniform import require_shots
 
 Times = float | tuple[float, float] | list[float]
@@ -45,41 +43,64 @@ Times = float | tuple[float, float] | list[float]
 class Walk:
     """One walk per call, measured ``shots`` times independently.
 
-    ``start`` is ``"uniform"`` or ``"incumbent"``. ``hopping`` is ``"heuristic"`` (span/(2k), from the couplings
-    alone) or a rate in energy units; ``hopping_factor`` multiplies either. Measuring times: one number, or an
-    interval ``[lo, hi]`` cut into ``times`` equally spaced times, ends included, one drawn per shot; in units of
-    1/energy as ``time``, or in units of 1/hopping as ``time_in_hops``, which is what counts where ``time`` is not
-    given.
+    ``start`` is ``"uniform"`` or ``"incumbent"``; ``driver`` is ``"hypercube"`` (single flips), ``"complete"`` (any
+    configuration to any other) or ``"pairs"`` (single and double flips). ``hopping`` is ``"heuristic"`` (as strong as
+    the levels are expected to be wide, from the couplings alone: drivers.py), ``"calibrated"`` or a rate in energy
+    units; ``hopping_factor`` multiplies any of them. Calibration happens in :meth:`prepare`, which chooses the factor
+    on the heuristic rate that gives the lowest mean energy of shots on sample clusters; before that it is the
+    heuristic rate.
+
+    Measuring times: one number, or an interval ``[lo, hi]`` cut into ``times`` equally spaced times, ends included,
+    one drawn per shot; in units of 1/energy as ``time``, or in hops (1/hopping on the hypercube) as ``time_in_hops``,
+    which is what counts where ``time`` is not given. ``time="infinite"`` is the average over an endless interval, up
+    to 11 spins; the times drawn are then inf.
+
+    ``tolerance`` bounds the total variation distance between the law of a shot and the exact one. It decides between
+    single and double precision, call by call. A call that misses it all the same is ``TRUNCATED``; :meth:`errors`
+    says what each call's error is estimated to be. :meth:`laws` and :meth:`distribution` are always in double
+    precision.
     """
 
     start: Literal["uniform", "incumbent"] = "uniform"
-    driver: Literal["hypercube"] = "hypercube"
-    hopping: float | Literal["heuristic"] = "heuristic"
+    driver: Driver = "hypercube"
+    hopping: float | Literal["heuristic", "calibrated"] = "heuristic"
     hopping_factor: float = 1.0
-    time: Times | None = None
-    time_in_hops: Times = (0.75, 1.5)
+    time: Times | Literal["infinite"] | None = None
+    time_in_hops: Times = (0.65, 1.05)
     times: int = 8
     shots: int = 1
+    tolerance: float = 1e-6
 
     name: ClassVar[str] = "walk"
-    max_spins: ClassVar[int] = 20
     deterministic: ClassVar[bool] = True
 
     def __post_init__(self) -> None:
         require_shots(self.name, self.shots)
         if self.start not in ("uniform", "incumbent"):
             raise ValueError(f"walk: start is {self.start!r}; it is uniform or incumbent")
-        if self.driver != "hypercube":
-            raise ValueError(f"walk: driver is {self.driver!r}; it is hypercube (single flips)")
-        if self.hopping != "heuristic" and not _positive(self.hopping):
-            raise ValueError(f"walk: hopping is {self.hopping!r}; it is heuristic or a positive rate in energy units")
+        if self.driver not in DRIVERS:
+            raise ValueError(f"walk: driver is {self.driver!r}; it is hypercube, complete or pairs")
+        if self.hopping not in ("heuristic", "calibrated") and not _positive(self.hopping):
+            raise ValueError(
+                f"walk: hopping is {self.hopping!r}; it is heuristic, calibrated or a positive rate in energy units"
+            )
         if not _positive(self.hopping_factor):
             raise ValueError(f"walk: hopping_factor is {self.hopping_factor!r}; it is a positive number")
         if not isinstance(self.times, int) or not 1 <= self.times <= 1000:
             raise ValueError(f"walk: times is {self.times!r}; give a whole number of measuring times from 1 to 1000")
+        if not _positive(self.tolerance) or not DOUBLE_FLOOR <= self.tolerance < 1.0:
+            raise ValueError(
+                f"walk: tolerance is {self.tolerance!r}; double precision gives {DOUBLE_FLOOR:g} at best, "
+                "and 1 would be no bound"
+            )
         for name in ("time", "time_in_hops"):
-            if getattr(self, name) is not None:
-                object.__setattr__(self, name, _interval(name, getattr(self, name)))
+            given = getattr(self, name)
+            if given is not None and (name, given) != ("time", "infinite"):
+                object.__setattr__(self, name, _interval(name, given))
+
+    @property
+    def max_spins(self) -> int:
+        return DENSE_SPINS if self.time == "infinite" else 22
 
     @property
     def balance(self) -> Balance:
@@ -89,36 +110,61 @@ class Walk:
 
     def prepare(self, sample: ClusterBatch) -> Self:
         self._refuse_oversize(sample)
-        self.propose(sample.rows(0, 1))
-        return self
+        ready = self
+        if self.hopping == "calibrated":
+            few = few_clusters(sample)
+            factor = best_factor(few, lambda factor: self._with_factor(factor).distribution(few))
+            ready = self._with_factor(factor)
+        ready.propose(sample.rows(0, 1))
+        return ready
 
     def forecast(self, batch: ClusterBatch) -> Forecast:
+        """Upper bounds, whatever the levels turn out to be; but a very large cluster (k >= 18) of which more than a
+        few thousand configurations are minima may take further recursions, one for every few measuring times.
+        """
         self._refuse_oversize(batch)
-        rates, times = self._rates(batch), self._measuring_times(batch)
-        span = 2 * batch.size * rates / self.hopping_factor if self.hopping == "heuristic" else _spans(batch)
-        applications = np.array(
-            [expected_applications(span[row], batch.size, rates[row], times[row].max()) for row in range(len(batch))],
-            np.int64,
-        )
-        vectors = 3 * times.shape[1] + 8
-        return Forecast(bytes=vectors * 8 << batch.size, work=self._work(batch, applications, times.mean(axis=1)))
+        size, rows = batch.size, len(batch)
+        if self.time == "infinite":
+            return Forecast(bytes=long_time_bytes(size), work=self._endless_work(batch))
+        plan = self.plan(batch)
+        applications = applications_needed(plan.reach, plan.single)
+        moments = plan.times.shape[1]
+        in_full = min(self.shots, moments)
+        recursions = -(-in_full // times_together(size, in_full, 8))
+        watched = watched_entries(1 << size)
+        numbers = (1 << size) + workspace_size(plan.driver, size, moments, 8) + (2 + 1 / moments) * watched
+        numbers += (applications.max() + 4) * (moments + 1) + 4 * moments + 4 * rows * self.shots
+        work = self._work(batch, applications * recursions, plan.times.mean(axis=1))
+        return Forecast(bytes=int(8 * numbers) + rows * self.shots * size, work=work)
 
     def propose(self, batch: ClusterBatch) -> Proposals:
         self._refuse_oversize(batch)
         assert batch.couplings is not None
         rows = len(batch)
-        rates, times = self._rates(batch), self._measuring_times(batch)
         outcomes = np.empty((rows, self.shots, batch.size), np.int8)
         drawn = np.empty((rows, self.shots))
         hit, log_ratio, applications = np.empty(rows), np.empty(rows), np.empty(rows, np.int64)
-        _walk_and_measure(
-            batch.fields, batch.couplings, batch.spins, batch.seeds, rates, times, self.start == "incumbent",
-            outcomes, drawn, hit, log_ratio, applications,
-        )  # fmt: skip
-        status, messages = all_well(rows)
+        incumbent = self.start == "incumbent"
+        if self.time == "infinite":
+            drawn[:] = np.inf
+            laws = self._endless_laws(batch)
+            measure_laws(batch.fields, batch.couplings, batch.spins, batch.seeds, laws, outcomes, hit, log_ratio)
+            work, status, messages = self._endless_work(batch), np.zeros(rows, np.uint8), ("",) * rows
+        else:
+            plan = self.plan(batch, exact_spans=True)
+            for single in (False, True):
+                members = np.flatnonzero(plan.single == single)
+                if len(members):
+                    walk_and_measure(
+                        members, batch.fields, batch.couplings, batch.spins, batch.seeds, plan.rates, plan.times,
+                        plan.driver, incumbent, new_workspace(plan.driver, batch.size, plan.times.shape[1], single),
+                        outcomes, drawn, hit, log_ratio, applications,
+                    )  # fmt: skip
+            work = self._work(batch, applications, drawn.mean(axis=1))
+            status, messages = self._verdicts(plan.errors)
         return Proposals(
             outcomes,
-            self._work(batch, applications, drawn.mean(axis=1)),
+            work,
             status,
             messages,
             log_ratio=log_ratio if self.balance == "ratio" else None,
@@ -127,38 +173,70 @@ class Walk:
             noiseless_hit=hit,
         )
 
+    def plan(self, batch: ClusterBatch, exact_spans: bool = False) -> Plan:
+        """Rates, times, precision and error of every call: see precision.py."""
+        rates = self._rates(batch)
+        kind, times = DRIVERS.index(self.driver), self._measuring_times(batch, rates)
+        return plan_calls(batch, kind, rates, times, self.tolerance, exact_spans)
+
+    def errors(self, batch: ClusterBatch) -> F64:
+        """Estimated total variation distance (B,) between the law that each call draws from and the exact one."""
+        self._refuse_oversize(batch)
+        if self.time == "infinite":
+            return np.full(len(batch), DOUBLE_FLOOR)
+        return self.plan(batch, exact_spans=True).errors
+
     def distribution(self, batch: ClusterBatch) -> F64:
         """The law of one shot, averaged over its measuring times: f64 (B, 2^k)."""
-        times = self._measuring_times(batch)
-        return np.stack([self.laws(batch.rows(b, b + 1), times[b]).mean(axis=1)[0] for b in range(len(batch))])
-
-    def laws(self, batch: ClusterBatch, times: F64) -> F64:
-        """The law of one shot measured at each of ``times`` (M,), in units of 1/energy: f64 (B, M, 2^k)."""
         self._refuse_oversize(batch)
-        assert batch.couplings is not None
-        rates = self._rates(batch)
-        moments = np.ascontiguousarray(times, np.float64)
-        laws = np.empty((len(batch), len(moments), 1 << batch.size))
-        energies = np.empty(1 << batch.size)
+        if self.time == "infinite":
+            return self._endless_laws(batch)
+        times = self._measuring_times(batch, self._rates(batch))
+        together = times_together(batch.size, times.shape[1], 8)
+        averages = np.zeros((len(batch), 1 << batch.size))
         for row in range(len(batch)):
-            cluster_energies(batch.fields[row], batch.couplings[row], energies)
-            start = configuration_number(batch.spins[row]) if self.start == "incumbent" else -1
-            walk_law(energies, rates[row], start, moments, laws[row])
+            for begin in range(0, times.shape[1], together):
+                group = times[row, begin : begin + together]
+                averages[row] += self.laws(batch.rows(row, row + 1), group)[0].sum(axis=0)
+        averages /= times.shape[1]
+        return averages
+
+    def laws(self, batch: ClusterBatch, times: npt.ArrayLike) -> F64:
+        """The law of one shot measured at each of ``times`` (M,), in units of 1/energy: f64 (B, M, 2^k)."""
+        refuse_oversize(self.name, batch.size, 22, "exact simulation (2^k amplitudes)")
+        moments = np.atleast_1d(np.array(times, np.float64))
+        if moments.ndim != 1 or not np.all((moments >= 0) & np.isfinite(moments)):
+            raise ValueError(f"walk: times is {times!r}; give finite times of at least 0, in units of 1/energy")
+        rates, kind, couplings = self._rates(batch), DRIVERS.index(self.driver), batch.couplings
+        assert couplings is not None
+        laws = np.empty((len(batch), len(moments), 1 << batch.size))
+        workspace = new_workspace(kind, batch.size, len(moments))
+        for row in range(len(batch)):
+            energies = level_table(batch.fields[row], couplings[row])
+            walk_law(energies, rates[row], self._origin(batch, row), moments, laws[row], kind, workspace)
         return laws
 
     def _refuse_oversize(self, batch: ClusterBatch) -> None:
-        refuse_oversize(self.name, batch.size, self.max_spins, "exact simulation (2^k amplitudes)")
+        reason = "exact simulation (2^k amplitudes)"
+        if self.time == "infinite":
+            reason = 'time="infinite" (diagonalisation of a 2^k x 2^k matrix)'
+        refuse_oversize(self.name, batch.size, self.max_spins, reason)
+
+    def _with_factor(self, factor: float) -> Self:
+        """This walk at so many times its heuristic hopping rate."""
+        return replace(self, hopping="heuristic", hopping_factor=self.hopping_factor * factor)
 
     def _rates(self, batch: ClusterBatch) -> F64:
         assert batch.couplings is not None
         rates = np.empty(len(batch))
-        if self.hopping == "heuristic":
+        if isinstance(self.hopping, str):
             heuristic_hopping(batch.fields, batch.couplings, level_spread(batch.size), rates)
+            rates *= hop_scale(DRIVERS.index(self.driver), batch.size)
         else:
             rates[:] = self.hopping
         return rates * self.hopping_factor
 
-    def _measuring_times(self, batch: ClusterBatch) -> F64:
+    def _measuring_times(self, batch: ClusterBatch, rates: F64) -> F64:
         """Measuring times of every call: f64 (B, M), in units of 1/energy."""
         given = self.time if self.time is not None else self.time_in_hops
         assert isinstance(given, tuple)
@@ -167,14 +245,45 @@ class Walk:
         moments = np.array([lowest + (highest - lowest) * i / max(1, count - 1) for i in range(count)])
         if self.time is not None:
             return np.tile(moments, (len(batch), 1))
-        return moments[None, :] / self._rates(batch)[:, None]
+        return moments[None, :] / (rates / hop_scale(DRIVERS.index(self.driver), batch.size))[:, None]
+
+    def _verdicts(self, errors: F64) -> tuple[U8, tuple[str, ...]]:
+        missed = errors > self.tolerance
+        status = np.where(missed, Status.TRUNCATED, Status.OK).astype(np.uint8)
+        return status, tuple(
+            f"walk: the law's error is estimated at {error:.1e}, above the tolerance {self.tolerance:g}; "
+            "measure earlier or ask for less"
+            if above
+            else ""
+            for error, above in zip(errors, missed, strict=True)
+        )
+
+    def _origin(self, batch: ClusterBatch, row: int) -> int:
+        """Where a walk starts: a configuration's number, or -1 for the uniform superposition."""
+        return configuration_number(batch.spins[row]) if self.start == "incumbent" else -1
+
+    def _endless_laws(self, batch: ClusterBatch) -> F64:
+        rates, couplings = self._rates(batch), batch.couplings
+        assert couplings is not None
+        laws = np.empty((len(batch), 1 << batch.size))
+        for row in range(len(batch)):
+            energies = level_table(batch.fields[row], couplings[row])
+            laws[row] = long_time_law(energies, rates[row], self.driver, self._origin(batch, row))
+        return laws
+
+    def _endless_work(self, batch: ClusterBatch) -> Work:
+        return Work(
+            shots=np.full(len(batch), self.shots, np.int64),
+            amplitude_updates=np.full(len(batch), long_time_updates(batch.size), np.int64),
+            energies=np.full(len(batch), 1 << batch.size, np.int64),
+        )
 
     def _work(self, batch: ClusterBatch, applications: I64, mean_time: F64) -> Work:
-        rows = len(batch)
+        rows, passes = len(batch), 2 if self.driver == "pairs" else 1
         return Work(
             shots=np.full(rows, self.shots, np.int64),
             evolution_time=mean_time * self.shots,
-            amplitude_updates=applications << batch.size,
+            amplitude_updates=applications * passes << batch.size,
             energies=np.full(rows, 1 << batch.size, np.int64),
         )
 
@@ -190,74 +299,3 @@ def _interval(name: str, value: object) -> tuple[float, float]:
     if len(ends) != 2 or len(numbers) != 2 or not 0 <= numbers[0] <= numbers[1] < math.inf:
         raise ValueError(f"walk: {name} is {value!r}; give a time of at least 0, or an interval [lo, hi] that rises")
     return numbers[0], numbers[1]
-
-
-def _spans(batch: ClusterBatch) -> F64:
-    """An upper bound of the spread of every cluster's energies: 2 (sum |J| + sum |h|)."""
-    assert batch.couplings is not None
-    return np.abs(batch.couplings).sum(axis=(1, 2)) + 2 * np.abs(batch.fields).sum(axis=1)
-
-
-@compiled
-def _walk_and_measure(
-    fields: F64,
-    couplings: F64,
-    spins: I8,
-    seeds: U64,
-    rates: F64,
-    times: F64,
-    from_incumbent: bool,
-    outcomes: I8,
-    drawn: F64,
-    hit: F64,
-    log_ratio: F64,
-    applications: I64,
-) -> None:
-    rows, size = fields.shape
-    moments = times.shape[1]
-    energies = np.empty(1 << size)
-    law = np.empty((moments, 1 << size))
-    totals = np.empty(moments)
-    stream = np.empty(1, np.uint64)
-    for row in range(rows):
-        stream[0] = seeds[row]
-        cluster_energies(fields[row], couplings[row], energies)
-        before = configuration_number(spins[row])
-        start = before if from_incumbent else -1
-        applications[row] = walk_law(energies, rates[row], start, times[row], law)
-        hit[row] = _minimum_share(energies, energies.min() + tie_tolerance(fields[row], couplings[row]), law, totals)
-        for shot in range(outcomes.shape[1]):
-            moment = next_below(stream, moments)
-            number = _draw(law[moment], next_unit(stream) * totals[moment])
-            write_configuration(number, outcomes[row, shot])
-            drawn[row, shot] = times[row, moment]
-            if shot == 0:
-                log_ratio[row] = np.log(law[moment, before]) - np.log(law[moment, number])
-
-
-@compiled
-def _minimum_share(energies: F64, ceiling: float, law: F64, totals: F64) -> float:
-    """Probability of the configurations at or below the ceiling, averaged over times; fills the totals of each law."""
-    share = 0.0
-    for moment in range(len(law)):
-        total, low = 0.0, 0.0
-        for x in range(len(energies)):
-            total += law[moment, x]
-            if energies[x] <= ceiling:
-                low += law[moment, x]
-        totals[moment] = total
-        share += low / total
-    return share / len(law)
-
-
-@compiled
-def _draw(law: F64, threshold: float) -> int:
-    running = 0.0
-    last = 0
-    for x in range(len(law)):
-        running += law[x]
-        if law[x] > 0.0:
-            last = x
-        if running > threshold:
-            return x
-    return last

@@ -12,6 +12,7 @@ from typing import Protocol
 
 import numpy as np
 
+from patchwalk.clusters.strip import StripRule
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import I32, I64, U64
@@ -225,4 +226,5 @@ def _pick_scattered(
 RULES: dict[str, ClusterRule] = {
     "ball": BlindRule("ball", _pick_balls),
     "scattered": BlindRule("scattered", _pick_scattered),
+    "strip": StripRule(),
 }

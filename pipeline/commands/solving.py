@@ -16,6 +16,7 @@ import numpy as np
 from patchwalk.clusters.rules import cluster_rule
 from patchwalk.commands.answers import answer_for
 from patchwalk.commands.interrupts import listening
+from patchwalk.engine import forecast_of
 from patchwalk.evidence.runfile import RunFile
 from patchwalk.problem.files import read_problem, read_start
 from patchwalk.problem.ising import Problem
@@ -275,14 +276,19 @@ def _check_memory(search: NeighbourhoodSearch) -> None:
     """Refuse, before anything is allocated, a cluster size whose forecast goes beyond the machine's memory."""
     memory = os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
     size = search.plan.cluster_size
-    needed = search.subsolver.forecast(_blank_batch(size)).bytes
+    needed = _bytes_needed(search.subsolver, size)
     if needed <= memory:
         return
-    fitting = next(k for k in range(size, 0, -1) if search.subsolver.forecast(_blank_batch(k)).bytes <= memory)
+    fitting = next((k for k in range(size, 0, -1) if _bytes_needed(search.subsolver, k) <= memory), 1)
     raise MemoryForecastError(
         f"{search.subsolver.name}: a cluster of {size} spins needs {needed / 1e9:.1f} GB, this machine has "
         f"{memory / 1e9:.1f} GB; the largest cluster that fits has {fitting} spins (--cluster-size {fitting})"
     )
+
+
+def _bytes_needed(subsolver: Subsolver, size: int) -> int:
+    forecast = forecast_of(subsolver, _blank_batch(size))
+    return 0 if forecast is None else forecast.bytes
 
 
 def _blank_batch(size: int) -> ClusterBatch:

@@ -25,6 +25,7 @@ from typing import Any
 import numpy as np
 
 from patchwalk.cost import DEAR_SECONDS, priced
+from patchwalk.engine import forecast_of
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
 from patchwalk.subsolvers.contract import WORK_FIELDS, ClusterBatch, Status, Subsolver
@@ -36,7 +37,7 @@ GROUP_BYTES = 10_000_000
 SHARE_OF_CHEAP_ROWS = 64
 """One cheap call in this many, chosen by its seed, has a row of its own."""
 
-SHARE_WORD = np.uint64(0x7368617265000000)
+SHARE_WORD = 0x7368617265000000
 
 SCHEMA = f"""
 CREATE TABLE about (key TEXT PRIMARY KEY, value TEXT) WITHOUT ROWID;
@@ -323,7 +324,8 @@ def versions() -> dict[str, str]:
 
 def _is_dear(subsolver: Subsolver, batch: ClusterBatch) -> bool:
     """Whether one call costs more than the limit at the fixed prices: decided once per run, on its first batch."""
-    return bool(priced(subsolver.forecast(batch).work, len(batch)).mean() >= DEAR_SECONDS)
+    forecast = forecast_of(subsolver, batch)
+    return forecast is None or bool(priced(forecast.work, len(batch)).mean() >= DEAR_SECONDS)
 
 
 def _blobs(rows: np.typing.NDArray[Any]) -> list[bytes]:

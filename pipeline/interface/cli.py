@@ -12,6 +12,7 @@ import click
 COMMANDS = {
     "solve": ("patchwalk.interface.solve_options:solve_command", "Search for the lowest energy of a problem."),
     "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
+    "backends": ("patchwalk.interface.backends_options:backends_command", "List backends, check one, or time one."),
 }
 
 

@@ -59,9 +59,10 @@ def test_units_are_uniform_and_whole_numbers_even() -> None:
 
 def test_one_in_picks_its_share() -> None:
     seeds = call_seeds(np.uint64(3), 64_000)
-    picked = one_in(64, seeds, np.uint64(8))
+    picked = one_in(64, seeds, 8)
+    assert picked.tolist() == [seed_for(int(seed), 8) % 64 == 0 for seed in seeds]
     assert picked.sum() == pytest.approx(1000, abs=5 * np.sqrt(1000))
-    assert not np.array_equal(picked, one_in(64, seeds, np.uint64(9)))
+    assert not np.array_equal(picked, one_in(64, seeds, 9))
 
 
 def test_generators_are_seeded() -> None:

@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import pickle
+import sys
+from pathlib import Path
 from typing import Any
 
 import numpy as np
@@ -11,20 +13,35 @@ import pytest
 from patchwalk.subsolvers import ClusterBatch, Edges, Proposals, Status, Subsolver, make_subsolver, subsolver_names
 from patchwalk.subsolvers.contract import WORK_FIELDS
 
+TEMPLATE = Path(__file__).resolve().parents[2] / "configs" / "device-template.py"
+
 TABLE: list[tuple[str, dict[str, Any]]] = [
     ("walk", {}),
     ("walk", {"shots": 3}),
     ("walk", {"start": "incumbent", "time_in_hops": 1.0}),
     ("walk", {"hopping": 0.7, "time": [0.2, 0.9], "times": 5}),
+    ("walk", {"driver": "pairs", "start": "incumbent", "shots": 2}),
+    ("walk", {"driver": "complete", "hopping": "calibrated"}),
+    ("walk", {"time": "infinite", "tolerance": 1e-9}),
+    ("forward", {}),
+    ("forward", {"schedule": "search", "duration_in_hops": 2, "shots": 3}),
+    ("reverse", {}),
+    ("reverse", {"turning_point": 0.3, "pause": 0.5, "leg_ratio": 2.0}),
+    ("blend", {}),
+    ("blend", {"mix": 0}),
     ("enumeration", {}),
     ("enumeration", {"draw": "boltzmann"}),
     ("enumeration", {"draw": "boltzmann", "shots": 2}),
+    ("elimination", {}),
+    ("elimination", {"draw": "boltzmann"}),
+    ("elimination", {"draw": "boltzmann", "shots": 2}),
     ("metropolis", {"sweeps": 7}),
     ("metropolis", {"draw": "boltzmann", "sweeps": 4}),
     ("tabu", {"shots": 2}),
     ("tabu", {"steps": 9, "tenure": 3}),
     ("descent", {"restarts": 2}),
     ("uniform", {"shots": 4}),
+    ("external", {"command": [sys.executable, str(TEMPLATE)]}),
 ]
 IDS = [",".join([name, *(f"{key}={value}" for key, value in parameters.items())]) for name, parameters in TABLE]
 
@@ -108,7 +125,8 @@ def test_shapes_and_values(subsolver: Subsolver, size: int) -> None:
         assert np.all((proposals.hit_probability > 0) & (proposals.hit_probability <= 1 + 1e-12))
     assert proposals.work.shots is not None
     assert proposals.work.shots.tolist() == [shots] * 4
-    counted = [getattr(proposals.work, name) for name in ("amplitude_updates", "spin_updates", "energies")]
+    counts = ("amplitude_updates", "spin_updates", "energies", "table_entries")
+    counted = [getattr(proposals.work, name) for name in counts]
     assert any(work is not None and np.all(work > 0) for work in counted)
     assert (proposals.log_ratio is not None) == (subsolver.balance == "ratio")
 
@@ -146,7 +164,7 @@ def test_equal_parameters_equal_bits_also_after_pickling(subsolver: Subsolver) -
 
 
 def test_other_seeds_other_draws(subsolver: Subsolver) -> None:
-    if subsolver.name == "enumeration" and getattr(subsolver, "draw", "") == "minimum":
+    if subsolver.name in ("enumeration", "elimination") and getattr(subsolver, "draw", "") == "minimum":
         pytest.skip("the minimum of a Gaussian cluster is unique, whatever the seed")
     batch = glass_batch(40, 6)
     other = ClusterBatch(batch.fields, batch.spins, batch.temperature, batch.seeds + np.uint64(1), batch.couplings)
@@ -178,7 +196,7 @@ def test_forecast_counts_what_is_then_done(subsolver: Subsolver) -> None:
     batch = glass_batch(6, 8)
     forecast, done = subsolver.forecast(batch), subsolver.propose(batch).work
     assert forecast.bytes > 0
-    for name in ("amplitude_updates", "spin_updates", "energies"):
+    for name in ("amplitude_updates", "spin_updates", "energies", "table_entries"):
         expected, counted = getattr(forecast.work, name), getattr(done, name)
         assert (expected is None) == (counted is None)
         if counted is not None:
@@ -198,7 +216,7 @@ def test_oversize_is_refused_with_the_limit(name: str) -> None:
             ask(batch)
 
 
-@pytest.mark.parametrize("name", ["metropolis", "tabu", "descent", "uniform"])
+@pytest.mark.parametrize("name", ["metropolis", "tabu", "descent", "elimination", "uniform"])
 def test_large_clusters_come_as_edges(name: str) -> None:
     size = 100
     ring = np.stack([np.arange(size), np.roll(np.arange(size), -1)], axis=1)
@@ -229,7 +247,9 @@ def test_large_clusters_come_as_edges(name: str) -> None:
         ("walk", {"hopping_factor": float("nan")}, "hopping_factor is nan"),
         ("walk", {"start": "left"}, "uniform or incumbent"),
         ("enumeration", {"draw": "maximum"}, "minimum or boltzmann"),
-        ("metropolis", {"sweeps": 0}, "sweeps is 0"),
+        ("elimination", {"draw": "maximum"}, "minimum or boltzmann"),
+    ("elimination", {"max_width": 27}, "max_width is 27"),
+    ("metropolis", {"sweeps": 0}, "sweeps is 0"),
         ("metropolis", {"hot": 0.1, "cold": 1.0}, "hot >= cold"),
         ("metropolis", {"draw": "boltzmann", "sweeps": 3}, "even number"),
         ("tabu", {"steps": -1}, "steps is -1"),

@@ -11,8 +11,11 @@ from scipy.linalg import expm
 from scipy.sparse import csr_array, diags_array
 from scipy.sparse.linalg import expm_multiply
 
+from patchwalk.subsolvers.coefficients import DOUBLE_DECAY, SINGLE_DECAY
 from patchwalk.subsolvers.contract import F64
-from patchwalk.subsolvers.propagate import evolve, expected_applications, times_together, walk_law
+from patchwalk.subsolvers.drivers import DRIVERS, HYPERCUBE
+from patchwalk.subsolvers.hamiltonian import half_width_within, times_together
+from patchwalk.subsolvers.propagate import evolve, expected_applications, new_workspace, walk_law
 
 UNORDERED_TIMES = np.array([2.9, 0.0, 7.3, 1e-12, 0.4])
 
@@ -65,6 +68,51 @@ def test_amplitudes_are_those_of_the_matrix_exponential(spins: int) -> None:
             assert variation.max() < 1e-10
 
 
+def driver_by_definition(driver: str, spins: int) -> F64:
+    """Single flips from the operators above, pairs as their products, and the all-ones matrix."""
+    flips = [single_flip(spins, bit) for bit in range(spins)]
+    if driver == "complete":
+        return np.ones((1 << spins, 1 << spins))
+    matrix = sum(flips)
+    if driver == "pairs":
+        matrix = matrix + sum(flips[i] @ flips[j] for i in range(spins) for j in range(i))
+    return np.asarray(matrix, np.float64)
+
+
+def single_flip(spins: int, bit: int) -> F64:
+    """X on one spin: bit 0 is the least significant, so the last factor."""
+    factors = [np.array([[0.0, 1.0], [1.0, 0.0]]) if place == bit else np.eye(2) for place in range(spins)]
+    product = np.ones((1, 1))
+    for factor in factors:
+        product = np.kron(factor, product)
+    return product
+
+
+@pytest.mark.parametrize("driver", DRIVERS)
+@pytest.mark.parametrize("spins", range(1, 9))
+def test_every_driver_evolves_by_its_own_matrix(driver: str, spins: int) -> None:
+    size = 1 << spins
+    draw = np.random.default_rng(spins)
+    diagonal = 1.0 + 2.0 * draw.normal(size=size)
+    matrix = driver_by_definition(driver, spins)
+    for hopping in (1.5 * spins / np.ptp(np.linalg.eigvalsh(matrix)), -0.1):
+        exponentials = [expm(-1j * time * (np.diag(diagonal) - hopping * matrix)) for time in UNORDERED_TIMES]
+        for start in (None, int(draw.integers(size))):
+            expected = np.array([exponential @ starting_vector(size, start) for exponential in exponentials])
+            amplitudes = evolve(diagonal, hopping, UNORDERED_TIMES, start, driver)
+            np.testing.assert_allclose(amplitudes, expected, rtol=0, atol=1e-10)
+            for single, bound in ((False, 1e-10), (True, 1e-6)):
+                law = np.empty((len(UNORDERED_TIMES), size))
+                kind = DRIVERS.index(driver)
+                workspace = new_workspace(kind, spins, len(UNORDERED_TIMES), single)
+                decay = SINGLE_DECAY if single else DOUBLE_DECAY
+                walk_law(
+                    diagonal, hopping, -1 if start is None else start, UNORDERED_TIMES, law, kind, workspace, decay
+                )
+                variation = 0.5 * np.abs(law - np.abs(expected) ** 2).sum(axis=1)
+                assert variation.max() < bound, single
+
+
 def test_twelve_spins_against_sparse_exponential() -> None:
     spins, hopping, time = 12, 0.4, 9.0
     size = 1 << spins
@@ -93,8 +141,8 @@ def test_free_walk_has_its_closed_form(spins: int) -> None:
 def test_times_that_do_not_fit_in_one_recursion() -> None:
     """The closed form once more, where the sums of all times together would take too much memory."""
     spins = 20
-    times = np.linspace(1.0, 0.2, 9)
-    assert times_together(spins, len(times)) < len(times)
+    times = np.linspace(1.0, 0.2, 3)
+    assert times_together(spins, len(times), 8) < len(times)
     law = law_of(np.zeros(1 << spins), 1.0, times, start=1)
     apart, far = distances(1 << spins, 1), np.arange(spins + 1)
     for row, time in enumerate(times):
@@ -185,14 +233,20 @@ def test_work_is_forecast_from_the_span_alone() -> None:
         diagonal = np.ascontiguousarray(draw.normal(size=1 << spins))
         law = np.empty((3, 1 << spins))
         counted = walk_law(diagonal, 0.3, -1, np.array([2.0, 25.0, 0.0]), law)
-        assert counted == expected_applications(float(np.ptp(diagonal)), spins, 0.3, 25.0)
+        half_width = half_width_within(HYPERCUBE, spins, 0.3, float(np.ptp(diagonal)))
+        assert counted == expected_applications(25.0 * half_width, DOUBLE_DECAY)
 
 
 def test_read_only_diagonals_are_accepted() -> None:
     diagonal = np.random.default_rng(2).normal(size=64)
-    expected = law_of(diagonal, 0.5, UNORDERED_TIMES)
+    expected = evolve(diagonal, 0.5, UNORDERED_TIMES)
     diagonal.flags.writeable = False
-    np.testing.assert_array_equal(law_of(diagonal, 0.5, UNORDERED_TIMES), expected)
+    np.testing.assert_array_equal(evolve(diagonal, 0.5, UNORDERED_TIMES), expected)
+
+
+def test_an_unknown_driver_is_named() -> None:
+    with pytest.raises(ValueError, match="driver is 'ladder'; it is one of hypercube, complete, pairs"):
+        evolve([0.0, 1.0], 1.0, 1.0, driver="ladder")
 
 
 @pytest.mark.parametrize(
