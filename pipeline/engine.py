@@ -17,7 +17,7 @@ import numpy as np
 from patchwalk.cost import SLICE_SECONDS, priced
 from patchwalk.subsolvers.complaints import shape_complaint, value_complaint
 from patchwalk.subsolvers.contract import ClusterBatch, Forecast, Proposals, Status, Subsolver, Work
-from patchwalk.subsolvers.registry import SubsolverError
+from patchwalk.subsolvers.registry import NotReadyError, SubsolverError
 
 
 class Answered(NamedTuple):
@@ -36,16 +36,16 @@ BAD_NEWS = (Exception, SystemExit)
 def prepared(subsolver: Subsolver, sample: ClusterBatch) -> Subsolver:
     """The subsolver to use, compiled and calibrated.
 
-    Raises :class:`SubsolverError` with a sentence where it fails to get ready.
+    Raises :class:`NotReadyError` with a sentence where it fails to get ready.
     """
     try:
         ready = subsolver.prepare(sample)
     except (SubsolverError, MemoryError):
         raise
     except BAD_NEWS as error:
-        raise SubsolverError(f"{subsolver.name}: could not get ready: {type(error).__name__}: {error}") from error
+        raise NotReadyError(f"{subsolver.name}: could not get ready: {type(error).__name__}: {error}") from error
     if not isinstance(ready, Subsolver):
-        raise SubsolverError(f"{subsolver.name}: prepare gave back a {type(ready).__name__}, which is no subsolver")
+        raise NotReadyError(f"{subsolver.name}: prepare gave back a {type(ready).__name__}, which is no subsolver")
     return ready
 
 

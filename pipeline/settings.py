@@ -9,13 +9,18 @@ from __future__ import annotations
 
 import difflib
 import tomllib
-from collections.abc import Mapping
+import types
+import typing
+from collections.abc import Callable, Mapping
 from pathlib import Path
-from typing import Annotated, Any, Literal, Self
+from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError, model_validator
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError
+
+from patchwalk.subsolvers.contract import Subsolver
 
 DEFAULT_SECONDS = 60.0
+DEFAULT_CLUSTER_SIZE = 12
 
 
 class SettingsError(ValueError):
@@ -45,6 +50,21 @@ def _seed_list(value: object) -> object:
     return seeds
 
 
+def _spelled_subsolver(value: object) -> object:
+    """A subsolver as text, as a table or already made; anything else is refused."""
+    if not isinstance(value, str | Mapping | Subsolver):
+        raise ValueError("write it as NAME,key=value,... , as a table with a name, or give a subsolver object")
+    return value
+
+
+def _path(value: object) -> object:
+    """A path that is not empty."""
+    if value == "":
+        raise ValueError("is empty; give the name of a file")
+    return value
+
+
+FileName = Annotated[Path, BeforeValidator(_path)]
 Seed = Annotated[int, Field(ge=0, lt=2**63)]
 
 
@@ -53,13 +73,17 @@ class SolveSettings(BaseModel):
 
     model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True, strict=False)
 
-    kind: str | None = Field(None, description="What the file's numbers mean: ising, maxcut or beacons.")
-    subsolver: Any = Field(
-        "walk",
-        description="Who answers the clusters: NAME, NAME,key=value,... , @file.toml or module:Object "
-        "(ours: walk, enumeration, metropolis, uniform).",
+    kind: Literal["ising", "maxcut", "beacons"] | None = Field(
+        None, description="What the file's numbers mean: ising, maxcut or beacons."
     )
-    cluster_size: int = Field(12, ge=1, description="Spins in each cluster.")
+    subsolver: Annotated[Any, BeforeValidator(_spelled_subsolver)] = Field(
+        "walk",
+        description="Who answers the clusters: NAME, NAME,key=value,... , @file.toml or module:Object; "
+        "patchwalk backends lists the names.",
+    )
+    cluster_size: int | None = Field(
+        None, ge=1, description=f"Spins in each cluster; {DEFAULT_CLUSTER_SIZE} if the problem has as many."
+    )
     rule: Literal["ball", "scattered", "strip"] = Field(
         "ball",
         description="Which spins make a cluster: ball (a breadth-first ball round a random spin), scattered, or strip "
@@ -78,7 +102,7 @@ class SolveSettings(BaseModel):
     target: float | None = Field(
         None, allow_inf_nan=False, description="Stop at an objective (the cut for maxcut) at least as good as this."
     )
-    start: Path | None = Field(
+    start: FileName | None = Field(
         None, description="A file with a start configuration: +1 and -1 in the input's order, or what --json printed."
     )
     seed: Seed | None = Field(
@@ -87,7 +111,7 @@ class SolveSettings(BaseModel):
     seeds: Annotated[list[Seed], BeforeValidator(_seed_list)] | None = Field(
         None, description="Several runs in one file, as 1..5 or 1,4,9."
     )
-    run: Path | None = Field(
+    run: FileName | None = Field(
         None, description="Where the run file goes; by default patchwalk-NAME-DATE-TIME.sqlite in the current folder."
     )
     record: Literal["auto", "all", "share"] = Field(
@@ -101,21 +125,22 @@ class SolveSettings(BaseModel):
     cold: float = Field(0.05, ge=0, allow_inf_nan=False, description="Temperature at the end, in the same units.")
     failures: int = Field(100, ge=1, description="Give up after so many failed calls in a row.")
 
-    @model_validator(mode="after")
-    def _belong_together(self) -> Self:
+    def conflicts(self) -> list[tuple[str, str]]:
+        """Settings that are each possible but not together: the setting to look at first, and a sentence."""
+        found = []
         if self.seed is not None and self.seeds is not None:
-            raise ValueError("seed and seeds cannot both be given; seeds = [7] is the same as seed = 7")
+            found.append(("seed", "seed and seeds cannot both be given; seeds = [7] is the same as seed = 7"))
         if self.seeds is not None and not self.seeds:
-            raise ValueError("seeds is empty; give at least one")
+            found.append(("seeds", "seeds is empty; give at least one"))
         if self.seeds is not None and len(set(self.seeds)) < len(self.seeds):
-            raise ValueError("seeds holds a seed twice; the two runs would be the same")
+            found.append(("seeds", "seeds holds a seed twice; the two runs would be the same"))
         if self.cold > self.hot:
-            raise ValueError(
-                f"cold ({self.cold:g}) is above hot ({self.hot:g}); the temperature falls from hot to cold"
+            found.append(
+                ("cold", f"cold ({self.cold:g}) is above hot ({self.hot:g}); the temperature falls from hot to cold")
             )
         if self.total_sweeps is not None and self.sweeps == 0:
-            raise ValueError("total_sweeps is given but sweeps is 0, so that it would never be reached")
-        return self
+            found.append(("total_sweeps", "total_sweeps is given but sweeps is 0, so that it would never be reached"))
+        return found
 
     @property
     def every_seed(self) -> list[int]:
@@ -138,7 +163,8 @@ def read_settings(path: Path) -> tuple[Path, dict[str, Any]]:
     try:
         table = tomllib.loads(path.read_text(encoding="utf-8"))
     except OSError as error:
-        raise SettingsError([f"{path}: {error.strerror or error}"]) from error
+        reason = "there is no such file" if isinstance(error, FileNotFoundError) else error.strerror or error
+        raise SettingsError([f"{path}: {reason}"]) from error
     except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
         raise SettingsError([f"{path}: not a TOML file: {error}"]) from error
     problem = table.pop("input", None)
@@ -153,31 +179,84 @@ def read_settings(path: Path) -> tuple[Path, dict[str, Any]]:
 def checked_settings(
     table: Mapping[str, Any], given: Mapping[str, Any], place: str, spelled: str = "{}"
 ) -> SolveSettings:
-    """Settings from a file's ``table`` overridden by those ``given``; ``spelled`` is how a given key is written
-    (``--{}``).
+    """Settings from a file's ``table`` overridden by those ``given``.
 
-    Raises :class:`SettingsError` with every complaint at once.
+    ``place`` names the file; ``spelled`` is how a given key is written: ``--{}`` on a command line, where every value
+    is text, ``{}`` in Python. Raises :class:`SettingsError` with every complaint at once.
     """
     rivals = {"seed": "seeds", "seeds": "seed"}
     overridden = {rivals[key] for key in given if key in rivals}
-    kept = {key: value for key, value in table.items() if key not in overridden}
+    values = {**{key: value for key, value in table.items() if key not in overridden}, **given}
+
+    def where(key: str) -> str:
+        if key in table and key not in given:
+            return f"{place}: {key}"
+        return spelled.format(key.replace("_", "-") if "-" in spelled else key)
+
+    text = set(given) if "-" in spelled else set()
+    complaints = {key: _type_complaint(key, value, key in text) for key, value in values.items()}
+    complaints = {key: f"{where(key)}: {sentence}" for key, sentence in complaints.items() if sentence}
+    settings = _validated({key: value for key, value in values.items() if key not in complaints}, complaints, where)
+    together = [f"{where(key)}: {sentence}" for key, sentence in settings.conflicts()]
+    if complaints or together:
+        raise SettingsError([*complaints.values(), *together])
+    return settings
+
+
+def _validated(values: Mapping[str, Any], complaints: dict[str, str], where: Callable[[str], str]) -> SolveSettings:
+    """Settings from the values that are good; a complaint about every other one is added."""
     try:
-        return SolveSettings.model_validate({**kept, **given})
+        return SolveSettings.model_validate(values)
     except ValidationError as error:
-        complaints = []
         for detail in error.errors():
-            key = str(detail["loc"][0]) if detail["loc"] else ""
-            complaints.append(_complaint(detail, key, place if key in table and key not in given else "", spelled))
-        raise SettingsError(complaints) from error
+            key = str(detail["loc"][0])
+            complaints.setdefault(key, f"{where(key)}: {_in_words(key, detail)}")
+    return SolveSettings.model_validate({key: value for key, value in values.items() if key not in complaints})
 
 
-def _complaint(detail: Any, key: str, place: str, spelled: str) -> str:
-    where = f"{place}: {key}" if place else spelled.format(key.replace("_", "-") if "-" in spelled else key)
+def _type_complaint(key: str, value: object, is_text: bool) -> str:
+    """What no conversion should forgive: true for a number, and in a file or in Python text for a number."""
+    kind = plain_type(key)
+    if kind not in (int, float):
+        return ""
+    if isinstance(value, bool) or (isinstance(value, str) and not is_text):
+        return f"must be a {'whole ' if kind is int else ''}number (given: {value!r})"
+    return ""
+
+
+def plain_type(key: str) -> Any:
+    """The type of a setting without ``| None``; None for an unknown one."""
+    if key not in SolveSettings.model_fields:
+        return None
+    inner = SolveSettings.model_fields[key].annotation
+    if typing.get_origin(inner) in (types.UnionType, typing.Union):
+        inner = next(part for part in typing.get_args(inner) if part is not type(None))
+    return typing.get_args(inner)[0] if typing.get_origin(inner) is Annotated else inner
+
+
+def _in_words(key: str, detail: Any) -> str:
+    """One of pydantic's complaints, in words for people who never heard of it."""
     if detail["type"] == "extra_forbidden":
-        close = difflib.get_close_matches(key, SolveSettings.model_fields, n=1, cutoff=0.5)
-        hint = f"; did you mean {close[0]!r}?" if close else ""
-        return f"{where}: there is no such setting{hint}"
+        return f"there is no such setting{_nearest(key, list(SolveSettings.model_fields))}"
     message = detail["msg"].removeprefix("Value error, ")
-    if not key:
-        return f"{place}: {message}" if place else message
-    return f"{where}: {message[0].lower()}{message[1:]} (given: {detail['input']!r})"
+    for theirs, ours in (
+        ("Input should be a valid integer, unable to parse string as an integer", "must be a whole number"),
+        ("Input should be a valid integer, got a number with a fractional part", "must be a whole number"),
+        ("Input should be a valid integer", "must be a whole number"),
+        ("Input should be a valid number, unable to parse string as a number", "must be a number"),
+        ("Input should be a valid number", "must be a number"),
+        ("Input should be", "must be"),
+    ):
+        if message.startswith(theirs):
+            message = ours + message[len(theirs) :]
+            break
+    hint = ""
+    if detail["type"] == "literal_error":
+        hint = _nearest(str(detail["input"]), [str(word) for word in typing.get_args(plain_type(key))])
+    given = str(detail["input"]) if plain_type(key) in (int, float) else repr(detail["input"])
+    return f"{message[0].lower()}{message[1:]} (given: {given}){hint}"
+
+
+def _nearest(word: str, known: list[str]) -> str:
+    close = difflib.get_close_matches(word, known, n=1, cutoff=0.5)
+    return f"; did you mean {close[0]!r}?" if close else ""

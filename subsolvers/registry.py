@@ -14,7 +14,7 @@ import tomllib
 from collections.abc import Callable, Mapping
 from importlib.metadata import entry_points
 from pathlib import Path
-from typing import Any, cast
+from typing import Any, NamedTuple, cast
 
 from patchwalk.subsolvers.contract import Subsolver
 
@@ -34,8 +34,22 @@ OURS: Mapping[str, str] = {
 ENTRY_POINT_GROUP = "patchwalk.subsolvers"
 
 
+class Number(NamedTuple):
+    """What a parameter annotated as a number takes."""
+
+    types: tuple[type, ...]
+    word: str
+
+
+NUMBERS = {"int": Number((int,), "a whole number"), "float": Number((int, float), "a number")}
+
+
 class SubsolverError(ValueError):
-    """A subsolver that cannot be found or built; the message names it and the way out."""
+    """A subsolver that cannot be found or built; the message names it and the way out, a line for each mistake."""
+
+
+class NotReadyError(SubsolverError):
+    """A subsolver that was spelled right but could not get ready to work."""
 
 
 def subsolver_names() -> list[str]:
@@ -52,11 +66,9 @@ def make_subsolver(name: str, **parameters: Any) -> Subsolver:
     'uniform'
     """
     factory = _factory(name)
-    known = _parameter_names(factory)
-    if known is not None:
-        for key in parameters:
-            if key not in known:
-                raise SubsolverError(f"{name}: there is no parameter {key!r}{_nearest(key, known)}")
+    complaints = _complaints(name, factory, parameters)
+    if complaints:
+        raise SubsolverError("\n".join(complaints))
     try:
         made = factory(**parameters)
     except (TypeError, ValueError) as error:
@@ -71,9 +83,7 @@ def make_subsolver(name: str, **parameters: Any) -> Subsolver:
 
 
 def subsolver_from(spelling: str | Mapping[str, Any] | Subsolver, folder: Path | None = None) -> Subsolver:
-    """The subsolver written as text, as a table with a ``name``, or already made; ``@file.toml`` is found from
-    ``folder``.
-    """
+    """The subsolver written as text, as a table with a ``name``, or made; ``@file.toml`` lies in ``folder``."""
     if isinstance(spelling, str):
         spelling = parse_spelling(spelling, folder)
     if isinstance(spelling, Mapping):
@@ -103,11 +113,16 @@ def parse_spelling(text: str, folder: Path | None = None) -> dict[str, Any]:
             ) from error
         except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
             raise SubsolverError(f"{path}: not a TOML file: {error}") from error
+    seen: set[str] = set()
     for part in rest:
         key, equals, value = part.partition("=")
-        if not equals or not key.strip().isidentifier():
+        key = key.strip()
+        if not equals or not key.isidentifier() or key == "name":
             raise SubsolverError(f"{text!r}: {part!r} is not key=value; write NAME,key=value,key=value")
-        table[key.strip()] = _value(value.strip())
+        if key in seen:
+            raise SubsolverError(f"{text!r}: {key} is given twice; keep one")
+        seen.add(key)
+        table[key] = _value(value.strip())
     return table
 
 
@@ -138,10 +153,24 @@ def _factory(name: str) -> Callable[..., Any]:
         raise SubsolverError(f"{name}: {error}; write module:Object, with the module on the Python path") from error
 
 
-def _parameter_names(factory: Callable[..., Any]) -> list[str] | None:
+def _complaints(name: str, factory: Callable[..., Any], parameters: Mapping[str, Any]) -> list[str]:
+    """Everything that can be said against the parameters before the subsolver is made, where it is a dataclass."""
     if not dataclasses.is_dataclass(factory):
-        return None
-    return [field.name for field in dataclasses.fields(factory) if field.init]
+        return []
+    known = {field.name: field for field in dataclasses.fields(factory) if field.init}
+    found = []
+    for key, value in parameters.items():
+        wanted = NUMBERS.get(str(known[key].type)) if key in known else None
+        if key not in known:
+            found.append(f"{name}: there is no parameter {key!r}{_nearest(key, list(known))}")
+        elif wanted and (isinstance(value, bool) or not isinstance(value, wanted.types)):
+            found.append(f"{name}: {key} is {value!r}; give {wanted.word}")
+    found.extend(
+        f"{name}: needs {key}=..."
+        for key, field in known.items()
+        if key not in parameters and field.default is field.default_factory is dataclasses.MISSING
+    )
+    return found
 
 
 def _nearest(word: str, known: list[str]) -> str:

@@ -2,34 +2,22 @@
 
 from __future__ import annotations
 
-import os
-import re
+import contextlib
 import time
 from collections.abc import Callable
 from dataclasses import dataclass, replace
-from datetime import datetime
 from pathlib import Path
 from typing import Any, Protocol
 
-import numpy as np
-
-from patchwalk.clusters.rules import cluster_rule
 from patchwalk.commands.answers import answer_for
 from patchwalk.commands.interrupts import listening
-from patchwalk.engine import forecast_of
-from patchwalk.evidence.runfile import RunFile
-from patchwalk.problem.files import read_problem, read_start
+from patchwalk.commands.tasks import Task, task_from
+from patchwalk.evidence.runfile import RunFile, RunFileError
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
-from patchwalk.search.neighbourhood import Ends, NeighbourhoodSearch, Plan
-from patchwalk.search.temperature import GeometricCooling
-from patchwalk.settings import SettingsError, SolveSettings, checked_settings, read_settings
-from patchwalk.subsolvers.contract import I8, ClusterBatch, Subsolver
-from patchwalk.subsolvers.registry import SubsolverError, spelled, subsolver_from
-
-
-class MemoryForecastError(MemoryError):
-    """A call would need more memory than the machine has; the message names the largest cluster that fits."""
+from patchwalk.search.neighbourhood import NeighbourhoodSearch
+from patchwalk.subsolvers.contract import I8
+from patchwalk.subsolvers.registry import spelled
 
 
 @dataclass(frozen=True, eq=False)
@@ -59,6 +47,7 @@ class Solution:
     seed: int
     run_path: Path
     start_energy: float | None = None
+    notes: tuple[str, ...] = ()
     lower_bound: float | None = None
     gap: float | None = None
     runs: tuple[Solution, ...] = ()
@@ -69,7 +58,7 @@ class Solution:
             name: getattr(self, name)
             for name in (
                 "energy", "lower_bound", "gap", "feasible", "status", "message", "seconds", "compile_seconds", "calls",
-                "failed_calls", "sweeps", "seed", "start_energy", "answer",
+                "failed_calls", "sweeps", "seed", "start_energy", "answer", "notes",
             )
         }  # fmt: skip
         fields = {"spins": self.spins.tolist(), **fields, "run_path": str(self.run_path)}
@@ -122,33 +111,6 @@ class Silent:
         pass
 
 
-@dataclass(frozen=True, eq=False)
-class Task:
-    """A problem and everything needed to work on it, checked and ready."""
-
-    problem: Problem
-    source: str
-    settings: SolveSettings
-    subsolver: Subsolver
-    start: I8 | None
-    run_path: Path
-
-    @property
-    def plan(self) -> Plan:
-        """The settings as the search understands them."""
-        settings, problem = self.settings, self.problem
-        target = None if settings.target is None else problem.energy_of(settings.target)
-        return Plan(
-            rule=cluster_rule(settings.rule),
-            cluster_size=settings.cluster_size,
-            clusters_per_round=settings.clusters_per_round,
-            sweeps_per_round=settings.sweeps,
-            cooling=GeometricCooling(settings.hot, settings.cold, problem.field_scale),
-            ends=Ends(settings.calls, settings.total_sweeps, settings.time_limit, target),
-            failures=settings.failures,
-        )
-
-
 def solve(problem: Problem | str | Path, **settings: Any) -> Solution:
     """The best configuration found for a problem, a problem file or a settings TOML; keywords are the settings' names.
 
@@ -165,27 +127,8 @@ def solve(problem: Problem | str | Path, **settings: Any) -> Solution:
     return carry_out(task_from(problem, settings), Silent())
 
 
-def task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> Task:
-    """Settings, problem, subsolver and start, read and checked; nothing is written yet."""
-    table: dict[str, Any] = {}
-    place, folder, input_path = "", Path(), source
-    if not isinstance(source, Problem) and str(source).endswith(".toml"):
-        place, folder = str(source), Path(source).parent
-        input_path, table = read_settings(Path(source))
-    settings = checked_settings(table, given, place, spelled_as)
-    own_folder = folder if "subsolver" in table and "subsolver" not in given else Path()
-    subsolver = subsolver_from(settings.subsolver, own_folder)
-    problem, name = _problem_from(input_path, settings.kind)
-    _check_sizes(settings.cluster_size, problem, subsolver)
-    start = None if settings.start is None else read_start(settings.start, problem)
-    run_path = settings.run if settings.run is not None else _default_run_path(name)
-    return Task(problem, name, settings, subsolver, start, run_path)
-
-
 def carry_out(task: Task, watcher: Watcher) -> Solution:
-    """Every run of the task, into one run file; the best solution, with all of them in ``runs`` where there are
-    several.
-    """
+    """Every run of the task, into one run file: the best solution, with all in ``runs`` if there are several."""
     watcher.understood([task.problem.summary(), *task.problem.notes])
     runfile = RunFile(task.run_path)
     try:
@@ -208,7 +151,6 @@ def carry_out(task: Task, watcher: Watcher) -> Solution:
 def _one_run(task: Task, seed: int, runfile: RunFile, watcher: Watcher, interrupted: Callable[[], bool]) -> Solution:
     settings = task.settings
     search = NeighbourhoodSearch(task.problem, task.subsolver, task.plan, seed, task.start, interrupted)
-    _check_memory(search)
     watcher.compiling()
     began = time.perf_counter()
     search.prepare()
@@ -216,24 +158,28 @@ def _one_run(task: Task, seed: int, runfile: RunFile, watcher: Watcher, interrup
     watcher.compiled(compile_seconds)
     start_energy = None if task.start is None else search.energy
     spelling = spelled(search.subsolver)
-    written = {**settings.model_dump(exclude={"subsolver"}), "subsolver": spelling}
+    written = {**settings.model_dump(), "subsolver": spelling, "cluster_size": task.cluster_size}
     writer = runfile.begin(
         task.problem, search.subsolver, spelling, settings.rule, seed, written, task.source, settings.record
     )
     watcher.began(task.problem, seed, start_energy)
-    for round_ in search.rounds():
-        writer.add(round_)
-        if writer.due:
-            writer.close_group(search.snapshot())
-        watcher.moved(search, round_)
+    try:
+        for round_ in search.rounds():
+            writer.add(round_)
+            if writer.due:
+                writer.close_group(search.snapshot())
+            watcher.moved(search, round_)
+    except RunFileError as error:  # the answer so far is worth more than the record that could not be kept
+        search.status, search.message = "error", str(error)
     seconds = search.elapsed
     writer.add_improvements(search.take_improvements())
     solution = _solution(task, search, start_energy, seconds, compile_seconds)
-    writer.finish(
-        search.snapshot(), status=solution.status, message=solution.message, energy=solution.energy,
-        objective=solution.objective, calls=solution.calls, failed_calls=solution.failed_calls,
-        sweeps=solution.sweeps, seconds=seconds, compile_seconds=compile_seconds,
-    )  # fmt: skip
+    with contextlib.suppress(*(() if search.status != "error" else (RunFileError,))):
+        writer.finish(
+            search.snapshot(), status=solution.status, message=solution.message, energy=solution.energy,
+            objective=solution.objective, calls=solution.calls, failed_calls=solution.failed_calls,
+            sweeps=solution.sweeps, seconds=seconds, compile_seconds=compile_seconds,
+        )  # fmt: skip
     watcher.ended(search)
     return solution
 
@@ -248,65 +194,5 @@ def _solution(
         spins=spins, energy=energy, objective=problem.objective(energy), objective_name=problem.objective_name,
         feasible=feasible, answer=answer, status=search.status, message=search.message, seconds=seconds,
         compile_seconds=compile_seconds, calls=search.calls, failed_calls=search.failed_calls, sweeps=search.sweeps,
-        seed=search.seed, run_path=task.run_path, start_energy=start_energy,
+        seed=search.seed, run_path=task.run_path, start_energy=start_energy, notes=problem.notes,
     )  # fmt: skip
-
-
-def _problem_from(source: Problem | str | Path, kind: str | None) -> tuple[Problem, str]:
-    if not isinstance(source, Problem):
-        return read_problem(source, kind=kind), str(source)
-    if kind is not None and kind != source.kind:
-        raise SettingsError([f"kind is {kind!r}, but the problem given is of kind {source.kind!r}; leave kind out"])
-    return source, "problem"
-
-
-def _check_sizes(size: int, problem: Problem, subsolver: Subsolver) -> None:
-    if size > len(problem):
-        raise SettingsError(
-            [f"cluster_size is {size}, the problem has {len(problem)} spins; a cluster can hold no more than those"]
-        )
-    if size > subsolver.max_spins:
-        raise SubsolverError(
-            f"{subsolver.name}: takes clusters of at most {subsolver.max_spins} spins, cluster_size is {size}; "
-            "give a smaller --cluster-size or another --subsolver"
-        )
-
-
-def _check_memory(search: NeighbourhoodSearch) -> None:
-    """Refuse, before anything is allocated, a cluster size whose forecast goes beyond the machine's memory."""
-    memory = os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
-    size = search.plan.cluster_size
-    needed = _bytes_needed(search.subsolver, size)
-    if needed <= memory:
-        return
-    fitting = next((k for k in range(size, 0, -1) if _bytes_needed(search.subsolver, k) <= memory), 1)
-    raise MemoryForecastError(
-        f"{search.subsolver.name}: a cluster of {size} spins needs {needed / 1e9:.1f} GB, this machine has "
-        f"{memory / 1e9:.1f} GB; the largest cluster that fits has {fitting} spins (--cluster-size {fitting})"
-    )
-
-
-def _bytes_needed(subsolver: Subsolver, size: int) -> int:
-    forecast = forecast_of(subsolver, _blank_batch(size))
-    return 0 if forecast is None else forecast.bytes
-
-
-def _blank_batch(size: int) -> ClusterBatch:
-    from patchwalk.subsolvers.contract import DENSE_LIMIT, Edges
-
-    dense = size <= DENSE_LIMIT
-    nothing = Edges(np.zeros(2, np.int64), np.empty((0, 2), np.int32), np.empty(0))
-    return ClusterBatch(
-        fields=np.zeros((1, size)), spins=np.ones((1, size), np.int8), temperature=np.zeros(1),
-        seeds=np.zeros(1, np.uint64), couplings=np.zeros((1, size, size)) if dense else None,
-        edges=None if dense else nothing,
-    )  # fmt: skip
-
-
-def _default_run_path(name: str) -> Path:
-    stem = re.sub(r"[^A-Za-z0-9_-]+", "-", Path(name).name.split(".")[0]).strip("-") or "problem"
-    base = f"patchwalk-{stem}-{datetime.now():%Y%m%d-%H%M%S}"
-    path, number = Path(f"{base}.sqlite"), 2
-    while path.exists():
-        path, number = Path(f"{base}-{number}.sqlite"), number + 1
-    return path

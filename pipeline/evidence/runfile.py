@@ -11,12 +11,13 @@ byte).
 
 from __future__ import annotations
 
+import contextlib
 import json
 import platform
 import sqlite3
 import sys
 import time
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Iterator, Mapping
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
@@ -131,7 +132,7 @@ class RunFile:
                 ),
             ).lastrowid  # fmt: skip
         assert run is not None
-        return RunWriter(database, run, subsolver, rule, rows)
+        return RunWriter(self.path, database, run, subsolver, rule, rows)
 
     def close(self) -> None:
         """Fold the write-ahead log into the file and let go of it; a file that holds no run is removed."""
@@ -148,7 +149,10 @@ class RunFile:
 class RunWriter:
     """Writes the rounds of one run, a group at a time."""
 
-    def __init__(self, database: sqlite3.Connection, run: int, subsolver: Subsolver, rule: str, rows: str) -> None:
+    def __init__(
+        self, path: Path, database: sqlite3.Connection, run: int, subsolver: Subsolver, rule: str, rows: str
+    ) -> None:
+        self.path = path
         self.run, self.rows_written = run, 0
         self._database, self._subsolver, self._rule = database, subsolver, rule
         self._rows_wanted: str | None = None if rows == "auto" else rows
@@ -176,9 +180,11 @@ class RunWriter:
         return self._bytes > GROUP_BYTES or time.perf_counter() - self._opened > GROUP_SECONDS
 
     def close_group(self, state: Snapshot) -> None:
-        """Write everything taken in since the last group, and the state behind it, in one transaction."""
-        database = self._database
-        with database:
+        """Write everything taken in since the last group, and the state behind it, in one transaction.
+
+        Raises :class:`RunFileError` where the disk is full or gone; what was closed before stays.
+        """
+        with self._writing() as database:
             database.execute("BEGIN")
             database.executemany(INSERT_CALL, self._rows)
             for key, tally in self._tallies.items():
@@ -202,11 +208,19 @@ class RunWriter:
         """Close the last group and write how the run ended; ``facts`` are columns of ``runs``."""
         self.close_group(state)
         columns = ", ".join(f"{name} = ?" for name in facts)
-        with self._database:
-            self._database.execute(
+        with self._writing() as database:
+            database.execute(
                 f"UPDATE runs SET {columns}, spins = ? WHERE run = ?",
                 (*facts.values(), packed(state.best_spins), self.run),
             )
+
+    @contextlib.contextmanager
+    def _writing(self) -> Iterator[sqlite3.Connection]:
+        try:
+            with self._database:
+                yield self._database
+        except sqlite3.Error as error:
+            raise RunFileError(f"the run file {self.path} could not be written any further: {error}") from error
 
     def _start_group(self) -> None:
         self._opened, self._bytes, self._calls = time.perf_counter(), 0, 0

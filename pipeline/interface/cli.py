@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import importlib
 import json
+import os
 import sys
 from typing import Any
 
@@ -51,14 +52,16 @@ def exit_code(error: Exception) -> int | None:
     from patchwalk.evidence.runfile import RunFileError
     from patchwalk.problem.ising import ProblemError
     from patchwalk.settings import SettingsError
-    from patchwalk.subsolvers.registry import SubsolverError
+    from patchwalk.subsolvers.registry import NotReadyError, SubsolverError
 
     codes: dict[type[Exception], int] = {
         SettingsError: 2,
+        NotReadyError: 1,
         SubsolverError: 2,
         ProblemError: 3,
         MemoryError: 4,
         RunFileError: 1,
+        OSError: 1,
     }
     return next((code for kind, code in codes.items() if isinstance(error, kind)), None)
 
@@ -81,5 +84,23 @@ def print_json(value: dict[str, Any]) -> None:
 
 
 def main() -> None:
-    """The console script."""
-    program()
+    """The console script: every way in which a command can end, with its exit code."""
+    try:
+        code = program.main(standalone_mode=False)
+        sys.stdout.flush()
+    except click.ClickException as error:
+        error.show()
+        if "--json" in sys.argv:
+            print_json({"status": "error", "message": error.format_message()})
+        sys.exit(error.exit_code)
+    except (click.Abort, KeyboardInterrupt):
+        click.echo("patchwalk: interrupted before the work began; nothing was written", err=True)
+        sys.exit(130)
+    except BrokenPipeError:  # whoever reads the result has left
+        sys.stdout = open(os.devnull, "w")  # noqa: SIM115 - so that the interpreter's own last flush is quiet
+        sys.exit(1)
+    except OSError as error:
+        click.echo(f"patchwalk: the result could not be written: {error.strerror or error}", err=True)
+        sys.stdout = open(os.devnull, "w")  # noqa: SIM115
+        sys.exit(1)
+    sys.exit(code if isinstance(code, int) else 0)

@@ -50,8 +50,8 @@ class Narrator:
 
     def began(self, problem: Problem, seed: int, start_energy: float | None) -> None:
         self._problem, self._finder = problem, "start"
-        self._calls_seen = self._accepted = 0
-        self._next_line, self._next_live = 0.0, 0.0
+        self._calls_seen = self._accepted = self._lines_calls = 0
+        self._next_line, self._next_live, self._temperature, self._acceptance = 0.0, 0.0, 0.0, "-"
         self._say(f"seed {seed}")
         if start_energy is not None:
             word = problem.objective_name
@@ -67,32 +67,36 @@ class Narrator:
         for calls in round_.calls:
             self._calls_seen += len(calls)
             self._accepted += int(calls.accepted.sum())
-        now = search.elapsed
+        now, self._temperature = search.elapsed, round_.temperature
+        if self._live is not None and now >= min(self._next_live, self._next_line):
+            self._next_live = now + LIVE_SECONDS
+            self._live.update(Text(self._line(search), style="bold"), refresh=True)
         if now >= self._next_line:
             self._next_line = now + min(SLOWEST_LINE_SECONDS, max(1.0, now))
-            self._say(self._line(search, round_.temperature))
+            self._say(self._line(search))
+            self._lines_calls = search.calls
             self._calls_seen = self._accepted = 0
-        if self._live is not None and now >= self._next_live:
-            self._next_live = now + LIVE_SECONDS
-            self._live.update(Text(self._line(search, round_.temperature), style="bold"), refresh=True)
 
     def stopping(self) -> None:
         self._say("stopping after the slice in flight; Ctrl-C once more stops at once")
 
     def ended(self, search: NeighbourhoodSearch) -> None:
         self._stop_live()
+        if search.calls > self._lines_calls:
+            self._say(self._line(search))
         self._say(f"{spelled(search.subsolver)}: {search.message}")
 
     def _header(self) -> str:
         word = self._problem.objective_name
         return "".join(f"{name.format(objective=word):>{width}}" for name, width in COLUMNS)
 
-    def _line(self, search: NeighbourhoodSearch, temperature: float) -> str:
+    def _line(self, search: NeighbourhoodSearch) -> str:
         objective = search.problem.objective
-        share = f"{100 * self._accepted / self._calls_seen:.1f} %" if self._calls_seen else "-"
+        if self._calls_seen:
+            self._acceptance = f"{100 * self._accepted / self._calls_seen:.1f} %"
         cells = (
-            f"{search.elapsed:.1f} s", f"{search.calls:,}", f"{100 * search.stage:.0f} %", f"{temperature:.4g}",
-            f"{objective(search.energy):,.7g}", f"{objective(search.best_energy):,.7g}", share, self._finder,
+            f"{search.elapsed:.1f} s", f"{search.calls:,}", f"{100 * search.stage:.0f} %", f"{self._temperature:.4g}",
+            f"{objective(search.energy):,.7g}", f"{objective(search.best_energy):,.7g}", self._acceptance, self._finder,
         )  # fmt: skip
         return "".join(f"{cell:>{width}}" for cell, (_, width) in zip(cells, COLUMNS, strict=True))
 

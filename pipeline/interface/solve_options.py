@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import types
 import typing
 from collections.abc import Callable
 from typing import Any
@@ -11,45 +10,27 @@ import click
 from pydantic.fields import FieldInfo
 
 from patchwalk.interface.cli import fail, print_json
-from patchwalk.settings import SolveSettings
+from patchwalk.settings import SolveSettings, plain_type
 
 EXIT_INFEASIBLE = 5
 EXIT_CODES = {"interrupted": 130, "error": 1}
 
 
 def setting_options(command: Callable[..., None]) -> Callable[..., None]:
-    """Give the command an option for every field of :class:`SolveSettings`."""
+    """Give the command an option for every field of :class:`SolveSettings`; all are text, checked together later."""
     for name, field in reversed(SolveSettings.model_fields.items()):
         command = click.option(
-            f"--{name.replace('_', '-')}", name, type=_click_type(field), default=None, help=_help(field),
-            metavar=_metavar(name, field),
-        )(command)  # fmt: skip
+            f"--{name.replace('_', '-')}", name, type=str, default=None, help=_help(field), metavar=_metavar(name)
+        )(command)
     return command
 
 
-def _plain_type(field: FieldInfo) -> Any:
-    """The field's type without ``| None``."""
-    inner = field.annotation
-    if typing.get_origin(inner) in (types.UnionType, typing.Union):
-        inner = next(part for part in typing.get_args(inner) if part is not type(None))
-    return typing.get_args(inner)[0] if typing.get_origin(inner) is typing.Annotated else inner
-
-
-def _click_type(field: FieldInfo) -> click.ParamType[Any] | type:
-    inner = _plain_type(field)
-    if typing.get_origin(inner) is typing.Literal:
-        return click.Choice(typing.get_args(inner))
-    return inner if inner in (int, float) else str
-
-
-def _metavar(name: str, field: FieldInfo) -> str | None:
-    if name in ("start", "run"):
-        return "FILE"
-    if name == "seeds":
-        return "1..5"
-    if name == "subsolver":
-        return "NAME[,key=value...]"
-    return "WORD" if _click_type(field) is str else None
+def _metavar(name: str) -> str:
+    special = {"start": "FILE", "run": "FILE", "seeds": "1..5", "subsolver": "NAME[,key=value...]"}
+    kind = plain_type(name)
+    if typing.get_origin(kind) is typing.Literal:
+        return f"[{'|'.join(typing.get_args(kind))}]"
+    return special.get(name, "NUMBER" if kind in (int, float) else "WORD")
 
 
 def _help(field: FieldInfo) -> str:
@@ -75,7 +56,8 @@ def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None
     stops at once. Exit codes: 0 finished, 1 error, 2 settings, 3 problem file, 4 memory, 5 no feasible answer,
     130 interrupted.
     """
-    from patchwalk.commands.solving import carry_out, task_from
+    from patchwalk.commands.solving import carry_out
+    from patchwalk.commands.tasks import task_from
     from patchwalk.interface.progress import Narrator
     from patchwalk.interface.report import in_words
 

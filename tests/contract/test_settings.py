@@ -30,13 +30,13 @@ def test_what_is_given_overrides_the_file() -> None:
 def test_all_mistakes_are_reported_at_once_with_their_places() -> None:
     table = {"cluster_sise": 3, "sweeps": -1, "hot": "warm", "calls": 10}
     with pytest.raises(SettingsError) as caught:
-        checked_settings(table, {"calls": 0, "rule": "bal"}, "a.toml", "--{}")
+        checked_settings(table, {"calls": "0", "rule": "bal"}, "a.toml", "--{}")
     complaints = caught.value.complaints
     assert len(complaints) == 5
     for place, words in (
         ("a.toml: cluster_sise", "did you mean 'cluster_size'"),
         ("a.toml: sweeps", "greater than or equal to 0"),
-        ("a.toml: hot", "valid number"),
+        ("a.toml: hot", "must be a number"),
         ("--calls", "greater than or equal to 1"),
         ("--rule", "'ball'"),
     ):
