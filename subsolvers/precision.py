@@ -27,6 +27,9 @@ DOUBLE_FLOOR = 1e-11
 SINGLE_FROM = 10
 """Smallest cluster for which single precision is worth having."""
 
+LONGEST_REACH = 1e7
+"""Half width of the spectrum times time beyond which a walk is refused: it would take minutes a call and more."""
+
 WEAKLY_MOVED = 0.25
 """Where the driver has less than this share of the spectrum, rounding adds up faster in single precision."""
 
@@ -54,7 +57,7 @@ def plan_calls(
     """The plan of a batch, every row by itself.
 
     The width of a spectrum is bounded by all weights together. Where that is too coarse to allow single precision,
-    ``exact_spans`` looks at the levels themselves.
+    ``exact_spans`` looks at the levels themselves. Raises ``ValueError`` for a walk beyond :data:`LONGEST_REACH`.
     """
     assert batch.couplings is not None
     longest = times.max(axis=1)
@@ -70,6 +73,11 @@ def plan_calls(
             half_spans(unsure, batch.fields, batch.couplings, resting)
             error = single_error(moving, resting, longest)
     reach = (moving + resting) * longest
+    if reach.max() > LONGEST_REACH:
+        raise ValueError(
+            f"walk: the spectrum's half width times the longest time is {reach.max():.3g}, simulation stops at "
+            f"{LONGEST_REACH:g} (about as many applications of H); measure earlier (time, time_in_hops)"
+        )
     single = (error <= tolerance) & eligible
     return Plan(driver, rates, times, reach, single, np.where(single, error, double_error(reach)))
 

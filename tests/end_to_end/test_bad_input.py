@@ -108,6 +108,7 @@ MISTAKES: dict[str, Mistake] = {
     "unknown parameter": option("--subsolver walk,shoots=2", SETTINGS, "walk", "'shoots'", "did you mean 'shots'"),
     "parameter out of range": option("--subsolver walk,shots=0", SETTINGS, "walk", "shots", "0", "1,000,000"),
     "parameter of the wrong type": option("--subsolver metropolis,hot=warm", SETTINGS, "metropolis: hot", "'warm'"),
+    "a walk without end": option("--subsolver walk,time=1e12", ERROR, "walk", "longest time", "measure earlier"),
     "parameter twice": option("--subsolver walk,shots=2,shots=3", SETTINGS, "shots", "twice"),
     "missing subsolver file": option("--subsolver @nowhere.toml", SETTINGS, "nowhere.toml", "a name and parameters"),
     "not a subsolver": option("--subsolver json:JSONDecoder", SETTINGS, "json:JSONDecoder", "no subsolver", "propose"),
