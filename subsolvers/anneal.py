@@ -16,12 +16,11 @@ from typing import ClassVar, Literal, Self
 import numpy as np
 
 from patchwalk.subsolvers import schedules
-from patchwalk.subsolvers.compiled import compiled
+from patchwalk.subsolvers.anneal_rows import anneal_rows, plan_rows
 from patchwalk.subsolvers.contract import (
     F64,
     I8,
     I64,
-    U64,
     Balance,
     ClusterBatch,
     Forecast,
@@ -30,7 +29,6 @@ from patchwalk.subsolvers.contract import (
     Work,
     refuse_oversize,
 )
-from patchwalk.subsolvers.draws import next_unit
 from patchwalk.subsolvers.drivers import (
     DRIVERS,
     Driver,
@@ -39,36 +37,20 @@ from patchwalk.subsolvers.drivers import (
     hop_scale,
     level_spread,
 )
-from patchwalk.subsolvers.ramp import (
-    A_END,
-    END,
-    UNIFORM,
-    centre_of,
-    follow_steps,
-    make_rooms,
-    plan_steps,
-    workspace_bytes,
-)
-from patchwalk.subsolvers.spectrum import (
-    cluster_energies,
-    configuration_number,
-    tie_tolerance,
-    write_configuration,
-)
+from patchwalk.subsolvers.ramp import workspace_bytes
+from patchwalk.subsolvers.spectrum import cluster_energies
 from patchwalk.subsolvers.uniform import require_shots
 
 FINEST_TOLERANCE = 1e-11
 """Rounding alone moves a law by nearly this much."""
-
-MIRRORED = 1e-13
-"""What the series of a palindromic anneal may leave out, so that its proposal matrix is symmetric beyond doubt."""
 
 
 @dataclass(frozen=True)
 class _Anneal:
     """What all anneals are told.
 
-    ``duration`` is in units of 1/energy, ``duration_in_hops`` in units of 1/hopping; at most one of them is given.
+    ``duration`` is in units of 1/energy, ``duration_in_hops`` in hops (1/hopping, see ``drivers.py``); at most one of
+    them is given.
     ``hopping`` is ``"heuristic"`` (span/(2k), from the couplings alone) or a rate in energy units; ``hopping_factor``
     multiplies either. ``driver`` takes the place of sum_i X_i, as for a walk. ``shots`` measurements are drawn
     independently from the law at the end. ``tolerance`` bounds the total variation distance of that law to the exact
@@ -190,10 +172,6 @@ class _Anneal:
     def _mover(self) -> int:
         return DRIVERS.index(self.driver)
 
-    @property
-    def _neglected(self) -> float:
-        return min(MIRRORED, 0.1 * self.tolerance) if self.balance == "symmetric" else 0.1 * self.tolerance
-
     def _unit(self) -> tuple[float, bool]:
         """The duration that counts, and whether it is in hops."""
         if self.duration is not None:
@@ -232,9 +210,9 @@ class _Anneal:
         """Estimated errors (B,) and passes (B,), from half the spreads (B,) of the energies or from the energies."""
         assert batch.couplings is not None
         errors, passes = np.empty(len(batch)), np.empty(len(batch), np.int64)
-        _plan_rows(
+        plan_rows(
             batch.fields, batch.couplings, half_widths, self._mover, legs, knots, time_scale, a_scale,
-            self.tolerance, self._neglected, self.most_steps, errors, passes,
+            self.tolerance, self.most_steps, errors, passes,
         )  # fmt: skip
         return errors, passes
 
@@ -248,10 +226,10 @@ class _Anneal:
         if outcomes is None:
             outcomes = np.empty((len(batch), 0, batch.size), np.int8)
         hit, errors, passes = np.empty(len(batch)), np.empty(len(batch)), np.empty(len(batch), np.int64)
-        _anneal_rows(
+        anneal_rows(
             batch.fields, batch.couplings, batch.spins, batch.seeds, self.from_incumbent, self._mover,
             schedules.legs_array(schedule), self._knots(batch, schedule, a_scale), time_scale, a_scale,
-            self.tolerance, self._neglected, self.most_steps, np.ascontiguousarray(times),
+            self.tolerance, self.most_steps, np.ascontiguousarray(times),
             laws, outcomes, hit, errors, passes,
         )  # fmt: skip
         return hit, errors, passes
@@ -384,97 +362,3 @@ class Blend(_Anneal):
 
 def _number(value: object) -> bool:
     return isinstance(value, (int, float)) and not isinstance(value, bool) and math.isfinite(value)
-
-
-@compiled
-def _scaled(legs: F64, time_scale: float, a_scale: float) -> F64:
-    """The legs in units of energy and 1/energy."""
-    absolute = np.empty(legs.shape)
-    for leg in range(len(legs)):
-        for column in range(legs.shape[1]):
-            scale = time_scale if column <= END else a_scale if column <= A_END else 1.0
-            absolute[leg, column] = legs[leg, column] * scale
-    return absolute
-
-
-@compiled
-def _plan_rows(
-    fields: F64, couplings: F64, half_widths: F64, mover: int, legs: F64, knots: F64, time_scale: F64, a_scale: F64,
-    tolerance: float, neglected: float, most_steps: int, errors: F64, passes: I64,
-) -> None:  # fmt: skip
-    """What each row's steps come to: from its energies, or, where ``half_widths`` are given, from those alone."""
-    rows, spins = fields.shape
-    forecast = len(half_widths) > 0
-    energies, report = np.empty(0 if forecast else 1 << spins), np.empty(2)
-    for row in range(rows):
-        if forecast:
-            half_width = half_widths[row]
-        else:
-            cluster_energies(fields[row], couplings[row], energies)
-            _, half_width = centre_of(energies, energies)
-        plan_steps(
-            energies, half_width, 1 << spins, mover, _scaled(legs, time_scale[row], a_scale[row]),
-            knots[min(row, len(knots) - 1)], tolerance, neglected, most_steps, report,
-        )  # fmt: skip
-        errors[row], passes[row] = report[0], int(report[1])
-
-
-@compiled
-def _anneal_rows(
-    fields: F64, couplings: F64, spins: I8, seeds: U64, from_incumbent: bool, mover: int, legs: F64, knots: F64,
-    time_scale: F64, a_scale: F64, tolerance: float, neglected: float, most_steps: int, times: F64,
-    laws: F64, outcomes: I8, hit: F64, errors: F64, passes: I64,
-) -> None:  # fmt: skip
-    """Laws at the rising times (B, M) of each row, kept where ``laws`` (., M, N) has room, and shots from the last."""
-    rows, size = fields.shape
-    energies, report, stream = np.empty(1 << size), np.empty(2), np.empty(1, np.uint64)
-    rooms, imaginary = make_rooms(1 << size), np.empty((times.shape[1], 1 << size))
-    for row in range(rows):
-        cluster_energies(fields[row], couplings[row], energies)
-        _, half_width = centre_of(energies, energies)
-        start = configuration_number(spins[row]) if from_incumbent else UNIFORM
-        own_legs, own_knots = _scaled(legs, time_scale[row], a_scale[row]), knots[min(row, len(knots) - 1)]
-        law = laws[min(row, len(laws) - 1)]
-        steps = plan_steps(
-            energies, half_width, 1 << size, mover, own_legs, own_knots, tolerance, neglected, most_steps, report
-        )
-        passes[row] = follow_steps(
-            energies, half_width, mover, own_legs, own_knots, steps, neglected, start, times[row], rooms, law, imaginary
-        )
-        errors[row] = report[0]
-        for moment in range(len(law)):
-            for number in range(1 << size):
-                law[moment, number] = law[moment, number] ** 2 + imaginary[moment, number] ** 2
-        hit[row] = _minimum_share(energies, tie_tolerance(fields[row], couplings[row]), law[len(law) - 1])
-        stream[0] = seeds[row]
-        _draw(law[len(law) - 1], stream, outcomes[row])
-
-
-@compiled
-def _minimum_share(energies: F64, tied: float, law: F64) -> float:
-    """The probability of the configurations whose energy is within ``tied`` of the lowest."""
-    low, total = 0.0, 0.0
-    ceiling = np.inf
-    for energy in energies:
-        ceiling = min(ceiling, energy + tied)
-    for number in range(len(law)):
-        total += law[number]
-        if energies[number] <= ceiling:
-            low += law[number]
-    return low / total
-
-
-@compiled
-def _draw(law: F64, stream: U64, shots: I8) -> None:
-    """Independent configurations (m, k) from the law."""
-    total = law.sum()
-    for shot in range(len(shots)):
-        threshold = next_unit(stream) * total
-        running, drawn = 0.0, 0
-        for number in range(len(law)):
-            running += law[number]
-            if law[number] > 0.0:
-                drawn = number
-            if running > threshold:
-                break
-        write_configuration(drawn, shots[shot])

@@ -16,7 +16,7 @@ import numpy as np
 from scipy.linalg import eigh
 
 from patchwalk.subsolvers.contract import F64
-from patchwalk.subsolvers.ramp import CURVE, END
+from patchwalk.subsolvers.steps import CURVE, END
 
 STRAIGHT, BY_KNOTS = 0.0, -1.0
 """What stands in a leg's last column: a straight line, or a curve tabulated per cluster (see :func:`gap_knots`)."""

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import math
 import re
 from collections.abc import Callable
@@ -153,20 +154,22 @@ def test_the_gap_schedule_follows_the_gap() -> None:
     assert knots[:, 2].min() < 0.3 < 1.0 < knots[:, 2].max()
 
     curve = CubicHermiteSpline(knots[:, 0], knots[:, 1], knots[:, 2])
+    drive = ramp(lambda t: float(curve(t / DURATION)))[0][2]
+    pieces = [(begin, end, drive) for begin, end in itertools.pairwise(DURATION * knots[:, 0])]
     law = made("forward", schedule="gap", hopping=RATE, duration=DURATION).distribution(batch)[0]
-    expected = dense_law(energies, "hypercube", ramp(lambda t: float(curve(t / DURATION))), None, 0.005)
-    assert variation(law, expected) < 1e-6
+    assert variation(law, dense_law(energies, "hypercube", pieces, None, 0.005)) < 1e-6
 
 
 def test_following_the_gap_pays_where_there_is_time() -> None:
-    batch = glass(10, 6)
+    """The chance to miss, in the middle of twenty clusters: some have no time enough, some need no care."""
+    batch = glass(20, 6)
     hits = {
         schedule: made("forward", schedule=schedule, duration_in_hops=40).propose(batch).hit_probability
         for schedule in ("linear", "gap")
     }
     assert hits["linear"] is not None
     assert hits["gap"] is not None
-    assert (1 - hits["gap"]).mean() < 0.5 * (1 - hits["linear"]).mean()
+    assert np.median(1 - hits["gap"]) < 0.4 * np.median(1 - hits["linear"])
 
 
 def test_a_degenerate_ground_state_does_not_stop_the_gap_schedule() -> None:
@@ -310,9 +313,9 @@ def test_symmetric_means_symmetric(spins: int, driver: str) -> None:
     for pause in (0.0, 0.7):
         matrix = proposal_matrix(made("reverse", turning_point=0.3, pause=pause, driver=driver), spins)
         assert np.abs(matrix - matrix.T).max() < 1e-12
-        assert np.abs(matrix - np.diag(np.diag(matrix))).max() > 0.01
+        assert np.abs(matrix - np.diag(np.diag(matrix))).max() > 1e-3
     lopsided = proposal_matrix(made("reverse", turning_point=0.3, leg_ratio=4.0, driver=driver), spins)
-    assert np.abs(lopsided - lopsided.T).max() > 0.01
+    assert np.abs(lopsided - lopsided.T).max() > 1e-3
 
 
 def test_the_accepted_chain_keeps_the_boltzmann_law() -> None:
