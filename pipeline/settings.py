@@ -120,9 +120,12 @@ class SolveSettings(BaseModel):
         "auto (all, unless a call is very cheap).",
     )
     hot: float = Field(
-        0.5, ge=0, allow_inf_nan=False, description="Temperature at the beginning, in units of the typical local field."
+        1.0, ge=0, allow_inf_nan=False, description="Temperature at the beginning, in units of the typical local field."
     )  # fmt: skip
     cold: float = Field(0.05, ge=0, allow_inf_nan=False, description="Temperature at the end, in the same units.")
+    coolings: int = Field(
+        3, ge=1, le=20, description="How often it falls from hot to cold, every time over twice as long as before."
+    )
     failures: int = Field(100, ge=1, description="Give up after so many failed calls in a row.")
 
     def conflicts(self) -> list[tuple[str, str]]:

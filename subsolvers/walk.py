@@ -8,7 +8,7 @@ are common practice). It is measured once per shot, at a time drawn from a few e
 from __future__ import annotations
 
 import math
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from typing import ClassVar, Literal, Self
 
 import numpy as np
@@ -31,6 +31,7 @@ from patchwalk.subsolvers.drivers import DRIVERS, Driver, heuristic_hopping, hop
 from patchwalk.subsolvers.hamiltonian import times_together, workspace_size
 from patchwalk.subsolvers.longtime import DENSE_SPINS, long_time_bytes, long_time_law, long_time_updates
 from patchwalk.subsolvers.measured import measure_laws, walk_and_measure, watched_entries
+from patchwalk.subsolvers.noise import Noise, noise_of
 from patchwalk.subsolvers.precision import DOUBLE_FLOOR, Plan, applications_needed, plan_calls
 from patchwalk.subsolvers.propagate import level_table, new_workspace, walk_law
 from patchwalk.subsolvers.spectrum import configuration_number
@@ -59,6 +60,9 @@ class Walk:
     single and double precision, call by call. A call that misses it all the same is ``TRUNCATED``; :meth:`errors`
     says what each call's error is estimated to be. :meth:`laws` and :meth:`distribution` are always in double
     precision.
+
+    ``dephasing``, ``control_error``, ``precision_bits`` and ``readout_flip`` are the noise of a device: noise.py. All
+    are off unless given. :meth:`laws` and :meth:`distribution` stay without noise; :meth:`noisy_distribution` has it.
     """
 
     start: Literal["uniform", "incumbent"] = "uniform"
@@ -70,9 +74,14 @@ class Walk:
     times: int = 8
     shots: int = 1
     tolerance: float = 1e-6
+    dephasing: float = 0.0
+    control_error: float = 0.0
+    precision_bits: int | None = None
+    readout_flip: float = 0.0
 
     name: ClassVar[str] = "walk"
     deterministic: ClassVar[bool] = True
+    noise: Noise = field(init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         require_shots(self.name, self.shots)
@@ -97,6 +106,12 @@ class Walk:
             given = getattr(self, name)
             if given is not None and (name, given) != ("time", "infinite"):
                 object.__setattr__(self, name, _interval(name, given))
+        object.__setattr__(self, "noise", noise_of(self))
+        if self.noise.dephasing > 0.0 and self.time == "infinite":
+            raise ValueError(
+                f'walk: dephasing is {self.dephasing!r} and time is "infinite"; in the end every configuration is then '
+                "equally likely: give a finite time, or use the subsolver uniform"
+            )
 
     @property
     def max_spins(self) -> int:
@@ -106,7 +121,7 @@ class Walk:
     def balance(self) -> Balance:
         if self.shots > 1:
             return "none"
-        return "symmetric" if self.start == "incumbent" else "ratio"
+        return self.noise.balance("symmetric" if self.start == "incumbent" else "ratio")
 
     def prepare(self, sample: ClusterBatch) -> Self:
         self._refuse_oversize(sample)
@@ -123,10 +138,27 @@ class Walk:
         few thousand configurations are minima may take further recursions, one for every few measuring times.
         """
         self._refuse_oversize(batch)
+        if self.noise.off:
+            return self.forecast_for(batch, batch)
+        # noise is loaded where it is asked for, here and below: nobody else waits for it
+        from patchwalk.subsolvers.noisy_walk import noisy_forecast
+
+        return noisy_forecast(self, batch)
+
+    def propose(self, batch: ClusterBatch) -> Proposals:
+        self._refuse_oversize(batch)
+        if self.noise.off:
+            return self.measured(batch, batch)
+        from patchwalk.subsolvers.noisy_walk import noisy_proposals
+
+        return noisy_proposals(self, batch)
+
+    def forecast_for(self, batch: ClusterBatch, acting: ClusterBatch) -> Forecast:
+        """The forecast of :meth:`measured`."""
         size, rows = batch.size, len(batch)
         if self.time == "infinite":
             return Forecast(bytes=long_time_bytes(size), work=self._endless_work(batch))
-        plan = self.plan(batch)
+        plan = self.plan(batch, acting)
         applications = applications_needed(plan.reach, plan.single)
         moments = plan.times.shape[1]
         in_full = min(self.shots, moments)
@@ -137,9 +169,9 @@ class Walk:
         work = self._work(batch, applications * recursions, plan.times.mean(axis=1))
         return Forecast(bytes=int(8 * numbers) + rows * self.shots * size, work=work)
 
-    def propose(self, batch: ClusterBatch) -> Proposals:
-        self._refuse_oversize(batch)
-        assert batch.couplings is not None
+    def measured(self, batch: ClusterBatch, acting: ClusterBatch) -> Proposals:
+        """Walks on ``acting`` at the rates and times of ``batch``; the two differ where controls are imperfect."""
+        assert acting.couplings is not None
         rows = len(batch)
         outcomes = np.empty((rows, self.shots, batch.size), np.int8)
         drawn = np.empty((rows, self.shots))
@@ -147,21 +179,21 @@ class Walk:
         incumbent = self.start == "incumbent"
         if self.time == "infinite":
             drawn[:] = np.inf
-            laws = self._endless_laws(batch)
-            measure_laws(batch.fields, batch.couplings, batch.spins, batch.seeds, laws, outcomes, hit, log_ratio)
+            laws = self.average_laws(batch, acting)[0]
+            measure_laws(acting.fields, acting.couplings, batch.spins, batch.seeds, laws, outcomes, hit, log_ratio)
             work, status, messages = self._endless_work(batch), np.zeros(rows, np.uint8), ("",) * rows
         else:
-            plan = self.plan(batch, exact_spans=True)
+            plan = self.plan(batch, acting, exact_spans=True)
             for single in (False, True):
                 members = np.flatnonzero(plan.single == single)
                 if len(members):
                     walk_and_measure(
-                        members, batch.fields, batch.couplings, batch.spins, batch.seeds, plan.rates, plan.times,
+                        members, acting.fields, acting.couplings, batch.spins, batch.seeds, plan.rates, plan.times,
                         plan.driver, incumbent, new_workspace(plan.driver, batch.size, plan.times.shape[1], single),
                         outcomes, drawn, hit, log_ratio, applications,
                     )  # fmt: skip
             work = self._work(batch, applications, drawn.mean(axis=1))
-            status, messages = self._verdicts(plan.errors)
+            status, messages = self.verdicts(plan.errors)
         return Proposals(
             outcomes,
             work,
@@ -173,33 +205,61 @@ class Walk:
             noiseless_hit=hit,
         )
 
-    def plan(self, batch: ClusterBatch, exact_spans: bool = False) -> Plan:
-        """Rates, times, precision and error of every call: see precision.py."""
+    def plan(self, batch: ClusterBatch, acting: ClusterBatch | None = None, exact_spans: bool = False) -> Plan:
+        """Rates, times, precision and error of every call, where ``acting`` acts in its place: see precision.py."""
         rates = self._rates(batch)
         kind, times = DRIVERS.index(self.driver), self._measuring_times(batch, rates)
-        return plan_calls(batch, kind, rates, times, self.tolerance, exact_spans)
+        return plan_calls(acting or batch, kind, rates, times, self.tolerance, exact_spans)
 
     def errors(self, batch: ClusterBatch) -> F64:
         """Estimated total variation distance (B,) between the law that each call draws from and the exact one."""
         self._refuse_oversize(batch)
         if self.time == "infinite":
             return np.full(len(batch), DOUBLE_FLOOR)
-        return self.plan(batch, exact_spans=True).errors
+        if self.noise.dephasing > 0.0:
+            from patchwalk.subsolvers.noisy_walk import trajectory_errors
+
+            return trajectory_errors(self, batch, self.noise.disturbed(batch))
+        return self.plan(batch, self.noise.disturbed(batch), exact_spans=True).errors
 
     def distribution(self, batch: ClusterBatch) -> F64:
-        """The law of one shot, averaged over its measuring times: f64 (B, 2^k)."""
+        """The law of one shot without noise, averaged over its measuring times: f64 (B, 2^k)."""
         self._refuse_oversize(batch)
-        if self.time == "infinite":
-            return self._endless_laws(batch)
-        times = self._measuring_times(batch, self._rates(batch))
-        together = times_together(batch.size, times.shape[1], 8)
+        return self.average_laws(batch, batch)[0]
+
+    def noisy_distribution(self, batch: ClusterBatch) -> F64:
+        """The same with the noise of each call's own seed: f64 (B, 2^k).
+
+        Raises ``ValueError`` where only samples are known: dephasing of more than 4 spins.
+        """
+        from patchwalk.subsolvers.noisy_walk import known_laws
+
+        self._refuse_oversize(batch)
+        laws, _ = known_laws(self, batch, self.noise.disturbed(batch))
+        if laws is None:
+            raise ValueError(f"walk: the law of {batch.size} dephased spins is only sampled; use propose")
+        return np.stack([self.noise.law_as_read(law) for law in laws])
+
+    def average_laws(self, batch: ClusterBatch, acting: ClusterBatch) -> tuple[F64, I64]:
+        """Laws f64 (B, 2^k) averaged over measuring times, as in :meth:`measured`; amplitude updates i64 (B,)."""
+        rates, updates = self._rates(batch), np.full(len(batch), long_time_updates(batch.size))
         averages = np.zeros((len(batch), 1 << batch.size))
+        if self.time == "infinite":
+            for row in range(len(batch)):
+                origin = self.origin(batch, row)
+                averages[row] = long_time_law(levels_of(acting, row), rates[row], self.driver, origin)
+            return averages, updates
+        times = self._measuring_times(batch, rates)
+        together = times_together(batch.size, times.shape[1], 8)
         for row in range(len(batch)):
+            updates[row] = 0
             for begin in range(0, times.shape[1], together):
                 group = times[row, begin : begin + together]
-                averages[row] += self.laws(batch.rows(row, row + 1), group)[0].sum(axis=0)
+                laws = np.empty((len(group), 1 << batch.size))
+                updates[row] += self._fill(laws, batch, acting, row, rates[row], group)
+                averages[row] += laws.sum(axis=0)
         averages /= times.shape[1]
-        return averages
+        return averages, self.updates(updates, batch.size)
 
     def laws(self, batch: ClusterBatch, times: npt.ArrayLike) -> F64:
         """The law of one shot measured at each of ``times`` (M,), in units of 1/energy: f64 (B, M, 2^k)."""
@@ -207,14 +267,16 @@ class Walk:
         moments = np.atleast_1d(np.array(times, np.float64))
         if moments.ndim != 1 or not np.all((moments >= 0) & np.isfinite(moments)):
             raise ValueError(f"walk: times is {times!r}; give finite times of at least 0, in units of 1/energy")
-        rates, kind, couplings = self._rates(batch), DRIVERS.index(self.driver), batch.couplings
-        assert couplings is not None
+        rates = self._rates(batch)
         laws = np.empty((len(batch), len(moments), 1 << batch.size))
-        workspace = new_workspace(kind, batch.size, len(moments))
         for row in range(len(batch)):
-            energies = level_table(batch.fields[row], couplings[row])
-            walk_law(energies, rates[row], self._origin(batch, row), moments, laws[row], kind, workspace)
+            self._fill(laws[row], batch, batch, row, rates[row], moments)
         return laws
+
+    def _fill(self, laws: F64, batch: ClusterBatch, acting: ClusterBatch, row: int, rate: float, times: F64) -> int:
+        """Fill ``laws`` f64 (M, 2^k) with those of one row at these times; returns the applications of H."""
+        kind = DRIVERS.index(self.driver)
+        return walk_law(levels_of(acting, row), rate, self.origin(batch, row), times, laws, kind)
 
     def _refuse_oversize(self, batch: ClusterBatch) -> None:
         reason = "exact simulation (2^k amplitudes)"
@@ -247,7 +309,8 @@ class Walk:
             return np.tile(moments, (len(batch), 1))
         return moments[None, :] / (rates / hop_scale(DRIVERS.index(self.driver), batch.size))[:, None]
 
-    def _verdicts(self, errors: F64) -> tuple[U8, tuple[str, ...]]:
+    def verdicts(self, errors: F64) -> tuple[U8, tuple[str, ...]]:
+        """Status (B,) and messages of calls whose laws have these estimated errors (B,)."""
         missed = errors > self.tolerance
         status = np.where(missed, Status.TRUNCATED, Status.OK).astype(np.uint8)
         return status, tuple(
@@ -258,18 +321,9 @@ class Walk:
             for error, above in zip(errors, missed, strict=True)
         )
 
-    def _origin(self, batch: ClusterBatch, row: int) -> int:
+    def origin(self, batch: ClusterBatch, row: int) -> int:
         """Where a walk starts: a configuration's number, or -1 for the uniform superposition."""
         return configuration_number(batch.spins[row]) if self.start == "incumbent" else -1
-
-    def _endless_laws(self, batch: ClusterBatch) -> F64:
-        rates, couplings = self._rates(batch), batch.couplings
-        assert couplings is not None
-        laws = np.empty((len(batch), 1 << batch.size))
-        for row in range(len(batch)):
-            energies = level_table(batch.fields[row], couplings[row])
-            laws[row] = long_time_law(energies, rates[row], self.driver, self._origin(batch, row))
-        return laws
 
     def _endless_work(self, batch: ClusterBatch) -> Work:
         return Work(
@@ -279,13 +333,23 @@ class Walk:
         )
 
     def _work(self, batch: ClusterBatch, applications: I64, mean_time: F64) -> Work:
-        rows, passes = len(batch), 2 if self.driver == "pairs" else 1
+        rows = len(batch)
         return Work(
             shots=np.full(rows, self.shots, np.int64),
             evolution_time=mean_time * self.shots,
-            amplitude_updates=applications * passes << batch.size,
+            amplitude_updates=self.updates(applications, batch.size),
             energies=np.full(rows, 1 << batch.size, np.int64),
         )
+
+    def updates(self, applications: I64, size: int) -> I64:
+        """Amplitude updates in so many applications of H."""
+        return applications * (2 if self.driver == "pairs" else 1) << size
+
+
+def levels_of(batch: ClusterBatch, row: int) -> F64:
+    """All energies of one row, f64 (2^k,)."""
+    assert batch.couplings is not None
+    return level_table(batch.fields[row], batch.couplings[row])
 
 
 def _positive(value: object) -> bool:

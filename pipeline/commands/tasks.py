@@ -48,7 +48,7 @@ class Task:
             cluster_size=self.cluster_size,
             clusters_per_round=settings.clusters_per_round,
             sweeps_per_round=settings.sweeps,
-            cooling=GeometricCooling(settings.hot, settings.cold, problem.field_scale),
+            cooling=GeometricCooling(settings.hot, settings.cold, problem.field_scale, settings.coolings),
             ends=Ends(settings.calls, settings.total_sweeps, settings.time_limit, target),
             failures=settings.failures,
         )

@@ -89,3 +89,14 @@ def test_cooling_goes_from_hot_to_cold_in_the_problems_units() -> None:
     cooling = GeometricCooling(hot=2.0, cold=0.5, scale=3.0)
     assert (cooling.at(0.0), cooling.at(0.5), cooling.at(1.0)) == (6.0, 3.0, 1.5)
     assert GeometricCooling(0.0, 0.0, 3.0).at(0.3) == 0.0
+
+
+def test_every_cooling_lasts_over_twice_as_long_as_the_one_before() -> None:
+    cooling = GeometricCooling(hot=2.0, cold=0.5, scale=3.0, coolings=3)
+    starts = [0.0, 1 / 7, 3 / 7]
+    ends = [1 / 7 - 1e-9, 3 / 7 - 1e-9, 1.0]
+    assert [cooling.at(stage) for stage in starts] == pytest.approx([6.0] * 3)
+    assert [cooling.at(stage) for stage in ends] == pytest.approx([1.5] * 3, rel=1e-6)
+    for begin, end in zip(starts, ends, strict=True):
+        temperatures = [cooling.at(begin + (end - begin) * step / 20) for step in range(21)]
+        assert temperatures == sorted(temperatures, reverse=True)
