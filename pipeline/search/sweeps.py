@@ -12,18 +12,10 @@ import numpy.typing as npt
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
 from patchwalk.subsolvers.draws import happens, next_unit
+from patchwalk.subsolvers.neighbours import turn
 
 TIE_CHANCE = 0.9
 """How often a flip that leaves the energy as it is gets made; any chance keeps detailed balance."""
-
-
-@compiled
-def flip(spin: int, row_starts: I64, neighbours: I32, couplings: F64, spins: I8, local_fields: F64) -> None:
-    """Turn one spin over and bring its neighbours' local fields up to date."""
-    spins[spin] = -spins[spin]
-    turned = 2.0 * spins[spin]
-    for edge in range(row_starts[spin], row_starts[spin + 1]):
-        local_fields[neighbours[edge]] += turned * couplings[edge]
 
 
 @compiled
@@ -53,7 +45,7 @@ def metropolis_sweep(
         elif rise == 0.0 and next_unit(stream) >= TIE_CHANCE:
             continue
         change += rise
-        flip(spin, row_starts, neighbours, couplings, spins, local_fields)
+        turn(spin, spins, local_fields, row_starts, neighbours, couplings)
     return change
 
 
@@ -68,7 +60,7 @@ def descend(row_starts: I64, neighbours: I32, couplings: F64, spins: I8, local_f
             rise = -2.0 * spins[spin] * local_fields[spin]
             if rise < -tolerance:
                 change += rise
-                flip(spin, row_starts, neighbours, couplings, spins, local_fields)
+                turn(spin, spins, local_fields, row_starts, neighbours, couplings)
                 moving = True
     return change
 
@@ -91,4 +83,4 @@ def flip_accepted(
             continue
         for i in range(members.shape[1]):
             if spins[members[row, i]] != outcomes[row, chosen[row], i]:
-                flip(members[row, i], row_starts, neighbours, couplings, spins, local_fields)
+                turn(members[row, i], spins, local_fields, row_starts, neighbours, couplings)
