@@ -3,10 +3,16 @@
 from __future__ import annotations
 
 import os
+import signal
 from collections.abc import Callable
 from pathlib import Path
 
 import pytest
+
+
+def pytest_configure() -> None:
+    """Let interrupts through: a suite that was started in the background would hand down that they are ignored."""
+    signal.signal(signal.SIGINT, signal.default_int_handler)
 
 
 def pytest_collection_modifyitems(config: pytest.Config, items: list[pytest.Item]) -> None:
