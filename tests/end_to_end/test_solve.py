@@ -430,7 +430,7 @@ def test_a_share_of_the_rows_changes_nothing_but_the_rows(instances: Path) -> No
 EVERY_SETTING: dict[str, Any] = {
     "kind": "ising", "subsolver": "walk,shots=2,time_in_hops=[0.5, 1.0]", "cluster_size": 5, "rule": "scattered",
     "clusters_per_round": 3, "sweeps": 1, "seconds": 250.0, "calls": 90, "total_sweeps": 400, "target": -500.0,
-    "seed": 7, "record": "all", "hot": 0.8, "cold": 0.2, "failures": 9,
+    "seed": 7, "record": "all", "hot": 0.8, "cold": 0.2, "coolings": 2, "failures": 9,
 }  # fmt: skip
 ELSEWHERE = {"start", "run", "seeds"}  # paths, and what cannot stand beside seed: tried on their own
 
