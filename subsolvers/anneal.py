@@ -3,7 +3,7 @@
 The state evolves under ``H(t) = -A(t) sum_i X_i + B(t) H_P`` with the cluster's energies on the diagonal of H_P, and
 is measured at the end (Kadowaki & Nishimori, PRE 58 (1998) 5355; Farhi et al., quant-ph/0001106, both from memory).
 A is in units of the hopping rate that a walk would use, B is 1 where the problem acts in full, so that a schedule
-means the same on weak and strong clusters. Noise is not simulated here.
+means the same on weak and strong clusters. Noise: noise.py, as far as noisy_anneal.py follows it.
 """
 
 from __future__ import annotations
@@ -37,6 +37,7 @@ from patchwalk.subsolvers.drivers import (
     hop_scale,
     level_spread,
 )
+from patchwalk.subsolvers.noise import Noise, noise_of
 from patchwalk.subsolvers.ramp import workspace_bytes
 from patchwalk.subsolvers.spectrum import cluster_energies
 from patchwalk.subsolvers.uniform import require_shots
@@ -55,6 +56,10 @@ class _Anneal:
     multiplies either. ``driver`` takes the place of sum_i X_i, as for a walk. ``shots`` measurements are drawn
     independently from the law at the end. ``tolerance`` bounds the total variation distance of that law to the exact
     one; a call whose estimate is above it is ``TRUNCATED``. On curved schedules ``most_steps`` limits what it may cost.
+
+    ``control_error``, ``precision_bits`` and ``readout_flip`` are the noise of a device (noise.py), off unless given;
+    ``dephasing`` is refused, which only walks can follow. Schedules are those of the cluster as it was meant.
+    :meth:`laws` and :meth:`distribution` stay without noise; :meth:`noisy_distribution` has it.
     """
 
     duration: float | None = None
@@ -65,12 +70,17 @@ class _Anneal:
     shots: int = 1
     tolerance: float = 1e-6
     most_steps: int = 100_000
+    dephasing: float = 0.0
+    control_error: float = 0.0
+    precision_bits: int | None = None
+    readout_flip: float = 0.0
 
     name: ClassVar[str]
     max_spins: ClassVar[int] = 22
     deterministic: ClassVar[bool] = True
     from_incumbent: ClassVar[bool] = False
     default_in_hops: ClassVar[float]
+    noise: Noise = field(init=False, repr=False, compare=False)
 
     def __post_init__(self) -> None:
         require_shots(self.name, self.shots)
@@ -94,6 +104,12 @@ class _Anneal:
         )
         whole = isinstance(self.most_steps, int) and not isinstance(self.most_steps, bool)
         self._require("most_steps", whole and 1 <= self.most_steps <= 10_000_000, "a whole number from 1 to 10,000,000")
+        object.__setattr__(self, "noise", noise_of(self))
+        if self.noise.dephasing > 0.0:
+            raise ValueError(
+                f"{self.name}: dephasing is {self.dephasing!r}; trajectories are followed at constant fields only: "
+                "leave it at 0, or use the subsolver walk"
+            )
 
     def _require(self, key: str, good: bool, wanted: str) -> None:
         if not good:
@@ -101,6 +117,11 @@ class _Anneal:
 
     @property
     def balance(self) -> Balance:
+        return self.noise.balance(self.quiet_balance)
+
+    @property
+    def quiet_balance(self) -> Balance:
+        """What is promised without noise."""
         return "none"
 
     def schedule_for(self, spins: int) -> schedules.Schedule:
@@ -112,6 +133,22 @@ class _Anneal:
         return self
 
     def forecast(self, batch: ClusterBatch) -> Forecast:
+        if self.noise.off:
+            return self.quiet_forecast(batch)
+        # noise is loaded where it is asked for, here and below: nobody else waits for it
+        from patchwalk.subsolvers.noisy_anneal import noisy_forecast
+
+        return noisy_forecast(self, batch)
+
+    def propose(self, batch: ClusterBatch) -> Proposals:
+        if self.noise.off:
+            return self.measured(batch, batch)
+        from patchwalk.subsolvers.noisy_anneal import noisy_proposals
+
+        return noisy_proposals(self, batch)
+
+    def quiet_forecast(self, batch: ClusterBatch) -> Forecast:
+        """The forecast of :meth:`measured` where no laws are kept."""
         schedule, time_scale, a_scale = self._checked(batch)
         legs, knots = schedules.legs_array(schedule), np.zeros((1, 2, 3))
         if schedule.needs_gap:  # not found for a forecast: a search among a few dozen stands in
@@ -124,11 +161,16 @@ class _Anneal:
         bytes_needed = workspace_bytes(1 << batch.size) + len(batch) * self.shots * (batch.size + 8)
         return Forecast(bytes=bytes_needed, work=self._work(batch, passes, schedule.duration * time_scale))
 
-    def propose(self, batch: ClusterBatch) -> Proposals:
-        outcomes = np.empty((len(batch), self.shots, batch.size), np.int8)
+    def measured(self, batch: ClusterBatch, acting: ClusterBatch, laws: F64 | None = None) -> Proposals:
+        """Anneals of ``acting`` at the rates of ``batch``; the two differ where controls are imperfect.
+
+        ``laws`` f64 (B, 1, 2^k) receives the law of every call, where it is given.
+        """
         schedule, time_scale, _ = self._checked(batch)
+        outcomes = np.empty((len(batch), self.shots, batch.size), np.int8)
         ends = schedule.duration * time_scale
-        hit, errors, passes = self._run(batch, ends[:, None], np.empty((1, 1, 1 << batch.size)), outcomes)
+        laws = np.empty((1, 1, 1 << batch.size)) if laws is None else laws
+        hit, errors, passes = self._run(batch, ends[:, None], laws, outcomes, acting)
         late = errors > self.tolerance
         return Proposals(
             outcomes,
@@ -141,10 +183,19 @@ class _Anneal:
         )
 
     def distribution(self, batch: ClusterBatch) -> F64:
-        """The law of one shot: f64 (B, 2^k)."""
+        """The law of one shot without noise: f64 (B, 2^k)."""
+        return self._final_laws(batch, batch)
+
+    def noisy_distribution(self, batch: ClusterBatch) -> F64:
+        """The same with the noise of each call's own seed: f64 (B, 2^k)."""
+        refuse_oversize(self.name, batch.size, self.max_spins, "exact simulation (2^k amplitudes)")
+        laws = self._final_laws(batch, self.noise.disturbed(batch))
+        return np.stack([self.noise.law_as_read(law) for law in laws])
+
+    def _final_laws(self, batch: ClusterBatch, acting: ClusterBatch) -> F64:
         schedule, time_scale, _ = self._checked(batch)
         laws = np.empty((len(batch), 1, 1 << batch.size))
-        self._run(batch, (schedule.duration * time_scale)[:, None], laws)
+        self._run(batch, (schedule.duration * time_scale)[:, None], laws, acting=acting)
         return laws[:, 0]
 
     def laws(self, batch: ClusterBatch, times: F64) -> F64:
@@ -166,7 +217,8 @@ class _Anneal:
         """The estimates (B,), for each call, of the total variation distance between its law and the exact one."""
         schedule, time_scale, a_scale = self._checked(batch)
         legs, knots = schedules.legs_array(schedule), self._knots(batch, schedule, a_scale)
-        return self._planned(batch, np.empty(0), legs, knots, time_scale, a_scale)[0]
+        acting = self.noise.disturbed(batch)
+        return self._planned(acting, np.empty(0), legs, knots, time_scale, a_scale)[0]
 
     @property
     def _mover(self) -> int:
@@ -216,18 +268,27 @@ class _Anneal:
         )  # fmt: skip
         return errors, passes
 
-    def _run(self, batch: ClusterBatch, times: F64, laws: F64, outcomes: I8 | None = None) -> tuple[F64, F64, I64]:
+    def _run(
+        self,
+        batch: ClusterBatch,
+        times: F64,
+        laws: F64,
+        outcomes: I8 | None = None,
+        acting: ClusterBatch | None = None,
+    ) -> tuple[F64, F64, I64]:
         """Evolve every row to its rising times (B, M); returns hit probabilities, estimated errors and passes, (B,).
 
+        What evolves is ``acting``, the batch itself where it is left out, on schedules that are made for ``batch``.
         Fills ``laws`` (B, M, 2^k), or uses it over and over where it has one row, and ``outcomes`` (B, m, k).
         """
         schedule, time_scale, a_scale = self._checked(batch)
-        assert batch.couplings is not None
+        acting = acting or batch
+        assert acting.couplings is not None
         if outcomes is None:
             outcomes = np.empty((len(batch), 0, batch.size), np.int8)
         hit, errors, passes = np.empty(len(batch)), np.empty(len(batch)), np.empty(len(batch), np.int64)
         anneal_rows(
-            batch.fields, batch.couplings, batch.spins, batch.seeds, self.from_incumbent, self._mover,
+            acting.fields, acting.couplings, batch.spins, batch.seeds, self.from_incumbent, self._mover,
             schedules.legs_array(schedule), self._knots(batch, schedule, a_scale), time_scale, a_scale,
             self.tolerance, self.most_steps, np.ascontiguousarray(times),
             laws, outcomes, hit, errors, passes,
@@ -326,7 +387,7 @@ class Reverse(_Anneal):
         self._require("leg_ratio", _number(self.leg_ratio) and 1e-6 <= self.leg_ratio <= 1e6, "a ratio around 1")
 
     @property
-    def balance(self) -> Balance:
+    def quiet_balance(self) -> Balance:
         return "symmetric" if self.shots == 1 and self.leg_ratio == 1.0 else "none"
 
     def schedule_for(self, spins: int) -> schedules.Schedule:  # noqa: ARG002

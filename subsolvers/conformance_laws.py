@@ -164,7 +164,9 @@ def _ratios_of_its_laws(trial: Trial, batch: ClusterBatch, answer: Proposals) ->
 def _noise_free(answer: Proposals) -> bool:
     """Whether shots follow the noiseless law, as far as the answer tells."""
     hit, noiseless = answer.hit_probability, answer.noiseless_hit
-    return hit is None or noiseless is None or bool(np.allclose(hit, noiseless, rtol=0, atol=EXACT))
+    if noiseless is None:
+        return True
+    return hit is not None and bool(np.allclose(hit, noiseless, rtol=0, atol=EXACT))
 
 
 def _law(trial: Trial, batch: ClusterBatch) -> F64 | None:

@@ -63,6 +63,13 @@ def happens(stream: U64, exponent: float) -> bool:
 
 
 @compiled
+def next_gaussian(stream: U64) -> float:
+    """A standard Gaussian number (Box & Muller, Ann. Math. Stat. 29 (1958) 610, from memory)."""
+    radius = math.sqrt(-2.0 * math.log(1.0 - next_unit(stream)))
+    return radius * math.cos(2.0 * math.pi * next_unit(stream))
+
+
+@compiled
 def next_below(stream: U64, limit: int) -> int:
     """A whole number from 0 to ``limit - 1``, ``limit`` below 2^31 (bias below 2^-32 times the limit)."""
     return int(np.int64((next_word(stream) >> np.uint64(32)) * np.uint64(limit) >> np.uint64(32)))

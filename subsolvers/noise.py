@@ -28,7 +28,7 @@ import numpy as np
 
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, U64, Balance, ClusterBatch, Proposals
-from patchwalk.subsolvers.draws import combine, next_unit
+from patchwalk.subsolvers.draws import combine, next_gaussian, next_unit
 from patchwalk.subsolvers.outcomes import lowest_of
 from patchwalk.subsolvers.propagate import level_table
 from patchwalk.subsolvers.spectrum import tie_tolerance
@@ -145,13 +145,6 @@ def minimum_share(batch: ClusterBatch, row: int, law: F64) -> float:
     energies = level_table(batch.fields[row], batch.couplings[row])
     ceiling = lowest_of(energies) + tie_tolerance(batch.fields[row], batch.couplings[row])
     return min(1.0, float(law[energies <= ceiling].sum()))
-
-
-@compiled
-def next_gaussian(stream: U64) -> float:
-    """A standard Gaussian number (Box & Muller, Ann. Math. Stat. 29 (1958) 610, from memory)."""
-    radius = math.sqrt(-2.0 * math.log(1.0 - next_unit(stream)))
-    return radius * math.cos(2.0 * math.pi * next_unit(stream))
 
 
 @compiled

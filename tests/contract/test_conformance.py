@@ -91,6 +91,17 @@ class HonestHit(Honest):
         return np.tile(self.law(batch), (len(batch), 1))
 
 
+class NoisyBeyondItsLaw(HonestHit):
+    """Draws with noise whose own hit probability it does not know, and states the law it would have without."""
+
+    def draw(self, batch: ClusterBatch) -> np.ndarray:
+        return Honest(up=UP).draw(batch)
+
+    def proposals(self, batch: ClusterBatch, outcomes: np.ndarray, **more: Any) -> Proposals:
+        quiet = super().proposals(batch, outcomes)
+        return Honest.proposals(self, batch, outcomes, noiseless_hit=quiet.noiseless_hit)
+
+
 class Raises(Honest):
     def propose(self, batch: ClusterBatch) -> Proposals:
         raise RuntimeError("the fridge is warm")
@@ -258,6 +269,13 @@ def test_an_honest_stand_in_passes(stand_in: Any, kept: set[str]) -> None:
     verdicts = check(stand_in)
     assert {verdict.outcome for verdict in verdicts} <= {"kept", "not promised"}
     assert kept <= {verdict.promise for verdict in verdicts if verdict.outcome == "kept"}
+
+
+def test_noisy_draws_are_not_held_against_the_noiseless_law() -> None:
+    verdicts = by_name(check(NoisyBeyondItsLaw(balance="none")))
+    assert "broken" not in {verdict.outcome for verdict in verdicts.values()}
+    assert verdicts["law"].outcome == "not checked"
+    assert "noisy" in verdicts["law"].sentence
 
 
 @pytest.mark.parametrize(("stand_in", "promises", "words"), BROKEN, ids=[type(entry[0]).__name__ for entry in BROKEN])
