@@ -27,11 +27,15 @@ from patchwalk.subsolvers.contract import (
     refuse_oversize,
 )
 from patchwalk.subsolvers.draws import happens, next_unit
-from patchwalk.subsolvers.neighbours import edges_of, find_local_fields, list_neighbours, turn, typical_field
+from patchwalk.subsolvers.neighbours import (
+    TIE_CHANCE,
+    edges_of,
+    find_local_fields,
+    list_neighbours,
+    turn,
+    typical_field,
+)
 from patchwalk.subsolvers.uniform import require_shots
-
-TIE_CHANCE = 0.9
-"""A flip that leaves the energy as it is gets made this often; always, and domain walls would travel with the sweep."""
 
 
 @dataclass(frozen=True)

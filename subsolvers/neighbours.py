@@ -22,6 +22,10 @@ def edges_of(batch: ClusterBatch) -> Edges:
     )
 
 
+TIE_CHANCE = 0.9
+"""How often a Metropolis sweep flips where the energy stays as it is; any chance keeps detailed balance."""
+
+
 @compiled
 def list_neighbours(pairs: I32, weights: F64, starts: I64, neighbours: I32, strengths: F64) -> None:
     """Lists of neighbours from pairs (E, 2): those of spin i stand at ``starts[i]`` to ``starts[i+1]``."""

@@ -19,7 +19,7 @@ from patchwalk.subsolvers.contract import (
     all_well,
     refuse_oversize,
 )
-from patchwalk.subsolvers.draws import next_word
+from patchwalk.subsolvers.neighbours import scatter
 
 
 @dataclass(frozen=True)
@@ -69,14 +69,9 @@ def require_shots(name: str, shots: object) -> None:
 
 @compiled
 def _draw_spins(seeds: U64, outcomes: I8) -> None:
-    rows, shots, size = outcomes.shape
+    rows, shots, _ = outcomes.shape
     stream = np.empty(1, np.uint64)
     for row in range(rows):
         stream[0] = seeds[row]
         for shot in range(shots):
-            word = np.uint64(0)
-            for spin in range(size):
-                if spin % 64 == 0:
-                    word = next_word(stream)
-                outcomes[row, shot, spin] = 1 - 2 * np.int8(word & np.uint64(1))
-                word >>= np.uint64(1)
+            scatter(outcomes[row, shot], stream)

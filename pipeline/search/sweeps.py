@@ -12,10 +12,7 @@ import numpy.typing as npt
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
 from patchwalk.subsolvers.draws import happens, next_unit
-from patchwalk.subsolvers.neighbours import turn
-
-TIE_CHANCE = 0.9
-"""How often a flip that leaves the energy as it is gets made; any chance keeps detailed balance."""
+from patchwalk.subsolvers.neighbours import TIE_CHANCE, turn
 
 
 @compiled

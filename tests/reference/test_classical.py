@@ -10,7 +10,7 @@ from scipy.stats import chisquare
 
 from patchwalk.subsolvers import ClusterBatch, make_subsolver
 from patchwalk.subsolvers.enumeration import lowest_configurations
-from patchwalk.subsolvers.metropolis import TIE_CHANCE
+from patchwalk.subsolvers.neighbours import TIE_CHANCE
 
 
 def glass(rows: int, size: int, seed: int, plus_minus: bool = False, temperature: float = 0.7) -> ClusterBatch:
