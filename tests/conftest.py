@@ -7,7 +7,12 @@ import signal
 from collections.abc import Callable
 from pathlib import Path
 
+import hypothesis
 import pytest
+
+hypothesis.settings.register_profile("settled", deadline=None, derandomize=True)
+hypothesis.settings.register_profile("searching", deadline=None, max_examples=2000)
+hypothesis.settings.load_profile("settled")
 
 
 def pytest_configure() -> None:

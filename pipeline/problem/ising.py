@@ -80,8 +80,10 @@ class Problem:
             array = np.array(getattr(self, name), dtype=dtype, order="C")
             if array.ndim != 1:
                 raise ProblemError(f"{name} has shape {array.shape}, expected one dimension")
+            array += dtype(0)  # no negative zeros, so that equal problems have equal bytes
             array.flags.writeable = False
             object.__setattr__(self, name, array)
+        object.__setattr__(self, "offset", float(self.offset) + 0.0)
         self._check()
 
     def _check(self) -> None:

@@ -7,7 +7,7 @@ from pathlib import Path
 
 import numpy as np
 import pytest
-from hypothesis import given, settings
+from hypothesis import given
 from hypothesis import strategies as st
 
 from patchwalk.problem.beacons import CAUTION, BeaconMap, beacon_map, describe, greedy_allocation
@@ -47,7 +47,6 @@ def keeps_mates(sites, spins):
     return all(spins[one] == spins[two] for one, two in sites.repeaters)
 
 
-@settings(deadline=None)
 @given(small_maps())
 def test_energy_is_the_objective_wherever_mates_agree(sites):
     problem = sites.problem()
@@ -61,7 +60,6 @@ def test_energy_is_the_objective_wherever_mates_agree(sites):
             assert problem.energy(spins) > told["interference"]
 
 
-@settings(deadline=None)
 @given(small_maps())
 def test_no_optimum_parts_mates(sites):
     problem = sites.problem()
@@ -71,7 +69,6 @@ def test_no_optimum_parts_mates(sites):
     assert best == pytest.approx(min(objective(sites, s) for s in levels if keeps_mates(sites, s)), abs=1e-9)
 
 
-@settings(deadline=None)
 @given(small_maps())
 def test_a_map_is_written_and_read_back_whole(tmp_path_factory, sites):
     problem = sites.problem()
@@ -87,7 +84,6 @@ def test_a_map_is_written_and_read_back_whole(tmp_path_factory, sites):
     assert again.names == sites.names
 
 
-@settings(deadline=None)
 @given(small_maps())
 def test_greedy_keeps_mates_together_and_is_no_better_than_the_optimum(sites):
     problem = sites.problem()

@@ -229,7 +229,6 @@ def problems(draw):
     )  # fmt: skip
 
 
-@settings(deadline=None)
 @given(problems(), st.sampled_from(["p.txt", "p.txt.gz"]))
 def test_what_is_written_is_read_back_as_the_same_problem(tmp_path_factory, problem, name):
     path = tmp_path_factory.mktemp("round") / name
