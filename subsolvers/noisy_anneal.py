@@ -14,10 +14,10 @@ import numpy as np
 from patchwalk.subsolvers.contract import ClusterBatch, Forecast, Proposals, Work, refuse_oversize
 
 if TYPE_CHECKING:
-    from patchwalk.subsolvers.anneal import _Anneal
+    from patchwalk.subsolvers.anneal_calls import Anneal
 
 
-def noisy_proposals(anneal: _Anneal, batch: ClusterBatch) -> Proposals:
+def noisy_proposals(anneal: Anneal, batch: ClusterBatch) -> Proposals:
     """The answer to a batch, with the noise of each call's own seed."""
     refuse_oversize(anneal.name, batch.size, anneal.max_spins, "exact simulation (2^k amplitudes)")
     acting, laws = anneal.noise.disturbed(batch), np.empty((len(batch), 1, 1 << batch.size))
@@ -29,7 +29,7 @@ def noisy_proposals(anneal: _Anneal, batch: ClusterBatch) -> Proposals:
     return replace(answer, work=_both(seen.work, quiet.work))
 
 
-def noisy_forecast(anneal: _Anneal, batch: ClusterBatch) -> Forecast:
+def noisy_forecast(anneal: Anneal, batch: ClusterBatch) -> Forecast:
     """Bytes and work of :func:`noisy_proposals`."""
     refuse_oversize(anneal.name, batch.size, anneal.max_spins, "exact simulation (2^k amplitudes)")
     quiet = anneal.quiet_forecast(batch)

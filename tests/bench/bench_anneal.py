@@ -24,7 +24,7 @@ import qutip
 from scipy.sparse import csr_array, diags_array
 
 from patchwalk.subsolvers import ClusterBatch, make_subsolver
-from patchwalk.subsolvers.anneal import _Anneal
+from patchwalk.subsolvers.anneal_calls import Anneal
 from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.drivers import heuristic_hopping, level_spread
 from patchwalk.subsolvers.spectrum import cluster_energies, configuration_number
@@ -112,8 +112,8 @@ def compare(spins: int, name: str, duration: float) -> str:
     options = {"turning_point": TURNING_POINT} if name == "reverse" else {}
     anneal = make_subsolver(name, duration=duration, **options)
     finest = make_subsolver(name, duration=duration, tolerance=1e-11, **options)
-    assert isinstance(anneal, _Anneal)
-    assert isinstance(finest, _Anneal)
+    assert isinstance(anneal, Anneal)
+    assert isinstance(finest, Anneal)
     exact, law = finest.distribution(batch)[0], anneal.distribution(batch)[0]
     repeats = max(3, 40 // (1 << max(0, spins - 8)))
     before = shortest(lambda: anneal.propose(batch), repeats)

@@ -16,7 +16,8 @@ from scipy.interpolate import CubicHermiteSpline
 from scipy.stats import chisquare
 
 from patchwalk.subsolvers import ClusterBatch, Status, make_subsolver
-from patchwalk.subsolvers.anneal import Blend, Forward, Reverse, _Anneal
+from patchwalk.subsolvers.anneal import Blend, Forward, Reverse
+from patchwalk.subsolvers.anneal_calls import Anneal
 from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.drivers import DRIVERS, driver_matrix
 from patchwalk.subsolvers.schedules import KNOTS, gap_knots
@@ -45,9 +46,9 @@ def energies_of(batch: ClusterBatch, row: int = 0) -> F64:
     return energies
 
 
-def made(name: str, **parameters: Any) -> _Anneal:
+def made(name: str, **parameters: Any) -> Anneal:
     subsolver = make_subsolver(name, **parameters)
-    assert isinstance(subsolver, _Anneal)
+    assert isinstance(subsolver, Anneal)
     return subsolver
 
 
@@ -295,7 +296,7 @@ def test_balance() -> None:
     assert Blend().balance == "none"
 
 
-def proposal_matrix(subsolver: _Anneal, spins: int) -> F64:
+def proposal_matrix(subsolver: Anneal, spins: int) -> F64:
     """The law from every incumbent of one cluster: a row each."""
     one = glass(1, spins)
     count = 1 << spins
@@ -325,7 +326,7 @@ def test_the_accepted_chain_keeps_the_boltzmann_law() -> None:
     boltzmann /= boltzmann.sum()
     accept = np.minimum(1.0, np.exp(energies[:, None] - energies[None, :]))
 
-    def drift(subsolver: _Anneal) -> float:
+    def drift(subsolver: Anneal) -> float:
         moves = proposal_matrix(subsolver, 4) * accept
         np.fill_diagonal(moves, 0.0)
         np.fill_diagonal(moves, 1.0 - moves.sum(axis=1))

@@ -19,7 +19,7 @@ from scipy.linalg import expm
 from scipy.stats import chi2
 
 from patchwalk.subsolvers import ClusterBatch, make_subsolver
-from patchwalk.subsolvers.anneal import _Anneal
+from patchwalk.subsolvers.anneal_calls import Anneal
 from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.draws import seed_for
 from patchwalk.subsolvers.drivers import DRIVERS, driver_matrix
@@ -75,9 +75,9 @@ def from_everywhere(batch: ClusterBatch) -> ClusterBatch:
     )  # fmt: skip
 
 
-def made(name: str, **parameters: Any) -> _Anneal:
+def made(name: str, **parameters: Any) -> Anneal:
     subsolver = make_subsolver(name, **parameters)
-    assert isinstance(subsolver, _Anneal)
+    assert isinstance(subsolver, Anneal)
     return subsolver
 
 
