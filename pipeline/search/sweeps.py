@@ -6,13 +6,57 @@ spin's neighbours. Metropolis et al., J. Chem. Phys. 21 (1953) 1087.
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 import numpy.typing as npt
 
+from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
-from patchwalk.subsolvers.draws import happens, next_unit
+from patchwalk.subsolvers.draws import happens, next_unit, stream_for
 from patchwalk.subsolvers.neighbours import TIE_CHANCE, turn
+
+
+@dataclass(frozen=True, eq=False)
+class Carrier:
+    """Sweeps over one problem, in the representation that suits its couplings. Made by :func:`carrier_for`.
+
+    It keeps nothing between calls: what a call does depends on its arguments alone, and calls may run in several
+    threads at once (kernels run without the interpreter lock). ``sweeps=0`` compiles and changes nothing.
+    """
+
+    problem: Problem
+
+    def sweep(self, spins: I8, local_fields: F64, temperature: float, seed: int, sweeps: int = 1) -> float:
+        """Sweep one replica in place; returns the energy change.
+
+        ``spins`` i8 (n,) and their ``local_fields`` f64 (n,), h_i + sum_j J_ij s_j, are both brought up to date;
+        ``temperature`` in energy units, 0 allowed.
+        """
+        problem, stream = self.problem, stream_for(seed)
+        change = 0.0
+        for _ in range(sweeps):
+            change += metropolis_sweep(
+                problem.row_starts, problem.neighbours, problem.couplings, spins, local_fields, temperature, stream
+            )
+        return change
+
+    def sweep_replicas(self, spins: I8, local_fields: F64, temperatures: F64, seeds: U64, sweeps: int = 1) -> F64:
+        """Sweep R replicas in place, each at its own temperature; returns their energy changes f64 (R,).
+
+        ``spins`` i8 (R, n), ``local_fields`` f64 (R, n), ``temperatures`` f64 (R,), ``seeds`` u64 (R,). What becomes
+        of a replica depends on its own row alone, to the last bit, whatever the others are.
+        """
+        return np.array([
+            self.sweep(spins[row], local_fields[row], float(temperatures[row]), int(seeds[row]), sweeps)
+            for row in range(len(spins))
+        ])  # fmt: skip
+
+
+def carrier_for(problem: Problem) -> Carrier:
+    """The carrier of a problem, to be made once: how it represents the couplings depends on their structure alone."""
+    return Carrier(problem)
 
 
 @compiled
