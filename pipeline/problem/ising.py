@@ -23,6 +23,8 @@ from scipy import sparse
 if TYPE_CHECKING:
     import networkx as nx
 
+    from patchwalk.problem.decoding import Encoding
+
 SIGN_SENTENCE = "energy is minimised; a positive coupling favours opposite spins"
 
 
@@ -38,6 +40,15 @@ KINDS: Mapping[str, Kind] = {
     "ising": Kind("energy", 1, f"couplings and fields of the energy itself; {SIGN_SENTENCE}"),
     "maxcut": Kind("cut", -1, "weights of edges, maximise the weight cut; energy = -cut, with coupling = weight/2"),
     "beacons": Kind("interference", 1, "two channels to share; energy = interference, spin +1 is channel A"),
+    "qubo": Kind("value", 1, "a quadratic form of bits, minimised; energy = its value, spin -1 is bit 1"),
+    "max2sat": Kind("satisfied", -1, "clauses of one or two literals, satisfy most weight; energy = -satisfied"),
+    "max3sat": Kind("satisfied", -1, "clauses of up to three literals, satisfy most weight; energy = -satisfied"),
+    "partition": Kind("squared_difference", 1, "numbers split into two parts; energy = (difference of the sums)^2"),
+    "independent_set": Kind("weight", -1, "vertices no two of which are joined, of most weight; energy = -weight"),
+    "vertex_cover": Kind("weight", 1, "vertices that touch every edge, of least weight; energy = weight"),
+    "colouring": Kind("conflicts", 1, "a colour for each vertex; energy = edges whose ends have one colour"),
+    "balanced_partition": Kind("cut", 1, "two parts of equal size, least weight cut; energy = cut"),
+    "constrained": Kind("cost", 1, "named choices under constraints, least cost; energy = cost where all are kept"),
 }
 
 
@@ -59,8 +70,15 @@ class Problem:
     ``row_starts`` i64 (n+1,), ``neighbours`` i32 (nnz,) and ``couplings`` f64 (nnz,) are the rows of the coupling
     matrix, each pair in both directions, neighbours rising within a row; ``fields`` f64 (n,); ``offset`` in energy
     units. ``names`` are the user's own words for the spins, ``kind`` one of ``KINDS``, ``notes`` what was noticed
-    while the problem was read. Arrays are read-only. Raises :class:`ProblemError` for NaN, infinities, a coupling
-    of a spin with itself, or couplings that are not symmetric.
+    while the problem was read. Arrays are read-only.
+
+    ``groups`` are sets of spins, each an i32 array, rising: in every configuration that is an answer, exactly one spin
+    of each is -1. So a search may move the -1 inside a group instead of flipping spins one by one. Sets may share
+    spins, as the rows and columns of an assignment do. ``encoding`` knows what a configuration means to the user
+    (None where spins are the user's own, as for ``ising`` and ``maxcut``).
+
+    Raises :class:`ProblemError` for NaN, infinities, a coupling of a spin with itself, couplings that are not
+    symmetric, and groups of fewer than two spins, of spins that do not exist or of one spin twice.
     """
 
     row_starts: npt.NDArray[np.int64]
@@ -72,6 +90,8 @@ class Problem:
     names: tuple[str, ...] | None = None
     notes: tuple[str, ...] = ()
     details: Mapping[str, Any] = field(default_factory=dict)
+    groups: tuple[npt.NDArray[np.int32], ...] = ()
+    encoding: Encoding | None = None
 
     def __post_init__(self) -> None:
         known_kind(self.kind)
@@ -84,7 +104,19 @@ class Problem:
             array.flags.writeable = False
             object.__setattr__(self, name, array)
         object.__setattr__(self, "offset", float(self.offset) + 0.0)
+        object.__setattr__(self, "groups", tuple(self._group(members) for members in self.groups))
         self._check()
+
+    def _group(self, members: npt.ArrayLike) -> npt.NDArray[np.int32]:
+        """A group as it is kept: rising and read-only; raises :class:`ProblemError`."""
+        given = np.asarray(members).ravel()
+        group = np.unique(given)
+        if len(group) < 2 or len(group) < len(given) or group[0] < 0 or group[-1] >= len(self.fields):
+            last = len(self.fields) - 1
+            raise ProblemError(f"group {given[:8].tolist()}: give two or more different spins of 0 to {last}")
+        kept = group.astype(np.int32)
+        kept.flags.writeable = False
+        return kept
 
     def _check(self) -> None:
         size = len(self.fields)
@@ -129,6 +161,8 @@ class Problem:
         names: Iterable[str] | None = None,
         notes: Iterable[str] = (),
         details: Mapping[str, Any] | None = None,
+        groups: Iterable[npt.ArrayLike] = (),
+        encoding: Encoding | None = None,
     ) -> Self:
         """A problem from pairs: ``weights[e]`` couples spins ``heads[e]`` and ``tails[e]`` (counted from 0).
 
@@ -170,6 +204,8 @@ class Problem:
             names=None if names is None else tuple(names),
             notes=tuple(notes),
             details={} if details is None else details,
+            groups=tuple(np.asarray(group, np.int32) for group in groups),
+            encoding=encoding,
         )
 
     @classmethod
@@ -226,10 +262,12 @@ class Problem:
 
     @cached_property
     def fingerprint(self) -> str:
-        """A hash of couplings, fields, offset and kind: equal problems, equal fingerprints."""
+        """A hash of couplings, fields, offset, kind and groups: equal problems, equal fingerprints."""
         digest = hashlib.sha256(f"{self.kind} {self.offset!r}".encode())
         for array in (self.row_starts, self.neighbours, self.couplings, self.fields):
             digest.update(array.tobytes())
+        for group in self.groups:
+            digest.update(f"group of {len(group)}".encode() + group.tobytes())
         return digest.hexdigest()
 
     def spins_from(self, values: Sequence[int] | npt.ArrayLike) -> npt.NDArray[np.int8]:

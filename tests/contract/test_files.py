@@ -146,7 +146,7 @@ def test_the_kind_comes_from_the_caller_or_the_file_and_never_from_both_in_confl
         "stated.txt, line 2: the file states kind = ising, but maxcut was asked"
     )
     assert refusal(odd).startswith("odd.txt, line 1: kind 'isng' is not known; it is one of: ising, maxcut")
-    assert refusal(silent, "colouring").startswith("kind 'colouring' is not known")
+    assert refusal(silent, "colours").startswith("kind 'colours' is not known")
     assert ".csv" in refusal(silent, "beacons")
 
 

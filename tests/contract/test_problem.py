@@ -104,7 +104,7 @@ def test_couplings_that_are_not_symmetric_are_refused():
         (([0], [-1], [1]), {"size": 2}, "spin -1 does not exist"),
         (([0, 1], [1], [1]), {}, "2 heads, 1 tails and 1 weights"),
         (([], [], []), {}, "no spins"),
-        (([0], [1], [1]), {"kind": "colouring"}, "kind 'colouring' is not known; it is one of: ising, maxcut"),
+        (([0], [1], [1]), {"kind": "colours"}, "kind 'colours' is not known; it is one of: ising, maxcut"),
         (([0], [1], [1]), {"names": ["a"]}, "1 names for 2 spins"),
     ],
 )
@@ -183,3 +183,23 @@ def test_a_negative_zero_is_a_zero():
     negative = Problem.from_arrays([0], [1], [1], fields=[1, -0.0], offset=-0.0)
     assert negative.fingerprint == zero.fingerprint
     assert negative.fields.tobytes() == zero.fields.tobytes()
+
+
+def test_groups_are_kept_rising_and_locked_and_count_in_the_fingerprint():
+    problem = Problem.from_arrays([0, 1], [1, 2], [1, 1], groups=[[2, 0], [1, 2]])
+    assert [group.tolist() for group in problem.groups] == [[0, 2], [1, 2]]
+    assert all(group.dtype == np.int32 and not group.flags.writeable for group in problem.groups)
+    others = [
+        Problem.from_arrays([0, 1], [1, 2], [1, 1]),
+        Problem.from_arrays([0, 1], [1, 2], [1, 1], groups=[[0, 2]]),
+        Problem.from_arrays([0, 1], [1, 2], [1, 1], groups=[[0, 1, 2]]),
+    ]
+    assert len({other.fingerprint for other in [problem, *others]}) == 4
+    assert others[0].groups == ()
+    assert others[0].encoding is None
+
+
+@pytest.mark.parametrize("group", [[], [1], [0, 0], [1, 2, 1], [0, 3], [-1, 0]])
+def test_what_makes_no_group_is_refused(group):
+    with pytest.raises(ProblemError, match="give two or more different spins of 0 to 2"):
+        Problem.from_arrays([0, 1], [1, 2], [1, 1], groups=[group])
