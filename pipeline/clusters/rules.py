@@ -1,7 +1,8 @@
 """HOW the problem is cut: which spins make a cluster.
 
-A rule fills one round with clusters of one size, no two of which share a spin or are joined by a coupling, so that each
-may be accepted on its own and exactly. Rules that never look at the spins may be used for sampling as well.
+A rule fills one round with clusters, no two of which share a spin or are joined by a coupling, so that each may be
+accepted on its own and exactly. Rules that never look at the spins may be used for sampling as well: couplings,
+boundary fields and counts of calls are theirs to use.
 """
 
 from __future__ import annotations
@@ -12,14 +13,10 @@ from typing import Protocol
 
 import numpy as np
 
+from patchwalk.clusters.growing import balls, scattered
 from patchwalk.clusters.strip import StripRule
 from patchwalk.problem.ising import Problem
-from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import I32, I64, U64
-from patchwalk.subsolvers.draws import next_below, stream_for
-
-MISSES_ALLOWED = 8
-"""A round is full once this many attempts in a row found no room for another cluster."""
+from patchwalk.subsolvers.contract import F64, I8, I32, I64
 
 
 @dataclass(eq=False)
@@ -37,8 +34,30 @@ class Marks:
         return cls(np.zeros(size, np.int64), np.zeros(size, np.int64), np.empty(size, np.int32))
 
 
+@dataclass(frozen=True, eq=False)
+class View:
+    """What a rule may look at beside the problem.
+
+    ``spins`` i8 (n,), the present configuration, and its ``local_fields`` f64 (n,), h_i + sum_j J_ij s_j; ``elites``
+    i8 (E, n), good distinct configurations, E may be 0; ``counts`` i64 (n,), how often each spin was in a call.
+    """
+
+    spins: I8
+    local_fields: F64
+    elites: I8
+    counts: I64
+
+    @classmethod
+    def of(cls, problem: Problem, spins: I8) -> View:
+        """The view of a configuration that nothing else is known of yet."""
+        size = len(problem)
+        return cls(spins, problem.local_fields(spins), np.empty((0, size), np.int8), np.zeros(size, np.int64))
+
+
 class ClusterRule(Protocol):
-    """Picks up to ``count`` clusters of ``size`` spins: i32 (B, size), at least one, members rising in each row."""
+    """Picks at most ``wanted`` clusters of ``size`` spins, and at least one: arrays i32 (B, k), one for each size k
+    that occurs, members rising in each row. Sizes differ only where groups of spins must stay whole.
+    """
 
     @property
     def name(self) -> str: ...
@@ -46,28 +65,21 @@ class ClusterRule(Protocol):
     @property
     def looks_at_spins(self) -> bool: ...
 
-    def pick(self, problem: Problem, size: int, count: int, seed: int, marks: Marks) -> I32: ...
-
-
-PickKernel = Callable[[I64, I32, int, I32, U64, I64, I64, I32, I64], int]
+    def pick(
+        self, problem: Problem, size: int, wanted: int, seed: int, marks: Marks, view: View
+    ) -> tuple[I32, ...]: ...
 
 
 @dataclass(frozen=True)
 class BlindRule:
-    """A rule that looks at couplings only, given by its kernel."""
+    """A rule that looks at the graph only, given by the function that grows its clusters."""
 
     name: str
-    kernel: PickKernel
+    grow: Callable[[Problem, int, int, int, Marks], I32]
     looks_at_spins: bool = False
 
-    def pick(self, problem: Problem, size: int, count: int, seed: int, marks: Marks) -> I32:
-        count = max(1, min(count, len(problem) // size))
-        members = np.empty((count, size), np.int32)
-        found = self.kernel(
-            problem.row_starts, problem.neighbours, size, members, stream_for(seed),
-            marks.blocked, marks.visited, marks.queue, marks.turn,
-        )  # fmt: skip
-        return members[:found]
+    def pick(self, problem: Problem, size: int, wanted: int, seed: int, marks: Marks, view: View) -> tuple[I32, ...]:  # noqa: ARG002 (blind)
+        return (self.grow(problem, size, wanted, seed, marks),)
 
 
 def cluster_rule(name: str) -> ClusterRule:
@@ -75,156 +87,8 @@ def cluster_rule(name: str) -> ClusterRule:
     return RULES[name]
 
 
-@compiled
-def _copy_rising(queue: I32, cluster: I32) -> None:
-    """The first spins of the queue in rising order, by insertion: few spins, and quick to compile."""
-    for place in range(len(cluster)):
-        slot = place
-        while slot > 0 and cluster[slot - 1] > queue[place]:
-            cluster[slot] = cluster[slot - 1]
-            slot -= 1
-        cluster[slot] = queue[place]
-
-
-@compiled
-def _block(row_starts: I64, neighbours: I32, cluster: I32, blocked: I64, turn: int) -> None:
-    """Keep the cluster and everything it touches out of this round's other clusters."""
-    for spin in cluster:
-        blocked[spin] = turn
-        for place in range(row_starts[spin], row_starts[spin + 1]):
-            blocked[neighbours[place]] = turn
-
-
-@compiled
-def _pick_balls(
-    row_starts: I64,
-    neighbours: I32,
-    size: int,
-    members: I32,
-    stream: U64,
-    blocked: I64,
-    visited: I64,
-    queue: I32,
-    turn: I64,
-) -> int:
-    """Breadth-first balls round random spins; the last shell gives as many random spins as are still wanted.
-
-    Where a component is exhausted before the ball is full, it goes on round another random spin.
-    """
-    turn[0] += 1
-    this_round = turn[0]
-    spins = len(row_starts) - 1
-    found, misses = 0, 0
-    while found < len(members) and misses < MISSES_ALLOWED:
-        turn[0] += 1
-        filled = 0
-        seeds_missed = 0
-        while filled < size and seeds_missed < MISSES_ALLOWED:
-            centre = next_below(stream, spins)
-            if blocked[centre] == this_round or visited[centre] == turn[0]:
-                seeds_missed += 1
-                if found > 0 or seeds_missed < MISSES_ALLOWED:
-                    continue
-                centre = _next_unvisited(visited, turn[0], centre)
-            seeds_missed = 0
-            visited[centre] = turn[0]
-            queue[filled] = centre
-            filled = _grow(row_starts, neighbours, size, stream, blocked, this_round, visited, turn[0], queue, filled)
-        if filled < size:
-            misses += 1
-            continue
-        misses = 0
-        _copy_rising(queue, members[found])
-        _block(row_starts, neighbours, members[found], blocked, this_round)
-        found += 1
-    return found
-
-
-@compiled
-def _grow(
-    row_starts: I64,
-    neighbours: I32,
-    size: int,
-    stream: U64,
-    blocked: I64,
-    this_round: int,
-    visited: I64,
-    attempt: int,
-    queue: I32,
-    filled: int,
-) -> int:
-    """Shell after shell round the spin at ``queue[filled]`` until the cluster has ``size`` spins; returns how many it
-    has.
-    """
-    shell_start, shell_end = filled, filled + 1
-    while shell_end > shell_start and shell_end < size:
-        end = shell_end
-        for place in range(shell_start, shell_end):
-            for edge in range(row_starts[queue[place]], row_starts[queue[place] + 1]):
-                spin = neighbours[edge]
-                if visited[spin] != attempt and blocked[spin] != this_round:
-                    visited[spin] = attempt
-                    queue[end] = spin
-                    end += 1
-        if end > size:
-            for place in range(shell_end, size):
-                other = place + next_below(stream, end - place)
-                queue[place], queue[other] = queue[other], queue[place]
-            return size
-        shell_start, shell_end = shell_end, end
-    return shell_end
-
-
-@compiled
-def _next_unvisited(visited: I64, attempt: int, spin: int) -> int:
-    while visited[spin] == attempt:
-        spin = spin + 1 if spin + 1 < len(visited) else 0
-    return spin
-
-
-@compiled
-def _pick_scattered(
-    row_starts: I64,
-    neighbours: I32,
-    size: int,
-    members: I32,
-    stream: U64,
-    blocked: I64,
-    visited: I64,
-    queue: I32,
-    turn: I64,
-) -> int:
-    """Spins drawn at random, wherever they lie."""
-    turn[0] += 1
-    this_round = turn[0]
-    spins = len(row_starts) - 1
-    found, misses = 0, 0
-    while found < len(members) and misses < MISSES_ALLOWED:
-        turn[0] += 1
-        filled, missed = 0, 0
-        while filled < size and missed < MISSES_ALLOWED * size:
-            spin = next_below(stream, spins)
-            if blocked[spin] == this_round or visited[spin] == turn[0]:
-                missed += 1
-                if found > 0 or missed < MISSES_ALLOWED * size:
-                    continue
-                missed = 0
-                spin = _next_unvisited(visited, turn[0], spin)
-            visited[spin] = turn[0]
-            queue[filled] = spin
-            filled += 1
-        if filled < size:
-            misses += 1
-            continue
-        misses = 0
-        _copy_rising(queue, members[found])
-        _block(row_starts, neighbours, members[found], blocked, this_round)
-        found += 1
-    return found
-
-
 RULES: dict[str, ClusterRule] = {
-    "ball": BlindRule("ball", _pick_balls),
-    "scattered": BlindRule("scattered", _pick_scattered),
-    "strip": StripRule(),
+    "ball": BlindRule("ball", balls),
+    "scattered": BlindRule("scattered", scattered),
+    "strip": BlindRule("strip", StripRule().pick),
 }

@@ -13,7 +13,7 @@ import sys
 import numpy as np
 
 from patchwalk.clusters.conditioning import condition
-from patchwalk.clusters.rules import Marks, cluster_rule
+from patchwalk.clusters.rules import Marks, View, cluster_rule
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.search.sweeps import metropolis_sweep
@@ -48,7 +48,8 @@ def clusters_of(problem: Problem, size: int, temperature: float) -> ClusterBatch
         warmth = max(temperature, 1.0 - number / SWEEPS) * problem.field_scale
         metropolis_sweep(*graph, spins, local, warmth, stream_for(1, number))
         if number >= SWEEPS:
-            members = cluster_rule("ball").pick(problem, size, 1, number, marks)
+            view = View.of(problem, spins)
+            (members,) = cluster_rule("ball").pick(problem, size, 1, number, marks, view)
             batches.append(condition(problem, members, spins, local, warmth, np.zeros(1, np.uint64), places))
     return ClusterBatch(
         *(np.concatenate([getattr(batch, name) for batch in batches])

@@ -8,7 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from patchwalk.clusters.conditioning import condition
-from patchwalk.clusters.rules import RULES, Marks, cluster_rule
+from patchwalk.clusters.rules import RULES, Marks, View, cluster_rule
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import I8, I32, ClusterBatch
@@ -22,6 +22,17 @@ def random_problem(size: int, degree: float, seed: int) -> Problem:
     apart = heads != tails
     weights, fields = rng.normal(size=int(apart.sum())), rng.normal(size=size)
     return Problem.from_arrays(heads[apart], tails[apart], weights, size=size, fields=fields, offset=2.5)
+
+
+def picked(
+    rule: str, problem: Problem, size: int, wanted: int, seed: int, marks: Marks, view: View | None = None
+) -> I32:
+    """The clusters of one round, all of one size where there are no groups."""
+    if view is None:
+        spins = np.random.default_rng(seed).choice(np.array([-1, 1], np.int8), len(problem))
+        view = View.of(problem, spins)
+    (members,) = cluster_rule(rule).pick(problem, size, wanted, seed, marks, view)
+    return members
 
 
 def conditioned(problem: Problem, members: I32, spins: I8) -> ClusterBatch:
@@ -58,7 +69,7 @@ def cluster_energy(batch: ClusterBatch, row: int, spins: I8) -> float:
 def test_clusters_of_a_round_do_not_touch(rule: str, problem: Problem, size: int) -> None:
     marks = Marks.for_problem(problem)
     for seed in range(30):
-        members = cluster_rule(rule).pick(problem, size, 64, seed, marks)
+        members = picked(rule, problem, size, 64, seed, marks)
         assert members.shape[1] == size
         assert 1 <= len(members) <= max(1, len(problem) // size)
         assert np.all(np.diff(members, axis=1) > 0), "members rise, so none occurs twice"
@@ -74,18 +85,18 @@ def test_clusters_of_a_round_do_not_touch(rule: str, problem: Problem, size: int
 @pytest.mark.parametrize("rule", sorted(RULES))
 def test_rules_are_seeded_and_know_no_history(rule: str) -> None:
     problem, marks = make("lattice2d", 12, seed=1), None
-    first = cluster_rule(rule).pick(problem, 8, 16, 7, Marks.for_problem(problem))
+    first = picked(rule, problem, 8, 16, 7, Marks.for_problem(problem))
     marks = Marks.for_problem(problem)
     for seed in range(5):
-        cluster_rule(rule).pick(problem, 8, 16, seed, marks)
-    assert np.array_equal(cluster_rule(rule).pick(problem, 8, 16, 7, marks), first)
-    assert not np.array_equal(cluster_rule(rule).pick(problem, 8, 16, 8, marks), first)
+        picked(rule, problem, 8, 16, seed, marks)
+    assert np.array_equal(picked(rule, problem, 8, 16, 7, marks), first)
+    assert not np.array_equal(picked(rule, problem, 8, 16, 8, marks), first)
 
 
 @pytest.mark.parametrize("rule", sorted(RULES))
 def test_the_whole_problem_can_be_one_cluster(rule: str) -> None:
     problem = random_problem(15, 1.0, 2)
-    members = cluster_rule(rule).pick(problem, 15, 64, 1, Marks.for_problem(problem))
+    members = picked(rule, problem, 15, 64, 1, Marks.for_problem(problem))
     assert members.tolist() == [list(range(15))]
 
 
@@ -94,7 +105,7 @@ def test_a_ball_is_connected_and_every_spin_gets_its_turn() -> None:
     marks = Marks.for_problem(problem)
     seen = np.zeros(len(problem), int)
     for seed in range(300):
-        members = cluster_rule("ball").pick(problem, 9, 1, seed, marks)
+        members = picked("ball", problem, 9, 1, seed, marks)
         inside = problem.matrix[members[0]][:, members[0]]
         reached = np.linalg.matrix_power(np.abs(inside.toarray()) + np.eye(9), 9)
         assert np.all(reached > 0)
@@ -109,7 +120,7 @@ def test_cluster_changes_are_changes_of_the_whole(seed: int, size: int, degree: 
     rng = np.random.default_rng(seed)
     spins = rng.choice(np.array([-1, 1], np.int8), len(problem))
     rule = data.draw(st.sampled_from(sorted(RULES)))
-    members = cluster_rule(rule).pick(problem, size, 4, seed, Marks.for_problem(problem))
+    members = picked(rule, problem, size, 4, seed, Marks.for_problem(problem))
     batch = conditioned(problem, members, spins)
     assert (batch.couplings is None) == (size > 64)
     for row, cluster in enumerate(members):
