@@ -14,6 +14,7 @@ from typing import Protocol
 import numpy as np
 
 from patchwalk.clusters.growing import balls, scattered
+from patchwalk.clusters.guided import GUIDED
 from patchwalk.clusters.strip import StripRule
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import F64, I8, I32, I64
@@ -21,17 +22,22 @@ from patchwalk.subsolvers.contract import F64, I8, I32, I64
 
 @dataclass(eq=False)
 class Marks:
-    """Scratch memory kept between rounds: marks i64 (n,) that belong to a round or an attempt by their number alone."""
+    """Scratch memory kept between rounds: marks i64 (n,) that belong to a round or an attempt by their number alone.
+
+    ``flip_is_free`` says that the problem has no fields, so that a configuration is as good as its opposite.
+    """
 
     blocked: I64
     visited: I64
     queue: I32
+    flip_is_free: bool
     turn: I64 = field(default_factory=lambda: np.zeros(1, np.int64))
 
     @classmethod
     def for_problem(cls, problem: Problem) -> Marks:
         size = len(problem)
-        return cls(np.zeros(size, np.int64), np.zeros(size, np.int64), np.empty(size, np.int32))
+        free = not np.any(problem.fields)
+        return cls(np.zeros(size, np.int64), np.zeros(size, np.int64), np.empty(size, np.int32), free)
 
 
 @dataclass(frozen=True, eq=False)
@@ -82,6 +88,16 @@ class BlindRule:
         return (self.grow(problem, size, wanted, seed, marks),)
 
 
+STRIP = StripRule()
+
+
+def strips(problem: Problem, size: int, wanted: int, seed: int, marks: Marks) -> I32:
+    """Long clusters behind a narrow front, i32 (B, size)."""
+    members = STRIP.pick(problem, size, wanted, seed, marks)
+    marks.turn[0] += 2 * STRIP.width  # layers are marked by the turn plus their number: none may look like a later turn
+    return members
+
+
 def cluster_rule(name: str) -> ClusterRule:
     """The rule of this name; raises ``KeyError`` for another."""
     return RULES[name]
@@ -90,5 +106,6 @@ def cluster_rule(name: str) -> ClusterRule:
 RULES: dict[str, ClusterRule] = {
     "ball": BlindRule("ball", balls),
     "scattered": BlindRule("scattered", scattered),
-    "strip": BlindRule("strip", StripRule().pick),
+    "strip": BlindRule("strip", strips),
+    **{rule.name: rule for rule in GUIDED},
 }

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
+import networkx as nx
 import numpy as np
 import pytest
 from hypothesis import given, settings
@@ -11,7 +14,8 @@ from patchwalk.clusters.conditioning import condition
 from patchwalk.clusters.rules import RULES, Marks, View, cluster_rule
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
-from patchwalk.subsolvers.contract import I8, I32, ClusterBatch
+from patchwalk.search.sweeps import descend
+from patchwalk.subsolvers.contract import F64, I8, I32, ClusterBatch
 
 
 def random_problem(size: int, degree: float, seed: int) -> Problem:
@@ -93,6 +97,31 @@ def test_rules_are_seeded_and_know_no_history(rule: str) -> None:
     assert not np.array_equal(picked(rule, problem, 8, 16, 8, marks), first)
 
 
+@pytest.mark.parametrize("before", sorted(RULES))
+def test_rules_know_nothing_of_another_rules_rounds(before: str) -> None:
+    problem = make("lattice2d", 40, seed=1)
+    marks = Marks.for_problem(problem)
+    for rule in sorted(RULES):
+        for seed in range(3):
+            picked(before, problem, 300 if before == "strip" else 20, 4, seed, marks)
+        fresh = picked(rule, problem, 60, 16, 7, Marks.for_problem(problem))
+        assert np.array_equal(picked(rule, problem, 60, 16, 7, marks), fresh)
+
+
+@pytest.mark.parametrize("rule", sorted(RULES))
+def test_blind_rules_pick_the_same_whatever_the_spins(rule: str) -> None:
+    """And those that say they look do pick differently: the claim is not made for nothing."""
+    problem = make("lattice2d", 12, seed=1)
+    rng = np.random.default_rng(3)
+    counts = rng.integers(0, 5, len(problem))
+    picks = []
+    for _ in range(6):
+        spins, *elites = rng.choice(np.array([-1, 1], np.int8), (4, len(problem)))
+        view = View(spins, problem.local_fields(spins), np.array(elites), counts)
+        picks.append(picked(rule, problem, 8, 16, 7, Marks.for_problem(problem), view).tobytes())
+    assert (len(set(picks)) == 1) == (not cluster_rule(rule).looks_at_spins)
+
+
 @pytest.mark.parametrize("rule", sorted(RULES))
 def test_the_whole_problem_can_be_one_cluster(rule: str) -> None:
     problem = random_problem(15, 1.0, 2)
@@ -111,6 +140,88 @@ def test_a_ball_is_connected_and_every_spin_gets_its_turn() -> None:
         assert np.all(reached > 0)
         seen[members[0]] += 1
     assert seen.min() > 5
+
+
+def ferromagnet(size: int, fields: F64 | None = None, *, ring: bool = False) -> Problem:
+    """A chain or an open square whose bonds all favour equal spins."""
+    if ring:
+        spins = np.arange(size)
+        return Problem.from_arrays(spins, np.roll(spins, -1), -np.ones(size), fields=fields)
+    grid = nx.convert_node_labels_to_integers(nx.grid_2d_graph(size, size), ordering="sorted")
+    heads, tails = np.array(grid.edges).T
+    return Problem.from_arrays(heads, tails, -np.ones(len(heads)), fields=fields)
+
+
+def test_frustrated_follows_violated_bonds() -> None:
+    """One spin against all others: it and its neighbours, whatever the seed, where a ball would seldom meet it."""
+    problem, flipped = ferromagnet(20), 20 * 9 + 7
+    spins = np.ones(len(problem), np.int8)
+    spins[flipped] = -1
+    view, marks = View.of(problem, spins), Marks.for_problem(problem)
+    expected = sorted([flipped, flipped - 1, flipped + 1, flipped - 20, flipped + 20])
+    for seed in range(20):
+        assert picked("frustrated", problem, 5, 1, seed, marks, view)[0].tolist() == expected
+
+
+def test_frustrated_clusters_hold_more_violated_bonds_than_balls() -> None:
+    problem = make("lattice3d", 8, seed=2, couplings="gaussian")
+    spins = np.random.default_rng(1).choice(np.array([-1, 1], np.int8), len(problem))
+    local = problem.local_fields(spins)
+    descend(problem.row_starts, problem.neighbours, problem.couplings, spins, local, problem.tie_tolerance)
+    view, marks = View.of(problem, spins), Marks.for_problem(problem)
+    violated = problem.matrix.multiply(np.outer(spins, spins)).tocsr() > 0
+
+    def share(rule: str) -> float:
+        clusters = np.concatenate([picked(rule, problem, 10, 8, seed, marks, view) for seed in range(10)])
+        return float(np.mean([violated[cluster][:, cluster].sum() / 2 for cluster in clusters]))
+
+    assert share("frustrated") > 2 * share("ball")
+
+
+def test_disputed_is_where_two_good_configurations_differ() -> None:
+    """A domain that differs is the cluster; with no field also when the second configuration comes upside down."""
+    domain = [20 * 5 + 3, 20 * 5 + 4, 20 * 5 + 5, 20 * 6 + 4, 20 * 6 + 5, 20 * 7 + 5]
+    one = np.random.default_rng(2).choice(np.array([-1, 1], np.int8), 400)
+    other = one.copy()
+    other[domain] *= -1
+    free, held = ferromagnet(20), ferromagnet(20, np.full(400, 0.5))
+    for problem, second in ((free, other), (free, -other), (held, other)):
+        view = replace(View.of(problem, one), elites=np.array([one, second]))
+        for seed in range(10):
+            assert picked("disputed", problem, 6, 1, seed, Marks.for_problem(problem), view)[0].tolist() == domain
+    view = replace(View.of(held, one), elites=np.array([one, -other]))
+    assert not set(domain) & set(picked("disputed", held, 6, 1, 1, Marks.for_problem(held), view)[0].tolist())
+
+
+def test_disputed_without_two_configurations_is_ball() -> None:
+    problem, spins = ferromagnet(20), np.ones(400, np.int8)
+    view = replace(View.of(problem, spins), elites=spins[None])
+    both = [picked(rule, problem, 6, 8, 3, Marks.for_problem(problem), view) for rule in ("disputed", "ball")]
+    assert np.array_equal(*both)
+
+
+def test_loose_starts_where_local_fields_are_weak() -> None:
+    """One weak spin in a ring of 40: 64 draws with replacement miss it in a round with chance (39/40)^64 = 0.2."""
+    fields = np.zeros(40)
+    fields[11] = 1.9  # local fields are -2 everywhere but here, where it is -0.1
+    problem, spins = ferromagnet(40, fields, ring=True), np.ones(40, np.int8)
+    view, marks = View.of(problem, spins), Marks.for_problem(problem)
+    hits = [picked("loose", problem, 3, 1, seed, marks, view)[0].tolist() == [10, 11, 12] for seed in range(400)]
+    assert np.mean(hits) == pytest.approx(1 - (39 / 40) ** 64, abs=4 * (0.2 * 0.8 / 400) ** 0.5)
+
+
+def test_stale_gives_everybody_a_turn() -> None:
+    problem = make("lattice2d", 12, seed=1)
+    marks = Marks.for_problem(problem)
+
+    def spread(rule: str) -> float:
+        view = View.of(problem, np.ones(len(problem), np.int8))
+        for seed in range(100):
+            for cluster in picked(rule, problem, 6, 8, seed, marks, view):
+                view.counts[cluster] += 1
+        return float(np.std(view.counts))
+
+    assert spread("stale") < 0.25 * spread("ball")
 
 
 @settings(max_examples=60, deadline=None)
