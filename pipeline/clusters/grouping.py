@@ -78,10 +78,9 @@ class WholeGroups:
 
 def closed_over_groups(rule: ClusterRule, problem: Problem, size: int) -> ClusterRule:
     """The rule for clusters of at most ``size`` spins of this problem; the rule itself where there are no groups."""
-    groups = tuple(getattr(problem, "groups", ()))
-    if not groups:
+    if not problem.groups:
         return rule
-    membership = _membership(groups, len(problem))
+    membership = _membership(problem.groups, len(problem))
     too_large = bool(np.any(membership.reach > size))
     return WholeGroups(rule, membership, rule.looks_at_spins or too_large)
 

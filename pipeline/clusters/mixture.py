@@ -27,7 +27,7 @@ DRAW = 2
 FLOOR = 0.05
 """No rule is drawn less often than this, or than half of an equal share where there are more than ten rules."""
 
-MEMORY = 64.0
+MEMORY = 200.0
 """Rounds after which what was gained and spent counts 1/e."""
 
 PATIENCE = 4.0
@@ -96,7 +96,7 @@ class RuleWeights:
     ...     weights.reward(0, gain=1.0, work=1.0)
     ...     weights.reward(1, gain=3.0, work=1.0)
     >>> weights.shares.round(2).tolist()
-    [0.29, 0.71]
+    [0.3, 0.7]
     """
 
     mixture: Mixture
