@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
+
+from patchwalk.problem.ising import ProblemError
 
 I8 = npt.NDArray[np.int8]
 
@@ -40,6 +42,53 @@ class Answer:
         return bool(self.mended)
 
 
+def labels_of(names: Sequence[str] | None, size: int) -> tuple[str, ...]:
+    """The user's own words for things, or their numbers from 1 where there are none."""
+    return tuple(names) if names is not None else tuple(map(str, range(1, size + 1)))
+
+
+def entry_of(value: Mapping[str, Any], key: str) -> Any:
+    """The entry of a value that decides it; raises :class:`ProblemError` without it."""
+    if key not in value:
+        raise ProblemError(f'the answer has no entry "{key}"; it has: {", ".join(map(str, value)) or "none"}')
+    return value[key]
+
+
+def by_name(value: Mapping[str, Any], key: str, labels: Sequence[str]) -> list[Any]:
+    """What a value says of every name, in order; raises :class:`ProblemError` for names that are missing or unknown."""
+    table = entry_of(value, key)
+    if not isinstance(table, Mapping):
+        raise ProblemError(f'"{key}" of the answer is no table of names')
+    missing = [label for label in labels if label not in table]
+    if missing:
+        raise ProblemError(f'"{key}" of the answer says nothing of {missing[0]!r} ({len(missing)} missing)')
+    if len(table) > len(labels):
+        known = set(labels)
+        extra = next(name for name in table if name not in known)
+        raise ProblemError(f'"{key}" of the answer speaks of {extra!r}, which the problem does not have')
+    return [table[label] for label in labels]
+
+
+def truth_values(value: Mapping[str, Any], key: str, labels: Sequence[str]) -> npt.NDArray[np.int64]:
+    """0 or 1 for every name, i64 (n,), from a value that holds 0, 1, false or true for each."""
+    given = by_name(value, key, labels)
+    for label, one in zip(labels, given, strict=True):
+        if not isinstance(one, bool | int | np.integer | np.bool_) or one not in (0, 1):
+            raise ProblemError(f'"{key}" of the answer has {one!r} for {label!r}; expected true or false (1 or 0)')
+    return np.array(given, np.int64)
+
+
+def two_parts(value: Mapping[str, Any], key: str, labels: Sequence[str]) -> I8:
+    """+1 or -1 for every name, i8 (n,), from a value that holds two lists of names; raises :class:`ProblemError`."""
+    parts = entry_of(value, key)
+    if not isinstance(parts, list | tuple) or len(parts) != 2 or not all(isinstance(part, list) for part in parts):
+        raise ProblemError(f'"{key}" of the answer are not two lists of names')
+    sides = {name: side for part, side in zip(parts, (1, -1), strict=True) for name in part}
+    if len(sides) < len(parts[0]) + len(parts[1]):
+        raise ProblemError(f'"{key}" of the answer hold a name twice')
+    return np.array(by_name({key: sides}, key, labels), np.int8)
+
+
 class Encoding(ABC):
     """How one original problem became spins. Subclasses are frozen and hold the original problem.
 
@@ -65,6 +114,10 @@ class Encoding(ABC):
     def encode(self, value: Mapping[str, Any]) -> I8:
         """The spins, i8 (n,), of a value; auxiliary spins as they cost least."""
 
+    def settle(self, spins: I8) -> I8:
+        """The same value with auxiliary spins as they cost least; by default there are none."""
+        return spins
+
     def mend(self, spins: I8) -> I8:
         """A configuration near this one that should break fewer constraints; by default the same."""
         return spins
@@ -75,10 +128,10 @@ class Encoding(ABC):
         value = self.read(given)
         objective, broken = self.judge(value)
         if not broken:
-            return Answer(value, objective, self.encode(value))
+            return Answer(value, objective, self.settle(given))
         mended = self.mend(given)
         new_value = self.read(mended)
         new_objective, still_broken = self.judge(new_value)
         if still_broken:
             return Answer(value, objective, given, broken=broken)
-        return Answer(new_value, new_objective, self.encode(new_value), mended=broken)
+        return Answer(new_value, new_objective, self.settle(mended), mended=broken)
