@@ -4,8 +4,7 @@ from __future__ import annotations
 
 from typing import Any
 
-import numpy as np
-
+from patchwalk.problem.decoding import answer_lines, encoding_of, verdict
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import I8
 
@@ -15,30 +14,32 @@ def answer_for(problem: Problem, spins: I8) -> tuple[bool, dict[str, Any]]:
 
     ``ising``: the spin of every name (none where spins have no names). ``maxcut``: the cut, recounted edge by edge,
     and the two parts by name or, where there are no names, by number from 1. ``beacons``: the channel of every
-    beacon, the interference, and what a simple greedy rule gives.
+    beacon, the interference, and what a simple greedy rule gives. All other kinds: the value in the user's words, the
+    objective recomputed, a ``verdict``, the constraints ``broken`` and those ``mended`` by a cheap repair.
     """
-    if problem.kind == "beacons":
-        return _beacons(problem, spins)
-    if problem.kind == "maxcut":
-        return True, _maxcut(problem, spins)
-    named = None if problem.names is None else dict(zip(problem.names, spins.tolist(), strict=True))
-    return True, {"spins_by_name": named}
-
-
-def _maxcut(problem: Problem, spins: I8) -> dict[str, Any]:
-    rows = np.repeat(np.arange(len(problem)), np.diff(problem.row_starts))
-    across = (rows < problem.neighbours) & (spins[rows] != spins[problem.neighbours])
-    labels: list[Any] = list(problem.names) if problem.names else list(range(1, len(problem) + 1))
-    return {
-        "cut": float(2.0 * problem.couplings[across].sum()),
-        "parts": [[labels[i] for i in np.flatnonzero(spins == side)] for side in (1, -1)],
+    answer = encoding_of(problem).decode(spins)
+    if problem.encoding is None:
+        return answer.feasible, dict(answer.value)
+    said = {
+        "verdict": verdict(len(answer.broken), len(answer.mended)),
+        **answer.value,
+        problem.objective_name: answer.objective,
+        "feasible": answer.feasible,
+        "broken": list(answer.broken),
+        "repaired": answer.repaired,
+        "mended": list(answer.mended),
     }
+    return answer.feasible, said
 
 
-def _beacons(problem: Problem, spins: I8) -> tuple[bool, dict[str, Any]]:
-    from patchwalk.problem.beacons import CAUTION, describe, greedy_allocation
+def settled(problem: Problem, spins: I8) -> I8:
+    """The configuration of the answer: as given, or after a cheap repair where that makes it keep every constraint.
 
-    answer = dict(describe(problem, spins))
-    answer["greedy_interference"] = describe(problem, greedy_allocation(problem))["interference"]
-    answer["caution"] = CAUTION
-    return bool(answer["feasible"]), answer
+    Auxiliary spins are as they cost least, so that its energy is that of the answer's objective.
+    """
+    return encoding_of(problem).decode(spins).spins
+
+
+def spoken(problem: Problem, spins: I8) -> list[str]:
+    """The answer in lines for a terminal; the first says whether it is valid."""
+    return list(answer_lines(problem, encoding_of(problem).decode(spins)))

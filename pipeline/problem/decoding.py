@@ -1,137 +1,247 @@
-"""From spins back to the user's own words: what an answer is, and what every encoding can do."""
+"""Answers: read from files, audited against the original problem, written as text, CSV or JSON.
+
+A CSV of an answer has the header ``name,ENTRY`` with the entry that decides the kind's answer (``colours``,
+``members``, ``parts``, ...), and a row for every name with its value, for every member of a set, or for every name
+with its part, 1 or 2. Its first line is a comment that says whether the answer is valid.
+"""
 
 from __future__ import annotations
 
-from abc import ABC, abstractmethod
-from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+import contextlib
+import csv
+import gzip
+import io
+import json
+import math
+import os
+import textwrap
+from collections.abc import Iterator, Mapping
 from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.problem.ising import ProblemError
+from patchwalk.problem.files import read_start
+from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.kinds.plain import encoding_of
+from patchwalk.problem.meanings import Answer, Encoding
+from patchwalk.problem.sources import PathLike, fail, numbered_lines
 
-I8 = npt.NDArray[np.int8]
+__all__ = [
+    "Answer",
+    "Encoding",
+    "answer_lines",
+    "audit_answer",
+    "encoding_of",
+    "read_answer",
+    "verdict",
+    "write_answer",
+]
+
+WIDTH = 110
+PART_NAMES = ("1", "2")
 
 
-@dataclass(frozen=True, eq=False)
-class Answer:
-    """What a configuration means, checked against the original problem.
+def verdict(broken: int, mended: int = 0) -> str:
+    """The first words of any account of an answer, from how many constraints it breaks, or broke before a repair.
 
-    ``value`` is in the user's words: sets, colours, parts, truth values by name. ``objective`` is recomputed from the
-    original problem, never from the energy. ``broken`` has a sentence for every violated constraint of ``value``;
-    ``mended`` a sentence for every one that the configuration given violated, where a cheap repair gave the
-    ``value`` that violates none. ``spins`` i8 (n,) is the configuration of ``value``.
+    >>> verdict(2)
+    'NOT VALID: 2 constraints broken'
     """
-
-    value: Mapping[str, Any]
-    objective: float
-    spins: I8
-    broken: tuple[str, ...] = ()
-    mended: tuple[str, ...] = field(default=())
-
-    @property
-    def feasible(self) -> bool:
-        """Whether ``value`` keeps every constraint."""
-        return not self.broken
-
-    @property
-    def repaired(self) -> bool:
-        """Whether it took a repair to keep them."""
-        return bool(self.mended)
+    if broken:
+        return f"NOT VALID: {_counted(broken)} broken"
+    return f"valid after a repair: {_counted(mended)} had been broken" if mended else "valid"
 
 
-def labels_of(names: Sequence[str] | None, size: int) -> tuple[str, ...]:
-    """The user's own words for things, or their numbers from 1 where there are none."""
-    return tuple(names) if names is not None else tuple(map(str, range(1, size + 1)))
+def _counted(count: int) -> str:
+    return f"{count} constraint{'s' * (count != 1)}"
 
 
-def entry_of(value: Mapping[str, Any], key: str) -> Any:
-    """The entry of a value that decides it; raises :class:`ProblemError` without it."""
-    if key not in value:
-        raise ProblemError(f'the answer has no entry "{key}"; it has: {", ".join(map(str, value)) or "none"}')
-    return value[key]
+def audit_answer(
+    problem: Problem, answer: Answer | Mapping[str, Any] | npt.ArrayLike
+) -> tuple[float, bool, tuple[str, ...]]:
+    """The objective of an answer made anywhere, whether it is feasible, and a sentence for every broken constraint.
 
-
-def by_name(value: Mapping[str, Any], key: str, labels: Sequence[str]) -> list[Any]:
-    """What a value says of every name, in order; raises :class:`ProblemError` for names that are missing or unknown."""
-    table = entry_of(value, key)
-    if not isinstance(table, Mapping):
-        raise ProblemError(f'"{key}" of the answer is no table of names')
-    missing = [label for label in labels if label not in table]
-    if missing:
-        raise ProblemError(f'"{key}" of the answer says nothing of {missing[0]!r} ({len(missing)} missing)')
-    if len(table) > len(labels):
-        known = set(labels)
-        extra = next(name for name in table if name not in known)
-        raise ProblemError(f'"{key}" of the answer speaks of {extra!r}, which the problem does not have')
-    return [table[label] for label in labels]
-
-
-def truth_values(value: Mapping[str, Any], key: str, labels: Sequence[str]) -> npt.NDArray[np.int64]:
-    """0 or 1 for every name, i64 (n,), from a value that holds 0, 1, false or true for each."""
-    given = by_name(value, key, labels)
-    for label, one in zip(labels, given, strict=True):
-        if not isinstance(one, bool | int | np.integer | np.bool_) or one not in (0, 1):
-            raise ProblemError(f'"{key}" of the answer has {one!r} for {label!r}; expected true or false (1 or 0)')
-    return np.array(given, np.int64)
-
-
-def two_parts(value: Mapping[str, Any], key: str, labels: Sequence[str]) -> I8:
-    """+1 or -1 for every name, i8 (n,), from a value that holds two lists of names; raises :class:`ProblemError`."""
-    parts = entry_of(value, key)
-    if not isinstance(parts, list | tuple) or len(parts) != 2 or not all(isinstance(part, list) for part in parts):
-        raise ProblemError(f'"{key}" of the answer are not two lists of names')
-    sides = {name: side for part, side in zip(parts, (1, -1), strict=True) for name in part}
-    if len(sides) < len(parts[0]) + len(parts[1]):
-        raise ProblemError(f'"{key}" of the answer hold a name twice')
-    return np.array(by_name({key: sides}, key, labels), np.int8)
-
-
-class Encoding(ABC):
-    """How one original problem became spins. Subclasses are frozen and hold the original problem.
-
-    A ``value`` is a mapping in the user's words, as ``Answer.value`` holds it. Its entry ``main`` says everything;
-    further entries may repeat it in another way.
+    ``answer`` is a configuration (n,) of +1 and -1, a value in the user's words, or the object that ``solve --json``
+    prints; everything is recomputed from the original problem, and nothing is mended. Where an object has both spins
+    and words and they disagree, that is a sentence too. Raises :class:`ProblemError` for what is no answer to this
+    problem at all.
     """
+    encoding = encoding_of(problem)
+    if isinstance(answer, Answer):
+        answer = answer.value
+    if not isinstance(answer, Mapping):
+        objective, broken = encoding.judge_spins(problem.spins_from(answer))
+        return objective, not broken, broken
+    said = answer["answer"] if isinstance(answer.get("answer"), Mapping) else answer
+    in_words = said.get(encoding.main) is not None
+    if not in_words and "spins" not in answer:
+        raise ProblemError(f'the answer has no entry "{encoding.main}" and no "spins"; it has: {", ".join(said)}')
+    verdicts = [encoding.judge(said)] if in_words else []
+    if "spins" in answer:
+        verdicts.append(encoding.judge_spins(_spins_in(answer["spins"], problem)))
+    objective, broken = verdicts[0]
+    if len(verdicts) == 2 and (verdicts[1][1] != broken or not math.isclose(verdicts[1][0], objective, abs_tol=1e-9)):
+        broken += (f"the spins beside it mean something else, of {problem.objective_name} {verdicts[1][0]:g}",)
+    return objective, not broken, broken
 
-    main: str
-    """The entry of a value that decides it."""
 
-    @abstractmethod
-    def read(self, spins: I8) -> dict[str, Any]:
-        """What the spins say, whether it keeps the constraints or not."""
+def _spins_in(given: Any, problem: Problem) -> npt.NDArray[np.int8]:
+    """The list of spins in an object of JSON, as a configuration."""
+    if isinstance(given, list) and not all(isinstance(spin, int) for spin in given):
+        raise ProblemError('"spins" of the answer hold something but +1 and -1')
+    return problem.spins_from(given if isinstance(given, list | np.ndarray) else [])
 
-    @abstractmethod
-    def judge(self, value: Mapping[str, Any]) -> tuple[float, tuple[str, ...]]:
-        """The objective of a value and a sentence for every constraint it breaks, from the original problem.
 
-        Raises :class:`~patchwalk.problem.ising.ProblemError` for what is no value of this problem at all.
-        """
+def read_answer(path: PathLike, problem: Problem) -> dict[str, Any] | npt.NDArray[np.int8]:
+    """An answer from a file, as :func:`audit_answer` takes it: JSON, CSV or spins (+1 and -1), plain or ``.gz``.
 
-    @abstractmethod
-    def encode(self, value: Mapping[str, Any]) -> I8:
-        """The spins, i8 (n,), of a value; auxiliary spins as they cost least."""
+    Raises :class:`ProblemError` with file and line for what cannot be read.
+    """
+    if _suffix(path) == ".csv":
+        return _read_table(path, encoding_of(problem), problem.kind)
+    with contextlib.closing(numbered_lines(path)) as lines:
+        text = "".join(text for _, text in lines)
+    if not text.lstrip().startswith("{"):
+        return read_start(path, problem)
+    try:
+        table = json.loads(text)
+    except json.JSONDecodeError as error:
+        fail(path, error.lineno, f"not JSON: {error.msg}")
+    except (ValueError, RecursionError) as error:
+        fail(path, None, f"not JSON that can be read: {error}")
+    return dict(table)
 
-    def settle(self, spins: I8) -> I8:
-        """The same value with auxiliary spins as they cost least; by default there are none."""
-        return spins
 
-    def mend(self, spins: I8) -> I8:
-        """A configuration near this one that should break fewer constraints; by default the same."""
-        return spins
+def _suffix(path: PathLike) -> str:
+    return os.path.splitext(os.fspath(path).removesuffix(".gz"))[1].lower()
 
-    def decode(self, spins: npt.ArrayLike) -> Answer:
-        """The answer in the user's words, mended where that is cheap and makes it keep every constraint."""
-        given = np.ascontiguousarray(spins, np.int8)
-        value = self.read(given)
-        objective, broken = self.judge(value)
-        if not broken:
-            return Answer(value, objective, self.settle(given))
-        mended = self.mend(given)
-        new_value = self.read(mended)
-        new_objective, still_broken = self.judge(new_value)
-        if still_broken:
-            return Answer(value, objective, given, broken=broken)
-        return Answer(new_value, new_objective, self.settle(mended), mended=broken)
+
+def _read_table(path: PathLike, encoding: Encoding, kind: str) -> dict[str, Any]:
+    header = f"name,{encoding.main}"
+    rows: list[tuple[int, str, str]] = []
+    with contextlib.closing(numbered_lines(path)) as lines:
+        texts = (text for number, text in lines if rows or not text.startswith("#"))
+        reader = csv.reader(texts)
+        try:
+            for cells in reader:
+                if len(cells) != 2:
+                    fail(path, reader.line_num, f"expected two columns, {header}, but it has {len(cells)}")
+                rows.append((reader.line_num, cells[0], cells[1]))
+        except csv.Error as error:
+            fail(path, reader.line_num, f"not a row of a CSV ({error})")
+    if not rows or [*rows[0][1:]] != header.split(","):
+        fail(path, None, f"expected the header {header} of an answer to kind {kind}")
+    del rows[0]
+    if encoding.shape == "set":
+        return {encoding.main: [name for _, name, _ in rows]}
+    if encoding.shape == "table":
+        return {encoding.main: {name: _plain(cell) for _, name, cell in rows}}
+    wrong = next((number for number, _, part in rows if part not in PART_NAMES), None)
+    if wrong is not None:
+        fail(path, wrong, "a part is 1 or 2")
+    names = [(_plain(name) if encoding.names_are_numbers else name, part) for _, name, part in rows]
+    return {encoding.main: [[name for name, own in names if own == part] for part in PART_NAMES]}
+
+
+def _plain(cell: str) -> Any:
+    """A number, true, false or a list where the cell is one; else the text."""
+    try:
+        return json.loads(cell)
+    except (ValueError, RecursionError):
+        return cell
+
+
+def write_answer(path: PathLike, problem: Problem, answer: Answer) -> None:
+    """Write an answer by the ending of the name: ``.json``, ``.csv``, or text for people; ``.gz`` packs it.
+
+    JSON and CSV are read back by :func:`read_answer`. An existing file is replaced in one step. Raises
+    :class:`ProblemError` for a path that cannot be written.
+    """
+    writers = {".json": _json_lines, ".csv": _table_lines}
+    lines = writers.get(_suffix(path), answer_lines)(problem, answer)
+    _replace(path, "".join(line + "\n" for line in lines).encode())
+
+
+def _replace(path: PathLike, content: bytes) -> None:
+    """Put a whole file in the place of another, in one step."""
+    folder, name = os.path.split(os.fspath(path))
+    unfinished = os.path.join(folder, f".{name}.{os.getpid()}.unfinished")
+    packed = gzip.compress(content, mtime=0) if name.endswith(".gz") else content
+    try:
+        with open(unfinished, "wb") as stream:
+            stream.write(packed)
+        os.replace(unfinished, path)
+    except OSError as error:
+        fail(path, None, f"cannot be written: {error.strerror or error}")
+    finally:
+        with contextlib.suppress(OSError):
+            os.unlink(unfinished)
+
+
+def _json_lines(problem: Problem, answer: Answer) -> Iterator[str]:
+    table = {
+        "kind": problem.kind,
+        "verdict": verdict(len(answer.broken), len(answer.mended)),
+        "feasible": answer.feasible,
+        problem.objective_name: answer.objective,
+        "broken": answer.broken,
+        "mended": answer.mended,
+        "answer": dict(answer.value),
+        "spins": answer.spins.tolist(),
+    }
+    yield json.dumps(table, ensure_ascii=False)
+
+
+def _table_lines(problem: Problem, answer: Answer) -> Iterator[str]:
+    encoding = encoding_of(problem)
+    yield "# " + "; ".join([verdict(len(answer.broken), len(answer.mended)), _objective(problem, answer)])
+    rows: list[tuple[Any, Any]] = [("name", encoding.main)]
+    said = answer.value[encoding.main]
+    if said is None:
+        raise ProblemError("these spins have no names; write the answer as .json or .txt")
+    if encoding.shape == "set":
+        rows += [(name, 1) for name in said]
+    elif encoding.shape == "parts":
+        rows += [(name, part) for names, part in zip(said, PART_NAMES, strict=True) for name in names]
+    else:
+        rows += [(name, one if isinstance(one, str) else json.dumps(one)) for name, one in said.items()]
+    for row in rows:
+        text = io.StringIO()
+        csv.writer(text, lineterminator="").writerow(row)
+        yield text.getvalue()
+
+
+def _objective(problem: Problem, answer: Answer) -> str:
+    return f"{problem.objective_name} {answer.objective:.12g}"
+
+
+def answer_lines(problem: Problem, answer: Answer) -> Iterator[str]:
+    """The answer for people: whether it is valid, what is broken, the objective, then names and values."""
+    encoding = encoding_of(problem)
+    yield verdict(len(answer.broken), len(answer.mended))
+    yield from (f"  broken: {sentence}" for sentence in answer.broken)
+    yield from (f"  mended: {sentence}" for sentence in answer.mended)
+    yield _objective(problem, answer)
+    said = answer.value[encoding.main]
+    if said is None:
+        yield from textwrap.wrap(" ".join(f"{spin:+d}" for spin in answer.spins), WIDTH)
+    elif encoding.shape == "set":
+        yield f"{encoding.main} ({len(said)}):"
+        yield from _wrapped(said)
+    elif encoding.shape == "parts":
+        for names, part in zip(said, PART_NAMES, strict=True):
+            yield f"part {part} ({len(names)}):"
+            yield from _wrapped(names)
+    else:
+        yield from (f"  {name}: {_in_words(one)}" for name, one in said.items())
+
+
+def _wrapped(names: list[Any]) -> list[str]:
+    return textwrap.wrap(", ".join(map(str, names)), WIDTH, initial_indent="  ", subsequent_indent="  ")
+
+
+def _in_words(one: Any) -> str:
+    if isinstance(one, bool):
+        return "yes" if one else "no"
+    return " and ".join(map(str, one)) or "nothing" if isinstance(one, list) else str(one)

@@ -23,7 +23,7 @@ from scipy import sparse
 if TYPE_CHECKING:
     import networkx as nx
 
-    from patchwalk.problem.decoding import Encoding
+    from patchwalk.problem.meanings import Encoding
 
 SIGN_SENTENCE = "energy is minimised; a positive coupling favours opposite spins"
 

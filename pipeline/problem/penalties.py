@@ -18,7 +18,7 @@ import numpy.typing as npt
 from patchwalk.problem.ising import Problem, ProblemError
 
 if TYPE_CHECKING:
-    from patchwalk.problem.decoding import Encoding
+    from patchwalk.problem.meanings import Encoding
 
 F64 = npt.NDArray[np.float64]
 

@@ -9,9 +9,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.problem.decoding import I8, Encoding, labels_of, two_parts
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.kinds.vertices import edges_of
+from patchwalk.problem.meanings import I8, Encoding, labels_of, two_parts
 from patchwalk.problem.penalties import MOST_COUPLINGS, above, smallest
 
 I64 = npt.NDArray[np.int64]
@@ -26,6 +26,7 @@ class BalancedParts(Encoding):
     weights: F64
     labels: tuple[str, ...]
     main = "parts"
+    shape = "parts"
 
     def read(self, spins: I8) -> dict[str, Any]:
         return {"parts": [[self.labels[place] for place in np.flatnonzero(spins == side)] for side in (1, -1)]}

@@ -15,8 +15,8 @@ import numpy.typing as npt
 from scipy import sparse
 from scipy.sparse.csgraph import connected_components
 
-from patchwalk.problem.decoding import I8, Encoding, labels_of, truth_values
 from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.meanings import I8, Encoding, labels_of, truth_values
 from patchwalk.problem.penalties import above, problem_of_bits
 
 I64 = npt.NDArray[np.int64]
@@ -216,8 +216,11 @@ def _choose_products(triples: I64) -> tuple[I64, I64, I64]:
     if not len(triples):
         return np.empty((0, 2), np.int64), np.empty(0, np.int64), np.empty(0, np.int64)
     choices = triples[:, [[0, 1], [0, 2], [1, 2]]].reshape(-1, 2)
-    pairs, which, counts = np.unique(choices, axis=0, return_inverse=True, return_counts=True)
-    which = which.reshape(-1, 3)
+    span = 2 * int(np.abs(choices).max()) + 1
+    _, first, which, counts = np.unique(
+        choices[:, 0] * span + choices[:, 1], return_index=True, return_inverse=True, return_counts=True
+    )
+    pairs, which = choices[first], which.reshape(-1, 3)
     clauses = np.arange(len(triples))
     best = np.argmax(counts[which], axis=1)
     chosen, used = np.unique(which[clauses, best], return_inverse=True)

@@ -9,9 +9,9 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.problem.decoding import I8, Encoding, by_name, labels_of
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.kinds.vertices import edges_of
+from patchwalk.problem.meanings import I8, Encoding, by_name, labels_of
 from patchwalk.problem.penalties import MOST_COUPLINGS, above, problem_of_bits
 
 I64 = npt.NDArray[np.int64]

@@ -10,8 +10,8 @@ from typing import Any
 
 import numpy as np
 
-from patchwalk.problem.decoding import I8, Encoding, entry_of
 from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.meanings import I8, Encoding, two_lists
 from patchwalk.problem.penalties import MOST_COUPLINGS
 
 EXACT_SUM = 2**26  # squares of sums below are whole numbers that a float holds
@@ -23,13 +23,15 @@ class TwoSums(Encoding):
 
     numbers: tuple[int | float, ...]
     main = "parts"
+    shape = "parts"
+    names_are_numbers = True
 
     def read(self, spins: I8) -> dict[str, Any]:
         parts = [[self.numbers[place] for place in np.flatnonzero(spins == side)] for side in (1, -1)]
         return {"parts": parts, "difference": _difference(parts)}
 
     def judge(self, value: Mapping[str, Any]) -> tuple[float, tuple[str, ...]]:
-        parts = _two_lists(value)
+        parts = two_lists(value, self.main)
         given, known = Counter(parts[0] + parts[1]), Counter(self.numbers)
         if given != known:
             odd = next(iter((given - known) + (known - given)))
@@ -38,20 +40,13 @@ class TwoSums(Encoding):
 
     def encode(self, value: Mapping[str, Any]) -> I8:
         self.judge(value)
-        first = Counter(_two_lists(value)[0])
+        first = Counter(two_lists(value, self.main)[0])
         spins = np.full(len(self.numbers), -1, np.int8)
         for place, number in enumerate(self.numbers):
             if first[number] > 0:
                 first[number] -= 1
                 spins[place] = 1
         return spins
-
-
-def _two_lists(value: Mapping[str, Any]) -> list[list[int | float]]:
-    parts = entry_of(value, "parts")
-    if not isinstance(parts, list | tuple) or len(parts) != 2 or not all(isinstance(part, list) for part in parts):
-        raise ProblemError('"parts" of the answer are not two lists of numbers')
-    return list(parts)
 
 
 def _difference(parts: list[list[int | float]]) -> int | float:

@@ -9,8 +9,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.problem.decoding import I8, Encoding, labels_of, truth_values
 from patchwalk.problem.ising import Problem
+from patchwalk.problem.meanings import I8, Encoding, labels_of, truth_values
 from patchwalk.problem.penalties import problem_of_bits
 
 

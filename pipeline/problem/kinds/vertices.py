@@ -10,8 +10,8 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.problem.decoding import I8, Encoding, entry_of, labels_of
 from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.meanings import I8, Encoding, entry_of, labels_of, plain_list
 from patchwalk.problem.penalties import above, problem_of_bits, smallest
 
 I64 = npt.NDArray[np.int64]
@@ -36,9 +36,7 @@ class VertexSet(Encoding):
         return float(self.weights[inside].sum()), tuple(self._sentence(*pair) for pair in names)
 
     def encode(self, value: Mapping[str, Any]) -> I8:
-        given = entry_of(value, self.main)
-        if not isinstance(given, list | tuple):
-            raise ProblemError(f'"{self.main}" of the answer is no list of vertices')
+        given = plain_list(entry_of(value, self.main), self.main)
         places = {label: place for place, label in enumerate(self.labels)}
         spins = np.ones(len(self.labels), np.int8)
         for name in given:
@@ -68,6 +66,7 @@ class IndependentSet(VertexSet):
     """No two members are joined."""
 
     main = "members"
+    shape = "set"
 
     def _wrong(self, one: npt.NDArray[np.bool_], other: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:
         return one & other
@@ -80,6 +79,7 @@ class VertexCover(VertexSet):
     """Every edge has a member at one end at least."""
 
     main = "cover"
+    shape = "set"
 
     def _wrong(self, one: npt.NDArray[np.bool_], other: npt.NDArray[np.bool_]) -> npt.NDArray[np.bool_]:
         return ~one & ~other
