@@ -1,14 +1,38 @@
-"""CSV files of pairs: ``name, name`` or ``name, name, weight``, with or without a header line."""
+"""CSV files of pairs: ``name, name`` or ``name, name, weight``, and of fields: ``name, field``.
+
+Both with or without a header line. Blocks of plain lines are taken as a whole; from the first line with a quotation
+mark or anything else that is not plain, rows are read one by one, which also finds the line that an error names.
+"""
 
 from __future__ import annotations
 
+import contextlib
 import csv
+import io
+import json
+from array import array
 from collections import Counter
-from collections.abc import Iterator
+from collections.abc import Iterable, Iterator
 from itertools import chain, islice
+from typing import IO
 
-from patchwalk.problem.ising import Problem
-from patchwalk.problem.sources import Lines, Pairs, Source, plain, quoted
+import numpy as np
+import numpy.typing as npt
+
+from patchwalk.problem.edges import BLOCK, shortest, weights_to_write
+from patchwalk.problem.forms import PathLike
+from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.pairs import Pairs
+from patchwalk.problem.sources import (
+    LARGEST_NUMBER,
+    Lines,
+    Source,
+    numbered_lines,
+    open_source,
+    plain,
+    quoted,
+    write_lines,
+)
 
 SEPARATORS = {";": "semicolon", "\t": "tab", ",": "comma"}
 LINES_LOOKED_AT = 50
@@ -25,32 +49,183 @@ def is_comment(text: str) -> bool:
     return text.startswith("#") and not text[1:2].strip()
 
 
-def read_table(source: Source, kind: str) -> Problem:
-    """The problem in a CSV of pairs; names become ``Problem.names`` in order of first appearance.
+def read(path: PathLike, kind: str | None) -> Problem:
+    """The problem in a CSV of pairs, or of beacons; raises :class:`ProblemError` with file and line."""
+    with contextlib.closing(numbered_lines(path)) as lines:
+        source = open_source(path, lines, is_comment)
+        kind = source.kind(kind)
+        if kind == "beacons":
+            from patchwalk.problem.beacons import read_beacons
+
+            return read_beacons(source)
+        return _read_pairs(source, kind)
+
+
+def _read_pairs(source: Source, kind: str) -> Problem:
+    """The problem in a CSV of pairs; names become ``Problem.names`` in order of first appearance, or as stated.
 
     A first row of three cells is a header if the third begins with a letter and is no number; of two cells, if
     both are usual words for a header and neither name occurs again. A note says what was decided. ``a, a, w`` is a
-    field. Raises :class:`ProblemError` with file and line.
+    field.
     """
-    pairs = Pairs(source, kind)
+    table = _Table(source, kind)
     sample = list(islice(source.lines, LINES_LOOKED_AT))
-    separator = _separator(sample, pairs.notes)
-    rows = table_rows(source, chain(sample, source.lines), separator)
-    first, cells = next(rows, (0, []))
+    separator = _separator(sample, table.notes)
+    lines = chain(sample, source.lines)
+    first, cells = next(table_rows(source, lines, separator), (0, []))
     if first == 0:
         source.fail(None, "the file is empty; expected rows of pairs")
-    width = len(cells)
-    if width not in (2, 3):
-        source.fail(first, f"expected two or three columns (name, name, weight) but it has {width}")
-    if width == 3 and _is_title(cells[2]):
-        pairs.notes.append(f"line {first} was read as a header: {quoted(cells[2])} is not a number")
+    table.width = len(cells)
+    if table.width not in (2, 3):
+        source.fail(first, f"expected two or three columns (name, name, weight) but it has {table.width}")
+    if table.width == 3 and _is_title(cells[2]):
+        table.notes.append(f"line {first} was read as a header: {quoted(cells[2])} is not a number")
     else:
-        rows = chain([(first, cells)], rows)
-    places = _read_rows(pairs, rows, width)
-    if width == 2:
-        places = _settle_header(pairs, places, first, cells)
-        pairs.notes.append("no third column: every weight is 1")
-    return pairs.problem(max(len(places), 1), places or None)
+        table.take_row(first, cells)
+    table.take(lines, separator)
+    if table.width == 2:
+        _settle_header(table, first, cells)
+        table.notes.append("no third column: every weight is 1")
+    return table.problem()
+
+
+class _Table:
+    """Rows of pairs as they are read; ``places`` numbers the names."""
+
+    def __init__(self, source: Source, kind: str) -> None:
+        self.source, self.pairs = source, Pairs(source, kind)
+        self.notes = self.pairs.notes
+        self.width = 0
+        self.stated = source.names(None)
+        self.places = {name: place for place, name in enumerate(self.stated or ())}
+
+    def take(self, lines: Lines, separator: str) -> None:
+        """Add all rows that follow."""
+        while block := list(islice(lines, BLOCK)):
+            texts = [text for _, text in block]
+            if not self._take_at_once(texts, separator):
+                # a quotation may reach into the next block
+                rest = chain(block, lines) if any('"' in text for text in texts) else iter(block)
+                for line, cells in table_rows(self.source, rest, separator):
+                    self.take_row(line, cells)
+
+    def _take_at_once(self, texts: list[str], separator: str) -> bool:
+        joined = separator.join(texts)
+        # counted in all, so that no line that is short can be made good by one that is long
+        if '"' in joined or "#" in joined or {text.count(separator) for text in texts} != {self.width - 1}:
+            return False
+        cells = joined.split(separator)
+        heads = list(map(str.strip, cells[:: self.width]))
+        tails = list(map(str.strip, cells[1 :: self.width]))
+        fresh = dict.fromkeys(chain.from_iterable(zip(heads, tails, strict=True)))
+        weights = None
+        if "" in fresh or (self.stated is not None and not fresh.keys() <= self.places.keys()):
+            return False
+        if self.width == 3:
+            weights = _numbers(cells[2::3])
+            if weights is None:
+                return False
+        new = [name for name in fresh if name not in self.places]
+        self.places.update(zip(new, range(len(self.places), len(self.places) + len(new)), strict=True))
+        first, second = (
+            np.fromiter(map(self.places.__getitem__, names), np.int64, len(names)) for names in (heads, tails)
+        )
+        if not self.pairs.takes_loops and np.any(first == second):
+            return False
+        self.pairs.extend(first, second, weights)
+        return True
+
+    def take_row(self, line: int, cells: list[str]) -> None:
+        """Add one row."""
+        if len(cells) != self.width:
+            self.source.fail(line, f"expected {self.width} columns as on the lines before, but it has {len(cells)}")
+        head, tail = cells[0], cells[1]
+        if not head or not tail:
+            self.source.fail(line, "a name is missing; expected two names and perhaps a weight")
+        if self.width == 3:
+            self.pairs.weights.append(_weight(self.source, line, cells[2]))
+        if head == tail and not self.pairs.takes_loops:
+            self.pairs.refuse_loop(line, quoted(head))
+        self.pairs.heads.append(self._place(line, head))
+        self.pairs.tails.append(self._place(line, tail))
+
+    def _place(self, line: int, name: str) -> int:
+        if self.stated is not None and name not in self.places:
+            self.source.fail(line, f"name {quoted(name)} is not among the names that the file states; add it there")
+        return self.places.setdefault(name, len(self.places))
+
+    def problem(self) -> Problem:
+        """The problem, once all rows are read."""
+        return self.pairs.problem(max(len(self.places), 1), tuple(self.places) or None)
+
+
+def _numbers(cells: list[str]) -> npt.NDArray[np.float64] | None:
+    """The cells as finite numbers f64 (m,), or None where one of them is none."""
+    text = "".join(cells)
+    try:
+        values = np.fromiter(map(float, cells), np.float64, len(cells))
+    except ValueError:
+        return None
+    return values if plain(text) and np.all(np.abs(values) <= LARGEST_NUMBER) else None
+
+
+def read_fields(path: PathLike, problem: Problem) -> tuple[npt.NDArray[np.float64], list[str]]:
+    """Fields f64 (n,) for the spins of a problem from a CSV of names and fields, and notes.
+
+    Spins without names are numbered from 1. Raises :class:`ProblemError` with file and line.
+    """
+    names = problem.names or map(str, range(1, len(problem) + 1))
+    places = {name: place for place, name in enumerate(names)}
+    fields, seen, notes = np.zeros(len(problem)), np.zeros(len(problem), np.int64), list[str]()
+    with contextlib.closing(numbered_lines(path)) as lines:
+        source = open_source(path, lines, is_comment)
+        sample = list(islice(source.lines, LINES_LOOKED_AT))
+        separator = _separator(sample, notes)
+        for number, (line, cells) in enumerate(table_rows(source, chain(sample, source.lines), separator)):
+            if len(cells) != 2:
+                source.fail(line, f"expected two columns (name, field) but it has {len(cells)}")
+            name, value = cells
+            if number == 0 and name not in places and _is_title(value):
+                notes.append(f"line {line} was read as a header: {quoted(value)} is not a number")
+                continue
+            if name not in places:
+                source.fail(line, f"spin {quoted(name)} is not in the problem; correct the name")
+            fields[places[name]] += _weight(source, line, value, "field")
+            seen[places[name]] += 1
+    repeated = int(np.count_nonzero(seen > 1))
+    if repeated:
+        notes.append(f"{repeated} spins have more than one row of fields; their values were summed")
+    return fields, notes
+
+
+def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
+    """Write a CSV of pairs with the names of the spins (their numbers from 1 without), or of beacons."""
+    comments = [*(f"recipe: {line}" for line in recipe), f"kind = {problem.kind}"]
+    if problem.kind == "beacons":
+        from patchwalk.problem.beacons import beacon_lines
+
+        write_lines(stream, comments, beacon_lines(problem))
+        return
+    settings, heads, tails, weights = weights_to_write(problem)
+    names = problem.names or tuple(map(str, range(1, len(problem) + 1)))
+    _check_names(names)
+    comments += [*settings, f"names = {json.dumps(names)}"]
+    rows = zip(heads.tolist(), tails.tolist(), map(shortest, weights.tolist()), strict=True)
+    write_lines(stream, comments, chain(["one,other,weight"], (_row(names[i], names[j], w) for i, j, w in rows)))
+
+
+def _check_names(names: tuple[str, ...]) -> None:
+    """Raise :class:`ProblemError` for names that a CSV would not give back."""
+    for name, count in Counter(names).items():
+        if count > 1 or not name or name != name.strip() or len(name.splitlines()) > 1:
+            why = "occurs twice" if count > 1 else "is empty, has spaces around it or goes over several lines"
+            raise ProblemError(f"name {quoted(name)} {why}, which a .csv cannot hold; write a .txt file")
+
+
+def _row(*cells: str) -> str:
+    text = io.StringIO()
+    csv.writer(text, lineterminator="", quoting=csv.QUOTE_MINIMAL).writerow(cells)
+    return text.getvalue()
 
 
 def _separator(sample: list[tuple[int, str]], notes: list[str]) -> str:
@@ -100,39 +275,25 @@ def _is_title(cell: str) -> bool:
     return False
 
 
-def _read_rows(pairs: Pairs, rows: Rows, width: int) -> dict[str, int]:
-    source = pairs.source
-    places: dict[str, int] = {}
-    for line, cells in rows:
-        if len(cells) != width:
-            source.fail(line, f"expected {width} columns as on the lines before, but it has {len(cells)}")
-        head, tail = cells[0], cells[1]
-        if not head or not tail:
-            source.fail(line, "a name is missing; expected two names and perhaps a weight")
-        if width == 3:
-            pairs.weights.append(_weight(source, line, cells[2]))
-        if head == tail and pairs.kind == "maxcut":
-            pairs.refuse_loop(line, quoted(head))
-        pairs.heads.append(places.setdefault(head, len(places)))
-        pairs.tails.append(places.setdefault(tail, len(places)))
-    return places
-
-
-def _weight(source: Source, line: int, cell: str) -> float:
+def _weight(source: Source, line: int, cell: str, what: str = "weight") -> float:
     if "," in cell and plain(cell):
-        source.fail(line, f"weight {quoted(cell)} is not a number; write decimals with a point")
-    return source.number(cell, line, "weight")
+        source.fail(line, f"{what} {quoted(cell)} is not a number; write decimals with a point")
+    return source.number(cell, line, what)
 
 
-def _settle_header(pairs: Pairs, places: dict[str, int], first: int, cells: list[str]) -> dict[str, int]:
+def _settle_header(table: _Table, first: int, cells: list[str]) -> None:
     """Drop the first row of a two-column table where it was a header, and note what was decided."""
-    uses = Counter(pairs.heads) + Counter(pairs.tails)
+    pairs, places = table.pairs, table.places
     words = {cell.casefold() for cell in cells}
-    if not (words <= HEADER_WORDS and len(words) == 2 and uses[0] == uses[1] == 1 and len(pairs.heads) > 1):
-        pairs.notes.append(f"line {first} was read as a pair, not as a header: {quoted(', '.join(cells))}")
-        return places
-    pairs.notes.append(f"line {first} was read as a header: {quoted(', '.join(cells))}")
-    for ends in (pairs.heads, pairs.tails):
-        del ends[0]
-        ends[:] = type(ends)("q", (place - 2 for place in ends))
-    return {name: place - 2 for name, place in places.items() if place >= 2}
+    # the first row was the first to number its names, so a header holds numbers 0 and 1, once each
+    ends = (np.frombuffer(pairs.heads, np.int64), np.frombuffer(pairs.tails, np.int64))
+    uses = sum(np.bincount(end, minlength=2)[:2] for end in ends)
+    lone = table.stated is None and words <= HEADER_WORDS and len(words) == 2 and len(pairs) > 1
+    if not (lone and np.all(uses == 1)):
+        table.notes.append(f"line {first} was read as a pair, not as a header: {quoted(', '.join(cells))}")
+        return
+    table.notes.append(f"line {first} was read as a header: {quoted(', '.join(cells))}")
+    heads, tails = (end[1:] - 2 for end in ends)
+    del ends
+    pairs.heads, pairs.tails = array("q", heads.tobytes()), array("q", tails.tobytes())
+    table.places = {name: place - 2 for name, place in places.items() if place >= 2}

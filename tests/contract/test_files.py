@@ -5,12 +5,16 @@ from __future__ import annotations
 import gzip
 import json
 import os
+import re
+import tracemalloc
+from dataclasses import replace
 
 import numpy as np
 import pytest
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from patchwalk.problem import edges, sources, tables
 from patchwalk.problem.files import read_problem, read_start, write_problem
 from patchwalk.problem.ising import Problem, ProblemError
 
@@ -125,6 +129,110 @@ def test_what_is_no_readable_file_is_refused(tmp_path):
     assert "cannot be read" in refusal(written(tmp_path, "file", "3 1\n1 2 1\n") / "below", "ising")
 
 
+@pytest.mark.parametrize(
+    ("name", "head", "filler"),
+    [
+        ("bomb.txt.gz", "9 9999999\n", "1 2 1\n"),
+        ("bomb.txt.gz", "9 9\n", "\n"),
+        ("bomb.txt.gz", "9 9\n", "1"),
+        ("bomb.csv.gz", "", "a,b,1\n"),
+        ("bomb.csv.gz", "a,b,1\n", "\n"),
+        ("bomb.csv.gz", "a,b,", "1"),
+    ],
+)
+def test_a_file_that_unpacks_without_end_is_refused(tmp_path, name, head, filler, monkeypatch):
+    monkeypatch.setattr(sources, "UNPACKED_ALWAYS", 100_000)
+    path = written(tmp_path, name, gzip.compress((head + filler * (2_000_000 // len(filler))).encode(), 9))
+    limit = 100_000 + sources.UNPACKED_PER_BYTE * path.stat().st_size
+    assert limit < 800_000
+    tracemalloc.start()
+    said = refusal(path, "ising")
+    assert tracemalloc.get_traced_memory()[1] < 60 * limit
+    tracemalloc.stop()
+    assert "unpacks to more than 100 times its size" in said
+
+
+def test_numbers_of_ten_thousand_digits_and_endless_lines_are_refused(tmp_path):
+    digits = "9" * 10_000
+    endless = "2 1\n1 2 " + "1" * 2_000_000
+    for text in (f"2 1\n1 2 {digits}\n", f"2 1\n1 {digits} 1\n", f"2 {digits}\n1 2 1\n", endless):
+        said = refusal(written(tmp_path, "G.txt", text), "ising")
+        assert ", line " in said
+        assert len(said) < 300
+    huge = written(tmp_path, "G.txt", "1" + "0" * 18 + " 1\n")
+    assert "line 1: 1000000000000000000 vertices are promised; expected 1 to" in refusal(huge, "ising")
+
+
+FIELDS = "name,field\nb,2\na,-1.5\nb,1\n"
+
+
+def test_fields_come_from_a_file_of_their_own(tmp_path):
+    pairs = written(tmp_path, "pairs.csv", "a,b,1\nb,c,1\nc,c,4\n")
+    problem = read_problem(pairs, "ising", field_file=written(tmp_path, "fields.csv", FIELDS))
+    assert problem.fields.tolist() == [-1.5, 3, 4]
+    assert "line 1 was read as a header: 'field' is not a number" in problem.notes
+    assert "1 spins have more than one row of fields; their values were summed" in problem.notes
+    edges = written(tmp_path, "G.txt", "3 2\n1 2 1\n2 3 1\n")
+    numbered = read_problem(edges, "ising", field_file=written(tmp_path, "numbered.csv.gz", "3;7\n1;-2\n"))
+    assert numbered.fields.tolist() == [-2, 0, 7]
+
+
+@pytest.mark.parametrize(
+    ("text", "message"),
+    [
+        ("d,1\n", "fields.csv, line 1: spin 'd' is not in the problem; correct the name"),
+        ("name,field\na,1\nd,1\n", "fields.csv, line 3: spin 'd' is not in the problem"),
+        ("a,1\nb,heavy\n", "fields.csv, line 2: field 'heavy' is not a finite number"),
+        ("a,1\nb,1,2\n", "fields.csv, line 2: expected two columns (name, field) but it has 3"),
+        ("", "fields.csv: the file is empty"),
+    ],
+)
+def test_a_faulty_file_of_fields_is_refused_with_file_and_line(tmp_path, text, message):
+    pairs = written(tmp_path, "pairs.csv", "a,b,1\n")
+    fields = written(tmp_path, "fields.csv", text)
+    with pytest.raises(ProblemError, match=re.escape(message)):
+        read_problem(pairs, "ising", field_file=fields)
+
+
+def test_the_opposite_sign_convention_is_turned(tmp_path):
+    path = written(tmp_path, "pairs.csv", "# offset = 3\na,b,1\nb,b,2\n")
+    fields = written(tmp_path, "fields.csv", "a,5\n")
+    plain = read_problem(path, "ising", field_file=fields)
+    turned = read_problem(path, "ising", field_file=fields, flip_sign=True)
+    for spins in ([1, 1], [1, -1], [-1, 1], [-1, -1]):
+        assert turned.energy(spins) - 3 == -(plain.energy(spins) - 3)
+    assert "the signs of couplings and fields were turned" in turned.notes
+    graph = written(tmp_path, "graph.txt", "2 1\n1 2 1\n")
+    with pytest.raises(ProblemError, match="flip_sign belongs to kind ising"):
+        read_problem(graph, "maxcut", flip_sign=True)
+    with pytest.raises(ProblemError, match="field_file belongs to kind ising"):
+        read_problem(graph, "maxcut", field_file=fields)
+
+
+@pytest.mark.parametrize("name", ["G.txt", "G.csv"])
+def test_blocks_of_lines_and_single_lines_give_the_same(tmp_path, name, monkeypatch):
+    mark = "," if name == "G.csv" else " "
+    draws = np.random.default_rng(1)
+    rows = [mark.join([*(str(1 + v) for v in draws.choice(50, 2, False)), repr(draws.normal())]) for _ in range(300)]
+    head = "" if name == "G.csv" else "50 300\n"
+    at_once = read_problem(written(tmp_path, name, head + "\n".join(rows)), "ising")
+    monkeypatch.setattr(edges, "BLOCK", 7)
+    monkeypatch.setattr(tables, "BLOCK", 7)
+    assert read_problem(tmp_path / name, "ising").fingerprint == at_once.fingerprint
+    slowly = [f'"{row.replace(mark, chr(34) + mark, 1)}' if name == "G.csv" else f"{row} # c" for row in rows]
+    again = read_problem(written(tmp_path, name, head + "\n\n".join(slowly)), "ising")
+    assert again.fingerprint == at_once.fingerprint
+    assert again.names == at_once.names
+
+
+@pytest.mark.parametrize("place", [0, 1, 70_000, 99_999])
+def test_the_line_of_an_error_is_found_in_a_long_file(tmp_path, place):
+    rows = ["1 2 1"] * 100_000
+    rows[place] = "1 2 x"
+    said = refusal(written(tmp_path, "G.txt", "2 100000\n" + "\n".join(rows)), "ising")
+    assert said.startswith(f"G.txt, line {place + 2}: weight 'x' is not a finite number")
+
+
 def test_broken_gzip_is_refused_with_the_line_reached(tmp_path):
     assert "not.gz, line 1: the gzip data are damaged" in refusal(written(tmp_path, "not.gz", b"3 1\n1 2 1\n"), "ising")
     whole = gzip.compress(b"3 1\n1 2 1\n")
@@ -141,7 +249,7 @@ def test_the_kind_comes_from_the_caller_or_the_file_and_never_from_both_in_confl
     assert read_problem(stated).kind == read_problem(stated, kind="ising").kind == "ising"
     said = refusal(silent)
     assert "--kind maxcut" in said
-    assert "ising, maxcut, beacons" in said
+    assert "one of: ising, maxcut, qubo" in said
     assert refusal(stated, "maxcut").startswith(
         "stated.txt, line 2: the file states kind = ising, but maxcut was asked"
     )
@@ -229,9 +337,11 @@ def problems(draw):
     )  # fmt: skip
 
 
-@given(problems(), st.sampled_from(["p.txt", "p.txt.gz"]))
+@given(problems(), st.sampled_from(["p.txt", "p.txt.gz", "p.csv"]))
 def test_what_is_written_is_read_back_as_the_same_problem(tmp_path_factory, problem, name):
     path = tmp_path_factory.mktemp("round") / name
+    if name == "p.csv":  # whose names are words that differ
+        problem = replace(problem, names=tuple(f'{place}, "{place}"' for place in range(len(problem))))
     if not problem.coupling_count and not problem.fields.any():
         with pytest.raises(ProblemError, match="no coupling and no field"):
             write_problem(problem, path)
@@ -259,7 +369,9 @@ def test_writing_leaves_one_whole_file_and_the_same_bytes(tmp_path):
     ("problem", "name", "message"),
     [
         (Problem.from_arrays([0], [1], [1]), "missing/p.txt", "cannot be written"),
-        (Problem.from_arrays([0], [1], [1]), "p.csv", "kind ising is written to a .txt file"),
+        (Problem.from_arrays([0], [1], [1]), "p.cnf", "kind ising is written to a .txt or .csv or"),
+        (Problem.from_arrays([0], [1], [1], names=["a", "a"]), "p.csv", "name 'a' occurs twice"),
+        (Problem.from_arrays([0], [1], [1], names=["a", " b"]), "p.csv", "has spaces around it"),
         (Problem.from_arrays([0], [1], [1], fields=[0, 1], kind="maxcut"), "p.txt", "spin 1 has a field"),
         (Problem.from_arrays([0], [1], [1e200]), "p.txt", "rescale"),
     ],
