@@ -10,8 +10,9 @@ Dechter, Artif. Intell. 113 (1999) 41; sampling low-width subgraphs: Hamze & de 
 from __future__ import annotations
 
 import threading
+from collections.abc import Iterator
 from dataclasses import dataclass
-from typing import ClassVar, Literal, NamedTuple, Self
+from typing import ClassVar, Literal, Self
 
 import numpy as np
 
@@ -31,7 +32,7 @@ from patchwalk.subsolvers.contract import (
 )
 from patchwalk.subsolvers.elimination_order import Layout, Plan, find_plan, lay_out, width_of
 from patchwalk.subsolvers.elimination_tables import eliminate
-from patchwalk.subsolvers.neighbours import edges_of, list_neighbours
+from patchwalk.subsolvers.neighbours import Lists, edges_of, lists_of
 from patchwalk.subsolvers.spectrum import TIE_SHARE
 from patchwalk.subsolvers.uniform import require_shots
 
@@ -40,14 +41,6 @@ WIDEST = 26
 
 KEPT_ROOM = 1 << 23
 """Tables of up to so many entries (128 MB with their weights) keep their memory between calls."""
-
-
-class Graph(NamedTuple):
-    """One row's lists of neighbours: those of spin i stand at ``starts[i]`` to ``starts[i+1]``."""
-
-    starts: I64
-    neighbours: I32
-    strengths: F64
 
 
 @dataclass(frozen=True)
@@ -166,7 +159,7 @@ _TABLES = _Tables()
 
 
 def _solve(
-    batch: ClusterBatch, row: int, graph: Graph, plan: Plan, layout: Layout, temperature: float, outcomes: I8
+    batch: ClusterBatch, row: int, graph: Lists, plan: Plan, layout: Layout, temperature: float, outcomes: I8
 ) -> tuple[float, float]:
     """Eliminate one row and draw its outcomes i8 (m, k); returns the lowest energy and its weight."""
     weight = float(np.abs(batch.fields[row]).sum() + np.abs(graph.strengths).sum() / 2)
@@ -177,17 +170,11 @@ def _solve(
     )  # fmt: skip
 
 
-def _graphs(batch: ClusterBatch) -> list[Graph]:
-    """The lists of neighbours of every row."""
-    edges, graphs = edges_of(batch), []
+def _graphs(batch: ClusterBatch) -> Iterator[Lists]:
+    """The lists of neighbours of one row after the other."""
+    edges = edges_of(batch)
     for row in range(len(batch)):
-        own = slice(edges.offsets[row], edges.offsets[row + 1])
-        pairs, weights = edges.pairs[own], edges.weights[own]
-        starts = np.empty(batch.size + 1, np.int64)
-        graph = Graph(starts, np.empty(2 * len(weights), np.int32), np.empty(2 * len(weights)))
-        list_neighbours(pairs, weights, *graph)
-        graphs.append(graph)
-    return graphs
+        yield lists_of(edges.offsets, edges.pairs, edges.weights, row, batch.size)
 
 
 @compiled

@@ -2,28 +2,86 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+from typing import NamedTuple
+
 import numpy as np
 
 from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64, ClusterBatch, Edges
+from patchwalk.subsolvers.contract import DENSE_LIMIT, F64, I8, I32, I64, U64, ClusterBatch, Edges
 from patchwalk.subsolvers.draws import next_word
 
 
+class Lists(NamedTuple):
+    """One cluster's lists of neighbours: those of spin i stand at ``starts[i]`` to ``starts[i+1]``.
+
+    ``starts`` i64 (k+1,); ``neighbours`` i32 and ``strengths`` f64 (2E,), every edge once from either end.
+    """
+
+    starts: I64
+    neighbours: I32
+    strengths: F64
+
+
 def edges_of(batch: ClusterBatch) -> Edges:
-    """The couplings of a batch as edges, whichever way they came."""
+    """The couplings of a batch as edges, whichever way they came; of dense ones in rising order."""
     if batch.edges is not None:
         return batch.edges
     assert batch.couplings is not None
-    rows, first, second = np.nonzero(np.triu(batch.couplings, 1))
-    return Edges(
-        offsets=np.searchsorted(rows, np.arange(len(batch) + 1)),
-        pairs=np.stack([first, second], axis=1),
-        weights=batch.couplings[rows, first, second],
-    )
+    offsets = _count_edges(batch.couplings)
+    pairs, weights = np.empty((offsets[-1], 2), np.int32), np.empty(offsets[-1])
+    _list_edges(batch.couplings, pairs, weights)
+    return Edges(offsets, pairs, weights)
+
+
+def with_matrices(batch: ClusterBatch) -> ClusterBatch:
+    """The same batch, with dense couplings if its clusters are small enough for that."""
+    if batch.edges is None or batch.size > DENSE_LIMIT:
+        return batch
+    couplings = np.zeros((len(batch), batch.size, batch.size))
+    row = np.repeat(np.arange(len(batch)), np.diff(batch.edges.offsets))
+    first, second = batch.edges.pairs.T
+    couplings[row, first, second] = couplings[row, second, first] = batch.edges.weights
+    return replace(batch, couplings=couplings, edges=None)
+
+
+@compiled
+def _count_edges(couplings: F64) -> I64:
+    """Where each row's edges begin, i64 (B+1,)."""
+    offsets = np.zeros(len(couplings) + 1, np.int64)
+    for row in range(len(couplings)):
+        count = 0
+        for first in range(couplings.shape[1]):
+            for second in range(first + 1, couplings.shape[1]):
+                count += couplings[row, first, second] != 0.0
+        offsets[row + 1] = offsets[row] + count
+    return offsets
+
+
+@compiled
+def _list_edges(couplings: F64, pairs: I32, weights: F64) -> None:
+    edge = 0
+    for row in range(len(couplings)):
+        for first in range(couplings.shape[1]):
+            for second in range(first + 1, couplings.shape[1]):
+                if couplings[row, first, second] != 0.0:
+                    pairs[edge, 0], pairs[edge, 1] = first, second
+                    weights[edge] = couplings[row, first, second]
+                    edge += 1
 
 
 TIE_CHANCE = 0.9
 """How often a Metropolis sweep flips where the energy stays as it is; any chance keeps detailed balance."""
+
+
+@compiled
+def lists_of(offsets: I64, pairs: I32, weights: F64, row: int, size: int) -> Lists:
+    """The lists of neighbours of one row of a batch, from its edges."""
+    begin, end = offsets[row], offsets[row + 1]
+    starts = np.empty(size + 1, np.int64)
+    neighbours, strengths = np.empty(2 * (end - begin), np.int32), np.empty(2 * (end - begin))
+    list_neighbours(pairs[begin:end], weights[begin:end], starts, neighbours, strengths)
+    return Lists(starts, neighbours, strengths)
 
 
 @compiled

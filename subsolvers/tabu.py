@@ -27,7 +27,7 @@ from patchwalk.subsolvers.contract import (
     refuse_oversize,
 )
 from patchwalk.subsolvers.draws import next_below
-from patchwalk.subsolvers.neighbours import edges_of, find_local_fields, list_neighbours, scatter, turn
+from patchwalk.subsolvers.neighbours import edges_of, find_local_fields, lists_of, scatter, turn
 from patchwalk.subsolvers.uniform import require_shots
 
 
@@ -100,13 +100,10 @@ def _run_searches(
 ) -> None:
     rows, size = fields.shape
     stream = np.empty(1, np.uint64)
-    local, starts = np.empty(size), np.empty(size + 1, np.int64)
-    spins, free_at = np.empty(size, np.int8), np.empty(size, np.int64)
+    local, spins, free_at = np.empty(size), np.empty(size, np.int8), np.empty(size, np.int64)
     for row in range(rows):
         stream[0] = seeds[row]
-        own_pairs, own_weights = pairs[offsets[row] : offsets[row + 1]], weights[offsets[row] : offsets[row + 1]]
-        neighbours, strengths = np.empty(2 * len(own_weights), np.int32), np.empty(2 * len(own_weights))
-        list_neighbours(own_pairs, own_weights, starts, neighbours, strengths)
+        starts, neighbours, strengths = lists_of(offsets, pairs, weights, row, size)
         for shot in range(outcomes.shape[1]):
             spins[:] = incumbents[row]
             if shot > 0:
