@@ -11,13 +11,9 @@ from typing import ClassVar, Literal, Self
 
 import numpy as np
 
-from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import (
     F64,
     I8,
-    I32,
-    I64,
-    U64,
     Balance,
     ClusterBatch,
     Forecast,
@@ -26,16 +22,13 @@ from patchwalk.subsolvers.contract import (
     all_well,
     refuse_oversize,
 )
-from patchwalk.subsolvers.draws import happens, next_unit
-from patchwalk.subsolvers.neighbours import (
-    TIE_CHANCE,
-    edges_of,
-    find_local_fields,
-    list_neighbours,
-    turn,
-    typical_field,
-)
+from patchwalk.subsolvers.lockstep import LANES, room_for_packs
+from patchwalk.subsolvers.metropolis_chains import run_abreast, run_alone
+from patchwalk.subsolvers.neighbours import edges_of, with_matrices
 from patchwalk.subsolvers.uniform import require_shots
+
+SLOW_FROM = 32
+"""From so many spins on one chain takes less time alone than as one of eight, and two do from twice as many on."""
 
 
 @dataclass(frozen=True)
@@ -77,22 +70,20 @@ class Metropolis:
         return "ratio" if self.draw == "boltzmann" and self.shots == 1 else "none"
 
     def prepare(self, sample: ClusterBatch) -> Self:
-        self.propose(sample.rows(0, 1))
+        refuse_oversize(self.name, sample.size, self.max_spins, "a chain inside a cluster")
+        one = with_matrices(sample.rows(0, 1))
+        for alone in (0, self.shots) if one.couplings is not None else (self.shots,):
+            self._run(one, alone)
         return self
 
     def forecast(self, batch: ClusterBatch) -> Forecast:
-        pairs = batch.size**2 if batch.edges is None else 2 * len(batch.edges.weights)
-        return Forecast(bytes=16 * pairs + 32 * batch.size, work=self._work(batch))
+        pairs = 8 * (batch.size + 3) * batch.size if batch.edges is None else 2 * len(batch.edges.weights)
+        return Forecast(bytes=16 * pairs + 48 * batch.size, work=self._work(batch))
 
     def propose(self, batch: ClusterBatch) -> Proposals:
         refuse_oversize(self.name, batch.size, self.max_spins, "a chain inside a cluster")
-        outcomes = np.empty((len(batch), self.shots, batch.size), np.int8)
-        rises = np.empty(len(batch))
-        edges = edges_of(batch)
-        _run_chains(
-            batch.fields, edges.offsets, edges.pairs, edges.weights, batch.spins, batch.seeds, batch.temperature,
-            self.draw == "boltzmann", self.sweeps, self.hot, self.cold, outcomes, rises,
-        )  # fmt: skip
+        batch = with_matrices(batch)
+        outcomes, rises = self._run(batch, self._alone(batch))
         status, messages = all_well(len(batch))
         ratio = None
         if self.balance == "ratio":
@@ -100,77 +91,36 @@ class Metropolis:
             ratio = np.divide(rises, batch.temperature, out=np.full(len(batch), np.nan), where=warm)
         return Proposals(outcomes, self._work(batch), status, messages, log_ratio=ratio)
 
+    def _run(self, batch: ClusterBatch, alone: int) -> tuple[I8, F64]:
+        """Outcomes (B, m, k), and by how much the last shot of each row lies above the incumbent (B,).
+
+        The last ``alone`` chains, which change nothing but the speed, are run one after the other.
+        """
+        outcomes, rises = np.empty((len(batch), self.shots, batch.size), np.int8), np.empty(len(batch))
+        factors = self.hot * (self.cold / self.hot) ** (np.arange(self.sweeps) / max(1, self.sweeps - 1))
+        call = (batch.spins, batch.seeds, batch.temperature, factors, self.draw == "boltzmann")
+        chains = len(batch) * self.shots
+        if alone < chains:
+            assert batch.couplings is not None
+            room = room_for_packs(batch.size * (batch.size + 3))
+            run_abreast((0, chains - alone), batch.fields, batch.couplings, *call, room, outcomes, rises)
+        if alone > 0:
+            first = (chains - alone) // self.shots
+            edges = edges_of(batch.rows(first, len(batch)))
+            couplings = (edges.offsets, edges.pairs, edges.weights)
+            run_alone((chains - alone, chains), batch.fields, couplings, *call, outcomes, rises)
+        return outcomes, rises
+
+    def _alone(self, batch: ClusterBatch) -> int:
+        """How many chains to run one after the other: all where couplings are lists, a few left over from eights."""
+        chains = len(batch) * self.shots
+        if batch.couplings is None:
+            return chains
+        return chains % LANES if chains % LANES <= batch.size // SLOW_FROM else 0
+
     def _work(self, batch: ClusterBatch) -> Work:
         rows = len(batch)
         return Work(
             shots=np.full(rows, self.shots, np.int64),
             spin_updates=np.full(rows, self.shots * self.sweeps * batch.size, np.int64),
         )
-
-
-@compiled
-def _run_chains(
-    fields: F64,
-    offsets: I64,
-    pairs: I32,
-    weights: F64,
-    spins: I8,
-    seeds: U64,
-    temperatures: F64,
-    held: bool,
-    sweeps: int,
-    hot: float,
-    cold: float,
-    outcomes: I8,
-    rises: F64,
-) -> None:
-    """Fill outcomes (B, m, k) and the energy by which the last shot of each row lies above the incumbent (B,)."""
-    rows, size = fields.shape
-    stream = np.empty(1, np.uint64)
-    local, start_local = np.empty(size), np.empty(size)
-    starts = np.empty(size + 1, np.int64)
-    for row in range(rows):
-        stream[0] = seeds[row]
-        own_pairs, own_weights = pairs[offsets[row] : offsets[row + 1]], weights[offsets[row] : offsets[row + 1]]
-        neighbours, strengths = np.empty(2 * len(own_weights), np.int32), np.empty(2 * len(own_weights))
-        list_neighbours(own_pairs, own_weights, starts, neighbours, strengths)
-        find_local_fields(fields[row], spins[row], starts, neighbours, strengths, start_local)
-        scale = typical_field(fields[row], starts, strengths)
-        for shot in range(outcomes.shape[1]):
-            chain = outcomes[row, shot]
-            chain[:] = spins[row]
-            local[:] = start_local
-            rises[row] = 0.0
-            for sweep in range(sweeps):
-                temperature = temperatures[row]
-                if not held:
-                    temperature = scale * hot * (cold / hot) ** (sweep / max(1, sweeps - 1))
-                backwards = held and sweep % 2 == 1
-                rises[row] += _sweep(chain, local, starts, neighbours, strengths, temperature, backwards, stream)
-
-
-@compiled
-def _sweep(
-    chain: I8,
-    local: F64,
-    starts: I64,
-    neighbours: I32,
-    strengths: F64,
-    temperature: float,
-    backwards: bool,
-    stream: U64,
-) -> float:
-    """One sweep in place; ``local`` holds h_i + sum_j J_ij s_j and is kept up to date; returns the energy change."""
-    change = 0.0
-    hopeless, coldness = 40.0 * temperature, 1.0 / temperature
-    for step in range(len(chain)):
-        i = len(chain) - 1 - step if backwards else step
-        rise = -2.0 * chain[i] * local[i]
-        if rise > 0.0:
-            if rise > hopeless or not happens(stream, rise * coldness):
-                continue
-        elif rise == 0.0 and next_unit(stream) >= TIE_CHANCE:
-            continue
-        change += rise
-        turn(i, chain, local, starts, neighbours, strengths)
-    return change
