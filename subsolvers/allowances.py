@@ -15,6 +15,7 @@ import numpy as np
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, U64
 from patchwalk.subsolvers.draws import GOLDEN, combine, mix
+from patchwalk.subsolvers.fused import plus_product
 from patchwalk.subsolvers.neighbours import TIE_CHANCE
 
 TIE_ALLOWANCE = -math.log(TIE_CHANCE)
@@ -66,14 +67,14 @@ def minus_log_of_unit(word: np.uint64) -> float:
     p = power + 1.0 if large else power
     f = (m - 1.0) / (m + 1.0)
     g = f * f
-    series = 1.0 / 19.0 + g * (1.0 / 21.0)
-    series = 1.0 / 17.0 + g * series
-    series = 1.0 / 15.0 + g * series
-    series = 1.0 / 13.0 + g * series
-    series = 1.0 / 11.0 + g * series
-    series = 1.0 / 9.0 + g * series
-    series = 1.0 / 7.0 + g * series
-    series = 1.0 / 5.0 + g * series
-    series = 1.0 / 3.0 + g * series
-    logarithm = 2.0 * f + 2.0 * f * g * series
-    return -(p * 0.6931471805599453 + logarithm)
+    series = plus_product(1.0 / 19.0, g, 1.0 / 21.0)
+    series = plus_product(1.0 / 17.0, g, series)
+    series = plus_product(1.0 / 15.0, g, series)
+    series = plus_product(1.0 / 13.0, g, series)
+    series = plus_product(1.0 / 11.0, g, series)
+    series = plus_product(1.0 / 9.0, g, series)
+    series = plus_product(1.0 / 7.0, g, series)
+    series = plus_product(1.0 / 5.0, g, series)
+    series = plus_product(1.0 / 3.0, g, series)
+    logarithm = 2.0 * plus_product(f, f * g, series)
+    return -plus_product(logarithm, p, 0.6931471805599453)
