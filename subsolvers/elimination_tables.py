@@ -281,9 +281,11 @@ def _close(sums: F64, products: F64, rate: float, tolerance: float, energies: F6
         return
     for x in range(len(energies)):
         rise = down[x] - up[x]
-        energies[x] = up[x] if rise >= 0.0 else down[x]
-        factor = boltzmann_factor(rate * (rise if rise >= 0.0 else -rise))
-        weights[x] = up_weight[x] + factor * down_weight[x] if rise >= 0.0 else down_weight[x] + factor * up_weight[x]
+        falls = rise < 0.0
+        energies[x] = down[x] if falls else up[x]
+        factor = boltzmann_factor(rate * abs(rise))
+        # choosing between two factors and not between two weights, which the compiler would fetch one by one
+        weights[x] = up_weight[x] * (factor if falls else 1.0) + down_weight[x] * (1.0 if falls else factor)
 
 
 @compiled
