@@ -10,6 +10,7 @@ import numpy as np
 
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I64
+from patchwalk.subsolvers.fused import plus_product
 
 TIE_SHARE = 1e-9
 """Two energies of a cluster are tied when they differ by at most this share of the sum of all absolute weights."""
@@ -92,19 +93,19 @@ def boltzmann_factor(exponent: float) -> float:
     shifted = np.float64(capped * -1.4426950408889634 + shift)
     n = shifted - shift
     rest = -capped - n * 0.693145751953125 - n * 1.4286068203094172e-06
-    series = 1.0 + rest / 13.0
-    series = 1.0 + rest * (1.0 / 12.0) * series
-    series = 1.0 + rest * (1.0 / 11.0) * series
-    series = 1.0 + rest * (1.0 / 10.0) * series
-    series = 1.0 + rest * (1.0 / 9.0) * series
-    series = 1.0 + rest * (1.0 / 8.0) * series
-    series = 1.0 + rest * (1.0 / 7.0) * series
-    series = 1.0 + rest * (1.0 / 6.0) * series
-    series = 1.0 + rest * (1.0 / 5.0) * series
-    series = 1.0 + rest * (1.0 / 4.0) * series
-    series = 1.0 + rest * (1.0 / 3.0) * series
-    series = 1.0 + rest * (1.0 / 2.0) * series
-    series = 1.0 + rest * series
+    series = plus_product(1.0 / 479001600.0, rest, 1.0 / 6227020800.0)
+    series = plus_product(1.0 / 39916800.0, rest, series)
+    series = plus_product(1.0 / 3628800.0, rest, series)
+    series = plus_product(1.0 / 362880.0, rest, series)
+    series = plus_product(1.0 / 40320.0, rest, series)
+    series = plus_product(1.0 / 5040.0, rest, series)
+    series = plus_product(1.0 / 720.0, rest, series)
+    series = plus_product(1.0 / 120.0, rest, series)
+    series = plus_product(1.0 / 24.0, rest, series)
+    series = plus_product(1.0 / 6.0, rest, series)
+    series = plus_product(1.0 / 2.0, rest, series)
+    series = plus_product(1.0, rest, series)
+    series = plus_product(1.0, rest, series)
     power_of_two = np.int64((shifted.view(np.int64) + 1023) << 52).view(np.float64)
     return series * power_of_two if exponent < 708.0 else 0.0
 
