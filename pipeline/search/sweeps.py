@@ -7,14 +7,20 @@ spin's neighbours. Metropolis et al., J. Chem. Phys. 21 (1953) 1087.
 from __future__ import annotations
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem
+from patchwalk.search.sweep_colours import LANES, sweep_batches
+from patchwalk.search.sweep_replicas import LaneTables, lane_tables, sweep_side_by_side
+from patchwalk.search.sweep_rows import sweep_matrix
+from patchwalk.search.sweep_tables import Batches, batches_of
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
-from patchwalk.subsolvers.draws import happens, next_unit, stream_for
+from patchwalk.subsolvers.draws import MASK, happens, next_unit
+from patchwalk.subsolvers.lanes_decisions import coldness_at
 from patchwalk.subsolvers.neighbours import TIE_CHANCE, turn
 
 
@@ -22,41 +28,80 @@ from patchwalk.subsolvers.neighbours import TIE_CHANCE, turn
 class Carrier:
     """Sweeps over one problem, in the representation that suits its couplings. Made by :func:`carrier_for`.
 
-    It keeps nothing between calls: what a call does depends on its arguments alone, and calls may run in several
-    threads at once (kernels run without the interpreter lock). ``sweeps=0`` compiles and changes nothing.
+    ``representation`` is how a single replica is swept:
+
+    - ``"colours"``: batches of spins that do not touch, decided in lanes (``sweep_colours``);
+    - ``"matrix"``: in order, decided a row of lanes ahead, with rows of a full matrix (``sweep_rows``);
+    - ``"lists"``: in order, one by one (:func:`metropolis_sweep`).
+
+    Replicas together are swept in lanes whatever the problem (``sweep_replicas``); one replica among them takes
+    another path than :meth:`sweep` takes from the same seed, though of the same law. What a call does depends on its
+    arguments alone, and calls may run in several threads at once (kernels run without the interpreter lock).
+    ``sweeps=0`` compiles and flips nothing.
     """
 
     problem: Problem
+    batches: Batches
+    representation: str
 
     def sweep(self, spins: I8, local_fields: F64, temperature: float, seed: int, sweeps: int = 1) -> float:
         """Sweep one replica in place; returns the energy change.
 
-        ``spins`` i8 (n,) and their ``local_fields`` f64 (n,), h_i + sum_j J_ij s_j, are both brought up to date;
+        ``spins`` i8 (n,) and their ``local_fields`` f64 (n,), h_i + sum_j J_ij s_j, are both carried along;
         ``temperature`` in energy units, 0 allowed.
         """
-        problem, stream = self.problem, stream_for(seed)
+        problem, start = self.problem, np.uint64(seed & MASK)
+        cold = coldness_at(temperature)
+        if self.representation == "colours":
+            return sweep_batches(
+                self.batches.order, self.batches.starts, problem.row_starts, problem.neighbours.view(np.uint32),
+                problem.couplings, spins, local_fields, cold, start, sweeps,
+            )  # fmt: skip
+        if self.representation == "matrix":
+            return sweep_matrix(self._matrix, spins, local_fields, cold, start, sweeps)
+        graph, stream = (problem.row_starts, problem.neighbours, problem.couplings), np.array([start])
         change = 0.0
         for _ in range(sweeps):
-            change += metropolis_sweep(
-                problem.row_starts, problem.neighbours, problem.couplings, spins, local_fields, temperature, stream
-            )
+            change += metropolis_sweep(*graph, spins, local_fields, float(temperature), stream)
         return change
 
-    def sweep_replicas(self, spins: I8, local_fields: F64, temperatures: F64, seeds: U64, sweeps: int = 1) -> F64:
+    def sweep_replicas(
+        self, spins: I8, local_fields: F64 | None, temperatures: F64, seeds: U64, sweeps: int = 1
+    ) -> F64:
         """Sweep R replicas in place, each at its own temperature; returns their energy changes f64 (R,).
 
-        ``spins`` i8 (R, n), ``local_fields`` f64 (R, n), ``temperatures`` f64 (R,), ``seeds`` u64 (R,). What becomes
-        of a replica depends on its own row alone, to the last bit, whatever the others are.
+        ``spins`` i8 (R, n), ``temperatures`` f64 (R,), ``seeds`` u64 (R,). ``local_fields`` f64 (R, n) are filled in
+        afresh from the spins, once, at the end, to the bit what ``Problem.local_fields`` gives: that takes about as
+        long as two sweeps, and None leaves it out. What becomes of a replica depends on its own row alone, to the
+        last bit, whatever the others are. Works on 16 or 32 replicas at a time: 1 takes as long as 16, 17 as 32.
         """
-        return np.array([
-            self.sweep(spins[row], local_fields[row], float(temperatures[row]), int(seeds[row]), sweeps)
-            for row in range(len(spins))
-        ])  # fmt: skip
+        return sweep_side_by_side(
+            self.problem, self._lane_tables, spins, local_fields, temperatures, seeds, sweeps
+        )  # fmt: skip
+
+    @cached_property
+    def _matrix(self) -> F64:
+        return self.problem.matrix.toarray()
+
+    @cached_property
+    def _lane_tables(self) -> LaneTables:
+        return lane_tables(self.problem, self.batches)
 
 
 def carrier_for(problem: Problem) -> Carrier:
-    """The carrier of a problem, to be made once: how it represents the couplings depends on their structure alone."""
-    return Carrier(problem)
+    """The carrier of a problem, to be made once. How it represents the couplings depends on counts alone.
+
+    Colours where their batches fill at least a quarter of the lanes, else a full matrix where it takes at most eight
+    times the memory of the couplings' lists, else the lists.
+
+    >>> carrier_for(Problem.from_arrays(range(100), [*range(1, 100), 0], [1.0] * 100)).representation
+    'colours'
+    """
+    batches = batches_of(problem)
+    if 4 * len(problem) >= LANES * batches.rows_of(LANES):
+        return Carrier(problem, batches, "colours")
+    affordable = len(problem) ** 2 <= 12 * len(problem.couplings)
+    return Carrier(problem, batches, "matrix" if affordable else "lists")
 
 
 @compiled

@@ -7,7 +7,7 @@ import pytest
 
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
-from patchwalk.search.sweeps import carrier_for, descend, flip_accepted, metropolis_sweep
+from patchwalk.search.sweeps import descend, flip_accepted, metropolis_sweep
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers.contract import F64, I8
 from patchwalk.subsolvers.draws import stream_for
@@ -35,24 +35,6 @@ def test_energy_and_local_fields_are_kept(family: str, temperature: float) -> No
         if temperature == 0.0:
             assert change <= 0.0
     np.testing.assert_allclose(local, problem.local_fields(spins), atol=1e-9)
-
-
-@pytest.mark.parametrize("family", ["lattice2d", "sk"])
-@pytest.mark.parametrize("temperature", [0.0, 0.5, 3.0])
-def test_a_carrier_keeps_the_books_of_every_replica(family: str, temperature: float) -> None:
-    problem = make(family, 12, seed=4)
-    carrier = carrier_for(problem)
-    starts = [begin(problem, seed) for seed in range(5)]
-    spins, local = (np.stack(part) for part in zip(*starts, strict=True))
-    seeds, temperatures = np.arange(5, dtype=np.uint64), np.full(5, temperature)
-    changes = carrier.sweep_replicas(spins, local, temperatures, seeds, 20)
-    for row, (own, own_local) in enumerate(starts):
-        assert changes[row] == pytest.approx(problem.energy(spins[row]) - problem.energy(own), abs=1e-9)
-        np.testing.assert_allclose(local[row], problem.local_fields(spins[row]), atol=1e-9)
-        before = problem.energy(own)
-        change = carrier.sweep(own, own_local, temperature, row, 20)
-        assert change == pytest.approx(problem.energy(own) - before, abs=1e-9)
-        np.testing.assert_allclose(own_local, problem.local_fields(own), atol=1e-9)
 
 
 def test_sweeps_sample_the_boltzmann_law() -> None:
