@@ -1,6 +1,6 @@
 """How an anneal answers a batch: its schedule scaled to every cluster, evolved, measured, forecast.
 
-Noise: noise.py, as far as noisy_anneal.py follows it.
+Calls with noise are answered in noisy_anneal.py.
 """
 
 from __future__ import annotations
@@ -16,6 +16,7 @@ from patchwalk.subsolvers.contract import (
     F64,
     I8,
     I64,
+    U8,
     ClusterBatch,
     Forecast,
     Proposals,
@@ -52,34 +53,37 @@ class Anneal(AnnealSettings):
 
     def quiet_forecast(self, batch: ClusterBatch) -> Forecast:
         """The forecast of :meth:`measured` where no laws are kept."""
-        schedule, time_scale, a_scale = self._checked(batch)
-        legs, knots = schedules.legs_array(schedule), np.zeros((1, 2, 3))
+        schedule, time_scale, a_scale = self.scaled_schedule(batch)
+        legs, half_widths = self.stand_ins(batch, schedule)
+        _, passes = self._planned(batch, half_widths, legs, np.zeros((1, 2, 3)), time_scale, a_scale)
+        bytes_needed = workspace_bytes(1 << batch.size) + len(batch) * self.shots * (batch.size + 8)
+        return Forecast(bytes=bytes_needed, work=self.work(batch, passes, schedule.duration * time_scale))
+
+    def stand_ins(self, batch: ClusterBatch, schedule: schedules.Schedule) -> tuple[F64, F64]:
+        """Legs (L, 7) without curves of one's own, and half the expected span of the levels (B,): for forecasts."""
+        assert batch.couplings is not None
+        legs, half_widths = schedules.legs_array(schedule), np.empty(len(batch))
         if schedule.needs_gap:  # not found for a forecast: a search among a few dozen stands in
             legs[:, -1] = schedules.search_angle(32)
-        assert batch.couplings is not None
-        half_widths = np.empty(len(batch))
         heuristic_hopping(batch.fields, batch.couplings, level_spread(batch.size), half_widths)
-        half_widths *= batch.size  # half the expected span of the levels
-        _, passes = self._planned(batch, half_widths, legs, knots, time_scale, a_scale)
-        bytes_needed = workspace_bytes(1 << batch.size) + len(batch) * self.shots * (batch.size + 8)
-        return Forecast(bytes=bytes_needed, work=self._work(batch, passes, schedule.duration * time_scale))
+        return legs, half_widths * batch.size
 
     def measured(self, batch: ClusterBatch, acting: ClusterBatch, laws: F64 | None = None) -> Proposals:
         """Anneals of ``acting`` at the rates of ``batch``; the two differ where controls are imperfect.
 
         ``laws`` f64 (B, 1, 2^k) receives the law of every call, where it is given.
         """
-        schedule, time_scale, _ = self._checked(batch)
+        schedule, time_scale, _ = self.scaled_schedule(batch)
         outcomes = np.empty((len(batch), self.shots, batch.size), np.int8)
         ends = schedule.duration * time_scale
         laws = np.empty((1, 1, 1 << batch.size)) if laws is None else laws
         hit, errors, passes = self._run(batch, ends[:, None], laws, outcomes, acting)
-        late = errors > self.tolerance
+        status, messages = self.verdicts(errors)
         return Proposals(
             outcomes,
-            self._work(batch, passes, ends),
-            np.where(late, Status.TRUNCATED, Status.OK).astype(np.uint8),
-            tuple(self._excuse(error) if bad else "" for error, bad in zip(errors, late, strict=True)),
+            self.work(batch, passes, ends),
+            status,
+            messages,
             times=np.repeat(ends[:, None], self.shots, axis=1),
             hit_probability=hit,
             noiseless_hit=hit,
@@ -87,16 +91,24 @@ class Anneal(AnnealSettings):
 
     def distribution(self, batch: ClusterBatch) -> F64:
         """The law of one shot without noise: f64 (B, 2^k)."""
-        return self._final_laws(batch, batch)
+        return self.final_laws(batch, batch)
 
     def noisy_distribution(self, batch: ClusterBatch) -> F64:
-        """The same with the noise of each call's own seed: f64 (B, 2^k)."""
+        """The same with the noise of each call's own seed: f64 (B, 2^k).
+
+        Raises ``ValueError`` where only samples are known: dephasing of more than 4 spins.
+        """
+        from patchwalk.subsolvers.noisy_anneal import known_laws
+
         refuse_oversize(self.name, batch.size, self.max_spins, "exact simulation (2^k amplitudes)")
-        laws = self._final_laws(batch, self.noise.disturbed(batch))
+        laws, _ = known_laws(self, batch, self.noise.disturbed(batch))
+        if laws is None:
+            raise ValueError(f"{self.name}: the law of {batch.size} dephased spins is only sampled; use propose")
         return np.stack([self.noise.law_as_read(law) for law in laws])
 
-    def _final_laws(self, batch: ClusterBatch, acting: ClusterBatch) -> F64:
-        schedule, time_scale, _ = self._checked(batch)
+    def final_laws(self, batch: ClusterBatch, acting: ClusterBatch) -> F64:
+        """Laws f64 (B, 2^k) of one shot before it is read, without dephasing, where ``acting`` acts as ``batch``."""
+        schedule, time_scale, _ = self.scaled_schedule(batch)
         laws = np.empty((len(batch), 1, 1 << batch.size))
         self._run(batch, (schedule.duration * time_scale)[:, None], laws, acting=acting)
         return laws[:, 0]
@@ -106,7 +118,7 @@ class Anneal(AnnealSettings):
 
         Raises ``ValueError`` for times outside the anneal.
         """
-        schedule, time_scale, _ = self._checked(batch)
+        schedule, time_scale, _ = self.scaled_schedule(batch)
         moments = np.atleast_1d(np.ascontiguousarray(times, np.float64))
         shortest = float((schedule.duration * time_scale).min())
         if moments.ndim != 1 or not moments.size or not np.all((moments >= 0) & (moments <= shortest * (1 + 1e-12))):
@@ -117,30 +129,42 @@ class Anneal(AnnealSettings):
         return laws[:, np.argsort(order)]
 
     def estimated_errors(self, batch: ClusterBatch) -> F64:
-        """The estimates (B,), for each call, of the total variation distance between its law and the exact one."""
-        schedule, time_scale, a_scale = self._checked(batch)
-        legs, knots = schedules.legs_array(schedule), self._knots(batch, schedule, a_scale)
+        """The estimates (B,), for each call, of the total variation distance between its law and the exact one.
+
+        With dephasing the largest of its shots, each given the jumps that its seed draws.
+        """
+        if self.noise.dephasing > 0.0:
+            from patchwalk.subsolvers.noisy_anneal import trajectory_errors
+
+            return trajectory_errors(self, batch, self.noise.disturbed(batch))
+        schedule, time_scale, a_scale = self.scaled_schedule(batch)
+        legs, knots = schedules.legs_array(schedule), self.knots(batch, schedule, a_scale)
         acting = self.noise.disturbed(batch)
         return self._planned(acting, np.empty(0), legs, knots, time_scale, a_scale)[0]
 
     @property
-    def _mover(self) -> int:
+    def mover(self) -> int:
+        """The driver as a number, for kernels."""
         return DRIVERS.index(self.driver)
 
-    def _checked(self, batch: ClusterBatch) -> tuple[schedules.Schedule, F64, F64]:
+    def scaled_schedule(self, batch: ClusterBatch) -> tuple[schedules.Schedule, F64, F64]:
         """The schedule and its scales (B,) of time and A, once the batch is known to fit."""
         refuse_oversize(self.name, batch.size, self.max_spins, "exact simulation (2^k amplitudes)")
+        schedule = self.schedule_for(batch.size)
+        return schedule, *schedule.scales(self.rates(batch), hop_scale(self.mover, batch.size))
+
+    def rates(self, batch: ClusterBatch) -> F64:
+        """Hopping rates (B,) in energy units."""
         assert batch.couplings is not None
         rates = np.empty(len(batch))
         if self.hopping == "heuristic":
             heuristic_hopping(batch.fields, batch.couplings, level_spread(batch.size), rates)
-            rates *= hop_scale(self._mover, batch.size)
+            rates *= hop_scale(self.mover, batch.size)
         else:
             rates[:] = self.hopping
-        schedule = self.schedule_for(batch.size)
-        return schedule, *schedule.scales(rates * self.hopping_factor, hop_scale(self._mover, batch.size))
+        return rates * self.hopping_factor
 
-    def _knots(self, batch: ClusterBatch, schedule: schedules.Schedule, a_scale: F64) -> F64:
+    def knots(self, batch: ClusterBatch, schedule: schedules.Schedule, a_scale: F64) -> F64:
         """Curves (B, K, 3) of every cluster, or a single empty one where the schedule needs none."""
         if not schedule.needs_gap:
             return np.zeros((1, 2, 3))
@@ -160,7 +184,7 @@ class Anneal(AnnealSettings):
         assert batch.couplings is not None
         errors, passes = np.empty(len(batch)), np.empty(len(batch), np.int64)
         plan_rows(
-            batch.fields, batch.couplings, half_widths, self._mover, legs, knots, time_scale, a_scale,
+            batch.fields, batch.couplings, half_widths, self.mover, legs, knots, time_scale, a_scale,
             self.tolerance, self.most_steps, errors, passes,
         )  # fmt: skip
         return errors, passes
@@ -178,21 +202,21 @@ class Anneal(AnnealSettings):
         What evolves is ``acting``, the batch itself where it is left out, on schedules that are made for ``batch``.
         Fills ``laws`` (B, M, 2^k), or uses it over and over where it has one row, and ``outcomes`` (B, m, k).
         """
-        schedule, time_scale, a_scale = self._checked(batch)
+        schedule, time_scale, a_scale = self.scaled_schedule(batch)
         acting = acting or batch
         assert acting.couplings is not None
         if outcomes is None:
             outcomes = np.empty((len(batch), 0, batch.size), np.int8)
         hit, errors, passes = np.empty(len(batch)), np.empty(len(batch)), np.empty(len(batch), np.int64)
         anneal_rows(
-            acting.fields, acting.couplings, batch.spins, batch.seeds, self.from_incumbent, self._mover,
-            schedules.legs_array(schedule), self._knots(batch, schedule, a_scale), time_scale, a_scale,
+            acting.fields, acting.couplings, batch.spins, batch.seeds, self.from_incumbent, self.mover,
+            schedules.legs_array(schedule), self.knots(batch, schedule, a_scale), time_scale, a_scale,
             self.tolerance, self.most_steps, np.ascontiguousarray(times),
             laws, outcomes, hit, errors, passes,
         )  # fmt: skip
         return hit, errors, passes
 
-    def _work(self, batch: ClusterBatch, passes: I64, durations: F64) -> Work:
+    def work(self, batch: ClusterBatch, passes: I64, durations: F64) -> Work:
         rows = len(batch)
         return Work(
             shots=np.full(rows, self.shots, np.int64),
@@ -201,8 +225,13 @@ class Anneal(AnnealSettings):
             energies=np.full(rows, 1 << batch.size, np.int64),
         )
 
-    def _excuse(self, error: float) -> str:
-        return (
+    def verdicts(self, errors: F64) -> tuple[U8, tuple[str, ...]]:
+        """Status (B,) and messages of calls whose laws may be off by these errors (B,)."""
+        late = errors > self.tolerance
+        return np.where(late, Status.TRUNCATED, Status.OK).astype(np.uint8), tuple(
             f"{self.name}: the law may be off by {error:.1e} in total variation, {self.tolerance:.1e} was asked for; "
             "raise most_steps, or tolerance"
+            if bad
+            else ""
+            for error, bad in zip(errors, late, strict=True)
         )

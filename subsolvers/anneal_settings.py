@@ -27,9 +27,9 @@ class AnnealSettings:
     independently from the law at the end. ``tolerance`` bounds the total variation distance of that law to the exact
     one; a call whose estimate is above it is ``TRUNCATED``. On curved schedules ``most_steps`` limits what it may cost.
 
-    ``control_error``, ``precision_bits`` and ``readout_flip`` are the noise of a device (noise.py), off unless given;
-    ``dephasing`` is refused, which only walks can follow. Schedules are those of the cluster as it was meant.
-    :meth:`laws` and :meth:`distribution` stay without noise; :meth:`noisy_distribution` has it.
+    ``dephasing``, ``control_error``, ``precision_bits`` and ``readout_flip`` are the noise of a device (noise.py), off
+    unless given. Schedules are those of the cluster as it was meant. ``laws`` and ``distribution`` stay without noise;
+    ``noisy_distribution`` has it.
     """
 
     duration: float | None = None
@@ -75,11 +75,6 @@ class AnnealSettings:
         whole = isinstance(self.most_steps, int) and not isinstance(self.most_steps, bool)
         self._require("most_steps", whole and 1 <= self.most_steps <= 10_000_000, "a whole number from 1 to 10,000,000")
         object.__setattr__(self, "noise", noise_of(self))
-        if self.noise.dephasing > 0.0:
-            raise ValueError(
-                f"{self.name}: dephasing is {self.dephasing!r}; trajectories are followed at constant fields only: "
-                "leave it at 0, or use the subsolver walk"
-            )
 
     def _require(self, key: str, good: bool, wanted: str) -> None:
         if not good:

@@ -6,7 +6,7 @@ more kind of noise changes none of the other draws. A subsolver that can be nois
 ``dephasing``
     Z jumps per spin and hop (a hop is 1/hopping on the hypercube): d rho/dt = -i [H, rho] + rate * sum_i (Z_i rho Z_i
     - rho), under which the coherence of two configurations at Hamming distance d decays as exp(-2 rate d t). It is
-    simulated by quantum trajectories (trajectories.py).
+    simulated by quantum trajectories (trajectories.py, anneal_trajectories.py).
 ``control_error``
     Standard deviation of a Gaussian relative error of every field and coupling, drawn anew for every call.
 ``precision_bits``

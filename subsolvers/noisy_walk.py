@@ -14,17 +14,12 @@ import numpy as np
 import numpy.typing as npt
 
 from patchwalk.subsolvers.contract import F64, I64, ClusterBatch, Forecast, Proposals, Work
+from patchwalk.subsolvers.density import MATRIX_SPINS, constant_steps, density_updates, dephased_laws
 from patchwalk.subsolvers.drivers import driver_range, hop_scale, weight_sums
 from patchwalk.subsolvers.hamiltonian import times_together
 from patchwalk.subsolvers.precision import Plan, applications_needed, double_error
 from patchwalk.subsolvers.propagate import level_table, new_workspace
-from patchwalk.subsolvers.trajectories import (
-    MATRIX_SPINS,
-    dephased_laws,
-    dephased_shots,
-    matrix_updates,
-    plan_trajectories,
-)
+from patchwalk.subsolvers.trajectories import dephased_shots, plan_trajectories
 
 if TYPE_CHECKING:
     from patchwalk.subsolvers.walk import Walk
@@ -57,8 +52,8 @@ def known_laws(walk: Walk, batch: ClusterBatch, acting: ClusterBatch) -> tuple[F
     jump_rates = _jump_rates(walk, plan, batch.size)
     for row in range(len(batch)):
         levels, origin = level_table(acting.fields[row], acting.couplings[row]), walk.origin(batch, row)
-        at_times = dephased_laws(levels, plan.rates[row], plan.driver, origin, plan.times[row], jump_rates[row])
-        laws[row] = at_times.mean(axis=0)
+        steps = constant_steps(plan.rates[row], np.sort(plan.times[row]))
+        laws[row] = dephased_laws(levels, plan.driver, steps, origin, jump_rates[row]).mean(axis=0)
     return laws, _matrix_work(acting, plan, jump_rates)
 
 
@@ -142,8 +137,14 @@ def _trajectories(walk: Walk, batch: ClusterBatch, acting: ClusterBatch, plan: P
 
 
 def _matrix_work(acting: ClusterBatch, plan: Plan, jump_rates: F64) -> I64:
-    norms = 2.0 * _half_widths(acting, plan) + 2.0 * jump_rates * acting.size
-    return matrix_updates(acting.size, norms, plan.times)
+    """Amplitude updates (B,) of the density matrices, from a bound of the levels."""
+    assert acting.couplings is not None
+    resting, updates = np.empty(len(acting)), np.empty(len(acting), np.int64)
+    weight_sums(acting.fields, acting.couplings, resting)
+    for row in range(len(acting)):
+        steps = constant_steps(plan.rates[row], np.sort(plan.times[row]))
+        updates[row] = density_updates(acting.size, plan.driver, resting[row], steps, jump_rates[row])
+    return updates
 
 
 def _law_work(walk: Walk, batch: ClusterBatch, acting: ClusterBatch) -> tuple[I64, int]:

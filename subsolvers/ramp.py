@@ -118,7 +118,7 @@ def _sweep_plainly(
 
 
 @compiled
-def _advance(diagonal: F64, mover: int, step: F64, adding_up: bool, rooms: F64, real: F64, imaginary: F64) -> None:
+def take_step(diagonal: F64, mover: int, step: F64, adding_up: bool, rooms: F64, real: F64, imaginary: F64) -> None:
     """Take the state in ``real`` and ``imaginary`` through one step; ``rooms`` is workspace free of nan.
 
     When ``adding_up``, by terms (-ih/(n+1)) (early term[n] + h forth term[n-1]), with H(t) = early + (t - begin) *
@@ -229,7 +229,17 @@ def centre_of(diagonal: F64, centred: F64) -> tuple[float, float]:
 
 
 @compiled
-def _leg_at(legs: F64, time: float) -> int:
+def start_from(start: int, real: F64, imaginary: F64) -> None:
+    """Write the configuration with this number as a state, or the uniform superposition."""
+    imaginary[:] = 0.0
+    real[:] = math.sqrt(1.0 / len(real)) if start < 0 else 0.0
+    if start >= 0:
+        real[start] = 1.0
+
+
+@compiled
+def leg_at(legs: F64, time: float) -> int:
+    """The leg that goes on from this time."""
     for number in range(len(legs)):
         if time < legs[number, END]:
             return number
@@ -251,24 +261,19 @@ def follow_steps(
     peak, partial = np.empty(1), np.empty(7)
     stride = _stride(size)
     here_real, here_imaginary = rooms[6 * stride :][:size], rooms[7 * stride :][:size]
-    here_imaginary[:] = 0.0
-    if start < 0:
-        here_real[:] = math.sqrt(1.0 / size)
-    else:
-        here_real[:] = 0.0
-        here_real[start] = 1.0
+    start_from(start, here_real, here_imaginary)
     done, passes = 0, 0
     for row in range(len(times)):
         while done < len(steps) and steps[done, END] <= times[row]:
-            _advance(centred, mover, steps[done], adds_up(steps[done], legs), rooms, here_real, here_imaginary)
+            take_step(centred, mover, steps[done], adds_up(steps[done], legs), rooms, here_real, here_imaginary)
             passes += int(steps[done, PASSES])
             done += 1
         copy_into(here_real, real[row])
         copy_into(here_imaginary, imaginary[row])
         if done < len(steps) and steps[done, BEGIN] < times[row]:
-            leg = legs[_leg_at(legs, steps[done, BEGIN])]
+            leg = legs[leg_at(legs, steps[done, BEGIN])]
             straighten(leg, knots, steps[done, BEGIN], times[row], partial)
             adding_up = adds_up(partial, legs)
             passes += count_passes(partial, adding_up, moving, half_width, shape, neglected, peak)
-            _advance(centred, mover, partial, adding_up, rooms, real[row], imaginary[row])
+            take_step(centred, mover, partial, adding_up, rooms, real[row], imaginary[row])
     return passes

@@ -172,7 +172,7 @@ def _bend_error(leg: F64, knots: F64, begin: float, end: float, changes: F64) ->
 
 
 @compiled
-def _passes(reach: float, reach_back: float, length: float, neglected: float, peak: F64) -> int:
+def series_passes(reach: float, reach_back: float, length: float, neglected: float, peak: F64) -> int:
     """Terms after which the rest of the series is below ``neglected``; ``peak`` receives its largest term.
 
     The norms of its terms are at most those of exp(reach * s + reach_back * s^2 / (2 length)) at s = length.
@@ -201,7 +201,7 @@ def count_passes(
         else norm_bound(step[A_END], step[B_END], moving, half_width, shape)
     )
     change = norm_bound(step[A_BEGIN] - step[A_END], step[B_BEGIN] - step[B_END], moving, half_width, shape)
-    passes = _passes(near, change, step[END] - step[BEGIN], neglected, peak)
+    passes = series_passes(near, change, step[END] - step[BEGIN], neglected, peak)
     step[PASSES] = passes
     return passes
 
@@ -228,14 +228,15 @@ def plan_steps(
     ``diagonal`` f64 (N,) may be empty, in which case changes under a flip are taken for ``half_width / 2``: a forecast
     from the spread alone. ``neglected`` is what all series together may leave out. Curved legs get at most
     ``most_steps`` steps each by the wish for accuracy. ``report`` receives an estimate of the error of the final
-    state, of which the total variation of the law is at most as large, and the passes in all.
+    state, of which the total variation of the law is at most as large, the passes in all, and the part of the error
+    that straightened curves make.
     """
     moving = moving_norm(size, mover)
     total = legs[-1, END] - legs[0, BEGIN]
     changes, peak = np.zeros(2), np.empty(1)
     steps = np.empty((16, 7))
     count = 0
-    report[0] = report[1] = 0.0
+    report[0] = report[1] = report[2] = 0.0
     for number in range(len(legs)):
         leg = legs[number]
         duration = leg[END] - leg[BEGIN]
@@ -271,7 +272,7 @@ def plan_steps(
                 end = begin + length
                 if end >= leg[END] - 1e-9 * duration:
                     end, done = leg[END], pieces
-                report[0] += _bend_error(leg, knots, begin, end, changes)
+                report[2] += _bend_error(leg, knots, begin, end, changes)
                 following = min(duration / pieces, 2.0 * length)
             else:
                 done += 1
@@ -289,4 +290,5 @@ def plan_steps(
             report[0] += left_out + ROUNDING * (peak[0] + step[PASSES])
             count += 1
             begin, length = end, following
+    report[0] += report[2]
     return steps[:count]

@@ -4,7 +4,7 @@ Z is unitary, so jumps come at a constant rate, whatever the state (Dalibard, Ca
 spins with ``jump_rate`` each wait exponentially long between jumps, and each jump strikes any spin alike. Averaged
 over trajectories that is d rho/dt = -i [H, rho] + jump_rate * sum_i (Z_i rho Z_i - rho), exactly. Between jumps the
 state moves by the Chebyshev series of propagate.py, once for its real part and, after the first jump, once for its
-imaginary part; always in double precision. For a few spins the density matrix itself is followed.
+imaginary part; always in double precision. For a few spins density.py has the law itself.
 """
 
 from __future__ import annotations
@@ -17,7 +17,6 @@ from patchwalk.subsolvers.coefficients import DOUBLE_DECAY, series_coefficients,
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I64, U64
 from patchwalk.subsolvers.draws import combine, next_below, next_unit
-from patchwalk.subsolvers.drivers import DRIVERS, driver_matrix
 from patchwalk.subsolvers.hamiltonian import advance, advance_few, aligned, held_vectors, padded
 from patchwalk.subsolvers.lanes import width_in
 from patchwalk.subsolvers.outcomes import CHUNK, draw_number, sum_chunks
@@ -26,12 +25,6 @@ from patchwalk.subsolvers.spectrum import cluster_energies, configuration_number
 
 JUMPS = np.uint64(0x2A)
 """The word that tells a call's stream of jumps apart from its others."""
-
-MATRIX_SPINS = 4
-"""Largest cluster whose density matrix is followed, for milliseconds a call."""
-
-LONGEST, POWERS = 4.0, 32
-"""Norm of a step of the density matrix, and the powers of its series: what is left out is below 1e-15."""
 
 
 @compiled
@@ -194,81 +187,3 @@ def plan_trajectories(
                     next_below(jumps, spins)
                     here = there
             pieces[row] = max(pieces[row], count)
-
-
-def dephased_laws(diagonal: F64, hopping: float, driver: int, start: int, times: F64, jump_rate: float) -> F64:
-    """Laws f64 (M, N) at ``times`` (M,), averaged over all trajectories: the diagonal of the density matrix.
-
-    ``diagonal`` f64 (N,) and ``hopping`` are energies, ``jump_rate`` is per spin and 1/energy; ``start`` is a
-    configuration's number, or -1 for the uniform superposition.
-    """
-    size = len(diagonal)
-    spins = size.bit_length() - 1
-    numbers = np.arange(size)
-    distances = ((numbers[:, None] ^ numbers[None, :])[:, :, None] >> np.arange(spins) & 1).sum(axis=2)
-    centre, half_width, _ = scale_spectrum(diagonal, driver, hopping, np.empty_like(diagonal))
-    matrix = -hopping * driver_matrix(DRIVERS[driver], spins) + np.diag(diagonal - centre)
-    fade = 2.0 * jump_rate * distances.astype(np.float64)
-    rho = np.full((size, size), 1.0 / size)
-    if start != UNIFORM:
-        rho[:] = 0.0
-        rho[start, start] = 1.0
-    laws, order = np.empty((len(times), size)), np.argsort(times, kind="stable")
-    _follow_matrix(matrix, fade, 2.0 * half_width + 2.0 * jump_rate * spins, times[order], rho, laws)
-    return laws[np.argsort(order)]
-
-
-@compiled
-def _follow_matrix(matrix: F64, fade: F64, norm: float, times: F64, real: F64, laws: F64) -> None:
-    """Leave the diagonal of the density matrix, at first ``real``, at each of the rising times in ``laws``.
-
-    Its Taylor series in steps over which the generator, of at most this norm, acts with LONGEST at most. With P = H
-    term, the commutator is P less its adjoint, as every term is Hermitian.
-    """
-    size, here = len(real), 0.0
-    term, product = np.empty((2, size, size)), np.empty((2, size, size))
-    imaginary = np.zeros((size, size))
-    for moment in range(len(times)):
-        steps = max(1, math.ceil(norm * (times[moment] - here) / LONGEST))
-        length = (times[moment] - here) / steps
-        for _ in range(steps):
-            for x in range(size):
-                for y in range(size):
-                    term[0, x, y], term[1, x, y] = real[x, y], imaginary[x, y]
-            for power in range(1, POWERS):
-                _multiply(matrix, term[0], product[0])
-                _multiply(matrix, term[1], product[1])
-                for x in range(size):
-                    for y in range(size):
-                        onwards = product[1, x, y] + product[1, y, x] - fade[x, y] * term[0, x, y]
-                        sideways = product[0, y, x] - product[0, x, y] - fade[x, y] * term[1, x, y]
-                        term[0, x, y], term[1, x, y] = length / power * onwards, length / power * sideways
-                        real[x, y] += term[0, x, y]
-                        imaginary[x, y] += term[1, x, y]
-        here = times[moment]
-        for number in range(size):
-            laws[moment, number] = max(0.0, real[number, number])
-
-
-@compiled
-def _multiply(left: F64, right: F64, product: F64) -> None:
-    """product <- left right, without the zeros of the left one."""
-    size = len(left)
-    for x in range(size):
-        for y in range(size):
-            product[x, y] = 0.0
-        for z in range(size):
-            if left[x, z] != 0.0:
-                for y in range(size):
-                    product[x, y] += left[x, z] * right[z, y]
-
-
-def matrix_updates(spins: int, norms: F64, times: F64) -> I64:
-    """Amplitude updates (B,) of :func:`dephased_laws`: every application of H to a matrix is one for each column.
-
-    ``norms`` (B,) are bounds of the generator, ``times`` (B, M) the measuring times.
-    """
-    pieces = np.diff(np.sort(times, axis=1), axis=1, prepend=0.0)
-    steps = np.maximum(1, np.ceil(norms[:, None] * pieces / LONGEST)).sum(axis=1)
-    updates: I64 = (steps * (POWERS - 1)).astype(np.int64) << 2 * spins
-    return updates

@@ -19,13 +19,14 @@ from scipy.stats import chi2, kstest, norm
 from patchwalk.subsolvers import ClusterBatch, make_subsolver
 from patchwalk.subsolvers.conformance import check
 from patchwalk.subsolvers.contract import F64
+from patchwalk.subsolvers.density import MATRIX_SPINS
 from patchwalk.subsolvers.draws import next_below, seed_for
 from patchwalk.subsolvers.drivers import DRIVERS, driver_matrix, heuristic_hopping, level_spread
 from patchwalk.subsolvers.hamiltonian import aligned, padded
 from patchwalk.subsolvers.noise import CONTROL
 from patchwalk.subsolvers.precision import SINGLE_FROM
 from patchwalk.subsolvers.propagate import new_workspace, scale_spectrum
-from patchwalk.subsolvers.trajectories import MATRIX_SPINS, follow_trajectory, next_jump
+from patchwalk.subsolvers.trajectories import follow_trajectory, next_jump
 from patchwalk.subsolvers.walk import Walk
 
 FALSE_ALARM = 1e-6

@@ -26,7 +26,7 @@ def amplitudes_at(
     mover: int = HYPERCUBE, tolerance: float = 1e-6, most_steps: int = 100_000, neglected: float | None = None,
 ) -> tuple[npt.NDArray[np.complex128], F64, F64]:  # fmt: skip
     """Amplitudes (M, N) at the times (by default the end), the steps, and the report of their planning."""
-    table, report, centred = np.array(legs, float), np.empty(2), np.empty(len(diagonal))
+    table, report, centred = np.array(legs, float), np.empty(3), np.empty(len(diagonal))
     left_out = 0.25 * tolerance if neglected is None else neglected
     _, half_width = centre_of(diagonal, centred)
     rooms, shape = make_rooms(len(diagonal)), np.empty(5)
