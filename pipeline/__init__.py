@@ -9,6 +9,8 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from patchwalk.commands.resuming import resume
+    from patchwalk.commands.sampling import sample
     from patchwalk.commands.solving import Solution, solve
     from patchwalk.problem.families import make
     from patchwalk.problem.files import read_problem, write_problem
@@ -19,12 +21,14 @@ _HOMES = {
     "ProblemError": "patchwalk.problem.ising",
     "Solution": "patchwalk.commands.solving",
     "make": "patchwalk.problem.families",
+    "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
+    "sample": "patchwalk.commands.sampling",
     "solve": "patchwalk.commands.solving",
     "write_problem": "patchwalk.problem.files",
 }
 
-__all__ = ["Problem", "ProblemError", "Solution", "make", "read_problem", "solve", "write_problem"]
+__all__ = ["Problem", "ProblemError", "Solution", "make", "read_problem", "resume", "sample", "solve", "write_problem"]
 
 
 def __getattr__(name: str) -> Any:

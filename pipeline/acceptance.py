@@ -1,11 +1,19 @@
-"""The acceptance rule, written once: which shot of a call is taken, and whether its flips are.
+"""The acceptance rules, written once: which shot of a call is taken, and whether its flips are.
 
-Metropolis et al., J. Chem. Phys. 21 (1953) 1087. Optimising accepts with probability ``min(1, exp(-change/T))``
-whatever the proposal; at T = 0 whatever does not raise the energy. Energies are recomputed here from the cluster, never
-taken from a subsolver.
+Energies are recomputed here from the cluster, never taken from a subsolver. ``change`` is the energy change and ``T``
+the temperature of a call:
+
+* ``metropolis``: with probability min(1, exp(-change/T)), whatever the proposal (Metropolis et al., J. Chem. Phys. 21
+  (1953) 1087); at T = 0 whatever does not raise the energy;
+* ``hastings``: with probability min(1, exp(-change/T + log_ratio)), which samples the Boltzmann law exactly (Hastings,
+  Biometrika 57 (1970) 97);
+* ``threshold``: whenever the energy rises by at most T (Dueck & Scheuer, J. Comput. Phys. 90 (1990) 161, from memory);
+* ``greedy``: whenever the energy does not rise.
 """
 
 from __future__ import annotations
+
+from typing import Literal, get_args
 
 import numpy as np
 import numpy.typing as npt
@@ -14,15 +22,22 @@ from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U8, U64, ClusterBatch, Proposals, Status
 from patchwalk.subsolvers.draws import combine, next_unit
 
+AcceptanceRule = Literal["metropolis", "hastings", "threshold", "greedy"]
+ACCEPTANCE_RULES: tuple[AcceptanceRule, ...] = get_args(AcceptanceRule)
+METROPOLIS, HASTINGS, THRESHOLD, GREEDY = range(4)
+
 FAILED = int(Status.FAILED)
 ACCEPTANCE_WORD = np.uint64(0x6163636570740000)
 """Tells the acceptance draw apart from the subsolver's own draws under the same call seed."""
 
 
-def judge(batch: ClusterBatch, proposals: Proposals) -> tuple[I64, F64, npt.NDArray[np.bool_]]:
+def judge(
+    batch: ClusterBatch, proposals: Proposals, rule: AcceptanceRule = "metropolis"
+) -> tuple[I64, F64, npt.NDArray[np.bool_]]:
     """The chosen shot i64 (B,), its energy change f64 (B,) and whether it is accepted, bool (B,).
 
-    The shot of lowest energy is chosen, the first among ties. A failed call changes nothing and is not accepted.
+    The shot of lowest energy is chosen, the first among ties. A failed call changes nothing and is not accepted; under
+    ``hastings`` the same holds for a call whose ``log_ratio`` is nan, and a subsolver without one counts as symmetric.
     """
     rows = len(batch)
     chosen, change = np.zeros(rows, np.int64), np.zeros(rows)
@@ -34,7 +49,9 @@ def judge(batch: ClusterBatch, proposals: Proposals) -> tuple[I64, F64, npt.NDAr
             batch.fields, edges.offsets, edges.pairs, edges.weights, batch.spins, proposals.outcomes, chosen, change
         )
     accepted = np.zeros(rows, np.bool_)
-    _accept(change, batch.temperature, batch.seeds, proposals.status, accepted)
+    ratio = proposals.log_ratio if rule == "hastings" and proposals.log_ratio is not None else np.zeros(rows)
+    code = ACCEPTANCE_RULES.index(rule)
+    _accept(change, batch.temperature, ratio, batch.seeds, proposals.status, code, accepted)
     return chosen, change, accepted
 
 
@@ -96,13 +113,24 @@ def _sparse_energy(fields: F64, pairs: I32, weights: F64, spins: I8) -> float:
 
 
 @compiled
-def _accept(change: F64, temperature: F64, seeds: U64, status: U8, accepted: npt.NDArray[np.bool_]) -> None:
+def _accept(
+    change: F64, temperature: F64, log_ratio: F64, seeds: U64, status: U8, rule: int, accepted: npt.NDArray[np.bool_]
+) -> None:
     stream = np.empty(1, np.uint64)
     for row in range(len(change)):
         if status[row] == FAILED:
             change[row] = 0.0
-        elif change[row] <= 0.0:
+            continue
+        if rule == GREEDY or (temperature[row] == 0.0 and rule != HASTINGS):
+            accepted[row] = change[row] <= 0.0
+            continue
+        if rule == THRESHOLD:
+            accepted[row] = change[row] <= temperature[row]
+            continue
+        rise = change[row] / temperature[row] if change[row] != 0.0 else 0.0
+        exponent = log_ratio[row] - rise
+        if exponent >= 0.0:
             accepted[row] = True
-        elif temperature[row] > 0.0:
-            stream[0] = combine(seeds[row], ACCEPTANCE_WORD)
-            accepted[row] = next_unit(stream) < np.exp(-change[row] / temperature[row])
+            continue
+        stream[0] = combine(seeds[row], ACCEPTANCE_WORD)
+        accepted[row] = next_unit(stream) < np.exp(exponent)

@@ -4,6 +4,9 @@ A batch is cut by the subsolver's own forecast at the fixed prices of :mod:`patc
 each other, so the cut changes no bit of any answer; it bounds how long a time limit or an interrupt has to wait. A
 subsolver with a ``largest_batch``, such as a device that takes so many clusters at once, is asked one such batch at a
 time. Whoever has a ``close`` is told when a run is over.
+
+Slices may be carried out side by side (:mod:`patchwalk.workers`), but only by a subsolver that says it is
+``concurrent``; whoever does not is asked here, one slice after the other.
 """
 
 from __future__ import annotations
@@ -18,6 +21,7 @@ from patchwalk.cost import SLICE_SECONDS, priced
 from patchwalk.subsolvers.complaints import shape_complaint, value_complaint
 from patchwalk.subsolvers.contract import ClusterBatch, Forecast, Proposals, Status, Subsolver, Work
 from patchwalk.subsolvers.registry import NotReadyError, SubsolverError
+from patchwalk.workers import Serial, Workers
 
 
 class Answered(NamedTuple):
@@ -28,6 +32,9 @@ class Answered(NamedTuple):
     proposals: Proposals
     seconds: float
 
+
+SHARES = 4
+"""Every worker gets about so many slices of a batch, so that none waits long for the others."""
 
 BAD_NEWS = (Exception, SystemExit)
 """What a stranger's code may raise without ending the run; an interrupt is none of it."""
@@ -64,33 +71,49 @@ def release(subsolver: Subsolver) -> None:
         close()
 
 
-def answers(subsolver: Subsolver, batch: ClusterBatch) -> Iterator[Answered]:
-    """The batch slice by slice; the caller may stop between slices."""
+def answers(subsolver: Subsolver, batch: ClusterBatch, workers: Workers | None = None) -> Iterator[Answered]:
+    """The batch slice by slice, in order; the caller may stop between slices."""
+    if workers is None or not getattr(subsolver, "concurrent", False):
+        workers = Serial()
     try:
-        bounds = slice_bounds(subsolver, batch)
+        bounds = slice_bounds(subsolver, batch, workers)
     except BAD_NEWS as error:
         sentence = f"{subsolver.name}: its forecast failed: {type(error).__name__}: {error}"
         yield Answered(0, batch, failed(batch, sentence), 0.0)
         return
-    for start, stop in bounds:
-        part = batch.rows(start, stop)
-        began = time.perf_counter()
-        proposals = ask(subsolver, part)
-        yield Answered(start, part, proposals, time.perf_counter() - began)
+    tasks = [(subsolver, start, batch.rows(start, stop)) for start, stop in bounds]
+    if len(tasks) == 1:
+        yield timed_answer(tasks[0])
+        return
+    for (_, start, part), (_, _, proposals, seconds) in zip(tasks, workers.ordered(timed_answer, tasks), strict=True):
+        yield Answered(start, part, proposals, seconds)
 
 
-def slice_bounds(subsolver: Subsolver, batch: ClusterBatch) -> list[tuple[int, int]]:
-    """Row ranges whose forecast price is at most a slice each, or one row."""
+def timed_answer(task: tuple[Subsolver, int, ClusterBatch]) -> Answered:
+    """One slice asked and timed, wherever this is carried out."""
+    subsolver, start, batch = task
+    began = time.perf_counter()
+    proposals = ask(subsolver, batch)
+    return Answered(start, batch, proposals, time.perf_counter() - began)
+
+
+def slice_bounds(subsolver: Subsolver, batch: ClusterBatch, workers: Workers | None = None) -> list[tuple[int, int]]:
+    """Row ranges whose forecast price is at most a slice each, or one row; shorter where there are workers to share
+    them.
+    """
     rows = len(batch)
     if rows == 1:
         return [(0, 1)]
     prices = priced(subsolver.forecast(batch).work, rows)
     longest = getattr(subsolver, "largest_batch", rows)
-    if prices.sum() <= SLICE_SECONDS and rows <= longest:
+    limit = SLICE_SECONDS
+    if workers is not None and workers.count > 1:
+        limit = min(limit, max(workers.smallest_task_seconds, prices.sum() / (SHARES * workers.count)))
+    if prices.sum() <= limit and rows <= longest:
         return [(0, rows)]
     bounds, start, spent = [], 0, 0.0
     for row, price in enumerate(prices):
-        if row > start and (spent + price > SLICE_SECONDS or row - start >= longest):
+        if row > start and (spent + price > limit or row - start >= longest):
             bounds.append((start, row))
             start, spent = row, 0.0
         spent += price

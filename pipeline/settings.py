@@ -1,34 +1,23 @@
-"""Settings: one table of names, reachable alike from a TOML file, the command line and Python.
+"""Settings: one table of names for each command, reachable alike from a TOML file, the command line and Python.
 
 A setting called ``long_name`` here is the TOML key ``long_name``, the keyword ``long_name`` and the option
-``--long-name``. What is given on the command line or as a keyword overrides the file. All mistakes are reported at
-once, each with the place it stands in and, for an unknown name, the nearest known one.
+``--long-name``. How they are read and checked is in :mod:`patchwalk.settings_checks`.
 """
 
 from __future__ import annotations
 
-import difflib
 import tomllib
-import types
-import typing
-from collections.abc import Callable, Mapping
+from collections.abc import Mapping
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
-from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, ValidationError
+from pydantic import BaseModel, BeforeValidator, ConfigDict, Field
 
 from patchwalk.subsolvers.contract import Subsolver
 
 DEFAULT_SECONDS = 60.0
 DEFAULT_CLUSTER_SIZE = 12
-
-
-class SettingsError(ValueError):
-    """One or more settings that cannot be used, a line each."""
-
-    def __init__(self, complaints: list[str]) -> None:
-        self.complaints = complaints
-        super().__init__("\n".join(complaints))
+DEFAULT_RUNGS = 16
 
 
 def _seed_list(value: object) -> object:
@@ -50,10 +39,38 @@ def _seed_list(value: object) -> object:
     return seeds
 
 
+def _number_list(value: object) -> object:
+    """Numbers written as 2.0,2.27,3.0, one alone, or a list."""
+    if isinstance(value, int | float) and not isinstance(value, bool):
+        return [value]
+    if isinstance(value, str):
+        return [part.strip() for part in value.split(",")]
+    return value
+
+
 def _spelled_subsolver(value: object) -> object:
     """A subsolver as text, as a table or already made; anything else is refused."""
-    if not isinstance(value, str | Mapping | Subsolver):
+    if value is not None and not isinstance(value, str | Mapping | Subsolver):
         raise ValueError("write it as NAME,key=value,... , as a table with a name, or give a subsolver object")
+    return value
+
+
+def _spelled_rules(value: object) -> object:
+    """Rules as text or as a table of weights; what they are called is checked where they are looked up."""
+    if not isinstance(value, str | Mapping):
+        raise ValueError("write it as ball, as ball=2,loose=1 or as a table of rules and weights")
+    return value
+
+
+def _spelled_callers(value: object) -> object:
+    """Cases as a list of tables, or the same as TOML text; what stands in them is checked where it is looked up."""
+    if isinstance(value, str):
+        try:
+            value = tomllib.loads(f"callers = {value}")["callers"]
+        except tomllib.TOMLDecodeError as error:
+            raise ValueError(f"write it as [{{when = '...', subsolver = '...'}}, ...]: {error}") from None
+    if not isinstance(value, list):
+        raise ValueError("write it as tables [[callers]], each with subsolver = ... and when = ...")
     return value
 
 
@@ -66,50 +83,52 @@ def _path(value: object) -> object:
 
 FileName = Annotated[Path, BeforeValidator(_path)]
 Seed = Annotated[int, Field(ge=0, lt=2**63)]
+AboveZero = Annotated[float, Field(gt=0, allow_inf_nan=False)]
 
 
-class SolveSettings(BaseModel):
-    """Everything that ``solve`` can be told."""
+class SearchSettings(BaseModel):
+    """What every command that calls subsolvers on a problem can be told."""
 
     model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True, strict=False)
 
-    kind: Literal["ising", "maxcut", "beacons"] | None = Field(
-        None, description="What the file's numbers mean: ising, maxcut or beacons."
+    kind: str | None = Field(None, description="What the file's numbers mean: ising, maxcut, qubo and so on.")
+    field_file: FileName | None = Field(
+        None, description="A CSV of fields (name, field) that belongs to a CSV of pairs."
+    )
+    flip_sign: bool = Field(
+        False, description="The file's couplings and fields have the opposite sign: they favour equal spins."
     )
     subsolver: Annotated[Any, BeforeValidator(_spelled_subsolver)] = Field(
         "walk",
         description="Who answers the clusters: NAME, NAME,key=value,... , @file.toml or module:Object; "
         "patchwalk backends lists the names.",
     )
+    callers: Annotated[list[Any], BeforeValidator(_spelled_callers)] | None = Field(
+        None,
+        description="Several subsolvers, each with a condition, instead of one: tables [[callers]] of a TOML; the "
+        "first that holds is called, and nobody where it says nothing.",
+    )
     cluster_size: int | None = Field(
         None, ge=1, description=f"Spins in each cluster; {DEFAULT_CLUSTER_SIZE} if the problem has as many."
     )
-    rule: Literal["ball", "scattered", "strip"] = Field(
+    rule: Annotated[str | dict[str, float], BeforeValidator(_spelled_rules)] = Field(
         "ball",
-        description="Which spins make a cluster: ball (a breadth-first ball round a random spin), scattered, or strip "
-        "(long and thin enough for elimination).",
+        description="Which spins make a cluster: ball (a breadth-first ball round a random spin), scattered, strip "
+        "(long and thin enough for elimination), frustrated (along violated bonds), loose (weak local fields), "
+        "disputed (where good configurations disagree), stale (least called), or several with weights: ball=2,loose=1.",
+    )
+    rule_weights: Literal["adaptive", "fixed"] = Field(
+        "adaptive", description="Whether rules that gain more per unit of counted work are drawn more often."
     )
     clusters_per_round: int = Field(
         64, ge=1, le=65536, description="At most this many clusters a round, no two of which touch."
     )
     sweeps: int = Field(2, ge=0, description="Metropolis sweeps of the whole problem after each round; 0 for none.")
-    seconds: float | None = Field(
-        None, gt=0, allow_inf_nan=False,
-        description=f"Stop after so many seconds, compiling apart; {DEFAULT_SECONDS:g} where no other budget is given.",
-    )  # fmt: skip
-    calls: int | None = Field(None, ge=1, description="Stop after so many cluster calls.")
-    total_sweeps: int | None = Field(None, ge=1, description="Stop after so many sweeps.")
-    target: float | None = Field(
-        None, allow_inf_nan=False, description="Stop at an objective (the cut for maxcut) at least as good as this."
-    )
     start: FileName | None = Field(
         None, description="A file with a start configuration: +1 and -1 in the input's order, or what --json printed."
     )
     seed: Seed | None = Field(
         None, description="The seed of the run; same seed and counted budget, same bits. Default 1."
-    )
-    seeds: Annotated[list[Seed], BeforeValidator(_seed_list)] | None = Field(
-        None, description="Several runs in one file, as 1..5 or 1,4,9."
     )
     run: FileName | None = Field(
         None, description="Where the run file goes; by default patchwalk-NAME-DATE-TIME.sqlite in the current folder."
@@ -119,6 +138,66 @@ class SolveSettings(BaseModel):
         description="Which calls get a row in the run file: all, a seeded share with exact tallies of the rest, or "
         "auto (all, unless a call is very cheap).",
     )
+    workers: int | None = Field(
+        None, ge=1, le=1024, description="Work on so many pieces at once; as many as there are cores if left out."
+    )
+    engine: Literal["threads", "dask"] = Field(
+        "threads", description="Who the workers are: threads of this process, or processes of a Dask cluster."
+    )
+    scheduler: str | None = Field(
+        None, description="The address of a Dask cluster that is there already (tcp://HOST:PORT)."
+    )
+    mixed_workers: bool = Field(
+        False, description="Allow Dask workers of another processor or other versions, whose bits may differ."
+    )
+    failures: int = Field(100, ge=1, description="Give up after so many failed calls in a row.")
+
+    def conflicts(self) -> list[tuple[str, str]]:
+        """Settings that are each possible but not together: the setting to look at first, and a sentence."""
+        if self.callers is not None and "subsolver" in self.model_fields_set and self.subsolver is not None:
+            return [("callers", "callers and subsolver cannot both be given; make the subsolver a case")]
+        return []
+
+
+class SolveSettings(SearchSettings):
+    """Everything that ``solve`` can be told."""
+
+    seconds: float | None = Field(
+        None, gt=0, allow_inf_nan=False,
+        description=f"Stop after so many seconds, compiling apart; {DEFAULT_SECONDS:g} where no other budget is given.",
+    )  # fmt: skip
+    calls: int | None = Field(None, ge=1, description="Stop after so many cluster calls.")
+    total_sweeps: int | None = Field(None, ge=1, description="Stop after so many sweeps.")
+    target: float | None = Field(
+        None, allow_inf_nan=False, description="Stop at an objective (the cut for maxcut) at least as good as this."
+    )
+    seeds: Annotated[list[Seed], BeforeValidator(_seed_list)] | None = Field(
+        None, description="Several runs in one file, as 1..5 or 1,4,9."
+    )
+    replicas: int | None = Field(
+        None, ge=1, le=4096,
+        description=f"Configurations searched side by side; 1, and {DEFAULT_RUNGS} on a ladder.",
+    )  # fmt: skip
+    tempering: Literal["cooling", "adaptive", "ladder"] = Field(
+        "cooling",
+        description="How hot the replicas are: cooling (geometric), adaptive (slower where the energy depends on "
+        "temperature most) or ladder (a temperature each, traded between neighbours).",
+    )
+    acceptance: Literal["metropolis", "threshold", "greedy"] = Field(
+        "metropolis",
+        description="Which answers are taken: metropolis, threshold (whenever the energy rises by at most the "
+        "temperature) or greedy (whenever it does not rise).",
+    )
+    stall: int | None = Field(None, ge=1, description="Stop after so many rounds without a better configuration.")
+    restart_after: int | None = Field(
+        None, ge=1,
+        description="After so many rounds without a better energy of its own, a replica goes on from one of the best "
+        "distinct configurations.",
+    )  # fmt: skip
+    keep: int = Field(8, ge=1, le=1000, description="How many of the best distinct configurations are kept.")
+    distance: int | None = Field(
+        None, ge=1, description="Distinct means so many spins apart; a twentieth of the spins if left out."
+    )
     hot: float = Field(
         1.0, ge=0, allow_inf_nan=False, description="Temperature at the beginning, in units of the typical local field."
     )  # fmt: skip
@@ -126,11 +205,13 @@ class SolveSettings(BaseModel):
     coolings: int = Field(
         3, ge=1, le=20, description="How often it falls from hot to cold, every time over twice as long as before."
     )
-    failures: int = Field(100, ge=1, description="Give up after so many failed calls in a row.")
+    answer: FileName | None = Field(
+        None, description="Write the answer, in the problem's own terms, to a file: .txt, .csv or .json."
+    )
 
     def conflicts(self) -> list[tuple[str, str]]:
         """Settings that are each possible but not together: the setting to look at first, and a sentence."""
-        found = []
+        found = super().conflicts()
         if self.seed is not None and self.seeds is not None:
             found.append(("seed", "seed and seeds cannot both be given; seeds = [7] is the same as seed = 7"))
         if self.seeds is not None and not self.seeds:
@@ -141,6 +222,10 @@ class SolveSettings(BaseModel):
             found.append(
                 ("cold", f"cold ({self.cold:g}) is above hot ({self.hot:g}); the temperature falls from hot to cold")
             )
+        if self.tempering == "ladder" and self.cold == 0.0:
+            found.append(("cold", "cold is 0, but a ladder needs a temperature above zero on every rung"))
+        if self.tempering == "ladder" and self.replicas == 1:
+            found.append(("replicas", "a ladder needs at least 2 replicas; leave replicas out for its default"))
         if self.total_sweeps is not None and self.sweeps == 0:
             found.append(("total_sweeps", "total_sweeps is given but sweeps is 0, so that it would never be reached"))
         return found
@@ -158,108 +243,20 @@ class SolveSettings(BaseModel):
         return self.seconds
 
 
-def read_settings(path: Path) -> tuple[Path, dict[str, Any]]:
-    """The input named in a TOML file and its settings, paths made relative to the file.
+class SampleSettings(SearchSettings):
+    """Everything that ``sample`` can be told."""
 
-    Raises :class:`SettingsError` for a file that is missing, not TOML, or names no input.
-    """
-    try:
-        table = tomllib.loads(path.read_text(encoding="utf-8"))
-    except OSError as error:
-        reason = "there is no such file" if isinstance(error, FileNotFoundError) else error.strerror or error
-        raise SettingsError([f"{path}: {reason}"]) from error
-    except (tomllib.TOMLDecodeError, UnicodeDecodeError) as error:
-        raise SettingsError([f"{path}: not a TOML file: {error}"]) from error
-    problem = table.pop("input", None)
-    if not isinstance(problem, str):
-        raise SettingsError([f'{path}: needs a key input = "FILE", the problem to solve'])
-    for key in ("start", "run"):
-        if isinstance(table.get(key), str):
-            table[key] = path.parent / table[key]
-    return path.parent / problem, table
+    temperatures: Annotated[list[AboveZero], BeforeValidator(_number_list)] = Field(
+        [1.0],
+        description="The temperature in energy units, or several between which replicas trade places: 2.0,2.27,3.0.",
+    )
+    rounds: int = Field(2000, ge=2, description="Rounds that are measured.")
+    burn_in: int | None = Field(
+        None, ge=0, description="Rounds thrown away before; a fifth of those measured if left out."
+    )
+    copies: int = Field(2, ge=1, le=1024, description="Independent replicas at every temperature; the overlap needs 2.")
 
-
-def checked_settings(
-    table: Mapping[str, Any], given: Mapping[str, Any], place: str, spelled: str = "{}"
-) -> SolveSettings:
-    """Settings from a file's ``table`` overridden by those ``given``.
-
-    ``place`` names the file; ``spelled`` is how a given key is written: ``--{}`` on a command line, where every value
-    is text, ``{}`` in Python. Raises :class:`SettingsError` with every complaint at once.
-    """
-    rivals = {"seed": "seeds", "seeds": "seed"}
-    overridden = {rivals[key] for key in given if key in rivals}
-    values = {**{key: value for key, value in table.items() if key not in overridden}, **given}
-
-    def where(key: str) -> str:
-        if key in table and key not in given:
-            return f"{place}: {key}"
-        return spelled.format(key.replace("_", "-") if "-" in spelled else key)
-
-    text = set(given) if "-" in spelled else set()
-    complaints = {key: _type_complaint(key, value, key in text) for key, value in values.items()}
-    complaints = {key: f"{where(key)}: {sentence}" for key, sentence in complaints.items() if sentence}
-    settings = _validated({key: value for key, value in values.items() if key not in complaints}, complaints, where)
-    together = [f"{where(key)}: {sentence}" for key, sentence in settings.conflicts()]
-    if complaints or together:
-        raise SettingsError([*complaints.values(), *together])
-    return settings
-
-
-def _validated(values: Mapping[str, Any], complaints: dict[str, str], where: Callable[[str], str]) -> SolveSettings:
-    """Settings from the values that are good; a complaint about every other one is added."""
-    try:
-        return SolveSettings.model_validate(values)
-    except ValidationError as error:
-        for detail in error.errors():
-            key = str(detail["loc"][0])
-            complaints.setdefault(key, f"{where(key)}: {_in_words(key, detail)}")
-    return SolveSettings.model_validate({key: value for key, value in values.items() if key not in complaints})
-
-
-def _type_complaint(key: str, value: object, is_text: bool) -> str:
-    """What no conversion should forgive: true for a number, and in a file or in Python text for a number."""
-    kind = plain_type(key)
-    if kind not in (int, float):
-        return ""
-    if isinstance(value, bool) or (isinstance(value, str) and not is_text):
-        return f"must be a {'whole ' if kind is int else ''}number (given: {value!r})"
-    return ""
-
-
-def plain_type(key: str) -> Any:
-    """The type of a setting without ``| None``; None for an unknown one."""
-    if key not in SolveSettings.model_fields:
-        return None
-    inner = SolveSettings.model_fields[key].annotation
-    if typing.get_origin(inner) in (types.UnionType, typing.Union):
-        inner = next(part for part in typing.get_args(inner) if part is not type(None))
-    return typing.get_args(inner)[0] if typing.get_origin(inner) is Annotated else inner
-
-
-def _in_words(key: str, detail: Any) -> str:
-    """One of pydantic's complaints, in words for people who never heard of it."""
-    if detail["type"] == "extra_forbidden":
-        return f"there is no such setting{_nearest(key, list(SolveSettings.model_fields))}"
-    message = detail["msg"].removeprefix("Value error, ")
-    for theirs, ours in (
-        ("Input should be a valid integer, unable to parse string as an integer", "must be a whole number"),
-        ("Input should be a valid integer, got a number with a fractional part", "must be a whole number"),
-        ("Input should be a valid integer", "must be a whole number"),
-        ("Input should be a valid number, unable to parse string as a number", "must be a number"),
-        ("Input should be a valid number", "must be a number"),
-        ("Input should be", "must be"),
-    ):
-        if message.startswith(theirs):
-            message = ours + message[len(theirs) :]
-            break
-    hint = ""
-    if detail["type"] == "literal_error":
-        hint = _nearest(str(detail["input"]), [str(word) for word in typing.get_args(plain_type(key))])
-    given = str(detail["input"]) if plain_type(key) in (int, float) else repr(detail["input"])
-    return f"{message[0].lower()}{message[1:]} (given: {given}){hint}"
-
-
-def _nearest(word: str, known: list[str]) -> str:
-    close = difflib.get_close_matches(word, known, n=1, cutoff=0.5)
-    return f"; did you mean {close[0]!r}?" if close else ""
+    @property
+    def burn_in_rounds(self) -> int:
+        """Rounds thrown away."""
+        return self.rounds // 5 if self.burn_in is None else self.burn_in

@@ -34,6 +34,7 @@ class Forward(Anneal):
     schedule: str = "linear"
 
     name: ClassVar[str] = "forward"
+    concurrent: ClassVar[bool] = True
     default_in_hops: ClassVar[float] = 6.0
     _table: schedules.Schedule | None = field(default=None, init=False, repr=False)
 
@@ -82,6 +83,7 @@ class Reverse(Anneal):
     leg_ratio: float = 1.0
 
     name: ClassVar[str] = "reverse"
+    concurrent: ClassVar[bool] = True
     default_in_hops: ClassVar[float] = 3.0
     from_incumbent: ClassVar[bool] = True
 
@@ -117,6 +119,7 @@ class Blend(Anneal):
     mix: float = 0.75
 
     name: ClassVar[str] = "blend"
+    concurrent: ClassVar[bool] = True
     default_in_hops: ClassVar[float] = 3.0
 
     def __post_init__(self) -> None:

@@ -37,6 +37,7 @@ class Descent:
     shots: int = 1
 
     name: ClassVar[str] = "descent"
+    concurrent: ClassVar[bool] = True
     max_spins: ClassVar[int] = 1_000_000
     deterministic: ClassVar[bool] = True
     balance: ClassVar[Balance] = "none"

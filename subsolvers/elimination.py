@@ -57,6 +57,7 @@ class Elimination:
     max_width: int = 20
 
     name: ClassVar[str] = "elimination"
+    concurrent: ClassVar[bool] = True
     max_spins: ClassVar[int] = 1000  # weights reach 2^k and must stay finite
     deterministic: ClassVar[bool] = True
 

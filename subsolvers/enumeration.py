@@ -53,6 +53,7 @@ class Enumeration:
     shots: int = 1
 
     name: ClassVar[str] = "enumeration"
+    concurrent: ClassVar[bool] = True
     reports: ClassVar[tuple[str, ...]] = ("hit probability",)
     max_spins: ClassVar[int] = 24
     deterministic: ClassVar[bool] = True

@@ -49,6 +49,7 @@ class Metropolis:
     shots: int = 1
 
     name: ClassVar[str] = "metropolis"
+    concurrent: ClassVar[bool] = True
     max_spins: ClassVar[int] = 1_000_000
     deterministic: ClassVar[bool] = True
 

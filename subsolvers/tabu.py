@@ -44,6 +44,7 @@ class Tabu:
     shots: int = 1
 
     name: ClassVar[str] = "tabu"
+    concurrent: ClassVar[bool] = True
     max_spins: ClassVar[int] = 1_000_000
     deterministic: ClassVar[bool] = True
     balance: ClassVar[Balance] = "none"

@@ -29,6 +29,7 @@ class Uniform:
     shots: int = 1
 
     name: ClassVar[str] = "uniform"
+    concurrent: ClassVar[bool] = True
     max_spins: ClassVar[int] = 1_000_000
     deterministic: ClassVar[bool] = True
 

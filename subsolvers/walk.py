@@ -80,6 +80,7 @@ class Walk:
     readout_flip: float = 0.0
 
     name: ClassVar[str] = "walk"
+    concurrent: ClassVar[bool] = True
     deterministic: ClassVar[bool] = True
     noise: Noise = field(init=False, repr=False, compare=False)
 

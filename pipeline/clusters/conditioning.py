@@ -14,25 +14,36 @@ from patchwalk.subsolvers.contract import DENSE_LIMIT, F64, I8, I32, I64, U64, C
 
 
 def condition(
-    problem: Problem, members: I32, spins: I8, local_fields: F64, temperature: float, seeds: U64, places: I32
+    problem: Problem,
+    members: I32,
+    spins: I8,
+    local_fields: F64,
+    temperature: float | F64,
+    seeds: U64,
+    places: I32,
+    replicas: I64 | None = None,
 ) -> ClusterBatch:
     """The clusters ``members`` i32 (B, k), conditioned on everything else.
 
-    ``local_fields`` f64 (n,) holds h_i + sum_j J_ij s_j of the whole configuration ``spins``; ``places`` i32 (n,) is
-    scratch that is -1 everywhere and left so. Couplings come dense up to k = 64 and as edges above.
+    ``spins`` i8 and ``local_fields`` f64, which holds h_i + sum_j J_ij s_j of the whole configuration, are (n,), or
+    (R, n) with ``replicas`` i64 (B,) saying which of the R configurations a cluster was cut from. ``temperature`` is
+    one for all or f64 (B,); ``places`` i32 (n,) is scratch that is -1 everywhere and left so. Couplings come dense up
+    to k = 64 and as edges above.
     """
     rows, size = members.shape
+    whole, local = np.atleast_2d(spins), np.atleast_2d(local_fields)
+    source = np.zeros(rows, np.int64) if replicas is None else replicas
     fields, own = np.empty((rows, size)), np.empty((rows, size), np.int8)
-    temperatures = np.full(rows, temperature)
+    temperatures = np.full(rows, temperature, np.float64)
     graph = (problem.row_starts, problem.neighbours, problem.couplings)
     if size <= DENSE_LIMIT:
         couplings = np.zeros((rows, size, size))
-        _fold_dense(*graph, members, spins, local_fields, places, fields, own, couplings)
+        _fold_dense(*graph, members, source, whole, local, places, fields, own, couplings)
         return ClusterBatch(fields, own, temperatures, seeds, couplings=couplings)
     offsets = np.zeros(rows + 1, np.int64)
     _count_inner(*graph[:2], members, places, offsets)
     pairs, weights = np.empty((offsets[-1], 2), np.int32), np.empty(offsets[-1])
-    _fold_sparse(*graph, members, spins, local_fields, places, fields, own, offsets, pairs, weights)
+    _fold_sparse(*graph, members, source, whole, local, places, fields, own, offsets, pairs, weights)
     return ClusterBatch(fields, own, temperatures, seeds, edges=Edges(offsets, pairs, weights))
 
 
@@ -56,8 +67,9 @@ def _fold_dense(
     neighbours: I32,
     couplings: F64,
     members: I32,
-    spins: I8,
-    local_fields: F64,
+    replicas: I64,
+    all_spins: I8,
+    all_local_fields: F64,
     places: I32,
     fields: F64,
     own: I8,
@@ -66,6 +78,7 @@ def _fold_dense(
     size = members.shape[1]
     for row in range(len(members)):
         cluster = members[row]
+        spins, local_fields = all_spins[replicas[row]], all_local_fields[replicas[row]]
         for i in range(size):
             places[cluster[i]] = i
         for i in range(size):
@@ -108,8 +121,9 @@ def _fold_sparse(
     neighbours: I32,
     couplings: F64,
     members: I32,
-    spins: I8,
-    local_fields: F64,
+    replicas: I64,
+    all_spins: I8,
+    all_local_fields: F64,
     places: I32,
     fields: F64,
     own: I8,
@@ -120,6 +134,7 @@ def _fold_sparse(
     size = members.shape[1]
     for row in range(len(members)):
         slot = offsets[row]
+        spins, local_fields = all_spins[replicas[row]], all_local_fields[replicas[row]]
         for i in range(size):
             places[members[row, i]] = i
         for i in range(size):

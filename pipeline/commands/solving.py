@@ -4,20 +4,26 @@ from __future__ import annotations
 
 import contextlib
 import time
-from collections.abc import Callable
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Protocol
 
-from patchwalk.commands.answers import answer_for
+from patchwalk.commands.answers import answer_for, settled
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.tasks import Task, task_from
-from patchwalk.evidence.runfile import RunFile, RunFileError
+from patchwalk.evidence.kept_answers import KeptAnswers
+from patchwalk.evidence.layout import RunFileError, packed
+from patchwalk.evidence.runfile import RunFacts, RunFile
+from patchwalk.evidence.stored import StoredRun
+from patchwalk.problem.decoding import encoding_of, write_answer
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
 from patchwalk.search.neighbourhood import NeighbourhoodSearch
+from patchwalk.settings import SearchSettings
 from patchwalk.subsolvers.contract import I8
 from patchwalk.subsolvers.registry import spelled
+from patchwalk.workers import Workers, WorkersError, cores, workers_for
 
 
 @dataclass(frozen=True, eq=False)
@@ -25,10 +31,11 @@ class Solution:
     """What a run ended with.
 
     Always there: ``spins`` i8 (n,), ``energy`` (re-evaluated from the problem), ``objective`` in the user's terms
-    under ``objective_name``, ``feasible``, ``answer``, ``status`` (``target_reached``, ``budget``, ``interrupted`` or
-    ``error``), ``message``, ``seconds`` without and ``compile_seconds`` for compiling, ``calls``, ``failed_calls``,
-    ``sweeps``, ``seed``, ``run_path``. None unless a bound was computed: ``lower_bound``, ``gap``. ``runs`` holds
-    every run where several seeds were asked for, this one being the best.
+    under ``objective_name``, ``feasible``, ``answer``, ``status`` (``target_reached``, ``budget``, ``stalled``,
+    ``interrupted`` or ``error``), ``message``, ``seconds`` without and ``compile_seconds`` for compiling, ``calls``,
+    ``failed_calls``, ``skipped`` (clusters for which nobody was called), ``sweeps``, ``seed``, ``run_path``,
+    ``alternatives`` i8 (E, n), the best distinct configurations. None unless a bound was computed: ``lower_bound``,
+    ``gap``. ``runs`` holds every run where several seeds were asked for, this one being the best.
     """
 
     spins: I8
@@ -43,11 +50,13 @@ class Solution:
     compile_seconds: float
     calls: int
     failed_calls: int
+    skipped: int
     sweeps: int
     seed: int
     run_path: Path
     start_energy: float | None = None
     notes: tuple[str, ...] = ()
+    alternatives: I8 | None = None
     lower_bound: float | None = None
     gap: float | None = None
     runs: tuple[Solution, ...] = ()
@@ -58,11 +67,13 @@ class Solution:
             name: getattr(self, name)
             for name in (
                 "energy", "lower_bound", "gap", "feasible", "status", "message", "seconds", "compile_seconds", "calls",
-                "failed_calls", "sweeps", "seed", "start_energy", "answer", "notes",
+                "failed_calls", "skipped", "sweeps", "seed", "start_energy", "answer", "notes",
             )
         }  # fmt: skip
         fields = {"spins": self.spins.tolist(), **fields, "run_path": str(self.run_path)}
         fields[self.objective_name] = self.objective
+        if self.alternatives is not None:
+            fields["alternatives"] = self.alternatives.tolist()
         if self.runs:
             fields["runs"] = [run.as_json() for run in self.runs]
         return fields
@@ -132,14 +143,43 @@ def carry_out(task: Task, watcher: Watcher) -> Solution:
     watcher.understood([task.problem.summary(), *task.problem.notes])
     runfile = RunFile(task.run_path)
     try:
-        with listening(watcher.stopping) as interrupted:
-            runs: list[Solution] = []
-            for seed in task.settings.every_seed:
-                runs.append(_one_run(task, seed, runfile, watcher, interrupted))
-                if interrupted():
-                    break
+        with listening(watcher.stopping) as interrupted, hired(task.settings) as workers:
+            runs = runs_of(task, task.settings.every_seed, runfile, watcher, interrupted, workers)
+            return delivered(task, best_of(task, runs))
     finally:
         runfile.close()  # also takes the file away again where no run came to be written
+
+
+@contextlib.contextmanager
+def hired(settings: SearchSettings) -> Iterator[Workers]:
+    """The workers that the settings ask for, let go at the end."""
+    count = settings.workers if settings.workers is not None else cores()
+    workers = workers_for(count, settings.scheduler, settings.engine == "dask", settings.mixed_workers)
+    try:
+        yield workers
+    finally:
+        workers.close()
+
+
+def runs_of(
+    task: Task,
+    seeds: Iterable[int],
+    runfile: RunFile,
+    watcher: Watcher,
+    interrupted: Callable[[], bool],
+    workers: Workers,
+) -> Iterator[Solution]:
+    """One run after the other, until all are done or an interrupt comes."""
+    for seed in seeds:
+        search = NeighbourhoodSearch(task.problem, task.plan_for(seed), seed, task.start, interrupted, workers)
+        yield carry_out_one(task, search, runfile, watcher)
+        if interrupted():
+            return
+
+
+def best_of(task: Task, solutions: Iterable[Solution]) -> Solution:
+    """The best of several runs, with all of them in ``runs``; a single run is itself."""
+    runs = list(solutions)
     best = min(runs, key=lambda run: (not run.feasible, run.energy))
     if len(task.settings.every_seed) == 1:
         return best
@@ -148,28 +188,37 @@ def carry_out(task: Task, watcher: Watcher) -> Solution:
     return replace(best, runs=tuple(runs))
 
 
-def _one_run(task: Task, seed: int, runfile: RunFile, watcher: Watcher, interrupted: Callable[[], bool]) -> Solution:
-    settings = task.settings
-    search = NeighbourhoodSearch(task.problem, task.subsolver, task.plan, seed, task.start, interrupted)
+def delivered(task: Task, solution: Solution) -> Solution:
+    """The solution, after its answer was written to the file asked for."""
+    if task.settings.answer is not None:
+        write_answer(task.settings.answer, task.problem, encoding_of(task.problem).decode(solution.spins))
+    return solution
+
+
+def carry_out_one(
+    task: Task, search: NeighbourhoodSearch, runfile: RunFile, watcher: Watcher, run: StoredRun | None = None
+) -> Solution:
+    """One run from one seed, or the rest of a stored one: searched, recorded, answered."""
     watcher.compiling()
     began = time.perf_counter()
     search.prepare()
     compile_seconds = time.perf_counter() - began
     watcher.compiled(compile_seconds)
-    start_energy = None if task.start is None else search.energy
-    spelling = spelled(search.subsolver)
-    written = {**settings.model_dump(), "subsolver": spelling, "cluster_size": task.cluster_size}
-    writer = runfile.begin(
-        task.problem, search.subsolver, spelling, settings.rule, seed, written, task.source, settings.record
-    )
-    watcher.began(task.problem, seed, start_energy)
+    start_energy = None if task.start is None else task.problem.energy(task.start)
+    if run is None:
+        writer = runfile.begin(facts_of(task, search), search.snapshot())
+    else:
+        writer = runfile.take_up(run.number, task.problem, run.rows, search.snapshot())
+    kept = KeptAnswers(runfile, writer.run)
+    search.caller.ask = kept.answers
+    watcher.began(task.problem, search.seed, start_energy)
     try:
         for round_ in search.rounds():
             writer.add(round_)
-            if writer.due:
+            if round_.whole and writer.due:
                 writer.close_group(search.snapshot())
             watcher.moved(search, round_)
-    except RunFileError as error:  # the answer so far is worth more than the record that could not be kept
+    except (RunFileError, WorkersError) as error:  # the answer so far is worth more than what can no longer be had
         search.status, search.message = "error", str(error)
     seconds = search.elapsed
     writer.add_improvements(search.take_improvements())
@@ -178,21 +227,43 @@ def _one_run(task: Task, seed: int, runfile: RunFile, watcher: Watcher, interrup
         writer.finish(
             search.snapshot(), status=solution.status, message=solution.message, energy=solution.energy,
             objective=solution.objective, calls=solution.calls, failed_calls=solution.failed_calls,
-            sweeps=solution.sweeps, seconds=seconds, compile_seconds=compile_seconds,
+            skipped=solution.skipped, sweeps=solution.sweeps, seconds=seconds, compile_seconds=compile_seconds,
+            spins=packed(solution.spins),
         )  # fmt: skip
     watcher.ended(search)
     return solution
 
 
+def facts_of(task: Task, search: NeighbourhoodSearch) -> RunFacts:
+    """What the run file is told of a run at its beginning; subsolvers as they are after getting ready."""
+    cases = [
+        {"subsolver": "nothing" if case.subsolver is None else spelled(case.subsolver)}
+        | ({} if case.when is None else {"when": case.when.text})
+        for case in search.caller.policy.cases
+    ]
+    alone = task.settings.callers is None
+    settings = {
+        **task.settings.model_dump(), "subsolver": cases[0]["subsolver"] if alone else None,
+        "callers": None if alone else cases, "cluster_size": task.cluster_size, "seeds": task.settings.every_seed,
+        "seed": None,
+    }  # fmt: skip
+    callers = "; ".join(" when ".join(case.values()) for case in cases)
+    return RunFacts(
+        problem=task.problem, source=task.source, seed=search.seed, subsolver=callers, settings=settings,
+        settings_file=task.settings_file, settings_table=task.settings_table, rows=task.settings.record,
+    )  # fmt: skip
+
+
 def _solution(
     task: Task, search: NeighbourhoodSearch, start_energy: float | None, seconds: float, compile_seconds: float
 ) -> Solution:
-    problem, spins = task.problem, search.best_spins
+    problem, spins = task.problem, settled(task.problem, search.best_spins)
     energy = problem.energy(spins)
     feasible, answer = answer_for(problem, spins)
     return Solution(
         spins=spins, energy=energy, objective=problem.objective(energy), objective_name=problem.objective_name,
         feasible=feasible, answer=answer, status=search.status, message=search.message, seconds=seconds,
-        compile_seconds=compile_seconds, calls=search.calls, failed_calls=search.failed_calls, sweeps=search.sweeps,
-        seed=search.seed, run_path=task.run_path, start_energy=start_energy, notes=problem.notes,
+        compile_seconds=compile_seconds, calls=search.calls, failed_calls=search.failures.total,
+        skipped=search.skipped, sweeps=search.sweeps, seed=search.seed, run_path=task.run_path,
+        start_energy=start_energy, notes=problem.notes, alternatives=search.elites.spins,
     )  # fmt: skip

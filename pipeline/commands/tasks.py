@@ -4,22 +4,28 @@ from __future__ import annotations
 
 import os
 import re
-from dataclasses import dataclass
+from collections.abc import Mapping
+from dataclasses import dataclass, field
 from datetime import datetime
 from pathlib import Path
-from typing import Any
+from typing import Any, Generic
 
 import numpy as np
 
-from patchwalk.clusters.rules import cluster_rule
+from patchwalk.clusters.mixture import Mixture, mixture_of
+from patchwalk.clusters.policy import Policy, PolicyError, policy_from
 from patchwalk.engine import forecast_of
 from patchwalk.problem.files import read_problem, read_start
-from patchwalk.problem.ising import Problem
-from patchwalk.search.neighbourhood import Ends, Plan
-from patchwalk.search.temperature import GeometricCooling
-from patchwalk.settings import DEFAULT_CLUSTER_SIZE, SettingsError, SolveSettings, checked_settings, read_settings
+from patchwalk.problem.ising import Problem, known_kind
+from patchwalk.search.ends import Ends
+from patchwalk.search.ladder import Ladder
+from patchwalk.search.neighbourhood import Plan
+from patchwalk.search.sampling import SamplingPlan
+from patchwalk.search.temperature import AdaptiveCooling, GeometricCooling, Temperatures
+from patchwalk.settings import DEFAULT_CLUSTER_SIZE, DEFAULT_RUNGS, SampleSettings, SearchSettings, SolveSettings
+from patchwalk.settings_checks import Model, SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import DENSE_LIMIT, I8, ClusterBatch, Edges, Subsolver
-from patchwalk.subsolvers.registry import SubsolverError, subsolver_from
+from patchwalk.subsolvers.registry import SubsolverError
 
 
 class MemoryForecastError(MemoryError):
@@ -27,82 +33,165 @@ class MemoryForecastError(MemoryError):
 
 
 @dataclass(frozen=True, eq=False)
-class Task:
-    """A problem and everything needed to work on it, checked and ready."""
+class Errand(Generic[Model]):
+    """A problem, the settings of a command, and everything needed to work on it, checked and ready."""
 
     problem: Problem
     source: str
-    settings: SolveSettings
-    subsolver: Subsolver
+    settings: Model
+    policy: Policy
     cluster_size: int
     start: I8 | None
     run_path: Path
+    settings_file: str = ""
+    settings_table: Mapping[str, Any] = field(default_factory=dict)
 
     @property
-    def plan(self) -> Plan:
-        """The settings as the search understands them."""
+    def rules(self) -> Mixture:
+        """The rules that cut clusters."""
+        return mixture_of(self.settings.rule, self.settings.rule_weights == "adaptive")
+
+
+@dataclass(frozen=True, eq=False)
+class Task(Errand[SolveSettings]):
+    """What ``solve`` has to do."""
+
+    @property
+    def replicas(self) -> int:
+        """How many configurations are searched side by side."""
+        if self.settings.replicas is not None:
+            return self.settings.replicas
+        return DEFAULT_RUNGS if self.settings.tempering == "ladder" else 1
+
+    def plan_for(self, seed: int) -> Plan:
+        """The settings as the search understands them, for the run with this seed."""
         settings, problem = self.settings, self.problem
         target = None if settings.target is None else problem.energy_of(settings.target)
         return Plan(
-            rule=cluster_rule(settings.rule),
+            policy=self.policy,
+            rules=self.rules,
             cluster_size=self.cluster_size,
             clusters_per_round=settings.clusters_per_round,
             sweeps_per_round=settings.sweeps,
-            cooling=GeometricCooling(settings.hot, settings.cold, problem.field_scale, settings.coolings),
-            ends=Ends(settings.calls, settings.total_sweeps, settings.time_limit, target),
+            temperatures=self._temperatures(seed),
+            ends=Ends(settings.calls, settings.total_sweeps, settings.time_limit, target, settings.stall),
+            acceptance=settings.acceptance,
+            replicas=self.replicas,
+            restart_after=settings.restart_after,
+            keep=settings.keep,
+            distance=settings.distance or max(1, len(problem) // 20),
             failures=settings.failures,
+        )
+
+    def _temperatures(self, seed: int) -> Temperatures:
+        settings, scale = self.settings, self.problem.field_scale
+        if settings.tempering == "ladder" and scale > 0.0:
+            rungs = scale * np.geomspace(settings.hot, settings.cold, self.replicas)
+            return Ladder(rungs, seed, adapting=1.0)
+        cooling = GeometricCooling(settings.hot, settings.cold, scale, settings.coolings, self.replicas)
+        return AdaptiveCooling(cooling) if settings.tempering == "adaptive" else cooling
+
+
+@dataclass(frozen=True, eq=False)
+class SampleTask(Errand[SampleSettings]):
+    """What ``sample`` has to do."""
+
+    @property
+    def plan(self) -> SamplingPlan:
+        """The settings as the sampling understands them."""
+        settings = self.settings
+        return SamplingPlan(
+            policy=self.policy,
+            rules=self.rules,
+            cluster_size=self.cluster_size,
+            clusters_per_round=settings.clusters_per_round,
+            sweeps_per_round=settings.sweeps,
+            temperatures=np.array(sorted(settings.temperatures, reverse=True)),
+            copies=settings.copies,
+            burn_in=settings.burn_in_rounds,
+            rounds=settings.rounds,
         )
 
 
 def task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> Task:
-    """Settings, problem, subsolver and start, read and checked; nothing is written yet."""
+    """What ``solve`` is told, read and checked; nothing is written yet."""
+    return Task(**_read(SolveSettings, source, given, spelled_as))
+
+
+def sample_task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> SampleTask:
+    """What ``sample`` is told, read and checked; nothing is written yet."""
+    return SampleTask(**_read(SampleSettings, source, given, spelled_as))
+
+
+def _read(
+    model: type[SearchSettings], source: Problem | str | Path, given: dict[str, Any], spelled_as: str
+) -> dict[str, Any]:
+    """Settings, problem, subsolvers and start, as the fields of an :class:`Errand`."""
     table: dict[str, Any] = {}
-    place, folder, input_path = "", Path(), source
+    place, folder, input_path, settings_file = "", Path(), source, ""
     if source == "":
         raise SettingsError(["the input is empty; name a problem file or a settings TOML"])
     if not isinstance(source, Problem) and str(source).endswith(".toml"):
-        place, folder = str(source), Path(source).parent
+        place, folder, settings_file = str(source), Path(source).parent, str(Path(source).absolute())
         input_path, table = read_settings(Path(source))
-    settings = checked_settings(table, given, place, spelled_as)
-    from_file = "subsolver" in table and "subsolver" not in given
-    subsolver = _subsolver_of(settings, folder if from_file else Path(), place if from_file else "")
-    problem, name = _problem_from(input_path, settings.kind)
-    size = settings.cluster_size or min(DEFAULT_CLUSTER_SIZE, len(problem), subsolver.max_spins)
-    _check_sizes(size, problem, subsolver)
-    _check_memory(subsolver, size)
+    settings = checked_settings(model, table, given, place, spelled_as, {"rule": mixture_of, "kind": known_kind})
+    key = "subsolver" if settings.callers is None else "callers"
+    from_file = key in table and key not in given
+    policy = policy_of(settings, folder if from_file else Path(), place if from_file else "")
+    problem, name = _problem_from(input_path, settings)
+    subsolvers = [case.subsolver for case in policy.cases if case.subsolver is not None]
+    size = settings.cluster_size or min(DEFAULT_CLUSTER_SIZE, len(problem), *(one.max_spins for one in subsolvers))
+    _check_sizes(size, problem, subsolvers)
+    for subsolver in subsolvers:
+        _check_memory(subsolver, size)
     start = None if settings.start is None else read_start(settings.start, problem)
     run_path = settings.run if settings.run is not None else _default_run_path(name)
-    return Task(problem, name, settings, subsolver, size, start, run_path)
+    return {
+        "problem": problem, "source": name, "settings": settings, "policy": policy, "cluster_size": size,
+        "start": start, "run_path": run_path, "settings_file": settings_file, "settings_table": table,
+    }  # fmt: skip
 
 
-def _subsolver_of(settings: SolveSettings, folder: Path, place: str) -> Subsolver:
-    """The subsolver of the settings; complaints name the file that spells it."""
+def policy_of(settings: SearchSettings, folder: Path, place: str) -> Policy:
+    """Who is called when, by the settings; complaints name the file that spells it."""
     try:
-        return subsolver_from(settings.subsolver, folder)
-    except SubsolverError as error:
-        if not place:
-            raise
-        raise SubsolverError("\n".join(f"{place}: {line}" for line in str(error).splitlines())) from error
+        return policy_from(settings.subsolver if settings.callers is None else settings.callers, folder)
+    except (SubsolverError, PolicyError) as error:
+        prefix = f"{place}: " if place else ""
+        lines = [f"{prefix}{line}" for line in str(error).splitlines()]
+        if isinstance(error, PolicyError):
+            raise SettingsError([f"{prefix}callers: {line}" for line in str(error).splitlines()]) from error
+        raise SubsolverError("\n".join(lines)) from error
 
 
-def _problem_from(source: Problem | str | Path, kind: str | None) -> tuple[Problem, str]:
+def _problem_from(source: Problem | str | Path, settings: SearchSettings) -> tuple[Problem, str]:
     if not isinstance(source, Problem):
-        return read_problem(source, kind=kind), str(source)
-    if kind is not None and kind != source.kind:
-        raise SettingsError([f"kind is {kind!r}, but the problem given is of kind {source.kind!r}; leave kind out"])
+        return read_again(source, settings), str(Path(source).absolute())
+    for key in ("kind", "field_file", "flip_sign"):
+        given = getattr(settings, key)
+        if given and given != getattr(source, key, None):
+            raise SettingsError([f"{key} is {given!r}, but the problem is given as it is; leave {key} out"])
     return source, "problem"
 
 
-def _check_sizes(size: int, problem: Problem, subsolver: Subsolver) -> None:
+def read_again(source: str | Path, settings: SearchSettings) -> Problem:
+    """The problem of a file, read as the settings say."""
+    return read_problem(source, kind=settings.kind, field_file=settings.field_file, flip_sign=settings.flip_sign)
+
+
+def _check_sizes(size: int, problem: Problem, subsolvers: list[Subsolver]) -> None:
+    if not subsolvers:
+        raise SettingsError(["callers: every case calls nobody; name a subsolver in one of them"])
     if size > len(problem):
         raise SettingsError(
             [f"cluster_size is {size}, the problem has {len(problem)} spins: --cluster-size {len(problem)} at most"]
         )
-    if size > subsolver.max_spins:
-        raise SubsolverError(
-            f"{subsolver.name}: takes clusters of at most {subsolver.max_spins} spins, cluster_size is {size}; "
-            "give a smaller --cluster-size or another --subsolver"
-        )
+    for subsolver in subsolvers:
+        if size > subsolver.max_spins:
+            raise SubsolverError(
+                f"{subsolver.name}: takes clusters of at most {subsolver.max_spins} spins, cluster_size is {size}; "
+                "give a smaller --cluster-size or another --subsolver"
+            )
 
 
 def _check_memory(subsolver: Subsolver, size: int) -> None:

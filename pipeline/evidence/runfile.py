@@ -2,37 +2,43 @@
 
 Rows are gathered in memory and written group by group: one transaction closes a group of rounds (at most about a
 second or 10 MB of rows) together with a checkpoint of the state behind it. A process killed at any moment therefore
-leaves a file that holds every closed group, whole, and nothing of the open one.
-
-Arrays are stored as little-endian bytes: ``members`` int32, ``boundary_fields`` float64, ``spins_before`` and
-``proposal`` int8 (the shot taken), checkpointed spins as bits (1 for -1, first spin in the lowest bit of the first
-byte).
+leaves a file that holds every closed group, whole, and nothing of the open one. :mod:`patchwalk.evidence.layout` states
+the tables, :mod:`patchwalk.evidence.stored` reads them.
 """
 
 from __future__ import annotations
 
 import contextlib
 import json
-import platform
 import sqlite3
-import sys
 import time
 from collections.abc import Iterable, Iterator, Mapping
+from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any
+from typing import Any, NamedTuple
 
 import numpy as np
 
 from patchwalk.cost import DEAR_SECONDS, priced
 from patchwalk.engine import forecast_of
+from patchwalk.evidence.layout import (
+    INSERT_CALL,
+    LAYOUT,
+    SCHEMA,
+    RunFileError,
+    follow_from_spins,
+    packed,
+    problem_blob,
+)
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
 from patchwalk.subsolvers.contract import WORK_FIELDS, ClusterBatch, Status, Subsolver
 from patchwalk.subsolvers.draws import one_in
+from patchwalk.subsolvers.registry import spelled
+from patchwalk.workers import versions
 
-LAYOUT = 1
 GROUP_SECONDS = 1.0
 GROUP_BYTES = 10_000_000
 SHARE_OF_CHEAP_ROWS = 64
@@ -40,131 +46,127 @@ SHARE_OF_CHEAP_ROWS = 64
 
 SHARE_WORD = 0x7368617265000000
 
-SCHEMA = f"""
-CREATE TABLE about (key TEXT PRIMARY KEY, value TEXT) WITHOUT ROWID;
-CREATE TABLE problems (
-    fingerprint TEXT PRIMARY KEY, source TEXT, kind TEXT, spins INTEGER, couplings INTEGER, offset REAL, summary TEXT
-);
-CREATE TABLE runs (
-    run INTEGER PRIMARY KEY, problem TEXT REFERENCES problems, seed INTEGER, subsolver TEXT, settings TEXT,
-    versions TEXT, rows_kept TEXT, begun TEXT, status TEXT, message TEXT, energy REAL, objective REAL, calls INTEGER,
-    failed_calls INTEGER, sweeps INTEGER, seconds REAL, compile_seconds REAL, spins BLOB
-);
-CREATE TABLE groups (
-    run INTEGER, number INTEGER, first_round INTEGER, last_round INTEGER, calls INTEGER, rows INTEGER, stages BLOB,
-    PRIMARY KEY (run, number)
-) WITHOUT ROWID;
-CREATE TABLE checkpoints (
-    run INTEGER, round INTEGER, calls INTEGER, sweeps INTEGER, energy REAL, best_energy REAL, spins BLOB,
-    best_spins BLOB, local_fields BLOB, PRIMARY KEY (run, round)
-);
-CREATE TABLE incumbents (
-    run INTEGER, energy REAL, finder TEXT, round INTEGER, calls INTEGER, sweeps INTEGER, seconds REAL
-);
-CREATE TABLE calls (
-    run INTEGER, round INTEGER, place INTEGER, replica INTEGER, seed INTEGER, stage REAL, temperature REAL, rule TEXT,
-    k INTEGER, members BLOB, boundary_fields BLOB, spins_before BLOB, proposal BLOB, log_ratio REAL, energy_before REAL,
-    change REAL, accepted INTEGER, hit_probability REAL, noiseless_hit REAL, seconds REAL, status INTEGER, message TEXT,
-    {", ".join(f"{name} REAL" if name.endswith(("_s", "_time")) else f"{name} INTEGER" for name in WORK_FIELDS)}
-);
-CREATE TABLE tallies (
-    run INTEGER, rule TEXT, k INTEGER, tenth INTEGER, calls INTEGER, accepted INTEGER, moved INTEGER, improved INTEGER,
-    fall REAL, rise REAL, seconds REAL, PRIMARY KEY (run, rule, k, tenth)
-) WITHOUT ROWID;
-CREATE INDEX calls_by_run ON calls (run, round, place);
-"""
 
-CALL_COLUMNS = 22 + len(WORK_FIELDS)
-INSERT_CALL = f"INSERT INTO calls VALUES ({','.join('?' * CALL_COLUMNS)})"
+class Measured(NamedTuple):
+    """The series measured at one temperature, as bytes of float64: energies and mean spins (rounds, copies)."""
+
+    temperature: float
+    copies: int
+    energies: bytes
+    magnetisations: bytes
+    overlaps: bytes
 
 
-class RunFileError(Exception):
-    """A run file that cannot be made or written; the message names it and the way out."""
+@dataclass(frozen=True, eq=False)
+class RunFacts:
+    """What is known of a run when it begins.
+
+    ``subsolver`` is spelled as on a command line; ``settings`` are all of them, ``settings_table`` those of the file
+    ``settings_file``, if there was one; ``rows`` says which calls get a row: ``all``, ``share`` or ``auto`` (by price).
+    """
+
+    problem: Problem
+    source: str
+    seed: int
+    subsolver: str
+    settings: Mapping[str, Any]
+    settings_file: str
+    settings_table: Mapping[str, Any]
+    rows: str
 
 
 class RunFile:
-    """A run file being written. Make one, then call :meth:`begin` once per run."""
+    """A run file being written: a new one, or with ``reopen`` one that is there. Call :meth:`begin` once per run."""
 
-    def __init__(self, path: Path) -> None:
+    def __init__(self, path: Path, reopen: bool = False) -> None:
         self.path = path
-        if path.exists():
-            raise RunFileError(f"{path} is there already and is left as it is; give another name with --run")
+        if path.exists() != reopen:
+            raise RunFileError(
+                f"{path}: there is no such run file"
+                if reopen
+                else f"{path} is there already and is left as it is; give another name with --run"
+            )
         try:
             path.parent.mkdir(parents=True, exist_ok=True)
-            self._database = sqlite3.connect(path, isolation_level=None)
-            self._database.execute("PRAGMA journal_mode = WAL")
-            self._database.execute("PRAGMA synchronous = NORMAL")
-            self._database.executescript(f"BEGIN; {SCHEMA} COMMIT;")
+            self.database = sqlite3.connect(path, isolation_level=None)
+            self.database.execute("PRAGMA journal_mode = WAL")
+            self.database.execute("PRAGMA synchronous = NORMAL")
+            if not reopen:
+                self.database.executescript(f"BEGIN; {SCHEMA} COMMIT;")
         except (OSError, sqlite3.Error) as error:
             raise RunFileError(
                 f"cannot write the run file {path}: {error}; give a writable place with --run FILE"
             ) from error
-        self._tell(layout=str(LAYOUT), made_by=f"patchwalk {version('patchwalk')}")
+        if not reopen:
+            self._tell(layout=str(LAYOUT), made_by=f"patchwalk {version('patchwalk')}")
 
-    def begin(
-        self,
-        problem: Problem,
-        subsolver: Subsolver,
-        spelling: str,
-        rule: str,
-        seed: int,
-        settings: Mapping[str, Any],
-        source: str,
-        rows: str,
-    ) -> RunWriter:
-        """A writer for one run; ``rows`` says which calls get a row: ``all``, ``share`` or ``auto`` (by price)."""
-        database = self._database
-        with database:
-            database.execute("BEGIN")
-            database.execute(
-                "INSERT OR IGNORE INTO problems VALUES (?,?,?,?,?,?,?)",
+    def begin(self, facts: RunFacts, state: Snapshot) -> RunWriter:
+        """A writer for one run, whose state before the first round is kept at once."""
+        problem = facts.problem
+        with self.database:
+            self.database.execute("BEGIN")
+            self.database.execute(
+                "INSERT OR IGNORE INTO problems VALUES (?,?,?,?,?,?,?,?)",
                 (
-                    problem.fingerprint, source, problem.kind, len(problem), problem.coupling_count, problem.offset,
-                    problem.summary(),
+                    problem.fingerprint, facts.source, problem.kind, len(problem), problem.coupling_count,
+                    problem.offset, problem.summary(), problem_blob(problem),
                 ),
             )  # fmt: skip
-            run = database.execute(
-                "INSERT INTO runs (problem, seed, subsolver, settings, versions, rows_kept, begun, status) "
-                "VALUES (?,?,?,?,?,?,?,'running')",
+            run = self.database.execute(
+                "INSERT INTO runs (problem, seed, subsolver, settings, settings_file, settings_table, versions, "
+                "rows_kept, begun, status) VALUES (?,?,?,?,?,?,?,?,?,'running')",
                 (
-                    problem.fingerprint, seed, spelling, json.dumps(settings, default=str), json.dumps(versions()),
-                    rows, datetime.now(UTC).isoformat(timespec="seconds"),
+                    problem.fingerprint, facts.seed, facts.subsolver, json.dumps(facts.settings, default=str),
+                    facts.settings_file, json.dumps(facts.settings_table, default=str), json.dumps(versions()),
+                    facts.rows, datetime.now(UTC).isoformat(timespec="seconds"),
                 ),
             ).lastrowid  # fmt: skip
         assert run is not None
-        return RunWriter(self.path, database, run, subsolver, rule, rows)
+        writer = RunWriter(self, run, problem, facts.rows)
+        writer.close_group(state)
+        return writer
+
+    def take_up(self, run: int, problem: Problem, rows: str, state: Snapshot) -> RunWriter:
+        """A writer that goes on with a run from its last checkpoint; what was written of later rounds is forgotten."""
+        with self.database:
+            self.database.execute("BEGIN")
+            for table in ("calls", "incumbents"):
+                self.database.execute(f"DELETE FROM {table} WHERE run = ? AND round >= ?", (run, state.round))
+            self.database.execute("UPDATE runs SET status = 'running', message = NULL WHERE run = ?", (run,))
+        return RunWriter(self, run, problem, rows)
 
     def close(self) -> None:
         """Fold the write-ahead log into the file and let go of it; a file that holds no run is removed."""
-        empty = self._database.execute("SELECT count(*) FROM runs").fetchone()[0] == 0
-        self._database.close()
+        empty = self.database.execute("SELECT count(*) FROM runs").fetchone()[0] == 0
+        self.database.close()
         if empty:
             self.path.unlink(missing_ok=True)
 
     def _tell(self, **facts: str) -> None:
-        with self._database:
-            self._database.executemany("INSERT OR REPLACE INTO about VALUES (?,?)", facts.items())
+        with self.database:
+            self.database.executemany("INSERT OR REPLACE INTO about VALUES (?,?)", facts.items())
 
 
 class RunWriter:
     """Writes the rounds of one run, a group at a time."""
 
-    def __init__(
-        self, path: Path, database: sqlite3.Connection, run: int, subsolver: Subsolver, rule: str, rows: str
-    ) -> None:
-        self.path = path
-        self.run, self.rows_written = run, 0
-        self._database, self._subsolver, self._rule = database, subsolver, rule
-        self._rows_wanted: str | None = None if rows == "auto" else rows
-        self._group = 0
+    def __init__(self, file: RunFile, run: int, problem: Problem, rows: str) -> None:
+        self.path, self.run, self.rows_written = file.path, run, 0
+        self._database, self._rows_asked = file.database, rows
+        self._rows_wanted: dict[tuple[str, int], str] = {}
+        self._spellings: dict[int, tuple[Subsolver, str]] = {}
+        self._keep_local_fields = not follow_from_spins(problem)
+        query = "SELECT coalesce(max(number) + 1, 0) FROM groups WHERE run = ?"
+        self._group = self._database.execute(query, (run,)).fetchone()[0]
         self._start_group()
 
     def add(self, round_: Round) -> None:
         """Take one round in; nothing is written before the group closes."""
-        if not self._stages:
-            self._first_round = round_.number
-        self._last_round = round_.number
-        self._stages.append(round_.stage)
+        if round_.whole:
+            if not self._stages:
+                self._first_round = round_.number
+            self._last_round = round_.number
+            self._stages.append(round_.stage)
         self._improvements.extend(round_.improvements)
         for calls in round_.calls:
             self._calls += len(calls)
@@ -199,9 +201,10 @@ class RunWriter:
                     "INSERT INTO groups VALUES (?,?,?,?,?,?,?)",
                     (self.run, self._group, self._first_round, self._last_round, self._calls, len(self._rows), stages),
                 )
+                self._group += 1
             self._checkpoint(state)
+            database.execute("DELETE FROM kept_answers WHERE run = ?", (self.run,))
         self.rows_written += len(self._rows)
-        self._group += 1
         self._start_group()
 
     def finish(self, state: Snapshot, **facts: Any) -> None:
@@ -209,10 +212,12 @@ class RunWriter:
         self.close_group(state)
         columns = ", ".join(f"{name} = ?" for name in facts)
         with self._writing() as database:
-            database.execute(
-                f"UPDATE runs SET {columns}, spins = ? WHERE run = ?",
-                (*facts.values(), packed(state.best_spins), self.run),
-            )
+            database.execute(f"UPDATE runs SET {columns} WHERE run = ?", (*facts.values(), self.run))
+
+    def add_measurements(self, series: Iterable[Measured]) -> None:
+        """Write the series that a sampling run measured."""
+        with self._writing() as database:
+            database.executemany("INSERT INTO measurements VALUES (?,?,?,?,?,?)", [(self.run, *one) for one in series])
 
     @contextlib.contextmanager
     def _writing(self) -> Iterator[sqlite3.Connection]:
@@ -228,18 +233,31 @@ class RunWriter:
         self._rows: list[tuple[Any, ...]] = []
         self._stages: list[float] = []
         self._improvements: list[Improvement] = []
-        self._tallies: dict[tuple[str, int, int], np.typing.NDArray[np.float64]] = {}
+        self._tallies: dict[tuple[str, str, int, int], np.typing.NDArray[np.float64]] = {}
+
+    def _spelling(self, subsolver: Subsolver) -> str:
+        """The subsolver as text, spelled once; the object is held so that its identity stays its own."""
+        if id(subsolver) not in self._spellings:
+            self._spellings[id(subsolver)] = (subsolver, spelled(subsolver))
+        return self._spellings[id(subsolver)][1]
 
     def _take(self, round_: Round, calls: Calls) -> None:
-        if self._rows_wanted is None:
-            self._rows_wanted = "all" if _is_dear(self._subsolver, calls.batch) else "share"
         kept = np.ones(len(calls), np.bool_)
-        if self._rows_wanted == "share":
+        if round_.whole and self._wanted(calls) == "share":
             kept = one_in(SHARE_OF_CHEAP_ROWS, calls.batch.seeds, SHARE_WORD) | (calls.proposals.status != Status.OK)
             self._tally(round_, calls, ~kept)
         fresh = list(self._rows_of(round_, calls, np.flatnonzero(kept)))
         self._rows.extend(fresh)
         self._bytes += len(fresh) * (200 + 14 * calls.batch.size)
+
+    def _wanted(self, calls: Calls) -> str:
+        """Which calls of this subsolver and size get a row of their own: decided once, by price."""
+        if self._rows_asked != "auto":
+            return self._rows_asked
+        key = (self._spelling(calls.subsolver), calls.batch.size)
+        if key not in self._rows_wanted:
+            self._rows_wanted[key] = "all" if _is_dear(calls.subsolver, calls.batch) else "share"
+        return self._rows_wanted[key]
 
     def _rows_of(self, round_: Round, calls: Calls, kept: np.typing.NDArray[np.intp]) -> Iterable[tuple[Any, ...]]:
         batch, answer = calls.batch, calls.proposals
@@ -249,12 +267,13 @@ class RunWriter:
         columns: list[Iterable[Any]] = [
             [self.run] * count,
             [round_.number] * count,
-            (kept + calls.first_index).tolist(),
-            [0] * count,
+            calls.replicas[kept].tolist(),
+            calls.places[kept].tolist(),
             batch.seeds[kept].tolist(),
             [round_.stage] * count,
             batch.temperature[kept].tolist(),
-            [self._rule] * count,
+            [calls.rule] * count,
+            [self._spelling(calls.subsolver)] * count,
             [size] * count,
             _blobs(calls.members[kept].astype("<i4", copy=False)),
             _blobs(batch.fields[kept].astype("<f8", copy=False)),
@@ -275,7 +294,7 @@ class RunWriter:
 
     def _tally(self, round_: Round, calls: Calls, rest: np.typing.NDArray[np.bool_]) -> None:
         """Add the calls that get no row of their own to the exact tallies."""
-        key = (self._rule, calls.batch.size, min(9, int(10 * round_.stage)))
+        key = (self._spelling(calls.subsolver), calls.rule, calls.batch.size, min(9, int(10 * round_.stage)))
         accepted, change = calls.accepted & rest, calls.change
         fall, rise = accepted & (change < 0), accepted & (change > 0)
         chosen = calls.proposals.outcomes[np.arange(len(calls)), calls.chosen]
@@ -286,10 +305,10 @@ class RunWriter:
             calls.seconds * rest.mean(),
         ]  # fmt: skip
 
-    def _add_tally(self, key: tuple[str, int, int], tally: np.typing.NDArray[np.float64]) -> None:
+    def _add_tally(self, key: tuple[str, str, int, int], tally: np.typing.NDArray[np.float64]) -> None:
         counts = [int(count) for count in tally[:4]]
         self._database.execute(
-            "INSERT INTO tallies VALUES (?,?,?,?,?,?,?,?,?,?,?) ON CONFLICT DO UPDATE SET "
+            "INSERT INTO tallies VALUES (?,?,?,?,?,?,?,?,?,?,?,?) ON CONFLICT DO UPDATE SET "
             "calls = calls + excluded.calls, accepted = accepted + excluded.accepted, moved = moved + excluded.moved, "
             "improved = improved + excluded.improved, fall = fall + excluded.fall, rise = rise + excluded.rise, "
             "seconds = seconds + excluded.seconds",
@@ -297,47 +316,30 @@ class RunWriter:
         )
 
     def _checkpoint(self, state: Snapshot) -> None:
-        """Keep the state; local fields, bit for bit, only of the newest one."""
+        """Keep the state; what only a resume needs is kept of the newest one alone."""
         self._database.execute(
-            "UPDATE checkpoints SET local_fields = NULL WHERE run = ? AND local_fields IS NOT NULL", (self.run,)
+            "UPDATE checkpoints SET local_fields = NULL, elites = NULL, counts = NULL, details = NULL "
+            "WHERE run = ? AND details IS NOT NULL",
+            (self.run,),
         )
+        local_fields = state.local_fields.astype("<f8", copy=False).tobytes() if self._keep_local_fields else None
         self._database.execute(
-            "INSERT OR REPLACE INTO checkpoints VALUES (?,?,?,?,?,?,?,?,?)",
+            "INSERT OR REPLACE INTO checkpoints VALUES (?,?,?,?,?,?,?,?,?,?,?,?,?,?)",
             (
-                self.run, state.round, state.calls, state.sweeps, state.energy, state.best_energy, packed(state.spins),
-                packed(state.best_spins), state.local_fields.astype("<f8", copy=False).tobytes(),
+                self.run, state.round, state.calls, state.sweeps, state.seconds, len(state.spins),
+                state.energies.astype("<f8", copy=False).tobytes(), packed(state.spins), local_fields,
+                state.best_energy, packed(state.best_spins), packed(state.elites), _counts_blob(state.counts),
+                json.dumps(state.details),
             ),
         )  # fmt: skip
 
 
-def packed(spins: np.typing.NDArray[np.int8]) -> bytes:
-    """Spins as bits, 1 for -1.
-
-    >>> packed(np.array([1, -1, -1], np.int8))
-    b'\\x06'
-    """
-    return np.packbits(spins < 0, bitorder="little").tobytes()
-
-
-def unpacked(blob: bytes, size: int) -> np.typing.NDArray[np.int8]:
-    """The ``size`` spins behind :func:`packed`."""
-    bits = np.unpackbits(np.frombuffer(blob, np.uint8), count=size, bitorder="little")
-    return 1 - 2 * bits.astype(np.int8)
-
-
-def versions() -> dict[str, str]:
-    """What the bits of a run depend on beside its seed: library versions and the kind of processor."""
-    names = ("patchwalk", "numpy", "scipy", "numba", "llvmlite")
-    import llvmlite.binding as llvm
-
-    found = {name: version(name) for name in names}
-    return {
-        **found, "python": platform.python_version(), "system": sys.platform, "processor": llvm.get_host_cpu_name()
-    }  # fmt: skip
+def _counts_blob(counts: np.typing.NDArray[np.int64]) -> bytes:
+    return counts.astype("<i8", copy=False).tobytes()
 
 
 def _is_dear(subsolver: Subsolver, batch: ClusterBatch) -> bool:
-    """Whether one call costs more than the limit at the fixed prices: decided once per run, on its first batch."""
+    """Whether one call costs more than the limit at the fixed prices."""
     forecast = forecast_of(subsolver, batch)
     return forecast is None or bool(priced(forecast.work, len(batch)).mean() >= DEAR_SECONDS)
 

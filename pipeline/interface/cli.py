@@ -12,6 +12,11 @@ import click
 
 COMMANDS = {
     "solve": ("patchwalk.interface.solve_options:solve_command", "Search for the lowest energy of a problem."),
+    "resume": ("patchwalk.interface.resume_options:resume_command", "Go on with a run that was stopped or killed."),
+    "sample": (
+        "patchwalk.interface.sample_options:sample_command",
+        "Averages over the Boltzmann law, with error bars.",
+    ),
     "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
     "backends": ("patchwalk.interface.backends_options:backends_command", "List backends, check one, or time one."),
 }
@@ -49,18 +54,22 @@ def program() -> None:
 
 def exit_code(error: Exception) -> int | None:
     """The exit code that tells what kind of mistake this was; None for one that is ours."""
-    from patchwalk.evidence.runfile import RunFileError
+    from patchwalk.evidence.layout import RunFileError
     from patchwalk.problem.ising import ProblemError
-    from patchwalk.settings import SettingsError
+    from patchwalk.search.sampling import InadmissibleError
+    from patchwalk.settings_checks import SettingsError
     from patchwalk.subsolvers.registry import NotReadyError, SubsolverError
+    from patchwalk.workers import WorkersError
 
     codes: dict[type[Exception], int] = {
         SettingsError: 2,
+        InadmissibleError: 2,
         NotReadyError: 1,
         SubsolverError: 2,
         ProblemError: 3,
         MemoryError: 4,
         RunFileError: 1,
+        WorkersError: 1,
         OSError: 1,
     }
     return next((code for kind, code in codes.items() if isinstance(error, kind)), None)

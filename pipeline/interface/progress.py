@@ -67,7 +67,7 @@ class Narrator:
         for calls in round_.calls:
             self._calls_seen += len(calls)
             self._accepted += int(calls.accepted.sum())
-        now, self._temperature = search.elapsed, round_.temperature
+        now, self._temperature = search.elapsed, float(round_.temperatures.min())
         if self._live is not None and now >= min(self._next_live, self._next_line):
             self._next_live = now + LIVE_SECONDS
             self._live.update(Text(self._line(search), style="bold"), refresh=True)

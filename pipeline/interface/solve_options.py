@@ -4,33 +4,49 @@ from __future__ import annotations
 
 import typing
 from collections.abc import Callable
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 from pydantic.fields import FieldInfo
 
 from patchwalk.interface.cli import fail, print_json
-from patchwalk.settings import SolveSettings, plain_type
+from patchwalk.settings import SearchSettings, SolveSettings
+from patchwalk.settings_checks import plain_type
+
+if TYPE_CHECKING:
+    from patchwalk.commands.solving import Solution
 
 EXIT_INFEASIBLE = 5
+METAVARS = {
+    "start": "FILE", "run": "FILE", "answer": "FILE", "field_file": "FILE", "seeds": "1..5",
+    "subsolver": "NAME[,key=value...]", "scheduler": "tcp://HOST:PORT", "callers": "TABLES",
+    "rule": "NAME[=WEIGHT,...]",
+    "temperatures": "NUMBERS",
+}  # fmt: skip
 EXIT_CODES = {"interrupted": 130, "error": 1}
 
 
-def setting_options(command: Callable[..., None]) -> Callable[..., None]:
-    """Give the command an option for every field of :class:`SolveSettings`; all are text, checked together later."""
-    for name, field in reversed(SolveSettings.model_fields.items()):
-        command = click.option(
-            f"--{name.replace('_', '-')}", name, type=str, default=None, help=_help(field), metavar=_metavar(name)
-        )(command)
-    return command
+def setting_options(model: type[SearchSettings]) -> Callable[[Callable[..., None]], Callable[..., None]]:
+    """Give a command an option for every setting of the model; all are text, checked together later."""
+
+    def decorated(command: Callable[..., None]) -> Callable[..., None]:
+        for name, field in reversed(model.model_fields.items()):
+            option, kind = f"--{name.replace('_', '-')}", plain_type(model, name)
+            if kind is bool:
+                command = click.option(option, name, is_flag=True, default=None, help=field.description)(command)
+                continue
+            command = click.option(
+                option, name, type=str, default=None, help=_help(field), metavar=_metavar(name, kind)
+            )(command)
+        return command
+
+    return decorated
 
 
-def _metavar(name: str) -> str:
-    special = {"start": "FILE", "run": "FILE", "seeds": "1..5", "subsolver": "NAME[,key=value...]"}
-    kind = plain_type(name)
+def _metavar(name: str, kind: Any) -> str:
     if typing.get_origin(kind) is typing.Literal:
         return f"[{'|'.join(typing.get_args(kind))}]"
-    return special.get(name, "NUMBER" if kind in (int, float) else "WORD")
+    return METAVARS.get(name, "NUMBER" if kind in (int, float) else "WORD")
 
 
 def _help(field: FieldInfo) -> str:
@@ -41,7 +57,7 @@ def _help(field: FieldInfo) -> str:
 
 @click.command(context_settings={"max_content_width": 110})
 @click.argument("source", metavar="INPUT")
-@setting_options
+@setting_options(SolveSettings)
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 @click.option("--quiet", is_flag=True, help="No progress on standard error.")
 def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None:
@@ -71,5 +87,9 @@ def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None
         print_json(solution.as_json())
     else:
         click.echo(in_words(solution))
-    code = EXIT_CODES.get(solution.status, 0 if solution.feasible else EXIT_INFEASIBLE)
-    raise SystemExit(code)
+    leave_with(solution)
+
+
+def leave_with(solution: Solution) -> None:
+    """End the program with the exit code that tells how the run ended."""
+    raise SystemExit(EXIT_CODES.get(solution.status, 0 if solution.feasible else EXIT_INFEASIBLE))

@@ -22,10 +22,11 @@ import numpy as np
 import numpy.typing as npt
 
 from patchwalk.problem.files import read_start
+from patchwalk.problem.forms import PathLike
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.kinds.plain import encoding_of
 from patchwalk.problem.meanings import Answer, Encoding
-from patchwalk.problem.sources import PathLike, fail, numbered_lines
+from patchwalk.problem.sources import fail, numbered_lines
 
 __all__ = [
     "Answer",

@@ -2,57 +2,83 @@
 
 Shaw, CP 1998, LNCS 1520, 417, with a Metropolis rule in place of "improve only". One round picks clusters that do not
 touch, conditions them on everything else, hands them to the subsolver, accepts or refuses every answer on its own,
-and then sweeps the whole problem. Every decision rests on seeds and counted work; only a budget in seconds lets the
-clock in.
+and then sweeps the whole problem; with several replicas all of this happens in each, side by side. Every decision
+rests on seeds and counted work; only a budget in seconds lets the clock in.
 """
 
 from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from patchwalk.acceptance import judge
-from patchwalk.clusters.conditioning import condition
-from patchwalk.clusters.rules import ClusterRule, Marks
-from patchwalk.engine import Answered, answers, failed, prepared, release
+from patchwalk.acceptance import AcceptanceRule
+from patchwalk.clusters.mixture import Mixture, RuleWeights
+from patchwalk.clusters.policy import Policy
+from patchwalk.cost import priced
+from patchwalk.engine import Answered, failed, prepared, release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
-from patchwalk.search.sweeps import descend, flip_accepted, metropolis_sweep
-from patchwalk.search.temperature import GeometricCooling
-from patchwalk.subsolvers.contract import I8, I32, ClusterBatch, Status, Subsolver
-from patchwalk.subsolvers.draws import call_seeds, generator_for, seed_for, stream_for
+from patchwalk.search.calling import Caller, Cut, rehearsing
+from patchwalk.search.carrying import Carrying
+from patchwalk.search.elites import Elites
+from patchwalk.search.ends import Ends, Spent
+from patchwalk.search.replicas import Replicas
+from patchwalk.search.sweeps import descend
+from patchwalk.search.temperature import Temperatures
+from patchwalk.subsolvers.contract import F64, I8, I32, I64, Status, Subsolver
+from patchwalk.subsolvers.draws import generator_for, seed_for
+from patchwalk.workers import Serial, Workers
 
-START, RULE, SWEEP, CALL = 1, 2, 3, 4
+RESTART, MIXTURE = 6, 7
 """Words that tell the streams of one run seed apart."""
 
 REFRESH_ROUNDS = 1000
-"""Local fields and energy are derived afresh after this many rounds, so that rounding cannot pile up."""
+"""Local fields and energies are derived afresh after this many rounds, so that rounding cannot pile up."""
 
 
-@dataclass(frozen=True)
-class Ends:
-    """When to stop, whichever comes first: cluster calls, sweeps, seconds (without compiling), a target energy."""
-
-    calls: int | None = None
-    sweeps: int | None = None
-    seconds: float | None = None
-    energy: float | None = None
-
-
-@dataclass(frozen=True)
+@dataclass(eq=False)
 class Plan:
-    """How to search. ``failures`` is how many calls in a row may fail before the run gives up."""
+    """How to search; made afresh for every run, because rules and temperatures learn.
 
-    rule: ClusterRule
+    ``replicas`` configurations are searched side by side. After ``restart_after`` rounds without a better energy of
+    its own a replica goes on from one of the ``keep`` best configurations, which are ``distance`` spins apart or more.
+    ``failures`` is how many calls in a row may fail before the run gives up.
+    """
+
+    policy: Policy
+    rules: Mixture
     cluster_size: int
     clusters_per_round: int
     sweeps_per_round: int
-    cooling: GeometricCooling
+    temperatures: Temperatures
     ends: Ends
+    acceptance: AcceptanceRule = "metropolis"
+    replicas: int = 1
+    restart_after: int | None = None
+    keep: int = 8
+    distance: int = 1
     failures: int = 100
+
+
+@dataclass(eq=False)
+class Failures:
+    """Calls that failed, in all and in a row, and what the last one said."""
+
+    total: int = 0
+    in_a_row: int = 0
+    sentence: str = ""
+
+    def count(self, calls: Calls) -> None:
+        """Take in the statuses of one slice."""
+        status = calls.proposals.status
+        bad, well = np.flatnonzero(status == Status.FAILED), np.flatnonzero(status != Status.FAILED)
+        self.total += len(bad)
+        if len(bad):
+            self.sentence = calls.proposals.messages[bad[-1]]
+        self.in_a_row = len(status) - 1 - int(well[-1]) if len(well) else self.in_a_row + len(status)
 
 
 class NeighbourhoodSearch:
@@ -63,46 +89,84 @@ class NeighbourhoodSearch:
     def __init__(
         self,
         problem: Problem,
-        subsolver: Subsolver,
         plan: Plan,
         seed: int,
         start: I8 | None = None,
         interrupted: Callable[[], bool] = lambda: False,
+        workers: Workers | None = None,
     ) -> None:
-        self.problem, self.subsolver, self.plan, self.seed = problem, subsolver, plan, seed
+        self.problem, self.plan, self.seed = problem, plan, seed
         self.interrupted = interrupted
+        self.workers = Serial() if workers is None else workers
         self.status, self.message = "budget", ""
         self.round = self.calls = self.sweeps = 0
-        self.failed_calls = self._failures_in_a_row = 0
-        given = start if start is not None else _random_spins(len(problem), seed)
-        self.spins = given.copy()
-        self.energy = problem.energy(self.spins)
-        self.local_fields = problem.local_fields(self.spins)
-        self.best_energy, self.best_spins = self.energy, self.spins.copy()
-        self._marks = Marks.for_problem(problem)
-        self._places: I32 = np.full(len(problem), -1, np.int32)
-        self._graph = (problem.row_starts, problem.neighbours, problem.couplings)
-        self._improvements = [Improvement(self.energy, "start", 0, 0, 0, 0.0)]
-        self._began = time.perf_counter()
+        self.failures = Failures()
+        self.replicas = Replicas.random(problem, plan.replicas, seed)
+        if start is not None:
+            self.replicas.put(0, start)
+        self.caller = Caller(problem, plan.policy, plan.cluster_size, plan.acceptance, seed, self.workers)
+        self.carrying = Carrying(problem, seed, self.workers)
+        self.elites = Elites.none_yet(len(problem), plan.keep, plan.distance, not np.any(problem.fields))
+        self.counts: I64 = np.zeros(len(problem), np.int64)
+        self.rules = plan.rules.closed(problem, plan.cluster_size)
+        self.weights = RuleWeights(self.rules)
+        self.best_energy, self.best_spins = np.inf, self.replicas.spins[0].copy()
+        self._own_best: F64 = np.full(plan.replicas, np.inf)
+        self._rounds_without_own_gain: I64 = np.zeros(plan.replicas, np.int64)
+        self._rounds_without_gain = 0
+        self._improvements: list[Improvement] = []
+        self._spent_before, self._began = 0.0, time.perf_counter()
+        self._note_best("start")
+        self._resume_point = self._state()
+
+    @property
+    def subsolver(self) -> Subsolver:
+        """Who is asked, or the first of those who are."""
+        return next(case.subsolver for case in self.caller.policy.cases if case.subsolver is not None)
+
+    @property
+    def energy(self) -> float:
+        """The lowest energy among the present configurations."""
+        return float(self.replicas.energies.min())
+
+    @property
+    def skipped(self) -> int:
+        """Clusters for which the policy called nobody; they count as calls for the budget."""
+        return self.caller.skipped
 
     def prepare(self) -> None:
-        """Compile everything and let the subsolver calibrate on sample clusters, before the clock starts."""
-        members = self._members(self.plan.clusters_per_round)
-        self.subsolver = prepared(self.subsolver, self._question(0.0, members))
-        rehearsal = NeighbourhoodSearch(_ring(2 * self.plan.cluster_size + 2), self.subsolver, self.plan, self.seed)
-        batch = rehearsal._question(0.0, rehearsal._members(1))
-        rehearsal._settle(rehearsal._members(1), Answered(0, batch, failed(batch, "rehearsal"), 0.0))
-        rehearsal._sweep(0.0)
-        rehearsal._polish()
+        """Compile everything and let the subsolvers calibrate on sample clusters, before the clock starts."""
+        temperatures = self.plan.temperatures.at(0.0)
+        cuts = self._cuts(self.plan.clusters_per_round)
+        sample = self.caller.question(cuts[0], self.replicas, np.zeros_like(temperatures))
+        cases = tuple(
+            replace(case, subsolver=prepared(case.subsolver, sample)) if case.subsolver is not None else case
+            for case in self.caller.policy.cases
+        )
+        self.caller.policy = replace(self.caller.policy, cases=cases)
+        self._rehearse()
+        self.carrying.rehearse(self.replicas, temperatures)
+
+    def _rehearse(self) -> None:
+        """Compile the loop's kernels on a small ring."""
+        caller = rehearsing(self.caller)
+        ring, counts = Replicas.random(caller.problem, 1, 1), np.zeros(len(caller.problem), np.int64)
+        for cut in caller.cuts(self.rules.rules[0], ring, 0, 1, counts, ring.spins):
+            batch = caller.question(cut, ring, np.zeros(1))
+            caller.settle(cut, Answered(0, batch, failed(batch, "rehearsal"), 0.0), "rehearsal", self.subsolver, ring)
+        descend(*_graph(caller.problem), ring.spins[0], ring.local_fields[0], 0.0)
 
     def rounds(self) -> Iterator[Round]:
-        """Search until an end is reached, one round at a time; then the subsolver is let go."""
+        """Search until an end is reached, one round at a time; then the subsolvers are let go."""
         self._began = time.perf_counter()
         try:
             while not self._ended():
                 yield self._one_round()
         finally:
-            release(self.subsolver)
+            for case in self.caller.policy.cases:
+                if case.subsolver is not None:
+                    release(case.subsolver)
+        self._resume_point = self.snapshot()  # before the last descent, which no resumed run would know of
         if self.plan.sweeps_per_round:
             self._polish()
 
@@ -112,139 +176,169 @@ class NeighbourhoodSearch:
         self._improvements.clear()
         return taken
 
-    def snapshot(self) -> Snapshot:
-        """The state between two rounds."""
-        return Snapshot(
-            self.round, self.calls, self.sweeps, self.energy, self.spins.copy(), self.local_fields.copy(),
-            self.best_energy, self.best_spins.copy(),
-        )  # fmt: skip
-
     @property
     def elapsed(self) -> float:
-        """Seconds since the search began, compiling apart."""
-        return time.perf_counter() - self._began
+        """Seconds spent searching, compiling apart, those before a resume included."""
+        return self._spent_before + time.perf_counter() - self._began
+
+    @property
+    def spent(self) -> Spent:
+        """What the ends are measured against."""
+        return Spent(self.calls + self.skipped, self.sweeps, self.elapsed, self._rounds_without_gain)
 
     @property
     def stage(self) -> float:
-        """The fraction of the budget spent: of the counted budgets where there are any, else of the seconds."""
-        ends = self.plan.ends
-        spent = [done / limit for done, limit in ((self.calls, ends.calls), (self.sweeps, ends.sweeps)) if limit]
-        if not spent and ends.seconds:
-            spent = [self.elapsed / ends.seconds]
-        return min(1.0, max(spent, default=0.0))
+        """The fraction of the budget spent."""
+        return self.plan.ends.stage(self.spent)
 
     def _ended(self) -> bool:
-        ends, tolerance = self.plan.ends, self.problem.tie_tolerance
-        if ends.energy is not None and self.best_energy <= ends.energy + tolerance:
+        ends = self.plan.ends
+        fired = ends.fired(self.spent)
+        if ends.reached(self.best_energy, self.problem.tie_tolerance):
             self.status, self.message = "target_reached", "the target was reached"
         elif self.interrupted():
             self.status, self.message = "interrupted", "interrupted; this is the best configuration so far"
-        elif self._failures_in_a_row >= self.plan.failures:
+        elif self.failures.in_a_row >= self.plan.failures:
             self.status = "error"
-            self.message = f"{self._failures_in_a_row} calls failed in a row; the last said: {self.message}"
-        elif ends.calls is not None and self.calls >= ends.calls:
-            self.message = f"the budget of {ends.calls:,} calls is spent"
-        elif ends.sweeps is not None and self.sweeps >= ends.sweeps:
-            self.message = f"the budget of {ends.sweeps:,} sweeps is spent"
-        elif self._out_of_time():
-            self.message = f"the budget of {ends.seconds:g} seconds is spent"
+            self.message = f"{self.failures.in_a_row} calls failed in a row; the last said: {self.failures.sentence}"
+        elif fired is not None:
+            self.status, self.message = fired
         else:
             return False
         return True
 
-    def _out_of_time(self) -> bool:
-        return self.plan.ends.seconds is not None and self.elapsed >= self.plan.ends.seconds
+    def _must_stop(self) -> bool:
+        return self.interrupted() or self.plan.ends.out_of_time(self.elapsed)
 
     def _one_round(self) -> Round:
-        stage = self.stage
-        temperature = self.plan.cooling.at(stage)
+        self._resume_point = self._state()
+        number, stage = self.round, self.stage
+        temperatures = self.plan.temperatures.at(stage)
+        calls = tuple(self._call(temperatures, stage))
+        self._note_best("clusters")
+        whole = self._sweep(temperatures)
+        if whole:
+            self._close_round(stage)
+        return Round(number, stage, temperatures, calls, self.replicas.energies.copy(), self.take_improvements(), whole)
+
+    def _cuts(self, wanted: int) -> list[Cut]:
+        self._drawn = self.rules.drawn(seed_for(self.seed, MIXTURE, self.round), self.weights)
+        rule = self.rules.rules[self._drawn]
+        return self.caller.cuts(rule, self.replicas, self.round, wanted, self.counts, self.elites.spins)
+
+    def _call(self, temperatures: F64, stage: float) -> Iterator[Calls]:
+        """Cluster calls, slice by slice; between slices an interrupt or the clock may end them."""
         wanted = self.plan.clusters_per_round
         if self.plan.ends.calls is not None:
-            wanted = min(wanted, self.plan.ends.calls - self.calls)
-        calls = self._call(temperature, wanted)
-        self._note_best("clusters")
-        self._sweep(temperature)
+            wanted = min(wanted, self.plan.ends.calls - self.calls - self.skipped)
+        cuts, gain, work = self._cuts(wanted), 0.0, 0.0
+        name = self.rules.rules[self._drawn].name
+        for calls in self.caller.carry_out(cuts, name, self.replicas, temperatures, stage, self._must_stop):
+            self.calls += len(calls)
+            self.failures.count(calls)
+            np.add.at(self.counts, calls.members.ravel(), 1)
+            gain -= float(calls.change[calls.accepted].sum(where=calls.change[calls.accepted] < 0.0))
+            work += float(priced(calls.proposals.work, len(calls)).sum())
+            yield calls
+        self.weights.reward(self._drawn, gain, work)
+
+    def _sweep(self, temperatures: F64) -> bool:
+        """The sweeps of a round; False where the round was cut short, here or before."""
+        step = 1 if len(self.replicas) == 1 else self.plan.sweeps_per_round  # together, replicas sweep in one go
+        for first in range(0, self.plan.sweeps_per_round, max(1, step)):
+            if self.plan.ends.sweeps is not None and self.sweeps >= self.plan.ends.sweeps:
+                break
+            if self._must_stop():
+                return False
+            self.carrying.sweep(self.replicas, temperatures, self.round, first, step)
+            self.sweeps += step * len(self.replicas)
+            self._note_best("sweeps")
+        return not self._must_stop()
+
+    def _close_round(self, stage: float) -> None:
+        """What follows a whole round: trades of temperature, good configurations kept, restarts, fresh local fields."""
+        self.plan.temperatures.watch(self.replicas.energies, stage, self.round)
+        self._rounds_without_gain += 1
+        for number, energy in enumerate(self.replicas.energies):
+            if self.elites.wants(float(energy)):
+                self.elites.offer(float(energy), self.replicas.spins[number])
+        if self.plan.restart_after is not None:
+            self._restart(self.plan.restart_after)
         self.round += 1
         if self.round % REFRESH_ROUNDS == 0:
-            self.local_fields = self.problem.local_fields(self.spins)
-            self.energy = self.problem.energy(self.spins)
-        return Round(self.round - 1, stage, temperature, calls, self.energy, self.take_improvements())
+            self.replicas.refresh()
 
-    def _members(self, wanted: int) -> I32:
-        seed = seed_for(self.seed, RULE, self.round)
-        return self.plan.rule.pick(self.problem, self.plan.cluster_size, wanted, seed, self._marks)
-
-    def _question(self, temperature: float, members: I32) -> ClusterBatch:
-        base = np.uint64(seed_for(self.seed, CALL, 0, self.round))  # 0: the one replica
-        seeds = call_seeds(base, len(members))
-        return condition(self.problem, members, self.spins, self.local_fields, temperature, seeds, self._places)
-
-    def _call(self, temperature: float, wanted: int) -> tuple[Calls, ...]:
-        """One batch of cluster calls, slice by slice; between slices an interrupt or the clock may end it."""
-        members = self._members(wanted)
-        done = []
-        for answered in answers(self.subsolver, self._question(temperature, members)):
-            done.append(self._settle(members, answered))
-            if self.interrupted() or self._out_of_time():
-                break
-        return tuple(done)
-
-    def _settle(self, members: I32, answered: Answered) -> Calls:
-        """Accept or refuse the answers of one slice and bring the configuration up to date."""
-        batch, proposals = answered.batch, answered.proposals
-        own = members[answered.start : answered.start + len(batch)]
-        chosen, change, accepted = judge(batch, proposals)
-        gained = np.where(accepted, change, 0.0)
-        before = self.energy + np.concatenate([[0.0], np.cumsum(gained)])
-        self.energy = float(before[-1])
-        flip_accepted(*self._graph, self.spins, self.local_fields, own, proposals.outcomes, chosen, accepted)
-        self.calls += len(batch)
-        self._count_failures(proposals.status, proposals.messages)
-        return Calls(own, batch, proposals, chosen, change, accepted, before[:-1], answered.start, answered.seconds)
-
-    def _count_failures(self, status: np.typing.NDArray[np.uint8], messages: tuple[str, ...]) -> None:
-        bad = np.flatnonzero(status == Status.FAILED)
-        self.failed_calls += len(bad)
-        if not len(bad):
-            self._failures_in_a_row = 0
-            return
-        self.message = messages[bad[-1]]
-        well = np.flatnonzero(status != Status.FAILED)
-        trailing = len(status) - 1 - well[-1] if len(well) else self._failures_in_a_row + len(status)
-        self._failures_in_a_row = int(trailing)
-
-    def _sweep(self, temperature: float) -> None:
-        for sweep in range(self.plan.sweeps_per_round):
-            if self.interrupted() or self._out_of_time() or self.sweeps == self.plan.ends.sweeps:
-                break
-            stream = stream_for(self.seed, SWEEP, self.round, sweep)
-            self.energy += metropolis_sweep(*self._graph, self.spins, self.local_fields, temperature, stream)
-            self.sweeps += 1
-            self._note_best("sweeps")
+    def _restart(self, patience: int) -> None:
+        """Put replicas that stand still into one of the best distinct configurations."""
+        better = self.replicas.energies < self._own_best - self.problem.tie_tolerance
+        self._own_best = np.where(better, self.replicas.energies, self._own_best)
+        self._rounds_without_own_gain = np.where(better, 0, self._rounds_without_own_gain + 1)
+        for number in np.flatnonzero(self._rounds_without_own_gain >= patience).tolist():
+            chosen = generator_for(self.seed, RESTART, self.round, number).integers(len(self.elites.spins))
+            self.replicas.put(number, self.elites.spins[chosen])
+            self._own_best[number], self._rounds_without_own_gain[number] = np.inf, 0
 
     def _polish(self) -> None:
         """Bring the best configuration down to where no single flip lowers it."""
-        local_fields = self.problem.local_fields(self.best_spins)
         spins = self.best_spins.copy()
-        if descend(*self._graph, spins, local_fields, self.problem.tie_tolerance) < 0.0:
-            self.spins, self.local_fields, self.energy = spins, local_fields, self.problem.energy(spins)
+        local_fields = self.problem.local_fields(spins)
+        if descend(*_graph(self.problem), spins, local_fields, self.problem.tie_tolerance) < 0.0:
+            self.replicas.put(0, spins)
             self._note_best("descent")
+        self.elites.offer(self.best_energy, self.best_spins)
 
     def _note_best(self, finder: str) -> None:
-        if self.energy < self.best_energy - self.problem.tie_tolerance:
-            self.best_energy = self.energy
-            self.best_spins[:] = self.spins
-            self._improvements.append(
-                Improvement(self.energy, finder, self.round, self.calls, self.sweeps, self.elapsed)
-            )
+        lowest = int(np.argmin(self.replicas.energies))
+        energy = float(self.replicas.energies[lowest])
+        if energy < self.best_energy - self.problem.tie_tolerance:
+            self.best_energy = energy
+            self.best_spins[:] = self.replicas.spins[lowest]
+            self._rounds_without_gain = 0
+            spent = 0.0 if finder == "start" else self.elapsed
+            self._improvements.append(Improvement(energy, finder, self.round, self.calls, self.sweeps, spent))
+
+    def snapshot(self) -> Snapshot:
+        """The state after the last whole round, from which a run can be resumed to the same bits."""
+        return self._state() if self._resume_point.round != self.round else self._resume_point
+
+    def _state(self) -> Snapshot:
+        details = {
+            "temperatures": self.plan.temperatures.as_state(),
+            "rules": self.weights.as_state(),
+            "skipped": self.skipped,
+            "failed_calls": self.failures.total,
+            "failed_in_a_row": self.failures.in_a_row,
+            "rounds_without_gain": self._rounds_without_gain,
+            "own_best": self._own_best.tolist(),
+            "rounds_without_own_gain": self._rounds_without_own_gain.tolist(),
+            "elite_energies": self.elites.energies.tolist(),
+        }
+        return Snapshot(
+            self.round, self.calls, self.sweeps, self.elapsed, self.replicas.spins.copy(),
+            self.replicas.local_fields.copy(), self.replicas.energies.copy(), float(self.best_energy),
+            self.best_spins.copy(), self.elites.spins, self.counts.copy(), details,
+        )  # fmt: skip
+
+    def go_on_from(self, state: Snapshot) -> None:
+        """Take up a run where :meth:`snapshot` left it."""
+        details = state.details
+        self.round, self.calls, self.sweeps = state.round, state.calls, state.sweeps
+        self._spent_before, self._began = state.seconds, time.perf_counter()
+        self.replicas.spins[:], self.replicas.local_fields[:] = state.spins, state.local_fields
+        self.replicas.energies[:] = state.energies
+        self.best_energy, self.best_spins = state.best_energy, state.best_spins.copy()
+        self.elites.spins, self.elites.energies = state.elites.copy(), np.array(details["elite_energies"], float)
+        self.counts[:] = state.counts
+        self.plan.temperatures.set_state(details["temperatures"])
+        self.weights = RuleWeights.from_state(self.rules, details["rules"])
+        self.caller.skipped = details["skipped"]
+        self.failures = Failures(details["failed_calls"], details["failed_in_a_row"])
+        self._rounds_without_gain = details["rounds_without_gain"]
+        self._own_best = np.array(details["own_best"], np.float64)
+        self._rounds_without_own_gain = np.array(details["rounds_without_own_gain"], np.int64)
+        self._improvements.clear()
+        self._resume_point = self._state()
 
 
-def _ring(size: int) -> Problem:
-    """A small problem to compile the loop's kernels on."""
-    spins = np.arange(size)
-    return Problem.from_arrays(spins, np.roll(spins, -1), np.ones(size))
-
-
-def _random_spins(size: int, seed: int) -> I8:
-    words = generator_for(seed, START).integers(0, 2, size, dtype=np.int8)
-    return 1 - 2 * words
+def _graph(problem: Problem) -> tuple[I64, I32, F64]:
+    return problem.row_starts, problem.neighbours, problem.couplings

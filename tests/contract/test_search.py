@@ -10,11 +10,13 @@ import numpy as np
 import pytest
 
 from patchwalk import engine
-from patchwalk.clusters.rules import cluster_rule
+from patchwalk.clusters.mixture import mixture_of
+from patchwalk.clusters.policy import Case, Policy
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
-from patchwalk.search.neighbourhood import Ends, NeighbourhoodSearch, Plan
+from patchwalk.search.ends import Ends
+from patchwalk.search.neighbourhood import NeighbourhoodSearch, Plan
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers import make_subsolver
 
@@ -23,11 +25,12 @@ GLASS = make("lattice2d", 14, couplings="gaussian", seed=5)
 
 def plan_for(problem: Problem, **ends: Any) -> Plan:
     cooling = GeometricCooling(0.5, 0.05, problem.field_scale)
-    return Plan(cluster_rule("ball"), 8, 16, 1, cooling, Ends(**ends))
+    policy = Policy((Case(make_subsolver("walk", shots=2)),))
+    return Plan(policy, mixture_of("ball"), 8, 16, 1, cooling, Ends(**ends))
 
 
 def run(problem: Problem, plan: Plan, seed: int = 3, **options: Any) -> tuple[NeighbourhoodSearch, list[Round]]:
-    search = NeighbourhoodSearch(problem, make_subsolver("walk", shots=2), plan, seed, **options)
+    search = NeighbourhoodSearch(problem, plan, seed, **options)
     search.prepare()
     return search, list(search.rounds())
 
@@ -35,12 +38,12 @@ def run(problem: Problem, plan: Plan, seed: int = 3, **options: Any) -> tuple[Ne
 def test_energies_are_those_of_the_configurations() -> None:
     search, rounds = run(GLASS, plan_for(GLASS, calls=300))
     assert search.calls == 300
-    assert search.energy == pytest.approx(GLASS.energy(search.spins), abs=1e-9)
+    assert search.energy == pytest.approx(GLASS.energy(search.replicas.spins[0]), abs=1e-9)
     assert search.best_energy == pytest.approx(GLASS.energy(search.best_spins), abs=1e-9)
-    np.testing.assert_allclose(search.local_fields, GLASS.local_fields(search.spins), atol=1e-9)
+    np.testing.assert_allclose(search.replicas.local_fields[0], GLASS.local_fields(search.replicas.spins[0]), atol=1e-9)
     assert [round_.number for round_ in rounds] == list(range(len(rounds)))
     assert all(earlier.stage < later.stage for earlier, later in itertools.pairwise(rounds))
-    assert rounds[0].temperature > rounds[-1].temperature
+    assert rounds[0].temperatures[0] > rounds[-1].temperatures[0]
 
 
 def test_slices_change_no_bit(monkeypatch: pytest.MonkeyPatch) -> None:
@@ -49,8 +52,8 @@ def test_slices_change_no_bit(monkeypatch: pytest.MonkeyPatch) -> None:
     sliced, rounds = run(GLASS, plan_for(GLASS, calls=200))
     assert max(len(round_.calls) for round_ in rounds) > 1
     assert all(len(part) == 1 for round_ in rounds for part in round_.calls)
-    assert sliced.spins.tobytes() == whole.spins.tobytes()
-    assert sliced.local_fields.tobytes() == whole.local_fields.tobytes()
+    assert sliced.replicas.spins.tobytes() == whole.replicas.spins.tobytes()
+    assert sliced.replicas.local_fields.tobytes() == whole.replicas.local_fields.tobytes()
 
 
 def test_a_common_power_of_two_changes_nothing() -> None:
@@ -58,14 +61,14 @@ def test_a_common_power_of_two_changes_nothing() -> None:
     large = replace(GLASS, couplings=GLASS.couplings * scale, fields=GLASS.fields * scale)
     one, _ = run(GLASS, plan_for(GLASS, calls=300))
     other, _ = run(large, plan_for(large, calls=300))
-    assert one.spins.tobytes() == other.spins.tobytes()
+    assert one.replicas.spins.tobytes() == other.replicas.spins.tobytes()
     assert one.best_spins.tobytes() == other.best_spins.tobytes()
     assert other.energy == one.energy * scale
 
 
 def test_other_seeds_go_other_ways() -> None:
     first, second = (run(GLASS, plan_for(GLASS, calls=50), seed)[0] for seed in (3, 4))
-    assert first.spins.tobytes() != second.spins.tobytes()
+    assert first.replicas.spins.tobytes() != second.replicas.spins.tobytes()
 
 
 def test_the_end_that_fired_is_named() -> None:
@@ -91,7 +94,7 @@ def test_an_interrupt_ends_it_with_the_best_so_far() -> None:
 def test_a_start_is_never_made_worse() -> None:
     ring = Problem.from_arrays(range(30), [*range(1, 30), 0], [1.0] * 30)
     ground = (1 - 2 * (np.arange(30) % 2)).astype(np.int8)
-    hot = replace(plan_for(ring, calls=60), cooling=GeometricCooling(50.0, 50.0, 1.0))
+    hot = replace(plan_for(ring, calls=60), temperatures=GeometricCooling(50.0, 50.0, 1.0))
     search, _ = run(ring, hot, start=ground)
     assert search.energy > -30.0
     assert search.best_energy == -30.0
@@ -101,7 +104,7 @@ def test_a_start_is_never_made_worse() -> None:
 def test_the_last_descent_needs_sweeps() -> None:
     hot = GeometricCooling(2.0, 2.0, GLASS.field_scale)
     for sweeps, finder in ((1, "descent"), (0, "clusters")):
-        plan = replace(plan_for(GLASS, calls=40), cooling=hot, sweeps_per_round=sweeps)
+        plan = replace(plan_for(GLASS, calls=40), temperatures=hot, sweeps_per_round=sweeps)
         search, rounds = run(GLASS, plan)
         improvements = [*(i for round_ in rounds for i in round_.improvements), *search.take_improvements()]
         assert improvements[-1].finder == finder
@@ -110,5 +113,5 @@ def test_the_last_descent_needs_sweeps() -> None:
 def test_fields_are_derived_afresh_at_fixed_rounds(monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr("patchwalk.search.neighbourhood.REFRESH_ROUNDS", 1)
     search, _ = run(GLASS, plan_for(GLASS, calls=100))
-    assert search.local_fields.tobytes() == GLASS.local_fields(search.spins).tobytes()
-    assert search.energy == GLASS.energy(search.spins)
+    assert search.replicas.local_fields[0].tobytes() == GLASS.local_fields(search.replicas.spins[0]).tobytes()
+    assert search.energy == GLASS.energy(search.replicas.spins[0])

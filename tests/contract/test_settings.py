@@ -8,8 +8,10 @@ from typing import Any
 import pytest
 from click.testing import CliRunner
 
+from patchwalk.clusters.mixture import mixture_of
 from patchwalk.interface.solve_options import solve_command
-from patchwalk.settings import DEFAULT_SECONDS, SettingsError, SolveSettings, checked_settings, read_settings
+from patchwalk.settings import DEFAULT_SECONDS, SolveSettings
+from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
 
 
 def test_every_setting_is_an_option_of_the_same_name() -> None:
@@ -21,16 +23,16 @@ def test_every_setting_is_an_option_of_the_same_name() -> None:
 
 
 def test_what_is_given_overrides_the_file() -> None:
-    settings = checked_settings({"sweeps": 3, "calls": 5}, {"sweeps": 0}, "a.toml")
+    settings = checked_settings(SolveSettings, {"sweeps": 3, "calls": 5}, {"sweeps": 0}, "a.toml")
     assert (settings.sweeps, settings.calls) == (0, 5)
-    assert checked_settings({"seed": 4}, {"seeds": "1..3"}, "a.toml").every_seed == [1, 2, 3]
-    assert checked_settings({"seeds": [4, 5]}, {"seed": 2}, "a.toml").every_seed == [2]
+    assert checked_settings(SolveSettings, {"seed": 4}, {"seeds": "1..3"}, "a.toml").every_seed == [1, 2, 3]
+    assert checked_settings(SolveSettings, {"seeds": [4, 5]}, {"seed": 2}, "a.toml").every_seed == [2]
 
 
 def test_all_mistakes_are_reported_at_once_with_their_places() -> None:
     table = {"cluster_sise": 3, "sweeps": -1, "hot": "warm", "calls": 10}
     with pytest.raises(SettingsError) as caught:
-        checked_settings(table, {"calls": "0", "rule": "bal"}, "a.toml", "--{}")
+        checked_settings(SolveSettings, table, {"calls": "0", "rule": "bal"}, "a.toml", "--{}", {"rule": mixture_of})
     complaints = caught.value.complaints
     assert len(complaints) == 5
     for place, words in (
@@ -60,20 +62,20 @@ def test_all_mistakes_are_reported_at_once_with_their_places() -> None:
 )
 def test_what_cannot_be_is_refused(given: dict[str, Any], words: str) -> None:
     with pytest.raises(SettingsError, match=words):
-        checked_settings({}, given, "")
+        checked_settings(SolveSettings, {}, given, "")
 
 
 def test_seeds_can_be_written_three_ways() -> None:
     for written in ("1..3", "1,2,3", [1, 2, 3]):
-        assert checked_settings({}, {"seeds": written}, "").every_seed == [1, 2, 3]
-    assert checked_settings({}, {}, "").every_seed == [1]
+        assert checked_settings(SolveSettings, {}, {"seeds": written}, "").every_seed == [1, 2, 3]
+    assert checked_settings(SolveSettings, {}, {}, "").every_seed == [1]
 
 
 def test_sixty_seconds_only_where_nothing_else_ends_the_run() -> None:
-    assert checked_settings({}, {}, "").time_limit == DEFAULT_SECONDS
-    assert checked_settings({}, {"target": 3.0}, "").time_limit == DEFAULT_SECONDS
-    assert checked_settings({}, {"calls": 10}, "").time_limit is None
-    assert checked_settings({}, {"calls": 10, "seconds": 5}, "").time_limit == 5
+    assert checked_settings(SolveSettings, {}, {}, "").time_limit == DEFAULT_SECONDS
+    assert checked_settings(SolveSettings, {}, {"target": 3.0}, "").time_limit == DEFAULT_SECONDS
+    assert checked_settings(SolveSettings, {}, {"calls": 10}, "").time_limit is None
+    assert checked_settings(SolveSettings, {}, {"calls": 10, "seconds": 5}, "").time_limit == 5
 
 
 def test_paths_in_a_file_are_relative_to_it(tmp_path: Path) -> None:

@@ -17,7 +17,7 @@ from typing import NamedTuple
 import pytest
 
 import patchwalk
-from patchwalk.settings import SettingsError
+from patchwalk.settings_checks import SettingsError
 
 PROGRAM = Path(sys.executable).with_name("patchwalk")
 SETTINGS, PROBLEM, MEMORY, ERROR = 2, 3, 4, 1  # exit codes

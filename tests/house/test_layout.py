@@ -14,7 +14,7 @@ FLOORS = {"interface": 5, "commands": 4, "search": 3, "evidence": 3, "bounds": 3
 """A room may import from lower floors only; search may use bounds, and search and evidence do not know each other."""
 
 SAME_FLOOR = {("search", "bounds")}
-LEAVES = {"acceptance", "engine", "cost", "statistics", "settings", "records"}
+LEAVES = {"acceptance", "engine", "cost", "statistics", "settings", "records", "settings_checks", "workers"}
 
 
 def modules() -> list[tuple[str, Path]]:

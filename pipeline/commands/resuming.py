@@ -1,0 +1,168 @@
+"""``resume``: a run goes on from its last checkpoint, to the bits it would have had without the break."""
+
+from __future__ import annotations
+
+import json
+from collections.abc import Callable, Iterator
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from patchwalk.commands.answers import answer_for
+from patchwalk.commands.interrupts import listening
+from patchwalk.commands.solving import Silent, Solution, Watcher, best_of, carry_out_one, delivered, hired, runs_of
+from patchwalk.commands.tasks import Task, policy_of, read_again
+from patchwalk.evidence.layout import RunFileError, unpacked, unpacked_rows
+from patchwalk.evidence.runfile import RunFile
+from patchwalk.evidence.stored import StoredFile, StoredRun, stored_file
+from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.search.neighbourhood import NeighbourhoodSearch
+from patchwalk.settings import SolveSettings
+from patchwalk.settings_checks import SettingsError, read_settings
+from patchwalk.subsolvers.contract import I8
+from patchwalk.workers import Workers, versions
+
+UNFINISHED = ("running", "interrupted", "error")
+CHANGEABLE = ("workers", "engine", "scheduler", "mixed_workers")
+"""Settings that change no bit of a result and may be given anew."""
+
+
+def resume(run: str | Path, problem: Problem | None = None, **given: Any) -> Solution:
+    """Go on with the runs of a run file; what has ended already is given back as it is.
+
+    ``problem`` is needed only where the run began from a :class:`Problem` whose names matter for the answer; ``given``
+    may hold ``workers``, ``engine``, ``scheduler`` and ``mixed_workers``. Raises ``RunFileError`` for a file that is
+    none, ``SettingsError`` or ``ProblemError`` naming what has changed since.
+    """
+    return carry_on(Path(run), given, Silent(), problem)
+
+
+def carry_on(path: Path, given: dict[str, Any], watcher: Watcher, problem: Problem | None = None) -> Solution:
+    """:func:`resume`, watched."""
+    with stored_file(path) as stored:
+        runs = stored.runs()
+        if not runs:
+            raise RunFileError(f"{path}: holds no run")
+        task = _task_of(path, stored, runs[0], problem, given)
+        ended = {run.seed: _solution_of(stored, run, task) for run in runs if run.status not in UNFINISHED}
+        begun = {run.seed: (run, stored.last_checkpoint(run.number, task.problem)) for run in runs}
+    watcher.understood([task.problem.summary(), *_bits_may_differ(runs[-1])])
+    seeds = task.settings.every_seed
+    if all(seed in ended for seed in seeds):
+        return delivered(task, best_of(task, [ended[seed] for seed in seeds]))
+    runfile = RunFile(path, reopen=True)
+
+    def solutions(interrupted: Callable[[], bool], workers: Workers) -> Iterator[Solution]:
+        for seed in seeds:
+            if seed in ended:
+                yield ended[seed]
+            elif seed in begun:
+                run, state = begun[seed]
+                search = NeighbourhoodSearch(task.problem, task.plan_for(seed), seed, None, interrupted, workers)
+                search.go_on_from(state)
+                yield carry_out_one(task, search, runfile, watcher, run)
+            else:
+                yield from runs_of(task, [seed], runfile, watcher, interrupted, workers)
+            if interrupted():
+                return
+
+    try:
+        with listening(watcher.stopping) as interrupted, hired(task.settings) as workers:
+            return delivered(task, best_of(task, solutions(interrupted, workers)))
+    finally:
+        runfile.close()
+
+
+def _task_of(
+    path: Path, stored: StoredFile, run: StoredRun, given_problem: Problem | None, given: dict[str, Any]
+) -> Task:
+    """The task as it was when the run began; refuses where settings or problem have changed since."""
+    _check_settings_file(run)
+    unknown = [key for key in given if key not in CHANGEABLE]
+    if unknown:
+        raise SettingsError(
+            [f"{unknown[0]} cannot be changed when a run is resumed; it may be: {', '.join(CHANGEABLE)}"]
+        )
+    changed = {"workers": None, "scheduler": None, "engine": "threads", **given}
+    settings = SolveSettings.model_validate({**run.settings, **changed, "run": path})
+    kept = stored.problem(run.problem)
+    problem = _problem_of(run, kept, settings, given_problem)
+    assert settings.cluster_size is not None
+    return Task(
+        problem=problem,
+        source=run.source,
+        settings=settings,
+        policy=policy_of(settings, Path(), ""),
+        cluster_size=settings.cluster_size,
+        start=_start_of(stored, run, settings, kept),
+        run_path=path,
+        settings_file=run.settings_file,
+        settings_table=run.settings_table,
+    )
+
+
+def _check_settings_file(run: StoredRun) -> None:
+    """Refuse a settings file that says something else now, naming the key."""
+    path = Path(run.settings_file)
+    if not run.settings_file or not path.exists():
+        return
+    now = json.loads(json.dumps(read_settings(path)[1], default=str))
+    for key in sorted({*now, *run.settings_table}):
+        if now.get(key) != run.settings_table.get(key):
+            raise SettingsError([
+                f"{path}: {key} is {now.get(key, 'left out')!r} now, the run began with "
+                f"{run.settings_table.get(key, 'none')!r}; put it back, or begin a new run with solve"
+            ])  # fmt: skip
+
+
+def _problem_of(run: StoredRun, kept: Problem, settings: SolveSettings, given: Problem | None) -> Problem:
+    """The problem from where it came from, names and all, if it is still there and the same; else as it was kept."""
+    place = "the problem given"
+    found = given
+    if found is None:
+        if not Path(run.source).is_file():
+            return kept
+        place, found = run.source, read_again(run.source, settings)
+    if found.fingerprint == kept.fingerprint:
+        return found
+    facts = ("kind", "offset", "row_starts", "neighbours", "couplings", "fields", "groups")
+    differing = next(name for name in facts if not np.array_equal(getattr(found, name), getattr(kept, name)))
+    words = {"row_starts": "couplings", "neighbours": "couplings"}
+    raise ProblemError(
+        f"{place}: the {words.get(differing, differing)} are not those the run began with; put the file back, or begin "
+        "a new run with solve"
+    )
+
+
+def _start_of(stored: StoredFile, run: StoredRun, settings: SolveSettings, problem: Problem) -> I8 | None:
+    """The start configuration, as the first run's first checkpoint holds it."""
+    if settings.start is None:
+        return None
+    query = "SELECT spins FROM checkpoints WHERE run = ? AND round = 0"
+    row = next(stored.rows(query, (run.number,)))
+    return unpacked_rows(row["spins"], len(problem))[0]
+
+
+def _bits_may_differ(run: StoredRun) -> list[str]:
+    differing = [key for key, value in versions().items() if run.versions.get(key) != value]
+    if not differing:
+        return []
+    key = differing[0]
+    return [f"the run began with {key} {run.versions.get(key)}, here it is {versions()[key]}: bits may differ"]
+
+
+def _solution_of(stored: StoredFile, run: StoredRun, task: Task) -> Solution:
+    """The solution of a run that has ended."""
+    row = next(stored.rows("SELECT * FROM runs WHERE run = ?", (run.number,)))
+    problem = task.problem
+    spins = unpacked(row["spins"], len(problem))
+    energy = problem.energy(spins)
+    feasible, answer = answer_for(problem, spins)
+    return Solution(
+        spins=spins, energy=energy, objective=problem.objective(energy), objective_name=problem.objective_name,
+        feasible=feasible, answer=answer, status=row["status"], message=row["message"], seconds=row["seconds"],
+        compile_seconds=row["compile_seconds"], calls=row["calls"], failed_calls=row["failed_calls"],
+        skipped=row["skipped"], sweeps=row["sweeps"], seed=run.seed, run_path=task.run_path, notes=problem.notes,
+        lower_bound=row["lower_bound"],
+    )  # fmt: skip

@@ -1,0 +1,196 @@
+"""``sample``: averages over the Boltzmann law, exactly and with error bars, every cluster call recorded."""
+
+from __future__ import annotations
+
+import time
+from dataclasses import dataclass
+from pathlib import Path
+from typing import Any, Protocol
+
+import numpy as np
+
+from patchwalk.commands.interrupts import listening
+from patchwalk.commands.solving import hired
+from patchwalk.commands.tasks import SampleTask, sample_task_from
+from patchwalk.evidence.layout import packed
+from patchwalk.evidence.runfile import Measured, RunFacts, RunFile, RunWriter
+from patchwalk.problem.ising import Problem
+from patchwalk.records import Snapshot
+from patchwalk.search.observables import Level
+from patchwalk.search.sampling import BoltzmannSampling
+from patchwalk.subsolvers.registry import spelled
+
+
+@dataclass(frozen=True, eq=False)
+class Sampled:
+    """What was measured: ``levels``, one for each temperature, and how it was come by.
+
+    ``status`` is ``budget`` or ``interrupted``; ``rounds`` those measured, ``burn_in`` those thrown away. Of a problem
+    whose objective is not its energy (MaxCut), energies are E all the same.
+    """
+
+    levels: tuple[Level, ...]
+    status: str
+    message: str
+    rounds: int
+    burn_in: int
+    calls: int
+    failed_calls: int
+    sweeps: int
+    seconds: float
+    compile_seconds: float
+    seed: int
+    run_path: Path
+
+    def as_json(self) -> dict[str, Any]:
+        """Plain values for ``--json``."""
+        names = (
+            "status", "message", "rounds", "burn_in", "calls", "failed_calls", "sweeps", "seconds", "compile_seconds",
+            "seed",
+        )  # fmt: skip
+        return {
+            "levels": [level.as_json() for level in self.levels],
+            **{name: getattr(self, name) for name in names},
+            "run_path": str(self.run_path),
+        }
+
+
+class SampleWatcher(Protocol):
+    """Somebody who is told how sampling is going."""
+
+    def understood(self, lines: list[str]) -> None: ...
+
+    def compiling(self) -> None: ...
+
+    def compiled(self, seconds: float) -> None: ...
+
+    def measured(self, sampling: BoltzmannSampling, elapsed: float) -> None: ...
+
+    def stopping(self) -> None: ...
+
+
+class SilentSampleWatcher:
+    """Watches and says nothing."""
+
+    def understood(self, lines: list[str]) -> None:
+        pass
+
+    def compiling(self) -> None:
+        pass
+
+    def compiled(self, seconds: float) -> None:
+        pass
+
+    def measured(self, sampling: BoltzmannSampling, elapsed: float) -> None:
+        pass
+
+    def stopping(self) -> None:
+        pass
+
+
+def sample(problem: Problem | str | Path, **settings: Any) -> Sampled:
+    """Averages over the Boltzmann law at the ``temperatures`` given, with cluster proposals of an admissible subsolver.
+
+    Keywords are the names of :class:`patchwalk.settings.SampleSettings`. Raises ``InadmissibleError`` for a combination
+    that would sample another law, and what :func:`patchwalk.solve` raises for problem and settings.
+
+    >>> import os, tempfile
+    >>> pair = Problem.from_arrays([0], [1], [1.0])
+    >>> with tempfile.TemporaryDirectory() as folder:
+    ...     result = sample(pair, subsolver="walk,start=incumbent", cluster_size=2, temperatures=[1.0], rounds=400,
+    ...                     run=os.path.join(folder, "pair.sqlite"))
+    >>> energy = result.levels[0].energy  # exactly -tanh(1) = -0.7616
+    >>> abs(energy.value + 0.7616) < 5 * energy.error
+    True
+    """
+    return carry_out(sample_task_from(problem, settings), SilentSampleWatcher())
+
+
+def carry_out(task: SampleTask, watcher: SampleWatcher) -> Sampled:
+    """:func:`sample`, watched."""
+    watcher.understood([task.problem.summary(), *task.problem.notes])
+    seed = 1 if task.settings.seed is None else task.settings.seed
+    plan = task.plan  # refused combinations before anything is written
+    with listening(watcher.stopping) as interrupted, hired(task.settings) as workers:
+        sampling = BoltzmannSampling(task.problem, plan, seed, task.start, interrupted, workers)
+        runfile = RunFile(task.run_path)
+        try:
+            return _carry_out(task, sampling, runfile, watcher)
+        finally:
+            runfile.close()
+
+
+def _carry_out(task: SampleTask, sampling: BoltzmannSampling, runfile: RunFile, watcher: SampleWatcher) -> Sampled:
+    watcher.compiling()
+    began = time.perf_counter()
+    sampling.prepare()
+    compile_seconds = time.perf_counter() - began
+    watcher.compiled(compile_seconds)
+    writer = runfile.begin(_facts(task, sampling), _snapshot(sampling, 0.0))
+    began = time.perf_counter()
+    for round_ in sampling.sample():
+        writer.add(round_)
+        if writer.due:
+            writer.close_group(_snapshot(sampling, time.perf_counter() - began))
+        watcher.measured(sampling, time.perf_counter() - began)
+    return _finished(task, sampling, writer, time.perf_counter() - began, compile_seconds)
+
+
+def _finished(
+    task: SampleTask, sampling: BoltzmannSampling, writer: RunWriter, seconds: float, compile_seconds: float
+) -> Sampled:
+    measured, plan = sampling.observables.measured, sampling.plan
+    whole = measured == plan.rounds
+    status, message = ("budget", f"all {measured:,} rounds were measured") if whole else (
+        "interrupted", f"interrupted; {measured:,} of {plan.rounds:,} rounds were measured")  # fmt: skip
+    levels = tuple(
+        sampling.observables.at_level(level, float(temperature), len(task.problem))
+        for level, temperature in enumerate(plan.temperatures)
+        if measured > 1
+    )
+    state = _snapshot(sampling, seconds)
+    writer.finish(
+        state, status=status, message=message, calls=sampling.calls, failed_calls=sampling.failed_calls,
+        skipped=sampling.caller.skipped, sweeps=sampling.sweeps, seconds=seconds, compile_seconds=compile_seconds,
+        energy=state.best_energy, objective=task.problem.objective(state.best_energy), spins=packed(state.best_spins),
+    )  # fmt: skip
+    writer.add_measurements(_series(sampling))
+    return Sampled(
+        levels=levels, status=status, message=message, rounds=measured, burn_in=plan.burn_in, calls=sampling.calls,
+        failed_calls=sampling.failed_calls, sweeps=sampling.sweeps, seconds=seconds, compile_seconds=compile_seconds,
+        seed=sampling.seed, run_path=task.run_path,
+    )  # fmt: skip
+
+
+def _series(sampling: BoltzmannSampling) -> list[Measured]:
+    seen, measured = sampling.observables, sampling.observables.measured
+    return [
+        Measured(
+            float(temperature), sampling.plan.copies, seen.energies[:measured, level].tobytes(),
+            seen.magnetisations[:measured, level].tobytes(), seen.overlaps[:measured, level].tobytes(),
+        )
+        for level, temperature in enumerate(sampling.plan.temperatures)
+    ]  # fmt: skip
+
+
+def _facts(task: SampleTask, sampling: BoltzmannSampling) -> RunFacts:
+    callers = "; ".join(
+        "nothing" if case.subsolver is None else spelled(case.subsolver) for case in sampling.caller.policy.cases
+    )
+    settings = {**task.settings.model_dump(), "cluster_size": task.cluster_size, "seed": sampling.seed}
+    return RunFacts(
+        problem=task.problem, source=task.source, seed=sampling.seed, subsolver=callers, settings=settings,
+        settings_file=task.settings_file, settings_table=task.settings_table, rows=task.settings.record,
+    )  # fmt: skip
+
+
+def _snapshot(sampling: BoltzmannSampling, seconds: float) -> Snapshot:
+    replicas = sampling.replicas
+    lowest = int(np.argmin(replicas.energies))
+    return Snapshot(
+        round=sampling.round, calls=sampling.calls, sweeps=sampling.sweeps, seconds=seconds,
+        spins=replicas.spins.copy(), local_fields=replicas.local_fields.copy(), energies=replicas.energies.copy(),
+        best_energy=float(replicas.energies[lowest]), best_spins=replicas.spins[lowest].copy(),
+        elites=np.empty((0, len(sampling.problem)), np.int8), counts=sampling.counts.copy(),
+        details={"ladders": [ladder.as_state() for ladder in sampling.ladders]},
+    )  # fmt: skip
