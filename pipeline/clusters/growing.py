@@ -7,13 +7,13 @@ numbers that are never used twice, so that nothing needs clearing between rounds
 from __future__ import annotations
 
 from collections.abc import Callable
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, TypeVar
 
 import numpy as np
 
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import I32, I64, U64
+from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
 from patchwalk.subsolvers.draws import next_below, stream_for
 
 if TYPE_CHECKING:
@@ -21,6 +21,11 @@ if TYPE_CHECKING:
 
 MISSES_ALLOWED = 8
 """A round is full once this many attempts in a row found no room for another cluster."""
+
+CANDIDATES = 16
+"""Spins drawn for the start of a cluster that is to have something; the best of them is taken."""
+
+A = TypeVar("A", F64, I8, I64)
 
 BlindKernel = Callable[[I64, I32, int, I32, U64, I64, I64, I32, I64], int]
 
@@ -38,6 +43,13 @@ def scattered(problem: Problem, size: int, wanted: int, seed: int, marks: Marks)
 def room_for(problem: Problem, size: int, wanted: int) -> I32:
     """An array for ``wanted`` clusters, or for as many as the problem can hold at most."""
     return np.empty((max(1, min(wanted, len(problem) // size)), size), np.int32)
+
+
+def locked_view(array: A) -> A:
+    """The same numbers, read-only: kernels are compiled for one kind of array."""
+    locked = array.view()
+    locked.flags.writeable = False
+    return locked
 
 
 def _picked(kernel: BlindKernel, problem: Problem, size: int, wanted: int, seed: int, marks: Marks) -> I32:

@@ -14,8 +14,9 @@ from typing import Protocol
 import numpy as np
 
 from patchwalk.clusters.growing import balls, scattered
-from patchwalk.clusters.guided import GUIDED
+from patchwalk.clusters.ranks import RankRule
 from patchwalk.clusters.strip import StripRule
+from patchwalk.clusters.trails import TrailRule
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import F64, I8, I32, I64
 
@@ -107,5 +108,8 @@ RULES: dict[str, ClusterRule] = {
     "ball": BlindRule("ball", balls),
     "scattered": BlindRule("scattered", scattered),
     "strip": BlindRule("strip", strips),
-    **{rule.name: rule for rule in GUIDED},
+    "frustrated": TrailRule("frustrated", disputed=False),
+    "loose": RankRule("loose", weakest=True, looks_at_spins=True),
+    "disputed": TrailRule("disputed", disputed=True),
+    "stale": RankRule("stale", weakest=False, looks_at_spins=False),
 }

@@ -11,6 +11,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from patchwalk.clusters.conditioning import condition
+from patchwalk.clusters.growing import CANDIDATES
 from patchwalk.clusters.rules import RULES, Marks, View, cluster_rule
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
@@ -201,13 +202,14 @@ def test_disputed_without_two_configurations_is_ball() -> None:
 
 
 def test_loose_starts_where_local_fields_are_weak() -> None:
-    """One weak spin in a ring of 40: 64 draws with replacement miss it in a round with chance (39/40)^64 = 0.2."""
+    """One weak spin in a ring of 40: so many draws with replacement miss it in a round with chance (39/40)^draws."""
     fields = np.zeros(40)
     fields[11] = 1.9  # local fields are -2 everywhere but here, where it is -0.1
     problem, spins = ferromagnet(40, fields, ring=True), np.ones(40, np.int8)
     view, marks = View.of(problem, spins), Marks.for_problem(problem)
     hits = [picked("loose", problem, 3, 1, seed, marks, view)[0].tolist() == [10, 11, 12] for seed in range(400)]
-    assert np.mean(hits) == pytest.approx(1 - (39 / 40) ** 64, abs=4 * (0.2 * 0.8 / 400) ** 0.5)
+    chance = 1 - (39 / 40) ** CANDIDATES
+    assert np.mean(hits) == pytest.approx(chance, abs=5 * (chance * (1 - chance) / 400) ** 0.5)
 
 
 def test_stale_gives_everybody_a_turn() -> None:
