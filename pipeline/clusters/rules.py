@@ -63,7 +63,8 @@ class View:
 
 class ClusterRule(Protocol):
     """Picks at most ``wanted`` clusters of ``size`` spins, and at least one: arrays i32 (B, k), one for each size k
-    that occurs, members rising in each row. Sizes differ only where groups of spins must stay whole.
+    that occurs, members rising in each row. Smaller ones occur only where groups of spins must stay whole, or where
+    strips must stay narrow.
     """
 
     @property

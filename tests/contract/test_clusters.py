@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 from dataclasses import replace
 
 import networkx as nx
@@ -85,6 +86,28 @@ def test_clusters_of_a_round_do_not_touch(rule: str, problem: Problem, size: int
         rows = np.repeat(np.arange(len(problem)), np.diff(problem.row_starts))
         ends = owner[rows], owner[problem.neighbours]
         assert not np.any((ends[0] >= 0) & (ends[1] >= 0) & (ends[0] != ends[1]))
+
+
+@given(st.integers(0, 10**6), st.integers(1, 12), st.integers(1, 9), st.sampled_from([0.5, 3.0, 30.0]), st.data())
+def test_whatever_the_configuration_clusters_are_sound(
+    seed: int, size: int, wanted: int, degree: float, data: st.DataObject
+) -> None:
+    """In range, rising, apart, and the same again from the same seed, for random graphs, spins, elites and counts."""
+    problem, rng = random_problem(40, degree, seed % 23), np.random.default_rng(seed)
+    rule = data.draw(st.sampled_from(sorted(RULES)))
+    spins, *elites = rng.choice(np.array([-1, 1], np.int8), (1 + data.draw(st.integers(0, 3)), len(problem)))
+    best = np.array(elites, np.int8).reshape(len(elites), len(problem))
+    view = View(spins, problem.local_fields(spins), best, rng.integers(0, 9, len(problem)))
+    members = picked(rule, problem, size, wanted, seed, Marks.for_problem(problem), view)
+    assert members.dtype == np.int32
+    assert 1 <= len(members) <= wanted
+    assert members.min() >= 0
+    assert members.max() < len(problem)
+    assert np.all(np.diff(members, axis=1) > 0)
+    for one, other in itertools.combinations(members, 2):
+        assert not set(one) & set(other)
+        assert problem.matrix[one][:, other].nnz == 0
+    assert np.array_equal(picked(rule, problem, size, wanted, seed, Marks.for_problem(problem), view), members)
 
 
 @pytest.mark.parametrize("rule", sorted(RULES))
