@@ -9,12 +9,14 @@ at k = 12 in batches of 64, is shared by picking, conditioning and settling.
 from __future__ import annotations
 
 from collections.abc import Callable
+from dataclasses import replace
 from time import process_time
 
 import numpy as np
 
 from patchwalk.clusters.conditioning import condition
 from patchwalk.clusters.features import cheap_features
+from patchwalk.clusters.grouping import closed_over_groups
 from patchwalk.clusters.policy import policy_from
 from patchwalk.clusters.rules import RULES, Marks, View
 from patchwalk.problem.families import make
@@ -66,6 +68,19 @@ def rules_on(name: str, problem: Problem, baseline: dict[str, float]) -> None:
         print(f"    {rule_name:12s} {cost:8.2f} us a cluster{growth}")
 
 
+def closing() -> None:
+    """The rule ball closed over groups of four spins, beside the rule itself."""
+    problem = make("lattice3d", 22, seed=1)
+    grouped = replace(problem, groups=tuple(np.arange(len(problem), dtype=np.int32).reshape(-1, 4)))
+    view, marks = view_of(problem, 10), Marks.for_problem(problem)
+    rule = closed_over_groups(RULES["ball"], grouped, SIZE)
+
+    def pick(rounds: int) -> int:
+        return sum(len(rows) for seed in range(rounds) for rows in rule.pick(grouped, SIZE, WANTED, seed, marks, view))
+
+    print(f"    ball, closed over groups of four: {per_unit(pick):.2f} us a cluster")
+
+
 def looking_at_clusters() -> None:
     """Cheap features and a policy of three cases, beside conditioning."""
     problem = make("lattice3d", 22, seed=1)
@@ -103,6 +118,7 @@ def main() -> None:
         ("fully connected", make("sk", 800, seed=1)),
     ):
         rules_on(name, problem, baseline)
+    closing()
     looking_at_clusters()
 
 

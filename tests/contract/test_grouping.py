@@ -118,6 +118,25 @@ def test_part_of_a_large_group_has_its_down_member() -> None:
     assert others == set(range(20)), "the others are drawn at random"
 
 
+@pytest.mark.parametrize("size", [4, 7, 9])
+def test_groups_in_part_have_their_down_members(size: int) -> None:
+    """Also where spins that joined had to leave again, because they touched another cluster of the round."""
+    side = 12
+    problem = assignment(side)
+    groups = [set(group.tolist()) for group in problem.groups]
+    rule, marks = closed_over_groups(RULES["scattered"], problem, size), Marks.for_problem(problem)
+    clusters = []
+    for seed in range(60):
+        spins = assigned(np.random.default_rng(seed).permutation(side).tolist())
+        picked = rule.pick(problem, size, 4, seed, marks, View.of(problem, spins))
+        check_apart(problem, picked)
+        for cluster in (set(cluster.tolist()) for rows in picked for cluster in rows):
+            clusters.append(cluster)
+            for group in groups:
+                assert not group & cluster or {spin for spin in group if spins[spin] < 0} <= cluster
+    assert len(clusters) > 70, "many rounds have more than one"
+
+
 def test_parts_of_an_assignment_can_move() -> None:
     """With the rest held, every cluster of nine has another assignment beside the present one, by enumeration."""
     side, size = 6, 9
@@ -128,8 +147,7 @@ def test_parts_of_an_assignment_can_move() -> None:
     counts = []
     for seed in range(40):
         spins = assigned(np.random.default_rng(seed).permutation(side).tolist())
-        picked = rule.pick(problem, size, 3, seed, Marks.for_problem(problem), View.of(problem, spins))
-        cluster = picked[-1][-1]
+        ((cluster,),) = rule.pick(problem, size, 1, seed, Marks.for_problem(problem), View.of(problem, spins))
         possible = 0
         for word in range(1 << len(cluster)):
             trial = spins.copy()
