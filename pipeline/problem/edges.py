@@ -17,12 +17,10 @@ from itertools import chain, islice
 from typing import IO, NoReturn
 
 import numpy as np
-import numpy.typing as npt
-from scipy import sparse
 
 from patchwalk.problem.forms import PathLike
-from patchwalk.problem.ising import Problem, ProblemError
-from patchwalk.problem.pairs import Pairs
+from patchwalk.problem.ising import Problem
+from patchwalk.problem.pairs import Pairs, listing
 from patchwalk.problem.sources import (
     LARGEST_NUMBER,
     Lines,
@@ -39,8 +37,6 @@ VERTICES_PER_MENTION = 10
 MOST_NUMBERED = 2**31 - 1
 BLOCK = 1 << 16  # lines taken at once
 
-I64 = npt.NDArray[np.int64]
-F64 = npt.NDArray[np.float64]
 Rows = Iterator[tuple[int, list[str]]]
 
 
@@ -66,12 +62,14 @@ def read(path: PathLike, kind: str | None) -> Problem:
 
 def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
     """Write a weighted edge list."""
-    settings, heads, tails, weights = weights_to_write(problem)
-    comments = [*(f"recipe: {line}" for line in recipe), f"kind = {problem.kind}", *settings]
-    if problem.names is not None:
-        comments.append(f"names = {json.dumps(problem.names)}")
-    rows = zip((heads + 1).tolist(), (tails + 1).tolist(), map(shortest, weights.tolist()), strict=True)
-    write_lines(stream, comments, chain([f"{len(problem)} {len(weights)}"], (f"{i} {j} {w}" for i, j, w in rows)))
+    content = listing(problem)
+    comments = [*(f"recipe: {line}" for line in recipe), *content.settings]
+    if content.names is not None:
+        comments.append(f"names = {json.dumps(content.names)}")
+    ends = (content.heads + 1).tolist(), (content.tails + 1).tolist()
+    rows = zip(*ends, map(shortest, content.weights.tolist()), strict=True)
+    first = f"{content.size} {len(content.weights)}"
+    write_lines(stream, comments, chain([first], (f"{i} {j} {w}" for i, j, w in rows)))
 
 
 def _read_edges(source: Source, kind: str) -> Problem:
@@ -224,30 +222,6 @@ def _settle_width(source: Source, line: int, cells: list[str], width: int) -> in
         expected = f"{width} columns as on the lines before" if width else "'i j' or 'i j w'"
         source.fail(line, f"expected {expected}, but it has {len(cells)}: {quoted(' '.join(cells))}")
     return len(cells)
-
-
-def weights_to_write(problem: Problem) -> tuple[list[str], I64, I64, F64]:
-    """Settings for leading comments, and heads, tails i64 from 0 and weights f64 (m,) that give the problem back.
-
-    Fields come last, as pairs of a spin with itself. Raises :class:`ProblemError` for what would not be read back.
-    """
-    upper = sparse.triu(problem.matrix, 1).tocoo()
-    is_maxcut = problem.kind == "maxcut"
-    weights = 2 * upper.data if is_maxcut else upper.data
-    sites = np.flatnonzero(problem.fields)
-    if is_maxcut and len(sites):
-        raise ProblemError(f"spin {sites[0]} has a field, which kind maxcut cannot hold; make it kind ising")
-    if not len(weights) and not len(sites):
-        raise ProblemError("the problem has no coupling and no field: a file of it would not be read")
-    weights = np.concatenate([weights, problem.fields[sites]])
-    if np.abs(weights).max() > LARGEST_NUMBER:
-        raise ProblemError(f"a number beyond {LARGEST_NUMBER} would not be read back; rescale the problem")
-    settings = []
-    if problem.offset != (-float(upper.data.sum()) if is_maxcut else 0.0):
-        settings.append(f"offset = {problem.offset!r}")
-    if "planted_energy" in problem.details:
-        settings.append(f"planted_energy = {problem.details['planted_energy']!r}")
-    return settings, np.concatenate([upper.row, sites]), np.concatenate([upper.col, sites]), weights
 
 
 def shortest(value: float) -> str:

@@ -28,7 +28,7 @@ class Form(NamedTuple):
 EDGES = Form("a weighted edge list: 'n m', then lines 'i j w'", (".txt", "any other"), "edges", PAIR_KINDS)
 FORMS = (
     EDGES,
-    Form("whole numbers", (".txt", "any other"), "numbers", ("partition",)),
+    Form("numbers to be split", (".txt", "any other"), "numbers", ("partition",)),
     Form("a table of pairs of names with weights", (".csv",), "tables", PAIR_KINDS),
     Form("a table of sites and relations", (".csv",), "tables", ("beacons",)),
     Form("a matrix (Matrix Market)", (".mtx",), "matrices", PAIR_KINDS),

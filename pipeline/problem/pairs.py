@@ -1,19 +1,34 @@
-"""Pairs with weights, as all readers of graphs gather them, and the problem that they make."""
+"""Pairs with weights, as all files of graphs hold them, and the problem that they make.
+
+What the weight of a pair means, and that of a pair of a vertex with itself:
+
+    ising                          a coupling, and the field of a spin
+    maxcut, balanced_partition     the weight of an edge; no vertex may be joined to itself
+    qubo                           the coefficient of a product of two bits, and of one bit
+    independent_set, vertex_cover  edges have no weight, and that of a vertex (1 where it has none)
+    colouring                      edges have no weight; no vertex may be joined to itself
+"""
 
 from __future__ import annotations
 
 from array import array
 from collections.abc import Iterable
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import NoReturn
 
 import numpy as np
 import numpy.typing as npt
+from scipy import sparse
 
-from patchwalk.problem.ising import Problem
-from patchwalk.problem.sources import Source
+from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.sources import LARGEST_NUMBER, Source
 
-WITH_LOOPS = ("ising", "qubo")  # kinds in which a pair of a vertex with itself means something
+I64 = npt.NDArray[np.int64]
+F64 = npt.NDArray[np.float64]
+
+WITH_LOOPS = ("ising", "qubo", "independent_set", "vertex_cover")
+UNWEIGHTED = ("independent_set", "vertex_cover", "colouring")
+MOST_COLOURS = 1000
 
 
 class Pairs:
@@ -22,6 +37,8 @@ class Pairs:
     def __init__(self, source: Source, kind: str) -> None:
         self.source, self.kind = source, kind
         self.heads, self.tails, self.weights = array("q"), array("q"), array("d")
+        self.colours = source.colours(MOST_COLOURS) if kind == "colouring" else 0
+        self.offset = source.offset(0.0)
         self.notes: list[str] = []
 
     def __len__(self) -> int:
@@ -48,29 +65,52 @@ class Pairs:
         )
 
     def problem(self, size: int, names: Iterable[str] | None = None) -> Problem:
-        """The problem: pairs of a spin with itself are its fields, repeated pairs are summed with a note."""
+        """The problem; repeated pairs are summed, with a note."""
         heads, tails = np.array(self.heads, np.int64), np.array(self.tails, np.int64)
         weights = np.array(self.weights, np.float64) if self.weights else np.ones(len(heads))
         loops = heads == tails
-        fields = np.bincount(heads[loops], weights[loops], minlength=size)
         keys = np.minimum(heads, tails) * size + np.maximum(heads, tails)
         self._note_repeats(keys[~loops], "pair", "weights")
         self._note_repeats(keys[loops], "field", "values")
-        problem = Problem.from_arrays(
-            heads[~loops],
-            tails[~loops],
-            weights[~loops],
-            size=size,
-            fields=fields,
-            kind=self.kind,
-            names=names,
-            notes=self.notes,
-            details=self.source.details(),
-        )
+        if self.kind in ("ising", "maxcut"):
+            problem = Problem.from_arrays(
+                heads[~loops],
+                tails[~loops],
+                weights[~loops],
+                size=size,
+                fields=np.bincount(heads[loops], weights[loops], minlength=size),
+                kind=self.kind,
+                names=names,
+                notes=self.notes,
+            )
+        else:
+            with self.source.naming():
+                problem = self._encoded(size, names, heads, tails, weights)
         if not problem.coupling_count and not np.any(problem.fields):
             self.source.fail(None, "there is nothing to decide: no coupling and no field differs from 0")
-        offset = self.source.offset(problem.offset)
-        return problem if offset == problem.offset else replace(problem, offset=offset)
+        offset = problem.offset if self.kind == "qubo" else self.source.offset(problem.offset)
+        return replace(problem, offset=offset, details={**problem.details, **self.source.details()})
+
+    def _encoded(self, size: int, names: Iterable[str] | None, heads: I64, tails: I64, weights: F64) -> Problem:
+        """The problem of a kind that has an encoding."""
+        from patchwalk.problem import encodings
+
+        loops = heads == tails
+        edges = np.stack([heads, tails], axis=1)[~loops]
+        alone = np.bincount(heads[loops], weights[loops], minlength=size)
+        if self.kind in UNWEIGHTED and np.any(weights[~loops] != 1):
+            self.notes.append(f"the weights of edges mean nothing to kind {self.kind} and are left out")
+        if self.kind == "qubo":
+            return encodings.encode_qubo(
+                edges[:, 0], edges[:, 1], weights[~loops], alone, self.offset, names=names, notes=self.notes
+            )
+        if self.kind == "colouring":
+            return encodings.encode_colouring(edges, self.colours, size, names=names, notes=self.notes)
+        if self.kind == "balanced_partition":
+            return encodings.encode_balanced_partition(edges, weights[~loops], size, names=names, notes=self.notes)
+        alone[np.bincount(heads[loops], minlength=size) == 0] = 1.0
+        encode = {"independent_set": encodings.encode_independent_set, "vertex_cover": encodings.encode_vertex_cover}
+        return encode[self.kind](edges, alone, size, names=names, notes=self.notes)
 
     def _note_repeats(self, keys: npt.NDArray[np.int64], what: str, numbers: str) -> None:
         keys = np.sort(keys)
@@ -79,3 +119,63 @@ class Pairs:
             self.notes.append(f"1 {what} occurs more than once; its {numbers} were summed")
         elif repeats:
             self.notes.append(f"{repeats} {what}s occur more than once; their {numbers} were summed")
+
+
+@dataclass(frozen=True, eq=False)
+class Listing:
+    """What a file of pairs has to say for a problem to be read back from it.
+
+    ``heads`` and ``tails`` i64 (m,) from 0 with ``weights`` f64 (m,), pairs of a vertex with itself last; ``settings``
+    are lines such as ``offset = 1.5``.
+    """
+
+    size: int
+    names: tuple[str, ...] | None
+    heads: I64
+    tails: I64
+    weights: F64
+    settings: tuple[str, ...]
+
+
+def listing(problem: Problem) -> Listing:
+    """The pairs of a problem; raises :class:`ProblemError` for what would not be read back."""
+    offset, default, names, settings = problem.offset, 0.0, problem.names, [f"kind = {problem.kind}"]
+    if problem.kind in ("ising", "maxcut"):
+        size = len(problem)
+        upper = sparse.triu(problem.matrix, 1).tocoo()
+        heads, tails, weights, alone = upper.row, upper.col, upper.data, problem.fields
+        if problem.kind == "maxcut":
+            default, weights = -float(weights.sum()), 2 * weights
+    else:
+        form = problem.encoding
+        if form is None:
+            raise ProblemError(f"a problem of kind {problem.kind} without its encoding; make it by patchwalk.problem")
+        size, names = len(form.labels), None if _are_numbers(form.labels) else form.labels
+        if problem.kind == "qubo":
+            heads, tails, weights, alone, offset = form.heads, form.tails, form.weights, form.linear, form.offset
+        else:
+            heads, tails = form.edges[:, 0], form.edges[:, 1]
+            weights = np.ones(len(heads)) if problem.kind in UNWEIGHTED else form.weights
+            alone = form.weights if problem.kind in WITH_LOOPS else np.zeros(size)
+            offset = default
+        if problem.kind == "colouring":
+            settings.append(f"colours = {form.colours}")
+    sites = np.flatnonzero(alone)
+    if problem.kind not in WITH_LOOPS and len(sites):
+        raise ProblemError(f"spin {sites[0]} has a field, which kind {problem.kind} cannot hold; make it kind ising")
+    weights = np.concatenate([weights, alone[sites]])
+    if not len(weights):
+        raise ProblemError("the problem has no coupling and no field: a file of it would not be read")
+    if np.abs(weights).max() > LARGEST_NUMBER:
+        raise ProblemError(f"a number beyond {LARGEST_NUMBER} would not be read back; rescale the problem")
+    if offset != default:
+        settings.append(f"offset = {offset!r}")
+    if "planted_energy" in problem.details:
+        settings.append(f"planted_energy = {problem.details['planted_energy']!r}")
+    ends = np.concatenate([heads, sites]).astype(np.int64), np.concatenate([tails, sites]).astype(np.int64)
+    return Listing(size, names, *ends, weights, tuple(settings))
+
+
+def _are_numbers(names: tuple[str, ...]) -> bool:
+    """Whether names are the numbers from 1, which they are where the user gave none."""
+    return all(name == str(number) for number, name in enumerate(names, 1))

@@ -160,6 +160,14 @@ class Source:
         """Raise the :class:`ProblemError` that names file and line."""
         fail(self.path, line, message)
 
+    @contextlib.contextmanager
+    def naming(self) -> Iterator[None]:
+        """Whatever a problem made from the file complains of, with the name of the file."""
+        try:
+            yield
+        except ProblemError as error:
+            self.fail(None, str(error))
+
     def number(self, text: str, line: int, what: str) -> float:
         """A finite number from a cell; raises :class:`ProblemError`."""
         try:
@@ -217,6 +225,15 @@ class Source:
         if size is None and len(set(names)) < len(names):
             self.fail(line, "a name occurs twice in it; names must differ")
         return tuple(names)
+
+    def colours(self, most: int) -> int:
+        """How many colours a comment states; raises :class:`ProblemError` where none does."""
+        if "colours" not in self.settings:
+            self.fail(None, 'how many colours are there? Say so in a line before all others: "# colours = 3"')
+        text, line = self.settings["colours"]
+        if not (text.isascii() and text.isdigit() and len(text) < 10 and 2 <= int(text) <= most):
+            self.fail(line, f"colours {quoted(text)} is not a whole number from 2 to {most}")
+        return int(text)
 
     def details(self) -> dict[str, Any]:
         """What comments state beyond the problem itself: the ground energy of a planted one."""

@@ -19,10 +19,10 @@ from typing import IO
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.problem.edges import BLOCK, shortest, weights_to_write
+from patchwalk.problem.edges import BLOCK, shortest
 from patchwalk.problem.forms import PathLike
 from patchwalk.problem.ising import Problem, ProblemError
-from patchwalk.problem.pairs import Pairs
+from patchwalk.problem.pairs import Pairs, listing
 from patchwalk.problem.sources import (
     LARGEST_NUMBER,
     Lines,
@@ -200,17 +200,17 @@ def read_fields(path: PathLike, problem: Problem) -> tuple[npt.NDArray[np.float6
 
 def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
     """Write a CSV of pairs with the names of the spins (their numbers from 1 without), or of beacons."""
-    comments = [*(f"recipe: {line}" for line in recipe), f"kind = {problem.kind}"]
+    recipes = [f"recipe: {line}" for line in recipe]
     if problem.kind == "beacons":
         from patchwalk.problem.beacons import beacon_lines
 
-        write_lines(stream, comments, beacon_lines(problem))
+        write_lines(stream, [*recipes, f"kind = {problem.kind}"], beacon_lines(problem))
         return
-    settings, heads, tails, weights = weights_to_write(problem)
-    names = problem.names or tuple(map(str, range(1, len(problem) + 1)))
+    content = listing(problem)
+    names = content.names or tuple(map(str, range(1, content.size + 1)))
     _check_names(names)
-    comments += [*settings, f"names = {json.dumps(names)}"]
-    rows = zip(heads.tolist(), tails.tolist(), map(shortest, weights.tolist()), strict=True)
+    comments = [*recipes, *content.settings, f"names = {json.dumps(names)}"]
+    rows = zip(content.heads.tolist(), content.tails.tolist(), map(shortest, content.weights.tolist()), strict=True)
     write_lines(stream, comments, chain(["one,other,weight"], (_row(names[i], names[j], w) for i, j, w in rows)))
 
 
