@@ -17,6 +17,7 @@ from itertools import chain, islice
 from typing import IO, NoReturn
 
 import numpy as np
+import numpy.typing as npt
 
 from patchwalk.problem.forms import PathLike
 from patchwalk.problem.ising import Problem
@@ -37,6 +38,7 @@ VERTICES_PER_MENTION = 10
 MOST_NUMBERED = 2**31 - 1
 BLOCK = 1 << 16  # lines taken at once
 
+I64 = npt.NDArray[np.int64]
 Rows = Iterator[tuple[int, list[str]]]
 
 
@@ -177,6 +179,17 @@ def plain_cells(texts: list[str], width: int) -> list[str] | None:
     >>> plain_cells(["1 2 .5", "", "2 3 -1"], 3), plain_cells(["1 2", "3 4 5 6"], 3), plain_cells(["1 2 3 # c"], 3)
     (['1', '2', '.5', '2', '3', '-1'], None, None)
     """
+    counted = counted_cells(texts)
+    if counted is None or np.any((counted[1] != width) & (counted[1] != 0)):
+        return None
+    return counted[0]
+
+
+def counted_cells(texts: list[str]) -> tuple[list[str], I64] | None:
+    """The cells between spaces of all lines, and how many each line has, i64; None where a line is not plain.
+
+    Plain lines are ASCII and have no comments, and no underscores, which ``int`` and ``float`` would take.
+    """
     text = " ".join(texts)
     if not text.isascii() or any(mark in text for mark in "#%_"):
         return None
@@ -186,9 +199,7 @@ def plain_cells(texts: list[str], width: int) -> list[str] | None:
     ends = np.cumsum(np.fromiter(map(len, texts), np.int64, len(texts)) + 1)
     counts = np.diff(np.searchsorted(np.flatnonzero(begins), ends), prepend=0)
     cells = text.split()
-    if np.any((counts != width) & (counts != 0)) or len(cells) != counts.sum():
-        return None
-    return cells
+    return (cells, counts) if len(cells) == counts.sum() else None
 
 
 def _cells(source: Source, lines: Lines) -> Rows:

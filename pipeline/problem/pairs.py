@@ -150,7 +150,7 @@ def listing(problem: Problem) -> Listing:
         form = problem.encoding
         if form is None:
             raise ProblemError(f"a problem of kind {problem.kind} without its encoding; make it by patchwalk.problem")
-        size, names = len(form.labels), None if _are_numbers(form.labels) else form.labels
+        size, names = len(form.labels), None if are_numbers(form.labels) else form.labels
         if problem.kind == "qubo":
             heads, tails, weights, alone, offset = form.heads, form.tails, form.weights, form.linear, form.offset
         else:
@@ -176,6 +176,6 @@ def listing(problem: Problem) -> Listing:
     return Listing(size, names, *ends, weights, tuple(settings))
 
 
-def _are_numbers(names: tuple[str, ...]) -> bool:
+def are_numbers(names: tuple[str, ...]) -> bool:
     """Whether names are the numbers from 1, which they are where the user gave none."""
     return all(name == str(number) for number, name in enumerate(names, 1))
