@@ -8,11 +8,13 @@ import click
 
 from patchwalk.interface.cli import fail, print_json
 
-FAMILIES = ("sk", "lattice2d", "lattice3d", "beacons")
+FAMILIES = (
+    "sk", "lattice2d", "lattice3d", "regular", "random", "max2sat", "partition", "loops", "tiles", "wishart", "beacons",
+)  # fmt: skip
 
 
 @click.command(context_settings={"max_content_width": 110})
-@click.argument("family", type=click.Choice(FAMILIES))
+@click.argument("family", type=click.Choice(FAMILIES), metavar="FAMILY")
 @click.option(
     "-o",
     "--output",
@@ -22,31 +24,50 @@ FAMILIES = ("sk", "lattice2d", "lattice3d", "beacons")
     help="Where to write it; .gz packs it.",
 )
 @click.option(
-    "--size", type=click.IntRange(min=1), required=True, help="Spins (sk, beacons) or edge length (lattices)."
+    "--size",
+    type=click.IntRange(min=1),
+    required=True,
+    help="Side L of lattice2d, lattice3d, loops and tiles; else spins, variables, numbers or beacons.",
 )
 @click.option(
     "--couplings",
     type=click.Choice(["pm1", "gaussian"]),
     default=None,
-    help="Signs alone or Gaussian; sk is Gaussian by default, lattices pm1.",
+    help="Signs alone or Gaussian (sk, lattices, regular, random); sk is Gaussian by default, the others pm1.",
 )
 @click.option("--open", "open_", is_flag=True, help="Free boundaries; without it a lattice closes on itself.")
-@click.option("--fields", is_flag=True, help="Fields of the same law as the couplings (sk and lattices).")
+@click.option("--fields", is_flag=True, help="Fields of the same law as the couplings (sk, lattices, regular, random).")
+@click.option("--degree", type=click.IntRange(min=1), default=None, help="Neighbours of each spin; 3 (regular).")
+@click.option(
+    "--density",
+    type=click.FloatRange(min=0, min_open=True),
+    default=None,
+    help="Share of pairs coupled; 4 neighbours on average (random). Clauses per variable; 2 (max2sat). Bits of a "
+    "number over their count; 1 (partition). Loops per spin; 0.15 (loops). Columns per spin; 0.75 (wishart).",
+)
 @click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Same seed, same instance.")
 @click.option("--force", is_flag=True, help="Overwrite FILE if it is there.")
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 def make_command(
-    family: str, output: Path, size: int, couplings: str | None, open_: bool, fields: bool, seed: int, force: bool,
-    as_json: bool,
+    family: str, output: Path, size: int, couplings: str | None, open_: bool, fields: bool, degree: int | None,
+    density: float | None, seed: int, force: bool, as_json: bool,
 ) -> None:  # fmt: skip
-    """Write a seeded instance of FAMILY: sk, lattice2d, lattice3d or beacons.
+    """Write a seeded instance of FAMILY. The recipe stands in the file, and its kind, so that solve needs no --kind.
 
-    The recipe stands in the file's first lines, and its kind, so that solve needs no --kind.
+    \b
+    sk                    every pair of spins coupled
+    lattice2d, lattice3d  square and cubic lattices
+    regular, random       random graphs of fixed degree, or of fixed density
+    max2sat               random clauses of two literals, in a .cnf or .wcnf
+    partition             random numbers to be split into two parts
+    loops, tiles, wishart planted: the ground energy is known and stands in the file
+    beacons               radio channels on an invented coast, in a .csv
 
     \b
     patchwalk make sk --size 100 --fields --seed 7 -o sk100.txt
-    patchwalk make lattice2d --size 16 --couplings gaussian --open -o open16.txt
-    patchwalk make beacons --size 600 -o coast.csv
+    patchwalk make regular --size 1000 --degree 4 --couplings gaussian -o graph.txt.gz
+    patchwalk make max2sat --size 200 --density 1.5 -o clauses.cnf
+    patchwalk make tiles --size 100 -o tiles.txt
     """
     from patchwalk.problem.families import make
     from patchwalk.problem.files import write_problem
@@ -55,14 +76,18 @@ def make_command(
     try:
         if output.exists() and not force:
             raise ProblemError(f"{output} is there already and is left as it is; give another name, or --force")
-        problem = make(family, size, seed=seed, couplings=couplings, open=open_, fields=fields)
+        problem = make(
+            family, size, seed=seed, couplings=couplings, open=open_, fields=fields, degree=degree, density=density
+        )
         write_problem(problem, output)
     except Exception as error:
         fail(error, as_json)
         return
+    planted = problem.details.get("planted_energy")
     if as_json:
-        print_json(
-            {"path": str(output), "spins": len(problem), "couplings": problem.coupling_count, "kind": problem.kind}
-        )
+        row = {"path": str(output), "spins": len(problem), "couplings": problem.coupling_count, "kind": problem.kind}
+        print_json(row if planted is None else {**row, "planted_energy": planted})
     else:
         click.echo(f"{output}: {problem.summary()}")
+        if planted is not None:
+            click.echo(f"planted: the ground energy is {planted:.12g}")
