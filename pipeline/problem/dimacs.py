@@ -275,8 +275,10 @@ def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
 
     Raises :class:`ProblemError` for a problem that was not made from clauses.
     """
+    from patchwalk.problem.kinds.clauses import ClauseForm
+
     form = problem.encoding
-    if form is None:
+    if not isinstance(form, ClauseForm):
         raise ProblemError(f"a problem of kind {problem.kind} without its clauses; make it by encode_{problem.kind}")
     comments = [*(f"recipe: {line}" for line in recipe), f"kind = {problem.kind}"]
     if not are_numbers(form.labels):

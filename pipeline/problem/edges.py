@@ -77,20 +77,25 @@ def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
 def _read_edges(source: Source, kind: str) -> Problem:
     line, cells = next(_cells(source, source.lines))
     header = line, *_read_header(source, line, cells)
-    edges = _Edges(source, kind, *header)
-    while block := list(islice(source.lines, BLOCK)):
-        edges.take(block)
-    return edges.problem()
+    edges = EdgeLines(source, kind, *header)
+    edges.take_all()
+    return edges.pairs.problem(edges.size, source.names(edges.size))
 
 
-class _Edges:
+class EdgeLines:
     """The edge lines as they are read, held against the first line: on line ``header`` ``size`` and ``promised``."""
 
-    def __init__(self, source: Source, kind: str, header: int, size: int, promised: int) -> None:
+    def __init__(self, source: Source, kind: str, header: int, size: int, promised: int, width: int = 0) -> None:
         self.source, self.header, self.size, self.promised = source, header, size, promised
         self.pairs = Pairs(source, kind)
-        self.width = 0
+        self.width = width
         self.last = header
+
+    def take_all(self) -> None:
+        """Read to the end of the file; raises :class:`ProblemError`."""
+        while block := list(islice(self.source.lines, BLOCK)):
+            self.take(block)
+        self._close()
 
     def take(self, block: list[tuple[int, str]]) -> None:
         """Add lines: all at once where nothing speaks against it, otherwise one by one."""
@@ -159,8 +164,8 @@ class _Edges:
         self.source.number(cells[2], line, "weight")
         raise AssertionError(f"line {line} was refused without a reason")
 
-    def problem(self) -> Problem:
-        """The problem, once all lines are read."""
+    def _close(self) -> None:
+        """Check what can be checked once all lines are read."""
         count, source = len(self.pairs), self.source
         if count < self.promised:
             source.fail(
@@ -170,7 +175,6 @@ class _Edges:
             source.fail(self.header, f"{self.size} vertices, of which {count} edge lines touch but few; correct n")
         if self.width == 2:
             self.pairs.notes.append("no third column: every weight is 1")
-        return self.pairs.problem(self.size, source.names(self.size))
 
 
 def plain_cells(texts: list[str], width: int) -> list[str] | None:

@@ -12,6 +12,7 @@ What the weight of a pair means, and that of a pair of a vertex with itself:
 from __future__ import annotations
 
 from array import array
+from collections import Counter
 from collections.abc import Iterable
 from dataclasses import dataclass, replace
 from typing import NoReturn
@@ -21,7 +22,7 @@ import numpy.typing as npt
 from scipy import sparse
 
 from patchwalk.problem.ising import Problem, ProblemError
-from patchwalk.problem.sources import LARGEST_NUMBER, Source
+from patchwalk.problem.sources import LARGEST_NUMBER, Source, quoted
 
 I64 = npt.NDArray[np.int64]
 F64 = npt.NDArray[np.float64]
@@ -57,6 +58,10 @@ class Pairs:
         self.tails.frombytes(tails.tobytes())
         if weights is not None:
             self.weights.frombytes(weights.tobytes())
+
+    def clear(self) -> None:
+        """Forget all pairs."""
+        self.heads, self.tails, self.weights = array("q"), array("q"), array("d")
 
     def refuse_loop(self, line: int, name: str) -> NoReturn:
         """The error for a pair of a vertex with itself, where the kind has no fields."""
@@ -139,43 +144,79 @@ class Listing:
 
 def listing(problem: Problem) -> Listing:
     """The pairs of a problem; raises :class:`ProblemError` for what would not be read back."""
-    offset, default, names, settings = problem.offset, 0.0, problem.names, [f"kind = {problem.kind}"]
-    if problem.kind in ("ising", "maxcut"):
-        size = len(problem)
-        upper = sparse.triu(problem.matrix, 1).tocoo()
-        heads, tails, weights, alone = upper.row, upper.col, upper.data, problem.fields
-        if problem.kind == "maxcut":
-            default, weights = -float(weights.sum()), 2 * weights
-    else:
-        form = problem.encoding
-        if form is None:
-            raise ProblemError(f"a problem of kind {problem.kind} without its encoding; make it by patchwalk.problem")
-        size, names = len(form.labels), None if are_numbers(form.labels) else form.labels
-        if problem.kind == "qubo":
-            heads, tails, weights, alone, offset = form.heads, form.tails, form.weights, form.linear, form.offset
-        else:
-            heads, tails = form.edges[:, 0], form.edges[:, 1]
-            weights = np.ones(len(heads)) if problem.kind in UNWEIGHTED else form.weights
-            alone = form.weights if problem.kind in WITH_LOOPS else np.zeros(size)
-            offset = default
-        if problem.kind == "colouring":
-            settings.append(f"colours = {form.colours}")
-    sites = np.flatnonzero(alone)
-    if problem.kind not in WITH_LOOPS and len(sites):
-        raise ProblemError(f"spin {sites[0]} has a field, which kind {problem.kind} cannot hold; make it kind ising")
-    weights = np.concatenate([weights, alone[sites]])
-    if not len(weights):
+    content = _own(problem) if problem.kind in ("ising", "maxcut") else _original(problem)
+    if not len(content.weights):
         raise ProblemError("the problem has no coupling and no field: a file of it would not be read")
-    if np.abs(weights).max() > LARGEST_NUMBER:
+    if np.abs(content.weights).max() > LARGEST_NUMBER:
         raise ProblemError(f"a number beyond {LARGEST_NUMBER} would not be read back; rescale the problem")
-    if offset != default:
-        settings.append(f"offset = {offset!r}")
+    settings = [f"kind = {problem.kind}", *content.settings]
     if "planted_energy" in problem.details:
         settings.append(f"planted_energy = {problem.details['planted_energy']!r}")
-    ends = np.concatenate([heads, sites]).astype(np.int64), np.concatenate([tails, sites]).astype(np.int64)
-    return Listing(size, names, *ends, weights, tuple(settings))
+    return replace(content, settings=tuple(settings))
+
+
+def _own(problem: Problem) -> Listing:
+    """Couplings and fields, or weights of edges: the spins are the user's own."""
+    upper = sparse.triu(problem.matrix, 1).tocoo()
+    weights, default = upper.data, 0.0
+    if problem.kind == "maxcut":
+        weights, default = 2 * upper.data, -float(upper.data.sum())
+        fielded = np.flatnonzero(problem.fields)
+        if len(fielded):
+            raise ProblemError(f"spin {fielded[0]} has a field, which kind maxcut cannot hold; make it kind ising")
+    settings = () if problem.offset == default else (f"offset = {problem.offset!r}",)
+    return _joined(len(problem), problem.names, (upper.row, upper.col), weights, problem.fields, settings)
+
+
+def _original(problem: Problem) -> Listing:
+    """The numbers that an encoded problem was made from."""
+    from patchwalk.problem.kinds.balance import BalancedParts
+    from patchwalk.problem.kinds.colouring import Colouring
+    from patchwalk.problem.kinds.qubo import BitForm
+    from patchwalk.problem.kinds.vertices import VertexSet
+
+    form = problem.encoding
+    if isinstance(form, BitForm):
+        settings = (f"offset = {form.offset!r}",) if form.offset else ()
+        ends, weights, alone = (form.heads, form.tails), form.weights, form.linear
+    elif isinstance(form, BalancedParts | Colouring | VertexSet):
+        ends = (form.edges[:, 0], form.edges[:, 1])
+        weights = form.weights if isinstance(form, BalancedParts) else np.ones(len(form.edges))
+        alone = form.weights if isinstance(form, VertexSet) else np.zeros(len(form.labels))
+        settings = (f"colours = {form.colours}",) if isinstance(form, Colouring) else ()
+    else:
+        raise ProblemError(f"a problem of kind {problem.kind} without what it was made from cannot be written")
+    names = None if are_numbers(form.labels) else form.labels
+    usual = 1.0 if isinstance(form, VertexSet) else 0.0
+    return _joined(len(form.labels), names, ends, weights, alone, settings, usual)
+
+
+def _joined(
+    size: int,
+    names: tuple[str, ...] | None,
+    ends: tuple[npt.NDArray[np.integer], npt.NDArray[np.integer]],
+    weights: F64,
+    alone: F64,
+    settings: tuple[str, ...],
+    usual: float = 0.0,
+) -> Listing:
+    """Pairs, and behind them what stands ``alone``, where it differs from ``usual``, as pairs of a vertex with itself."""
+    sites = np.flatnonzero(alone != usual)
+    heads, tails = (np.concatenate([end, sites]).astype(np.int64) for end in ends)
+    return Listing(size, names, heads, tails, np.concatenate([weights, alone[sites]]), settings)
 
 
 def are_numbers(names: tuple[str, ...]) -> bool:
     """Whether names are the numbers from 1, which they are where the user gave none."""
     return all(name == str(number) for number, name in enumerate(names, 1))
+
+
+def different_names(content: Listing) -> tuple[str, ...]:
+    """The names of a listing, numbers from 1 where there are none; raises :class:`ProblemError` if two are the same."""
+    names = content.names or tuple(map(str, range(1, content.size + 1)))
+    seen = Counter(names)
+    for name in names:
+        if seen[name] > 1 or not name.strip():
+            why = "occurs twice" if seen[name] > 1 else "is empty"
+            raise ProblemError(f"name {quoted(name)} {why}, which such a file cannot hold; write a .txt file")
+    return names

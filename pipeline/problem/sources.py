@@ -15,7 +15,8 @@ from typing import IO, Any, NoReturn
 
 import numpy as np
 
-from patchwalk.problem.forms import PathLike, forms_of, homes_of
+from patchwalk.problem.forms import PathLike as PathLike
+from patchwalk.problem.forms import forms_of, homes_of
 from patchwalk.problem.ising import KINDS, ProblemError, known_kind
 
 Lines = Iterator[tuple[int, str]]
@@ -72,10 +73,19 @@ def write_lines(stream: IO[bytes], comments: Iterable[str], lines: Iterable[str]
     text.detach()  # which also flushes
 
 
-def whole_file(path: PathLike) -> bytes:
-    """All bytes of a file, unpacked where it is named ``.gz``; raises :class:`ProblemError`."""
+def chunks(path: PathLike) -> Generator[bytes, None, None]:
+    """The bytes of a file piece by piece, unpacked where it is named ``.gz``; raises :class:`ProblemError`."""
     with _named_failures(path, lambda: None), io.BufferedReader(_opened(path)) as stream:
-        return stream.read()
+        while chunk := stream.read(1 << 18):
+            yield chunk
+
+
+def stated(path: PathLike, settings: Mapping[str, tuple[object, int]]) -> Source:
+    """A source without lines, for files that state their settings in another way: a value and its line for each."""
+    texts = {
+        name: (value if isinstance(value, str) else json.dumps(value), line) for name, (value, line) in settings.items()
+    }
+    return Source(path, texts, iter(()))
 
 
 @contextlib.contextmanager

@@ -11,7 +11,6 @@ import csv
 import io
 import json
 from array import array
-from collections import Counter
 from collections.abc import Iterable, Iterator
 from itertools import chain, islice
 from typing import IO
@@ -22,7 +21,7 @@ import numpy.typing as npt
 from patchwalk.problem.edges import BLOCK, shortest
 from patchwalk.problem.forms import PathLike
 from patchwalk.problem.ising import Problem, ProblemError
-from patchwalk.problem.pairs import Pairs, listing
+from patchwalk.problem.pairs import Pairs, different_names, listing
 from patchwalk.problem.sources import (
     LARGEST_NUMBER,
     Lines,
@@ -207,7 +206,7 @@ def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
         write_lines(stream, [*recipes, f"kind = {problem.kind}"], beacon_lines(problem))
         return
     content = listing(problem)
-    names = content.names or tuple(map(str, range(1, content.size + 1)))
+    names = different_names(content)
     _check_names(names)
     comments = [*recipes, *content.settings, f"names = {json.dumps(names)}"]
     rows = zip(content.heads.tolist(), content.tails.tolist(), map(shortest, content.weights.tolist()), strict=True)
@@ -216,9 +215,9 @@ def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
 
 def _check_names(names: tuple[str, ...]) -> None:
     """Raise :class:`ProblemError` for names that a CSV would not give back."""
-    for name, count in Counter(names).items():
-        if count > 1 or not name or name != name.strip() or len(name.splitlines()) > 1:
-            why = "occurs twice" if count > 1 else "is empty, has spaces around it or goes over several lines"
+    for name in names:
+        if name != name.strip() or len(name.splitlines()) > 1:
+            why = "has spaces around it or goes over several lines"
             raise ProblemError(f"name {quoted(name)} {why}, which a .csv cannot hold; write a .txt file")
 
 
