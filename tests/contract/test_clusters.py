@@ -258,10 +258,11 @@ def test_cluster_changes_are_changes_of_the_whole(seed: int, size: int, degree: 
     rule = data.draw(st.sampled_from(sorted(RULES)))
     members = picked(rule, problem, size, 4, seed, Marks.for_problem(problem))
     batch = conditioned(problem, members, spins)
-    assert (batch.couplings is None) == (size > 64)
+    assert batch.size == size or rule == "strip", "strips end early where they would be too wide to eliminate"
+    assert (batch.couplings is None) == (batch.size > 64)
     for row, cluster in enumerate(members):
         assert np.array_equal(batch.spins[row], spins[cluster])
         flipped = spins.copy()
-        flipped[cluster] = rng.choice(np.array([-1, 1], np.int8), size)
+        flipped[cluster] = rng.choice(np.array([-1, 1], np.int8), batch.size)
         inside = cluster_energy(batch, row, flipped[cluster]) - cluster_energy(batch, row, spins[cluster])
         assert inside == pytest.approx(problem.energy(flipped) - problem.energy(spins), abs=1e-10)
