@@ -30,7 +30,8 @@ from patchwalk.subsolvers.contract import (
     Work,
     refuse_oversize,
 )
-from patchwalk.subsolvers.elimination_order import Layout, Plan, find_plan, lay_out, width_of
+from patchwalk.subsolvers.elimination_layout import Layout, lay_out
+from patchwalk.subsolvers.elimination_order import USUAL_LIMIT, Plan, find_plan, width_of
 from patchwalk.subsolvers.elimination_tables import eliminate
 from patchwalk.subsolvers.neighbours import Lists, edges_of, lists_of
 from patchwalk.subsolvers.spectrum import TIE_SHARE
@@ -54,7 +55,7 @@ class Elimination:
 
     draw: Literal["minimum", "boltzmann"] = "minimum"
     shots: int = 1
-    max_width: int = 20
+    max_width: int = USUAL_LIMIT
 
     name: ClassVar[str] = "elimination"
     concurrent: ClassVar[bool] = True

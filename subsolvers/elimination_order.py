@@ -23,8 +23,8 @@ from patchwalk.subsolvers.minimum_fill import fill_least
 FILL_WORTH = 512
 """Finding the order of minimum fill takes as long as about so many table entries a spin, and is tried above that."""
 
-KEPT_WHOLE = 1 << 22
-"""Up to so many table entries in all, nothing is filled twice."""
+USUAL_LIMIT = 20
+"""The width up to which elimination works unless told otherwise: tables of 2^20 entries."""
 
 Flags = npt.NDArray[np.bool_]
 
@@ -61,6 +61,18 @@ def find_plan(starts: I64, neighbours: I32, limit: int) -> Plan:
         if attempt == 0 or _goes_before(plan, best, limit):
             best = plan
     return best
+
+
+@compiled
+def fits_within(starts: I64, neighbours: I32, limit: int) -> bool:
+    """Whether the plan found for this graph is of width up to ``limit``; mostly the first order tried tells."""
+    order = np.empty(len(starts) - 1, np.int32)
+    ends = _far_ends(starts, neighbours, 0)
+    for attempt in range(4):
+        _by_layers(starts, neighbours, ends[attempt % 2], attempt >= 2, order)
+        if width_of(_plan_for(starts, neighbours, order)) <= limit:
+            return True
+    return fill_least(starts, neighbours, limit, np.inf, order)
 
 
 @compiled
@@ -234,61 +246,3 @@ def _sort(values: I32) -> None:
             values[place] = values[place - 1]
             place -= 1
         values[place] = value
-
-
-class Layout(NamedTuple):
-    """Where the tables are kept.
-
-    ``places`` i64 (k,) are offsets of the tables by rank in an array of ``room`` entries, those from ``kept`` on shared
-    by all stretches; ``stretches`` i64 (S+1,) bounds them in the order; ``entries`` are filled in all.
-    """
-
-    places: I64
-    stretches: I64
-    kept: int
-    room: int
-    entries: int
-
-
-@compiled
-def lay_out(plan: Plan) -> Layout:
-    """Places for all tables of a plan."""
-    size = len(plan.order)
-    sizes = np.empty(size, np.int64)
-    for rank in range(size):
-        sizes[rank] = 1 << (plan.scope_starts[rank + 1] - plan.scope_starts[rank])
-    total = sizes.sum()
-    longest = total if total <= KEPT_WHOLE else np.int64(np.sqrt(float(total) * sizes.max()))
-    stretches, places = np.zeros(size + 1, np.int64), np.empty(size, np.int64)
-    count, inside = 0, 0
-    for rank in range(size):
-        if inside > 0 and inside + sizes[rank] > longest:
-            count += 1
-            stretches[count] = rank
-            inside = 0
-        inside += sizes[rank]
-    count += 1
-    stretches[count] = size
-    kept, shared, entries = 0, 0, total
-    for stretch in range(count):
-        inside, end = 0, stretches[stretch + 1]
-        for rank in range(stretches[stretch], end):
-            if receiver(plan, rank) >= end:
-                places[rank] = kept
-                kept += sizes[rank]
-            else:
-                places[rank] = -1 - inside
-                inside += sizes[rank]
-        shared = max(shared, inside)
-        entries += inside if stretch < count - 1 else 0
-    for rank in range(size):
-        if places[rank] < 0:
-            places[rank] = kept - 1 - places[rank]
-    return Layout(places, stretches[: count + 1].copy(), kept, kept + shared, entries)
-
-
-@compiled
-def receiver(plan: Plan, rank: int) -> int:
-    """The rank that receives a rank's table, -1 where nothing is left to receive it."""
-    first = plan.scope_starts[rank]
-    return plan.scopes[first] if plan.scope_starts[rank + 1] > first else -1

@@ -19,7 +19,8 @@ import numpy as np
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
 from patchwalk.subsolvers.draws import next_unit
-from patchwalk.subsolvers.elimination_order import Layout, Plan, receiver
+from patchwalk.subsolvers.elimination_layout import Layout, receiver
+from patchwalk.subsolvers.elimination_order import Plan
 from patchwalk.subsolvers.spectrum import boltzmann_factor
 
 BLOCK_BITS = 7

@@ -4,6 +4,10 @@ A front runs through the graph, breadth-first layer after layer, and is never wi
 of a layer round some distant spin, with the layer before it kept out, so that it runs one way. Of every new layer the
 spins that touch the cluster most may join, and the others are kept out for good. Eliminated in the order in which its
 spins joined, such a cluster needs no table of more than ``width`` spins. On a lattice it is a long, solid strip.
+
+Where a front ends before the cluster is full, all that it touched is kept out and another one starts elsewhere, and
+where nothing else is left, among the spins kept out, which may tie fronts together. The width is therefore looked up in
+the order that elimination will choose, and a cluster that turns out too wide ends earlier.
 """
 
 from __future__ import annotations
@@ -13,10 +17,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from patchwalk.clusters.narrow import is_narrow, longest_narrow
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import I32, I64, U64
 from patchwalk.subsolvers.draws import next_below, stream_for
+from patchwalk.subsolvers.elimination_order import USUAL_LIMIT
 
 if TYPE_CHECKING:
     from patchwalk.clusters.rules import Marks
@@ -36,52 +42,79 @@ clusters. The spins that may join have zero or more: how many of their neighbour
 class StripRule:
     """Clusters grown behind a front of at most ``width`` spins; only the graph is looked at.
 
-    Where a front ends before the cluster is full, another one starts elsewhere, and where nothing else is left, among
-    the spins that were kept out: only then may elimination need more than ``width``.
+    No cluster needs tables of more than ``widest`` spins in the order that elimination chooses. Where none of the size
+    asked for can be grown so, the clusters of a round are shorter, all alike, down to ``widest`` + 1 spins.
     """
 
     width: int = 12
+    widest: int = USUAL_LIMIT
     name: str = "strip"
     looks_at_spins: bool = False
 
     def pick(self, problem: Problem, size: int, count: int, seed: int, marks: Marks) -> I32:
-        """Up to ``count`` clusters that do not touch, i32 (B, size), members rising in each row."""
+        """Up to ``count`` clusters that do not touch, i32 (B, size) or shorter, members rising in each row."""
         count = max(1, min(count, len(problem) // size))
         members = np.empty((count, size), np.int32)
-        found = _pick_strips(
-            problem.row_starts, problem.neighbours, self.width, members, stream_for(seed),
+        found, size = _pick_strips(
+            problem.row_starts, problem.neighbours, self.width, self.widest, members, stream_for(seed),
             marks.visited, marks.queue, marks.turn,
         )  # fmt: skip
-        return members[:found]
+        return np.ascontiguousarray(members[:found, :size])
 
 
 @compiled
 def _pick_strips(
-    starts: I64, neighbours: I32, width: int, members: I32, stream: U64, visited: I64, queue: I32, turn: I64
-) -> int:
+    starts: I64, neighbours: I32, width: int, widest: int, members: I32, stream: U64,
+    visited: I64, queue: I32, turn: I64,
+) -> tuple[int, int]:  # fmt: skip
+    """Fill rows of ``members``; returns how many clusters there are, and of how many spins each."""
     count, size = members.shape
     contacts = np.zeros(len(starts) - 1, np.int32)
     found, misses = 0, 0
     while found < count and misses < ATTEMPTS:
-        filled = 0
-        while filled < size:
-            start = _start(contacts, found == 0, stream)
-            if start < 0:
-                break
-            length = min(size - filled, max(1, width - 1))
-            front = _first_layer(starts, neighbours, start, length, contacts, visited, turn, stream)
-            wall = turn[0]
-            for spin in front:
-                filled = _join(starts, neighbours, spin, contacts, queue, filled)
-            filled = _run(starts, neighbours, width, contacts, visited, wall, stream, queue[:size], len(front), filled)
-            turn[0] += width
-        full = filled == size
-        misses = 0 if full else misses + 1
-        _release(starts, neighbours, queue[:filled], contacts, full)
-        if full:
-            members[found] = np.sort(queue[:size])
+        cluster = queue[:size]
+        filled, apart = _grow(starts, neighbours, width, found == 0, contacts, visited, stream, cluster, turn)
+        fits = filled == size and is_narrow(starts, neighbours, cluster, widest)
+        if found == 0 and not fits:
+            size = longest_narrow(starts, neighbours, cluster, apart, widest)
+            fits = True
+        _release(starts, neighbours, queue[:filled], contacts, False)
+        misses = 0 if fits else misses + 1
+        if fits:
+            _release(starts, neighbours, queue[:size], contacts, True)
+            members[found, :size] = np.sort(queue[:size])
             found += 1
-    return found
+    return found, size
+
+
+@compiled
+def _grow(
+    starts: I64, neighbours: I32, width: int, must: bool, contacts: I32, visited: I64, stream: U64, queue: I32,
+    turn: I64,
+) -> tuple[int, int]:  # fmt: skip
+    """Grow one cluster into ``queue``, in full if it ``must``, and mark it in ``contacts``.
+
+    Returns how many spins it has, and how many of them belong to fronts that do not touch each other.
+    """
+    filled, apart = 0, len(queue)
+    while filled < len(queue):
+        begin, start = filled, _start(contacts, must, stream)
+        if start < 0:
+            break
+        if contacts[start] == KEPT_OUT:
+            apart = min(apart, begin)
+        length = min(len(queue) - filled, max(1, width - 1))
+        front = _first_layer(starts, neighbours, start, length, contacts, visited, turn, stream)
+        wall = turn[0]
+        for spin in front:
+            filled = _join(starts, neighbours, spin, contacts, queue, filled)
+        filled = _run(starts, neighbours, width, contacts, visited, wall, stream, queue, len(front), filled)
+        turn[0] += width
+        for spin in queue[begin:filled]:
+            for edge in range(starts[spin], starts[spin + 1]):
+                if contacts[neighbours[edge]] >= 0:
+                    contacts[neighbours[edge]] = KEPT_OUT
+    return filled, apart
 
 
 @compiled

@@ -16,9 +16,10 @@ from patchwalk.clusters.strip import StripRule
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers import ClusterBatch, Edges, Status, make_subsolver
-from patchwalk.subsolvers.contract import F64, I64
+from patchwalk.subsolvers.contract import F64, I32, I64
 from patchwalk.subsolvers.elimination import Elimination
-from patchwalk.subsolvers.elimination_order import find_plan, lay_out, width_of
+from patchwalk.subsolvers.elimination_layout import lay_out
+from patchwalk.subsolvers.elimination_order import find_plan, fits_within, width_of
 from patchwalk.subsolvers.enumeration import Enumeration
 
 SIGNS = np.array([-1, 1], np.int8)
@@ -298,9 +299,13 @@ def plan_of(batch: ClusterBatch, limit: int = 20) -> Any:
 
 
 def plan_for(graph: nx.Graph, limit: int = 20) -> Any:
+    return find_plan(*lists_for(graph), limit)
+
+
+def lists_for(graph: nx.Graph) -> tuple[I64, I32]:
     lists = [sorted(graph[node]) for node in range(len(graph))]
     starts: I64 = np.concatenate([[0], np.cumsum([len(row) for row in lists])]).astype(np.int64)
-    return find_plan(starts, np.array([node for row in lists for node in row], np.int32), limit)
+    return starts, np.array([node for row in lists for node in row], np.int32)
 
 
 @pytest.mark.parametrize(
@@ -325,17 +330,44 @@ def test_orders_reach_the_width_that_a_graph_is_known_for(graph: nx.Graph, width
     assert width_of(plan) == width
 
 
-def test_strips_stay_within_reach() -> None:
-    problem = make("lattice2d", 64, seed=1)
-    marks = Marks.for_problem(problem)
-    widths = []
-    for seed in range(5):
-        for members in StripRule().pick(problem, 300, 8, seed, marks):
+def widths_of_strips(problem: Problem, size: int, rounds: int, rule: StripRule) -> tuple[list[int], list[int]]:
+    """The width and the size of every cluster that the rule picks in so many rounds."""
+    marks, widths, sizes = Marks.for_problem(problem), [], []
+    for seed in range(rounds):
+        for members in rule.pick(problem, size, 8, seed, marks):
             inside = nx.from_scipy_sparse_array(problem.matrix[members][:, members])
-            widths.append(width_of(plan_for(inside)))
-    assert len(widths) >= 20
+            widths.append(width_of(plan_for(inside, rule.widest)))
+            sizes.append(len(members))
+    return widths, sizes
+
+
+@pytest.mark.parametrize(
+    ("family", "side", "size"), [("lattice2d", 64, 300), ("lattice3d", 6, 60), ("lattice3d", 8, 200)]
+)
+def test_strips_on_lattices_have_the_size_asked_for_and_stay_narrow(family: str, side: int, size: int) -> None:
+    """Also where a cluster is a large share of a small cubic lattice, and fronts run into each other."""
+    widths, sizes = widths_of_strips(make(family, side, seed=1), size, 5, StripRule())
+    assert set(sizes) == {size}
     assert np.mean(widths) < 15
     assert max(widths) <= 20
+
+
+def test_strips_that_would_be_too_wide_are_shorter() -> None:
+    """In a complete graph k spins are of width k - 1; a limit below a front of its own width is kept to as well."""
+    widths, sizes = widths_of_strips(make("sk", 60, seed=1), 30, 3, StripRule())
+    assert set(sizes) == {21}
+    assert set(widths) == {20}
+    widths, sizes = widths_of_strips(make("lattice3d", 6, seed=1), 150, 3, StripRule(widest=9))
+    assert all(10 <= size < 150 for size in sizes)
+    assert max(widths) <= 9
+
+
+@pytest.mark.parametrize("limit", [3, 5, 9])
+def test_a_plan_fits_exactly_if_a_width_is_found(limit: int) -> None:
+    for seed in range(30):
+        graph = nx.gnm_random_graph(24, 18 + seed, seed=seed)
+        starts, neighbours = lists_for(graph)
+        assert fits_within(starts, neighbours, limit) == (width_of(find_plan(starts, neighbours, limit)) <= limit)
 
 
 def test_one_cluster_that_is_too_wide_fails_alone() -> None:
