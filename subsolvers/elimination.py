@@ -30,8 +30,9 @@ from patchwalk.subsolvers.contract import (
     Work,
     refuse_oversize,
 )
-from patchwalk.subsolvers.elimination_layout import Layout, lay_out
-from patchwalk.subsolvers.elimination_order import USUAL_LIMIT, Plan, find_plan, width_of
+from patchwalk.subsolvers.elimination_layout import Layout
+from patchwalk.subsolvers.elimination_order import USUAL_LIMIT, Plan
+from patchwalk.subsolvers.elimination_plans import planned
 from patchwalk.subsolvers.elimination_tables import eliminate
 from patchwalk.subsolvers.neighbours import Lists, edges_of, lists_of
 from patchwalk.subsolvers.spectrum import TIE_SHARE
@@ -87,9 +88,9 @@ class Elimination:
         refuse_oversize(self.name, batch.size, self.max_spins, "variable elimination")
         entries, room = np.zeros(len(batch), np.int64), 0
         for row, graph in enumerate(_graphs(batch)):
-            plan = find_plan(graph.starts, graph.neighbours, self.max_width)
-            if width_of(plan) <= self.max_width:
-                layout = lay_out(plan)
+            tables = planned(graph, self.max_width).tables
+            if tables is not None:
+                _, layout = tables
                 entries[row], room = layout.entries, max(room, layout.room)
         return Forecast(bytes=16 * room + len(batch) * self.shots * batch.size, work=self._work(entries))
 
@@ -102,12 +103,11 @@ class Elimination:
         entries, status, messages = np.zeros(rows, np.int64), np.zeros(rows, np.uint8), [""] * rows
         log_ratio = np.full(rows, np.nan)
         for row, graph in enumerate(_graphs(batch)):
-            plan = find_plan(graph.starts, graph.neighbours, self.max_width)
-            width = width_of(plan)
-            if width > self.max_width:
+            width, tables = planned(graph, self.max_width)
+            if tables is None:
                 status[row], messages[row] = Status.FAILED, self._too_wide(width)
                 continue
-            layout = lay_out(plan)
+            plan, layout = tables
             entries[row] = layout.entries
             _solve(batch, row, graph, plan, layout, float(temperature[row]), outcomes[row])
             if temperature[row] > 0.0:
@@ -124,9 +124,9 @@ class Elimination:
         lowest, count = np.full(len(batch), np.nan), np.full(len(batch), np.nan)
         nothing = np.empty((0, batch.size), np.int8)
         for row, graph in enumerate(_graphs(batch)):
-            plan = find_plan(graph.starts, graph.neighbours, self.max_width)
-            if width_of(plan) <= self.max_width:
-                lowest[row], count[row] = _solve(batch, row, graph, plan, lay_out(plan), 0.0, nothing)
+            tables = planned(graph, self.max_width).tables
+            if tables is not None:
+                lowest[row], count[row] = _solve(batch, row, graph, *tables, 0.0, nothing)
         return lowest, count
 
     def _too_wide(self, width: int) -> str:

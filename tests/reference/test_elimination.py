@@ -15,7 +15,7 @@ from patchwalk.clusters.rules import Marks
 from patchwalk.clusters.strip import StripRule
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
-from patchwalk.subsolvers import ClusterBatch, Edges, Status, make_subsolver
+from patchwalk.subsolvers import ClusterBatch, Edges, Status, elimination_plans, make_subsolver
 from patchwalk.subsolvers.contract import F64, I32, I64
 from patchwalk.subsolvers.elimination import Elimination
 from patchwalk.subsolvers.elimination_layout import lay_out
@@ -368,6 +368,21 @@ def test_a_plan_fits_exactly_if_a_width_is_found(limit: int) -> None:
         graph = nx.gnm_random_graph(24, 18 + seed, seed=seed)
         starts, neighbours = lists_for(graph)
         assert fits_within(starts, neighbours, limit) == (width_of(find_plan(starts, neighbours, limit)) <= limit)
+
+
+def test_a_plan_is_made_once_a_graph_and_changes_nothing() -> None:
+    """Forecasting and answering share it, and an answer is the same whether it was there already or not."""
+    batch = random_batch(4, 30, 0.1, seed=21, temperature=0.5)
+    subsolver = Elimination("boltzmann")
+    elimination_plans._planned.cache_clear()
+    fresh = subsolver.propose(batch)
+    assert elimination_plans._planned.cache_info().misses == 4
+    subsolver.forecast(batch)
+    again = subsolver.propose(batch)
+    assert elimination_plans._planned.cache_info().misses == 4
+    assert fresh.outcomes.tobytes() == again.outcomes.tobytes()
+    narrow = Elimination("boltzmann", max_width=1).propose(batch)
+    assert set(narrow.status.tolist()) == {Status.FAILED}, "another limit is another plan"
 
 
 def test_one_cluster_that_is_too_wide_fails_alone() -> None:
