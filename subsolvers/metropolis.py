@@ -14,6 +14,8 @@ import numpy as np
 from patchwalk.subsolvers.contract import (
     F64,
     I8,
+    I32,
+    I64,
     Balance,
     ClusterBatch,
     Forecast,
@@ -24,11 +26,11 @@ from patchwalk.subsolvers.contract import (
 )
 from patchwalk.subsolvers.lockstep import LANES, room_for_packs
 from patchwalk.subsolvers.metropolis_chains import run_abreast, run_alone
-from patchwalk.subsolvers.neighbours import edges_of, with_matrices
+from patchwalk.subsolvers.neighbours import list_edges, with_matrices
 from patchwalk.subsolvers.uniform import require_shots
 
-SLOW_FROM = 32
-"""From so many spins on one chain takes less time alone than as one of eight, and two do from twice as many on."""
+FEW = 2
+"""So many chains take less time one after the other than side by side, which takes as long as with eight."""
 
 
 @dataclass(frozen=True)
@@ -107,9 +109,7 @@ class Metropolis:
             run_abreast((0, chains - alone), batch.fields, batch.couplings, *call, room, outcomes, rises)
         if alone > 0:
             first = (chains - alone) // self.shots
-            edges = edges_of(batch.rows(first, len(batch)))
-            couplings = (edges.offsets, edges.pairs, edges.weights)
-            run_alone((chains - alone, chains), batch.fields, couplings, *call, outcomes, rises)
+            run_alone((chains - alone, chains), batch.fields, _edges_from(batch, first), *call, outcomes, rises)
         return outcomes, rises
 
     def _alone(self, batch: ClusterBatch) -> int:
@@ -117,7 +117,7 @@ class Metropolis:
         chains = len(batch) * self.shots
         if batch.couplings is None:
             return chains
-        return chains % LANES if chains % LANES <= batch.size // SLOW_FROM else 0
+        return chains % LANES if chains % LANES <= FEW else 0
 
     def _work(self, batch: ClusterBatch) -> Work:
         rows = len(batch)
@@ -125,3 +125,12 @@ class Metropolis:
             shots=np.full(rows, self.shots, np.int64),
             spin_updates=np.full(rows, self.shots * self.sweeps * batch.size, np.int64),
         )
+
+
+def _edges_from(batch: ClusterBatch, first: int) -> tuple[I64, I32, F64]:
+    """Offsets, pairs and weights of the rows from ``first`` on."""
+    if batch.couplings is not None:
+        return list_edges(batch.couplings[first:])
+    assert batch.edges is not None
+    own = batch.edges.rows(first, len(batch))
+    return own.offsets, own.pairs, own.weights

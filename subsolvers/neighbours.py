@@ -28,10 +28,7 @@ def edges_of(batch: ClusterBatch) -> Edges:
     if batch.edges is not None:
         return batch.edges
     assert batch.couplings is not None
-    offsets = _count_edges(batch.couplings)
-    pairs, weights = np.empty((offsets[-1], 2), np.int32), np.empty(offsets[-1])
-    _list_edges(batch.couplings, pairs, weights)
-    return Edges(offsets, pairs, weights)
+    return Edges(*list_edges(batch.couplings))
 
 
 def with_matrices(batch: ClusterBatch) -> ClusterBatch:
@@ -46,28 +43,25 @@ def with_matrices(batch: ClusterBatch) -> ClusterBatch:
 
 
 @compiled
-def _count_edges(couplings: F64) -> I64:
-    """Where each row's edges begin, i64 (B+1,)."""
-    offsets = np.zeros(len(couplings) + 1, np.int64)
-    for row in range(len(couplings)):
-        count = 0
-        for first in range(couplings.shape[1]):
-            for second in range(first + 1, couplings.shape[1]):
+def list_edges(couplings: F64) -> tuple[I64, I32, F64]:
+    """Offsets, pairs and weights of dense couplings (B, k, k), pairs rising in each row."""
+    rows, size = couplings.shape[:2]
+    offsets, count = np.zeros(rows + 1, np.int64), 0
+    for row in range(rows):
+        for first in range(size):
+            for second in range(first + 1, size):
                 count += couplings[row, first, second] != 0.0
-        offsets[row + 1] = offsets[row] + count
-    return offsets
-
-
-@compiled
-def _list_edges(couplings: F64, pairs: I32, weights: F64) -> None:
+        offsets[row + 1] = count
+    pairs, weights = np.empty((count, 2), np.int32), np.empty(count)
     edge = 0
-    for row in range(len(couplings)):
-        for first in range(couplings.shape[1]):
-            for second in range(first + 1, couplings.shape[1]):
+    for row in range(rows):
+        for first in range(size):
+            for second in range(first + 1, size):
                 if couplings[row, first, second] != 0.0:
                     pairs[edge, 0], pairs[edge, 1] = first, second
                     weights[edge] = couplings[row, first, second]
                     edge += 1
+    return offsets, pairs, weights
 
 
 TIE_CHANCE = 0.9

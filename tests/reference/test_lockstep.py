@@ -13,6 +13,7 @@ from patchwalk.subsolvers.allowances import draw_allowances, minus_log_of_unit, 
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.draws import combine, next_word
+from patchwalk.subsolvers.fused import plus_product
 from patchwalk.subsolvers.lockstep import (
     LANES,
     add,
@@ -148,3 +149,26 @@ def test_operations_on_packs_are_those_of_numpy() -> None:
     expected = [a + b, a * b, fused, np.minimum(a, b), np.where(a < b, a, 0), np.where((a <= b) | (a != b), a, 0)]
     np.testing.assert_allclose(results, expected, rtol=2.0**-52, atol=0)
     assert every_operation(one, one, results) == 0
+
+
+@compiled
+def fused_both_ways(pairs: F64, results: F64) -> None:
+    for x in range(len(results)):
+        results[x] = plus_product(-1.0, pairs[0, x], pairs[1, x])
+
+
+def test_products_and_sums_are_rounded_once() -> None:
+    """(1 + e)(1 - e) - 1 = -e^2, which is lost where the product is rounded first; also in a vectorised loop."""
+    small = 2.0 ** -np.arange(27.0, 52.0)
+    pairs, results = np.stack([1 + small, 1 - small]), np.empty(len(small))
+    fused_both_ways(pairs, results)
+    np.testing.assert_array_equal(results, -(small**2))
+    packs = room_for_packs(4)
+    packs[0], packs[1], packs[2] = pairs[0, :LANES], pairs[1, :LANES], -1.0
+    fuse_packs(packs)
+    np.testing.assert_array_equal(packs[3], -(small[:LANES] ** 2))
+
+
+@compiled
+def fuse_packs(packs: F64) -> None:
+    store(packs, 3, add_product(load(packs, 2), load(packs, 0), load(packs, 1)))
