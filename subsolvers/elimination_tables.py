@@ -21,21 +21,11 @@ from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
 from patchwalk.subsolvers.draws import next_unit
 from patchwalk.subsolvers.elimination_layout import Layout, receiver
 from patchwalk.subsolvers.elimination_order import Plan
+from patchwalk.subsolvers.elimination_ranked import Ranked, by_rank, chance_of_up
 from patchwalk.subsolvers.spectrum import boltzmann_factor
 
 BLOCK_BITS = 7
 """Entries of a table are worked off in blocks of 2^BLOCK_BITS."""
-
-
-class Ranked(NamedTuple):
-    """A cluster with its spins renamed to their ranks: fields f64 (k,), and each rank's couplings to later ones,
-    ``later[starts[r] : starts[r + 1]]`` of these ``strengths``.
-    """
-
-    fields: F64
-    starts: I64
-    later: I32
-    strengths: F64
 
 
 class Bench(NamedTuple):
@@ -78,7 +68,7 @@ def eliminate(
     energy and the weight w of the whole cluster: its partition sum is w exp(-E / T), at temperature zero w is the
     number of minima.
     """
-    cluster = _by_rank(plan, fields, starts, neighbours, strengths)
+    cluster = by_rank(plan, fields, starts, neighbours, strengths)
     bench = _bench_for(plan)
     rate = 1.0 / temperature if temperature > 0.0 else np.inf
     lowest, weight = 0.0, 1.0
@@ -97,31 +87,11 @@ def eliminate(
         if back:
             for shot in range(len(outcomes)):
                 for rank in range(end - 1, first - 1, -1):
-                    chance = _chance(
+                    chance = chance_of_up(
                         rank, plan, layout.places, cluster, rate, tolerance, energies, weights, outcomes[shot]
                     )
                     outcomes[shot, plan.order[rank]] = 1 if next_unit(stream) < chance else -1
     return lowest, weight
-
-
-@compiled
-def _by_rank(plan: Plan, fields: F64, starts: I64, neighbours: I32, strengths: F64) -> Ranked:
-    size = len(fields)
-    ranks, ranked_fields = np.empty(size, np.int32), np.empty(size)
-    for rank in range(size):
-        ranks[plan.order[rank]] = rank
-        ranked_fields[rank] = fields[plan.order[rank]]
-    later_starts = np.zeros(size + 1, np.int64)
-    later, later_strengths = np.empty(len(neighbours) // 2, np.int32), np.empty(len(neighbours) // 2)
-    filled = 0
-    for rank in range(size):
-        for edge in range(starts[plan.order[rank]], starts[plan.order[rank] + 1]):
-            if ranks[neighbours[edge]] > rank:
-                later[filled] = ranks[neighbours[edge]]
-                later_strengths[filled] = strengths[edge]
-                filled += 1
-        later_starts[rank + 1] = filled
-    return Ranked(ranked_fields, later_starts, later, later_strengths)
 
 
 @compiled
@@ -287,43 +257,3 @@ def _close(sums: F64, products: F64, rate: float, tolerance: float, energies: F6
         factor = boltzmann_factor(rate * abs(rise))
         # choosing between two factors and not between two weights, which the compiler would fetch one by one
         weights[x] = up_weight[x] * (factor if falls else 1.0) + down_weight[x] * (1.0 if falls else factor)
-
-
-@compiled
-def _chance(
-    rank: int,
-    plan: Plan,
-    places: I64,
-    cluster: Ranked,
-    rate: float,
-    tolerance: float,
-    energies: F64,
-    weights: F64,
-    spins: I8,
-) -> float:
-    """The chance that a spin is +1, given all later ones."""
-    up = cluster.fields[rank]
-    for edge in range(cluster.starts[rank], cluster.starts[rank + 1]):
-        up += cluster.strengths[edge] * spins[plan.order[cluster.later[edge]]]
-    down = -up
-    up_weight = down_weight = 1.0
-    giver = plan.first_giver[rank]
-    while giver >= 0:
-        place, begin = places[giver], plan.scope_starts[giver]
-        for other in range(begin + 1, plan.scope_starts[giver + 1]):
-            if spins[plan.order[plan.scopes[other]]] < 0:
-                place += 1 << (other - begin)
-        up += energies[place]
-        down += energies[place + 1]
-        up_weight *= weights[place]
-        down_weight *= weights[place + 1]
-        giver = plan.next_giver[giver]
-    rise = down - up
-    if np.isinf(rate):
-        up_weight *= rise >= -tolerance
-        down_weight *= rise <= tolerance
-    elif rise >= 0.0:
-        down_weight *= boltzmann_factor(rate * rise)
-    else:
-        up_weight *= boltzmann_factor(-rate * rise)
-    return up_weight / (up_weight + down_weight)
