@@ -40,6 +40,9 @@ NARROW, WIDE = 16, 32
 TILE = 64
 """Sites whose local fields are turned from one row per site into one row per replica at a time."""
 
+STRETCH = 2048
+"""Sites packed into words at a time, so that the words stay in cache while replica after replica adds its bit."""
+
 EXACT = 2.0**23
 """Twice this many units is where float32 stops counting in ones."""
 
@@ -195,25 +198,27 @@ def sweep_lanes(
 
 @compiled
 def gather_bits(spins: I8, words: Words) -> None:
-    """Set bit r of ``words`` (n,) wherever ``spins`` (R, n) of replica r is -1; the words begin as zeros."""
-    one = words.dtype.type(1)
-    for begin in range(0, len(words), 2048):
-        end = min(begin + 2048, len(words))
+    """Set bit r of ``words`` (n,) wherever ``spins`` (R, n) of replica r is -1; the words begin as zeros.
+
+    Slices, here and below, tell numba that no index is negative: only then do these loops run in vectors.
+    """
+    for begin in range(0, len(words), STRETCH):
+        part = words[begin : begin + STRETCH]
         for replica in range(len(spins)):
-            bit = words.dtype.type(one << words.dtype.type(replica))
-            for site in range(begin, end):
-                words[site] |= bit if spins[replica, site] < 0 else words.dtype.type(0)
+            row, bit = spins[replica, begin : begin + STRETCH], np.int32(1) << np.int32(replica)
+            for site in range(len(part)):
+                part[site] |= words.dtype.type((np.int32(row[site]) >> np.int32(7)) & bit)
 
 
 @compiled
 def scatter_bits(words: Words, spins: I8) -> None:
     """Fill ``spins`` (R, n) from the bits of ``words`` (n,)."""
-    for begin in range(0, len(words), 2048):
-        end = min(begin + 2048, len(words))
+    for begin in range(0, len(words), STRETCH):
+        part = words[begin : begin + STRETCH]
         for replica in range(len(spins)):
-            shift = words.dtype.type(replica)
-            for site in range(begin, end):
-                spins[replica, site] = 1 - 2 * np.int8((words[site] >> shift) & 1)
+            row, bit = spins[replica, begin : begin + STRETCH], np.uint32(1) << np.uint32(replica)
+            for site in range(len(part)):
+                row[site] = np.int8(-1) if part[site] & bit else np.int8(1)
 
 
 @compiled
@@ -225,13 +230,12 @@ def fields_from_bits(
     tile = np.empty((TILE, NARROW if words.itemsize == 2 else WIDE))
     flat = tile.reshape(-1)
     for begin in range(0, len(words), TILE):
-        count = min(TILE, len(words) - begin)
-        for index in range(count):
-            site = begin + index
-            total = spread(none, 0.0)
+        for index in range(min(TILE, len(words) - begin)):
+            site, total = begin + index, spread(none, 0.0)
             for entry in range(row_starts[site], row_starts[site + 1]):
                 total = with_spins(total, words[neighbours[entry]], couplings[entry])
             store_lanes(flat, index * tile.shape[1], add_lanes(spread(none, fields[site]), total))
         for replica in range(len(local_fields)):
-            for index in range(count):
-                local_fields[replica, begin + index] = tile[index, replica]
+            row, column = local_fields[replica, begin : begin + TILE], tile[:, replica]
+            for index in range(len(row)):
+                row[index] = column[index]
