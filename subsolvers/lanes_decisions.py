@@ -318,6 +318,22 @@ def flips_that_happen(_typing: Any, bits: Any, rises: Any, coldness: Any, draws:
 
 
 @_instruction
+def prefetch_at(_typing: Any, array: Any, _index: Any) -> Any:
+    """Ask for the cache line of array[index] ahead of its use."""
+    byte, number = ir.IntType(8).as_pointer(), ir.IntType(32)
+    to_read_in_all_caches = [ir.Constant(number, flag) for flag in (0, 3, 1)]
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        function = _declared(builder, "llvm.prefetch.p0", ir.VoidType(), [byte, number, number, number])
+        data = context.make_array(signature.args[0])(context, builder, args[0]).data
+        place = builder.bitcast(builder.gep(data, [args[1]]), byte)
+        builder.call(function, [place, *to_read_in_all_caches])
+        return context.get_dummy_value()
+
+    return types.void(array, types.intp), generate
+
+
+@_instruction
 def lowest_bit(_typing: Any, bits: Any) -> Any:
     """The number of the lowest set bit."""
 

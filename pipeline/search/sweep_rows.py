@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import F64, I8
+from patchwalk.subsolvers.contract import F64, I8, U64
 from patchwalk.subsolvers.draws import GOLDEN
 from patchwalk.subsolvers.lanes_decisions import (
     against_spins,
@@ -20,7 +20,7 @@ LANES = 32
 
 
 @compiled
-def sweep_matrix(matrix: F64, spins: I8, local_fields: F64, coldness: float, seed: np.uint64, sweeps: int) -> float:
+def sweep_matrix(matrix: F64, spins: I8, local_fields: F64, coldness: float, stream: U64, sweeps: int) -> float:
     """Sweep all spins in order, in place; returns the energy change. ``matrix`` (n, n) is symmetric, zero diagonal.
 
     The decisions of 32 spins are taken at once, as if none of them flipped. The first that does flip stands; those of
@@ -29,7 +29,7 @@ def sweep_matrix(matrix: F64, spins: I8, local_fields: F64, coldness: float, see
     """
     none = np.uint32(0)
     size = len(spins)
-    twice_cold, state = spread(none, 2.0 * coldness), seed
+    twice_cold, state = spread(none, 2.0 * coldness), stream[0]
     last_fields, last_spins = np.zeros(LANES), np.zeros(LANES, np.int8)
     change = 0.0
     for _ in range(sweeps):
@@ -56,4 +56,5 @@ def sweep_matrix(matrix: F64, spins: I8, local_fields: F64, coldness: float, see
                 twice = 2.0 * spins[spin]
                 for other in range(size):
                     local_fields[other] += twice * matrix[spin, other]
+    stream[0] = state
     return change

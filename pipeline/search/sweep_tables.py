@@ -14,12 +14,15 @@ import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import I32, I64
+from patchwalk.subsolvers.contract import F64, I32, I64
 
 U32 = npt.NDArray[np.uint32]
 
 BATCH = 512
 """About how many spins a batch holds: enough to fill lanes many times over, few enough that they stay in cache."""
+
+CODE_SHIFT, PLACE_MASK = np.uint32(24), np.uint32(2**24 - 1)
+"""A packed word holds a neighbour in its lower 24 bits and in the upper 8 which of up to 256 couplings it is."""
 
 
 @compiled
@@ -104,3 +107,48 @@ def common_unit(problem: Problem, most: float) -> float | None:
         return None
     unit = float(np.ldexp(float(np.gcd.reduce(np.ldexp(sizes, -lowest).astype(np.int64))), lowest))
     return unit if strongest_pull(problem) <= most * unit else None
+
+
+@dataclass(frozen=True, eq=False)
+class Palette:
+    """Rows of couplings in four bytes a neighbour, in the order of the batches.
+
+    Row p belongs to the spin ``order[p]`` and stands at ``row_starts[p]`` to ``row_starts[p+1]``, u32 (n+1,);
+    ``words`` u32 (nnz,) name the neighbour and which of ``values`` f64 (up to 256,) couples it.
+    """
+
+    row_starts: U32
+    words: U32
+    values: F64
+
+
+def palette_of(problem: Problem, batches: Batches) -> Palette | None:
+    """The problem's rows packed; None where it has too many spins or more than 256 different couplings.
+
+    >>> square = Problem.from_arrays([0, 1, 2, 3], [1, 2, 3, 0], [1.0, 1.0, -1.0, 1.0])
+    >>> palette_of(square, batches_of(square)).values
+    array([-1.,  1.])
+    """
+    couplings = problem.couplings
+    if len(problem) > int(PLACE_MASK) or len(couplings) >= 2**32 or len(np.unique(couplings[:4096])) > 256:
+        return None
+    values = np.unique(couplings)
+    if len(values) > 256:
+        return None
+    degrees = np.diff(problem.row_starts)[batches.order]
+    row_starts = np.concatenate([[0], np.cumsum(degrees)]).astype(np.uint32)
+    words = np.empty(len(couplings), np.uint32)
+    _pack_rows(batches.order, problem.row_starts, problem.neighbours, couplings, values, row_starts, words)
+    return Palette(row_starts, words, values)
+
+
+@compiled
+def _pack_rows(
+    order: U32, row_starts: I64, neighbours: I32, couplings: F64, values: F64, new_starts: U32, words: U32
+) -> None:
+    for place in range(len(order)):
+        entry = new_starts[place]
+        for old in range(row_starts[order[place]], row_starts[order[place] + np.uint32(1)]):
+            code = np.uint32(np.searchsorted(values, couplings[old]))
+            words[entry] = np.uint32(neighbours[old]) | (code << CODE_SHIFT)
+            entry += np.uint32(1)

@@ -13,13 +13,13 @@ import numpy as np
 import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem
-from patchwalk.search.sweep_colours import LANES, sweep_batches
+from patchwalk.search.sweep_colours import LANES, sweep_listed, sweep_packed
 from patchwalk.search.sweep_replicas import LaneTables, lane_tables, sweep_side_by_side
 from patchwalk.search.sweep_rows import sweep_matrix
-from patchwalk.search.sweep_tables import Batches, batches_of
+from patchwalk.search.sweep_tables import Batches, Palette, batches_of, palette_of
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
-from patchwalk.subsolvers.draws import MASK, happens, next_unit
+from patchwalk.subsolvers.draws import happens, next_unit, stream_for
 from patchwalk.subsolvers.lanes_decisions import coldness_at
 from patchwalk.subsolvers.neighbours import TIE_CHANCE, turn
 
@@ -50,19 +50,20 @@ class Carrier:
         ``spins`` i8 (n,) and their ``local_fields`` f64 (n,), h_i + sum_j J_ij s_j, are both carried along;
         ``temperature`` in energy units, 0 allowed.
         """
-        problem, start = self.problem, np.uint64(seed & MASK)
-        cold = coldness_at(temperature)
+        problem, stream = self.problem, stream_for(seed)
+        cold, palette = coldness_at(temperature), self._palette
+        if self.representation == "colours" and palette is not None:
+            packed = (self.batches.order, self.batches.starts, palette.row_starts, palette.words, palette.values)
+            return sweep_packed(*packed, spins, local_fields, cold, stream, sweeps)
+        lists = (problem.row_starts, problem.neighbours, problem.couplings)
         if self.representation == "colours":
-            return sweep_batches(
-                self.batches.order, self.batches.starts, problem.row_starts, problem.neighbours.view(np.uint32),
-                problem.couplings, spins, local_fields, cold, start, sweeps,
-            )  # fmt: skip
+            unsigned = (self.batches.order, self.batches.starts, lists[0], lists[1].view(np.uint32), lists[2])
+            return sweep_listed(*unsigned, spins, local_fields, cold, stream, sweeps)
         if self.representation == "matrix":
-            return sweep_matrix(self._matrix, spins, local_fields, cold, start, sweeps)
-        graph, stream = (problem.row_starts, problem.neighbours, problem.couplings), np.array([start])
+            return sweep_matrix(self._matrix, spins, local_fields, cold, stream, sweeps)
         change = 0.0
         for _ in range(sweeps):
-            change += metropolis_sweep(*graph, spins, local_fields, float(temperature), stream)
+            change += metropolis_sweep(*lists, spins, local_fields, float(temperature), stream)
         return change
 
     def sweep_replicas(
@@ -72,12 +73,14 @@ class Carrier:
 
         ``spins`` i8 (R, n), ``temperatures`` f64 (R,), ``seeds`` u64 (R,). ``local_fields`` f64 (R, n) are filled in
         afresh from the spins, once, at the end, to the bit what ``Problem.local_fields`` gives: that takes about as
-        long as two sweeps, and None leaves it out. What becomes of a replica depends on its own row alone, to the
+        long as one sweep, and None leaves it out. What becomes of a replica depends on its own row alone, to the
         last bit, whatever the others are. Works on 16 or 32 replicas at a time: 1 takes as long as 16, 17 as 32.
         """
-        return sweep_side_by_side(
-            self.problem, self._lane_tables, spins, local_fields, temperatures, seeds, sweeps
-        )  # fmt: skip
+        return sweep_side_by_side(self.problem, self._lane_tables, spins, local_fields, temperatures, seeds, sweeps)
+
+    @cached_property
+    def _palette(self) -> Palette | None:
+        return palette_of(self.problem, self.batches) if self.representation == "colours" else None
 
     @cached_property
     def _matrix(self) -> F64:

@@ -181,7 +181,8 @@ def one_size(edge: int) -> None:
     carrier.sweep_replicas(many, None, warmth, seeds, max(3, sweeps // 8))
     lanes = (time.thread_time() - began) / max(3, sweeps // 8)
     all_in_all = resource.getrusage(resource.RUSAGE_SELF).ru_maxrss * 1024
-    print(json.dumps({"spins": len(problem), "made": made, "one": best, "lanes": lanes, "peak": peak, "all": all_in_all}))
+    found = {"spins": len(problem), "made": made, "one": best, "lanes": lanes, "peak": peak, "all": all_in_all}
+    print(json.dumps(found))
 
 
 def sizes() -> None:

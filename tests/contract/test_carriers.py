@@ -7,11 +7,13 @@ import pytest
 
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
-from patchwalk.search.sweep_tables import batches_of
+from patchwalk.search.sweep_colours import sweep_listed
+from patchwalk.search.sweep_tables import batches_of, palette_of
 from patchwalk.search.sweeps import Carrier, carrier_for
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers.contract import F64, I8, U64
-from patchwalk.subsolvers.draws import seed_for
+from patchwalk.subsolvers.draws import seed_for, stream_for
+from patchwalk.subsolvers.lanes_decisions import coldness_at
 
 REPRESENTATIONS = ("colours", "matrix", "lists")
 
@@ -122,6 +124,29 @@ def test_scaling_the_problem_changes_no_bit(couplings: str) -> None:
     scaled = carrier_for(larger).sweep_replicas(others, other_local, factor * temperatures, seeds, 30)
     assert np.array_equal(spins, others)
     assert np.array_equal(factor * changes, scaled)
+
+
+def test_packed_rows_and_lists_give_the_same_bits() -> None:
+    problem = make("lattice3d", 5, seed=6, fields=True)
+    carrier = carrier_for(problem)
+    (spins, local), (others, other_local) = begin(problem, 2), begin(problem, 2)
+    change = carrier.sweep(spins, local, 1.2, 17, 25)
+    lists = (problem.row_starts, problem.neighbours.view(np.uint32), problem.couplings)
+    batches = (carrier.batches.order, carrier.batches.starts)
+    cold, stream = coldness_at(1.2), stream_for(17)
+    assert palette_of(problem, carrier.batches) is not None
+    assert sweep_listed(*batches, *lists, others, other_local, cold, stream, 25) == change
+    assert np.array_equal(spins, others)
+    assert np.array_equal(local, other_local)
+
+
+def test_only_few_different_couplings_make_a_palette() -> None:
+    problem = make("lattice2d", 20, couplings="gaussian")
+    assert palette_of(problem, batches_of(problem)) is None
+    whole = Problem.from_arrays(range(99), range(1, 100), np.arange(99) % 50 - 25)
+    palette = palette_of(whole, batches_of(whole))
+    assert palette is not None
+    assert np.array_equal(palette.values, np.delete(np.arange(-25.0, 25.0), 25))
 
 
 def test_no_sweeps_change_nothing() -> None:
