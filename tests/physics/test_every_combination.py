@@ -108,7 +108,8 @@ def evolved(energies: F64, driver: str, drive: Drive, jump_rate: float, start: F
         change: Complex = -1j * turned.ravel()
         return change
 
-    exact = {"rtol": 1e-10, "atol": 1e-12} if jump_rate == 0.0 else {"rtol": 1e-6, "atol": 1e-8}  # shots see no more
+    # jumps are judged by shots alone, which see no more
+    exact: dict[str, Any] = {"rtol": 1e-10, "atol": 1e-12} if jump_rate == 0.0 else {"rtol": 1e-6, "atol": 1e-8}
     for begin, end in pairwise(drive.times):
         state = solve_ivp(slope, (begin, end), state.ravel(), method="DOP853", **exact).y[:, -1].reshape(state.shape)
     law: F64 = np.abs(state) ** 2 if jump_rate == 0.0 else state.diagonal().real
