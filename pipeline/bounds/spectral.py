@@ -34,6 +34,9 @@ I32 = npt.NDArray[np.int32]
 MOST_VERTICES = 6000
 """Matrices are dense here; this one takes 288 MB."""
 
+WIDEST = 5
+"""Members of the widest cuts."""
+
 UNIT = 2.0**-53
 
 
@@ -47,8 +50,8 @@ class SquareCertificate:
 
     ``groups`` i32 (v,) and ``signs`` i8 (v,): vertex a is ``signs[a]`` times the sign of group ``groups[a]``; v is the
     number of spins, plus one if any has a field (see the module). ``diagonal`` f64 (m,) is u, one entry a group.
-    ``members`` i32 (T, 3), ``member_signs`` i8 (T, 3) and ``weights`` f64 (T,) are the b_t and w_t: three different
-    groups, their signs +1 or -1, and a weight >= 0.
+    ``members`` i32 (T, 5), ``member_signs`` i8 (T, 5) and ``weights`` f64 (T,) are the b_t and w_t: an odd number of
+    different groups with signs +1 or -1, the rest of the row with sign 0, and a weight >= 0.
     """
 
     groups: I32
@@ -100,9 +103,8 @@ def trivial_groups(problem: Problem) -> tuple[I32, I8]:
 def without_cuts(problem: Problem, diagonal: F64) -> SquareCertificate:
     """The certificate of a diagonal alone, for the whole problem."""
     groups, signs = trivial_groups(problem)
-    return SquareCertificate(
-        groups, signs, diagonal, np.empty((0, 3), np.int32), np.empty((0, 3), np.int8), np.empty(0)
-    )
+    no_members, no_signs = np.empty((0, WIDEST), np.int32), np.empty((0, WIDEST), np.int8)
+    return SquareCertificate(groups, signs, diagonal, no_members, no_signs, np.empty(0))
 
 
 def grouped_matrix(problem: Problem, groups: I32, signs: I8, size: int) -> tuple[F64, F64]:
@@ -124,11 +126,12 @@ def slack_matrix(matrix: F64, certificate: SquareCertificate) -> tuple[F64, F64]
     size = len(certificate.diagonal)
     slack, magnitude, terms = matrix.copy(), np.abs(matrix), np.zeros((size, size))
     members, signs, weights = certificate.members, certificate.member_signs.astype(np.float64), certificate.weights
-    for first in range(3):
-        for second in range(3):
-            place = (members[:, first], members[:, second])
-            np.subtract.at(slack, place, weights * signs[:, first] * signs[:, second])
-            np.add.at(magnitude, place, weights)
+    for first in range(WIDEST):
+        for second in range(WIDEST):
+            real = (signs[:, first] != 0) & (signs[:, second] != 0)
+            place = (members[real, first], members[real, second])
+            np.subtract.at(slack, place, (weights * signs[:, first] * signs[:, second])[real])
+            np.add.at(magnitude, place, weights[real])
             np.add.at(terms, place, 1.0)
     corner = np.arange(size)
     slack[corner, corner] -= certificate.diagonal
@@ -180,13 +183,16 @@ def _check_layout(problem: Problem, certificate: SquareCertificate) -> None:
         raise CertificateError(f"groups and signs need {count} entries, one for each vertex of the problem")
     if set(certificate.groups.tolist()) != set(range(size)):
         raise CertificateError(f"groups must use every number from 0 to {size - 1}, the length of the diagonal")
-    if np.any(np.abs(certificate.signs) != 1) or np.any(np.abs(certificate.member_signs) != 1):
-        raise CertificateError("signs must be +1 or -1")
-    if certificate.members.shape != (cuts, 3) or certificate.member_signs.shape != (cuts, 3):
-        raise CertificateError(f"{cuts} weights need members and member_signs of shape ({cuts}, 3)")
-    members = np.sort(certificate.members, axis=1)
-    if cuts and (members.min() < 0 or members.max() >= size or np.any(members[:, 1:] == members[:, :-1])):
-        raise CertificateError(f"the members of a cut must be three different groups from 0 to {size - 1}")
+    if np.any(np.abs(certificate.signs) != 1) or np.any(np.abs(certificate.member_signs) > 1):
+        raise CertificateError("signs must be +1 or -1, in cuts also 0")
+    if certificate.members.shape != (cuts, WIDEST) or certificate.member_signs.shape != (cuts, WIDEST):
+        raise CertificateError(f"{cuts} weights need members and member_signs of shape ({cuts}, {WIDEST})")
+    if cuts and (certificate.members.min() < 0 or certificate.members.max() >= size):
+        raise CertificateError(f"the members of a cut must be groups from 0 to {size - 1}")
+    used = certificate.member_signs != 0
+    told_apart = np.sort(np.where(used, certificate.members, -1 - np.arange(WIDEST)), axis=1)
+    if np.any(used.sum(axis=1) % 2 == 0) or np.any(told_apart[:, 1:] == told_apart[:, :-1]):
+        raise CertificateError("a cut must have an odd number of members, all different")
     if not (np.all(certificate.weights >= 0) and np.all(np.isfinite(certificate.weights))):
         raise CertificateError("a weight is negative or not finite")
     if not np.all(np.isfinite(certificate.diagonal)):
