@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Protocol
 
-from patchwalk.commands.answers import answer_for, settled
+from patchwalk.commands.answers import answer_for, settled, spoken
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.tasks import Task, task_from
 from patchwalk.evidence.kept_answers import KeptAnswers
@@ -35,7 +35,8 @@ class Solution:
     ``interrupted`` or ``error``), ``message``, ``seconds`` without and ``compile_seconds`` for compiling, ``calls``,
     ``failed_calls``, ``skipped`` (clusters for which nobody was called), ``sweeps``, ``seed``, ``run_path``,
     ``alternatives`` i8 (E, n), the best distinct configurations. None unless a bound was computed: ``lower_bound``,
-    ``gap``. ``runs`` holds every run where several seeds were asked for, this one being the best.
+    ``gap``. ``spoken`` is the answer in words, for problems that were encoded; their ``spins`` are mended where a cheap
+    repair makes them feasible. ``runs`` holds every run where several seeds were asked for, this one being the best.
     """
 
     spins: I8
@@ -59,6 +60,7 @@ class Solution:
     alternatives: I8 | None = None
     lower_bound: float | None = None
     gap: float | None = None
+    spoken: tuple[str, ...] = ()
     runs: tuple[Solution, ...] = ()
 
     def as_json(self) -> dict[str, Any]:
@@ -259,11 +261,14 @@ def _solution(
 ) -> Solution:
     problem, spins = task.problem, settled(task.problem, search.best_spins)
     energy = problem.energy(spins)
-    feasible, answer = answer_for(problem, spins)
+    feasible, answer = answer_for(problem, search.best_spins)
+    is_encoded = problem.encoding is not None
+    objective = answer[problem.objective_name] if is_encoded else problem.objective(energy)
     return Solution(
-        spins=spins, energy=energy, objective=problem.objective(energy), objective_name=problem.objective_name,
+        spins=spins, energy=energy, objective=objective, objective_name=problem.objective_name,
         feasible=feasible, answer=answer, status=search.status, message=search.message, seconds=seconds,
         compile_seconds=compile_seconds, calls=search.calls, failed_calls=search.failures.total,
         skipped=search.skipped, sweeps=search.sweeps, seed=search.seed, run_path=task.run_path,
         start_energy=start_energy, notes=problem.notes, alternatives=search.elites.spins,
+        spoken=tuple(spoken(problem, search.best_spins)) if is_encoded else (),
     )  # fmt: skip

@@ -12,9 +12,11 @@ WIDTH = 110
 
 def in_words(solution: Solution) -> str:
     """Several lines: the answer first, then how it was come by."""
-    lines = _beacon_lines(solution.answer) if "channels" in solution.answer else []
-    if not solution.feasible:
-        lines.append("NOT VALID: the answer breaks the problem's own rules, listed above")
+    lines = list(solution.spoken)
+    if "channels" in solution.answer:
+        lines = _beacon_lines(solution.answer)
+        if not solution.feasible:
+            lines.append("NOT VALID: the answer breaks the problem's own rules, listed above")
     if len(solution.runs) > 1:
         lines.append(f"best of {len(solution.runs)} runs, seed {solution.seed}")
         lines.extend(f"  seed {run.seed}: {run.objective_name} {run.objective:,.8g}" for run in solution.runs)
