@@ -26,7 +26,7 @@ class Cuts:
     @property
     def signs(self) -> F64:
         """The coefficients f64 (total,): +1 on F and -1 on the rest of the cycle."""
-        return 2.0 * self.odd - 1.0
+        return np.asarray(2.0 * self.odd - 1.0, np.float64)
 
     @property
     def limits(self) -> F64:
