@@ -9,6 +9,7 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from patchwalk.commands.forecasting import forecast
     from patchwalk.commands.resuming import resume
     from patchwalk.commands.sampling import sample
     from patchwalk.commands.solving import Solution, solve
@@ -20,6 +21,7 @@ _HOMES = {
     "Problem": "patchwalk.problem.ising",
     "ProblemError": "patchwalk.problem.ising",
     "Solution": "patchwalk.commands.solving",
+    "forecast": "patchwalk.commands.forecasting",
     "make": "patchwalk.problem.families",
     "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
@@ -28,7 +30,18 @@ _HOMES = {
     "write_problem": "patchwalk.problem.files",
 }
 
-__all__ = ["Problem", "ProblemError", "Solution", "make", "read_problem", "resume", "sample", "solve", "write_problem"]
+__all__ = [
+    "Problem",
+    "ProblemError",
+    "Solution",
+    "forecast",
+    "make",
+    "read_problem",
+    "resume",
+    "sample",
+    "solve",
+    "write_problem",
+]
 
 
 def __getattr__(name: str) -> Any:

@@ -1,8 +1,8 @@
 """Fixed prices of counted work: what decisions rest on, so that no decision ever rests on the clock.
 
-The prices are round figures in seconds for one core of a present-day machine, computed here with
-``tests/bench/bench_prices.py``. They need only be right within a factor of a few: they cut batches into slices and
-say which calls are dear enough to be recorded one by one.
+The prices are round figures in seconds for one core of a present-day machine, as ``patchwalk backends --time`` measures
+them. They need only be right within a factor of a few: they cut batches into slices, weigh rules against each other
+and say which calls are dear enough to be recorded one by one.
 """
 
 from __future__ import annotations
@@ -12,8 +12,8 @@ import numpy as np
 from patchwalk.subsolvers.contract import F64, Work
 
 PRICES = {
-    "amplitude_updates": 1.5e-9,
-    "spin_updates": 8e-9,
+    "amplitude_updates": 4.5e-10,
+    "spin_updates": 5e-9,
     "energies": 1.5e-9,
     "table_entries": 2e-9,
     "load_s": 1.0,
@@ -23,7 +23,7 @@ PRICES = {
 }
 """Seconds per counted unit; seconds that a device reports or forecasts about itself count as they are."""
 
-DEAR_SECONDS = 4e-6
+DEAR_SECONDS = 1.2e-6
 """A call at this price or above has a row of its own in the run file; cheaper ones a seeded share and exact tallies."""
 
 SLICE_SECONDS = 1.0

@@ -17,6 +17,7 @@ COMMANDS = {
         "patchwalk.interface.sample_options:sample_command",
         "Averages over the Boltzmann law, with error bars.",
     ),
+    "forecast": ("patchwalk.interface.forecast_options:forecast_command", "What working on an input will need."),
     "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
     "backends": ("patchwalk.interface.backends_options:backends_command", "List backends, check one, or time one."),
 }
