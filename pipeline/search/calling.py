@@ -17,6 +17,7 @@ from patchwalk.acceptance import AcceptanceRule, judge
 from patchwalk.clusters.conditioning import condition
 from patchwalk.clusters.policy import Policy
 from patchwalk.clusters.rules import ClusterRule, Marks, View
+from patchwalk.cost import priced
 from patchwalk.engine import Answered, answers
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls
@@ -41,6 +42,25 @@ class Cut(NamedTuple):
     def rows(self, chosen: slice | npt.NDArray[np.bool_]) -> Cut:
         """Some of the clusters alone."""
         return Cut(self.members[chosen], self.replicas[chosen], self.places[chosen], self.seeds[chosen])
+
+
+class Worth:
+    """What the calls of a round gained and what their work cost; summed once, so that slices change no bit of it."""
+
+    def __init__(self) -> None:
+        self._gains: list[F64] = []
+        self._prices: list[F64] = []
+
+    def count(self, gains: F64, calls: Calls) -> None:
+        """Take in one slice, with what each of its calls gained."""
+        self._gains.append(gains)
+        self._prices.append(priced(calls.proposals.work, len(calls)))
+
+    def of_the_round(self) -> tuple[float, float]:
+        """Gain in energy units and counted work in seconds at fixed prices."""
+        if not self._gains:
+            return 0.0, 0.0
+        return float(np.concatenate(self._gains).sum()), float(np.concatenate(self._prices).sum())
 
 
 @dataclass(eq=False)

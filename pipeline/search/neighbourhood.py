@@ -17,11 +17,10 @@ import numpy as np
 from patchwalk.acceptance import AcceptanceRule
 from patchwalk.clusters.mixture import Mixture, RuleWeights
 from patchwalk.clusters.policy import Policy
-from patchwalk.cost import priced
 from patchwalk.engine import Answered, failed, prepared, release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
-from patchwalk.search.calling import Caller, Cut, rehearsing
+from patchwalk.search.calling import Caller, Cut, Worth, rehearsing
 from patchwalk.search.carrying import Carrying
 from patchwalk.search.elites import Elites
 from patchwalk.search.ends import Ends, Spent
@@ -231,16 +230,15 @@ class NeighbourhoodSearch:
         wanted = self.plan.clusters_per_round
         if self.plan.ends.calls is not None:
             wanted = min(wanted, self.plan.ends.calls - self.calls - self.skipped)
-        cuts, gain, work = self._cuts(wanted), 0.0, 0.0
+        cuts, worth = self._cuts(wanted), Worth()
         name = self.rules.rules[self._drawn].name
         for calls in self.caller.carry_out(cuts, name, self.replicas, temperatures, stage, self._must_stop):
             self.calls += len(calls)
             self.failures.count(calls)
             np.add.at(self.counts, calls.members.ravel(), 1)
-            gain -= float(calls.change[calls.accepted].sum(where=calls.change[calls.accepted] < 0.0))
-            work += float(priced(calls.proposals.work, len(calls)).sum())
+            worth.count(np.maximum(0.0, -calls.change) * calls.accepted, calls)
             yield calls
-        self.weights.reward(self._drawn, gain, work)
+        self.weights.reward(self._drawn, *worth.of_the_round())
 
     def _sweep(self, temperatures: F64) -> bool:
         """The sweeps of a round; False where the round was cut short, here or before."""

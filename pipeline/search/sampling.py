@@ -15,11 +15,10 @@ import numpy as np
 
 from patchwalk.clusters.mixture import Mixture, RuleWeights
 from patchwalk.clusters.policy import Policy
-from patchwalk.cost import priced
 from patchwalk.engine import prepared, release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Round
-from patchwalk.search.calling import Caller, Cut
+from patchwalk.search.calling import Caller, Cut, Worth
 from patchwalk.search.carrying import Carrying
 from patchwalk.search.ladder import Ladder
 from patchwalk.search.neighbourhood import MIXTURE
@@ -158,17 +157,16 @@ class BoltzmannSampling:
     def _call(self, temperatures: F64, stage: float) -> Iterator[Calls]:
         """The calls of a round, carried out to their end: a round cut short would not keep the law."""
         drawn = self.rules.drawn(seed_for(self.seed, MIXTURE, self.round), self.weights)
-        name, gain, work = self.rules.rules[drawn].name, 0.0, 0.0
+        name, worth = self.rules.rules[drawn].name, Worth()
         cuts = self._cuts(drawn)
         for calls in self.caller.carry_out(cuts, name, self.replicas, temperatures, stage, lambda: False):
             self.calls += len(calls)
             self.failed_calls += int(np.count_nonzero(calls.proposals.status == Status.FAILED))
             np.add.at(self.counts, calls.members.ravel(), 1)
-            gain += float(np.abs(calls.change[calls.accepted]).sum())  # at rest energies fall as often as they rise
-            work += float(priced(calls.proposals.work, len(calls)).sum())
+            worth.count(np.abs(calls.change) * calls.accepted, calls)  # at rest energies fall as often as they rise
             yield calls
         if self.round < self.plan.burn_in:
-            self.weights.reward(drawn, gain, work)
+            self.weights.reward(drawn, *worth.of_the_round())
 
     def _temperatures(self) -> F64:
         """The temperature of every replica, copy after copy."""
