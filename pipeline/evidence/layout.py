@@ -18,6 +18,10 @@ from patchwalk.subsolvers.contract import F64, I8, WORK_FIELDS
 
 LAYOUT = 2
 
+WORK_COLUMNS = ", ".join(
+    f"{name} REAL" if name.endswith(("_s", "_time")) else f"{name} INTEGER" for name in WORK_FIELDS
+)
+
 SCHEMA = f"""
 CREATE TABLE about (key TEXT PRIMARY KEY, value TEXT) WITHOUT ROWID;
 CREATE TABLE problems (
@@ -47,7 +51,7 @@ CREATE TABLE calls (
     subsolver TEXT, k INTEGER, members BLOB, boundary_fields BLOB, spins_before BLOB, proposal BLOB, log_ratio REAL,
     energy_before REAL, change REAL, accepted INTEGER, hit_probability REAL, noiseless_hit REAL, seconds REAL,
     status INTEGER, message TEXT,
-    {", ".join(f"{name} REAL" if name.endswith(("_s", "_time")) else f"{name} INTEGER" for name in WORK_FIELDS)}
+    {WORK_COLUMNS}
 );
 CREATE TABLE tallies (
     run INTEGER, subsolver TEXT, rule TEXT, k INTEGER, tenth INTEGER, calls INTEGER, accepted INTEGER, moved INTEGER,
@@ -56,6 +60,15 @@ CREATE TABLE tallies (
 CREATE TABLE measurements (
     run INTEGER, temperature REAL, copies INTEGER, energies BLOB, magnetisations BLOB, overlaps BLOB,
     PRIMARY KEY (run, temperature)
+) WITHOUT ROWID;
+CREATE TABLE replays (
+    run INTEGER, rival TEXT, round INTEGER, replica INTEGER, place INTEGER, weight REAL, exact INTEGER,
+    mean_drop REAL, drop_error REAL, mean_fall REAL, improve_probability REAL, hit_probability REAL, seconds REAL,
+    status INTEGER, message TEXT, {WORK_COLUMNS}, PRIMARY KEY (run, rival, round, replica, place)
+) WITHOUT ROWID;
+CREATE TABLE sweep_curves (
+    run INTEGER, round INTEGER, replica INTEGER, place INTEGER, budget_s REAL, sweeps REAL, mean_drop REAL,
+    drop_error REAL, PRIMARY KEY (run, round, replica, place, budget_s)
 ) WITHOUT ROWID;
 CREATE TABLE kept_answers (run INTEGER, seed INTEGER, answer BLOB, PRIMARY KEY (run, seed)) WITHOUT ROWID;
 CREATE INDEX calls_by_run ON calls (run, round, replica, place);
