@@ -18,12 +18,13 @@ their bounds, every step lowers the energy, and without rules a configuration of
 that has all variables right, over the part of the problem that hangs together. Whoever breaks a rule pays Q at least,
 and Q > R is more than that can save. K, A and B get R on top: a configuration with a variable wrong is then at least R
 above one that has all of them right, which is not below the lower bound. So it is above the best answer, too. Where a
-feasible answer is known, its own cost is the upper bound.
+feasible answer is known, its own cost is an upper bound.
 """
 
 from __future__ import annotations
 
-from collections.abc import Callable
+import math
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -48,8 +49,8 @@ class Prices:
     rule: F64
 
 
-def prices_of(choices: Choices, known: F64 | None = None) -> Prices:
-    """Penalties that are enough, see the module; ``known`` are the features (f,) of an answer that keeps all rules."""
+def prices_of(choices: Choices, known: Sequence[F64] = ()) -> Prices:
+    """Penalties that are enough, see the module; ``known`` are features (f,) of answers that keep all rules."""
     parts, part_of = _parts(choices)
     ranges = _ranges(choices, part_of, parts, known)
     ruled = np.zeros(parts, np.bool_)
@@ -61,7 +62,9 @@ def prices_of(choices: Choices, known: F64 | None = None) -> Prices:
             square[block] = above(_wall_bound(choices, block) + extra, _unit(choices, block))
         elif form == "one-hot":
             add, drop = _one_hot_bounds(choices, block)
-            square[block] = above(max((add + drop) / 2, 0.0) + extra, _unit(choices, block))
+            unit = _unit(choices, block)
+            add = math.ceil(add / unit * 8) / 8 * unit  # averages are fractions; binary ones keep whole numbers whole
+            square[block] = above(max((add + drop) / 2, 0.0) + extra, unit)
             shift[block] = (add - drop) / 2
     unit = smallest(np.concatenate([choices.linear, choices.weights]))
     rules = [_rule_price(choices, rule, part_of, ranges, unit) for rule in choices.rules]
@@ -88,7 +91,7 @@ def _parts(choices: Choices) -> tuple[int, I64]:
     return int(count), np.asarray(part, np.int64)
 
 
-def _ranges(choices: Choices, part_of: I64, parts: int, known: F64 | None) -> F64:
+def _ranges(choices: Choices, part_of: I64, parts: int, known: Sequence[F64]) -> F64:
     """For every part, an upper bound of its best cost less a lower bound of all, every product shared by its two."""
     least, most = np.zeros(parts), np.zeros(parts)
     for block, (form, first, end) in enumerate(choices.blocks):
@@ -98,10 +101,11 @@ def _ranges(choices: Choices, part_of: I64, parts: int, known: F64 | None) -> F6
             low, high = [*low, 0.0], [*high, 0.0]
         least[part_of[block]] += min(low)
         most[part_of[block]] += max(high)
-    if known is not None:
-        most[:] = np.bincount(part_of[choices.block_of], choices.linear * known, parts)
-        pairs = choices.weights * known[choices.heads] * known[choices.tails]
-        most += np.bincount(part_of[choices.block_of[choices.heads]], pairs, parts)
+    for active in known:
+        cost = np.bincount(part_of[choices.block_of], choices.linear * active, parts)
+        pairs = choices.weights * active[choices.heads] * active[choices.tails]
+        cost += np.bincount(part_of[choices.block_of[choices.heads]], pairs, parts)
+        most = np.minimum(most, cost)
     return np.maximum(most - least, 0.0)
 
 

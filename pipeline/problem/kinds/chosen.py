@@ -15,14 +15,13 @@ from typing import Any
 import numpy as np
 
 from patchwalk.problem.choice_penalties import Prices, prices_of
+from patchwalk.problem.choice_repair import cheapest, repaired
 from patchwalk.problem.choices import F64, UNBOUNDED, Choices, Product, Rule, Variable
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.meanings import I8, Encoding, by_name
 from patchwalk.problem.penalties import MOST_SLACK_BITS, count_bits, count_coefficients, problem_of_bits
 
 MOST_PRODUCTS = 2_000_000
-MOST_MENDING = 50_000_000
-"""Beyond so many numbers to look at, no repair is tried: it would not be cheap."""
 
 Products = list[list[Product]]
 """Every feature as a sum of products of bits."""
@@ -95,28 +94,16 @@ class ChosenValues(Encoding):
         return active
 
     def mend(self, spins: I8) -> I8:
-        """One variable after another gets the value that breaks rules least, then costs least, while that helps."""
-        choices = self.choices
-        looks = len(choices.weights) + len(choices.linear) + sum(len(rule.features) for rule in choices.rules)
-        if len(choices.linear) * looks > MOST_MENDING:
-            return spins
-        value = self.read(spins)["choices"]
-        tried: set[str] = set()
-        while len(tried) < len(self.choices.variables):
-            before = self._badness(value)
-            for one in self.choices.variables:
-                if one.name not in tried:
-                    tried.add(one.name)
-                    best = min(_possible(one, value[one.name]), key=lambda new: self._badness({**value, one.name: new}))
-                    value[one.name] = best
-            if self._badness(value) < before:
-                tried.clear()
-        return self.encode({"choices": value})
+        """Variables one after another take the value that breaks rules least, then costs least."""
+        features = repaired(self.choices, self.active(self.read(spins)))
+        return self.encode({"choices": self._values(features)})
 
-    def _badness(self, value: dict[str, Any]) -> tuple[int, float]:
-        active = self.active({"choices": value})
-        wrong = sum(isinstance(said, list) for said in value.values())
-        return wrong + sum(rule.excess(rule.total(active)) for rule in self.choices.rules), self.choices.cost(active)
+    def _values(self, active: F64) -> dict[str, Any]:
+        values = {}
+        for one in self.choices.variables:
+            own = active[one.first_feature : one.first_feature + one.feature_count]
+            values[one.name] = _value_of(one, np.flatnonzero(own > 0).tolist())
+        return values
 
     def _features(self, one: Variable, bits: I8) -> list[int]:
         """Which features of a variable are 1."""
@@ -172,13 +159,6 @@ def _bits_of(one: Variable, active: F64) -> list[int]:
     return [int(place < on[0]) for place in range(one.bit_count)]
 
 
-def _possible(one: Variable, now: Any) -> Iterable[Any]:
-    """What a variable might be, its present value first if it is one."""
-    if one.values is None:
-        return [now, one.least, one.most, max(now - 1, one.least), min(now + 1, one.most)]
-    return one.values if isinstance(now, list) else [now, *one.values]
-
-
 def _bounds_of(rule: Rule) -> str:
     if rule.least == -UNBOUNDED or rule.most == UNBOUNDED:
         return f"at most {rule.most}" if rule.least == -UNBOUNDED else f"at least {rule.least}"
@@ -218,7 +198,8 @@ class _Form:
 def encode_choices(choices: Choices, known: Mapping[str, Any] | None = None, notes: Iterable[str] = ()) -> Problem:
     """The problem of least cost; energy = cost of every answer that keeps all rules, with slack as it should be.
 
-    ``known`` is a value of an answer that keeps all rules: it only makes penalties smaller. The proof that they are
+    ``known`` is a value of an answer that keeps all rules: it only makes penalties smaller, as does one that a cheap
+    repair finds. The proof that they are
     enough is in :mod:`patchwalk.problem.choice_penalties`. Raises :class:`ProblemError` for a rule that can never be
     kept or needs more slack than 10 bits, and for a known answer that breaks a rule.
     """
@@ -233,13 +214,7 @@ def encode_choices(choices: Choices, known: Mapping[str, Any] | None = None, not
             kept.append(one)
             size += len(one.steps)
     encoding = ChosenValues(choices, tuple(kept), size)
-    active = None
-    if known is not None:
-        broken = encoding.judge({"choices": known})[1]
-        if broken:
-            raise ProblemError(f"the known answer breaks the rules: {broken[0]}")
-        active = encoding.active({"choices": known})
-    prices = prices_of(replace(choices, rules=tuple(one.rule for one in kept)), active)
+    prices = prices_of(replace(choices, rules=tuple(one.rule for one in kept)), _known_answers(encoding, known))
     products = [one.products(place) for one in choices.variables for place in range(one.feature_count)]
     form = _Form()
     _add_costs(form, choices, products)
@@ -247,6 +222,21 @@ def encode_choices(choices: Choices, known: Mapping[str, Any] | None = None, not
     for one, price in zip(kept, prices.rule.tolist(), strict=True):
         _add_rule(form, products, one, price)
     return _problem(form, encoding, products, said)
+
+
+def _known_answers(encoding: ChosenValues, known: Mapping[str, Any] | None) -> list[F64]:
+    """The features of answers that keep all rules: the one given, and one found on the cheap if it can be."""
+    answers = []
+    if known is not None:
+        broken = encoding.judge({"choices": known})[1]
+        if broken:
+            raise ProblemError(f"the known answer breaks the rules: {broken[0]}")
+        answers.append(encoding.active({"choices": known}))
+    if encoding.kept:
+        found = repaired(encoding.choices, cheapest(encoding.choices))
+        if not any(rule.excess(rule.total(found)) for rule in encoding.choices.rules):
+            answers.append(found)
+    return answers
 
 
 def _kept(choices: Choices, rule: Rule, first_bit: int, notes: list[str]) -> Kept | None:
