@@ -37,6 +37,9 @@ from patchwalk.problem.penalties import above, smallest
 
 F64 = npt.NDArray[np.float64]
 I64 = npt.NDArray[np.int64]
+MOST_COMPARED = 100_000_000
+"""Beyond so many differences of costs, a domain wall's bound is taken from their sizes alone: quicker, and larger."""
+
 Extreme = Callable[[Form, list[float], int], float]
 
 
@@ -160,13 +163,18 @@ def _wall_bound(choices: Choices, block: int) -> float:
     """What straightening one place of a domain wall adds at most."""
     _, first, end = choices.blocks[block]
     met = sorted({e for a in range(first, end) for weights in choices.neighbours[a].values() for e in weights})
+    linear = choices.linear[first:end]
+    if (end - first) ** 2 * len(met) > MOST_COMPARED:
+        sums = np.array(
+            [sum(abs(w) for of in choices.neighbours[a].values() for w in of.values()) for a in range(first, end)]
+        )
+        return float((linear + sums).max() - (linear - sums).min())
     place = {e: column for column, e in enumerate(met)}
     table = np.zeros((end - first, len(met)))
     for a in range(first, end):
         for weights in choices.neighbours[a].values():
             for e, weight in weights.items():
                 table[a - first, place[e]] = weight
-    linear = choices.linear[first:end]
     return float(max((linear - linear[a] + np.abs(table - table[a]).sum(axis=1)).max() for a in range(end - first)))
 
 

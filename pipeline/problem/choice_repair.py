@@ -13,18 +13,25 @@ from patchwalk.problem.choices import F64, I64, Choices, Variable
 from patchwalk.problem.penalties import count_bits
 
 MOST_ROUNDS = 50
+MOST_VISITS = 20_000
+"""Variables looked at in all; for a problem of more, no repair is tried, as it would not be cheap."""
 ALL_NUMBERS = 64
 """A whole number of more values tries its bounds and its neighbours only."""
 
 
-def repaired(choices: Choices, active: F64) -> F64:
-    """All features, f64 (f,), after at most 50 rounds over all variables, each made right and as good as it can be."""
+def repaired(choices: Choices, active: F64) -> F64 | None:
+    """All features, f64 (f,), after up to 50 rounds over all variables, each made right and as good as it can be.
+
+    None, and nothing is tried, for more than 20,000 variables.
+    """
+    if len(choices.variables) > MOST_VISITS:
+        return None
     features = active.copy()
     linear, quadratic = choices.linear, _products(choices)
     rules, constants, least, most = _rules(choices)
     totals = constants + rules @ features
     by_feature = rules.tocsc()
-    for _ in range(MOST_ROUNDS):
+    for _ in range(min(MOST_ROUNDS, MOST_VISITS // len(choices.variables))):
         before = features.copy()
         for one in choices.variables:
             own = slice(one.first_feature, one.first_feature + one.feature_count)

@@ -11,7 +11,7 @@ import networkx as nx
 import numpy as np
 import pytest
 
-from patchwalk.problem import choice_penalties, penalties
+from patchwalk.problem import choice_penalties, choice_repair, penalties
 from patchwalk.problem.builder import ProblemBuilder
 from patchwalk.problem.ising import Problem, ProblemError
 
@@ -181,6 +181,33 @@ def test_all_spins_decode_to_what_the_rules_say(mix: str, seed: int) -> None:
             assert problem.energy(answer.spins) == pytest.approx(good[said], abs=1e-9)
         else:
             assert answer.broken
+
+
+def test_where_a_repair_would_not_be_cheap_none_is_tried(monkeypatch: pytest.MonkeyPatch) -> None:
+    problem = dear_middle().build()
+    assert problem.encoding.decode([1, -1]).repaired
+    monkeypatch.setattr(choice_repair, "MOST_VISITS", 0)
+    answer = problem.encoding.decode([1, -1])
+    assert answer.broken == ("x has 2 values: low, high",)
+    assert not answer.repaired
+
+
+def test_a_repair_finds_an_answer_that_keeps_the_rules_where_one_is_near() -> None:
+    """Twelve shifts, three people, four each: from one person doing everything."""
+    builder = ProblemBuilder()
+    shifts = [f"shift {place}" for place in range(12)]
+    for shift in shifts:
+        builder.choice(shift, ["Ada", "Ben", "Cleo"])
+    for person in ("Ada", "Ben", "Cleo"):
+        builder.total([(shift, person) for shift in shifts], 4, 4, name=f"shifts of {person}")
+    problem = builder.build()
+    broken = problem.encoding.encode({"choices": dict.fromkeys(shifts, "Ada")})
+    assert len(problem.encoding.judge_spins(broken)[1]) == 3
+    answer = problem.encoding.decode(broken)
+    assert answer.feasible
+    assert answer.mended[0] == "shifts of Ada: the total is 12, allowed 4"
+    counts = [list(answer.value["choices"].values()).count(person) for person in ("Ada", "Ben", "Cleo")]
+    assert counts == [4, 4, 4]
 
 
 def triangle(form: str) -> ProblemBuilder:

@@ -96,7 +96,7 @@ class ChosenValues(Encoding):
     def mend(self, spins: I8) -> I8:
         """Variables one after another take the value that breaks rules least, then costs least."""
         features = repaired(self.choices, self.active(self.read(spins)))
-        return self.encode({"choices": self._values(features)})
+        return spins if features is None else self.encode({"choices": self._values(features)})
 
     def _values(self, active: F64) -> dict[str, Any]:
         values = {}
@@ -175,6 +175,8 @@ class _Form:
 
     def add(self, weight: float, one: Sequence[Product], other: Sequence[Product] = ((1.0, ()),)) -> None:
         """Add weight times the product of two sums of products."""
+        if len(one) * len(other) > 4 * MOST_PRODUCTS:
+            raise ProblemError(f"a rule of {len(one)} terms makes too many products of bits; state it in smaller parts")
         for first, some in one:
             for second, more in other:
                 factors = sorted({*some, *more})
@@ -234,7 +236,7 @@ def _known_answers(encoding: ChosenValues, known: Mapping[str, Any] | None) -> l
         answers.append(encoding.active({"choices": known}))
     if encoding.kept:
         found = repaired(encoding.choices, cheapest(encoding.choices))
-        if not any(rule.excess(rule.total(found)) for rule in encoding.choices.rules):
+        if found is not None and not any(rule.excess(rule.total(found)) for rule in encoding.choices.rules):
             answers.append(found)
     return answers
 
