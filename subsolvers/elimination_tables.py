@@ -137,12 +137,15 @@ def _fill(
     _tabulate_own(rank, cluster, low, bench)
     _find_steps(rank, plan, width, low, bench)
     sums, products = bench.sums, bench.weights
+    lone = plan.first_giver[rank] >= 0 and plan.next_giver[plan.first_giver[rank]] < 0 and bench.straight[0] != 0
     for number in range(1 << (width - low)):
         high = 0.0
         for edge in range(cluster.starts[rank], cluster.starts[rank + 1]):
             bit = bench.bit_of[cluster.later[edge]]
             if bit >= low:
                 high += cluster.strengths[edge] * (1 - 2 * ((number >> (bit - low)) & 1))
+        target = places[rank] + number * block
+        lowest, heavy = energies[target : target + block], weights[target : target + block]
         received, giver = 0, plan.first_giver[rank]
         if giver < 0:
             for x in range(block):
@@ -155,13 +158,15 @@ def _fill(
                 base += bench.steps[received, bit] * ((number >> (bit - low)) & 1)
             if not bench.straight[received]:
                 _gather(energies, weights, base, bench.offsets[received, :block], bench, high, received == 0)
+            elif lone:
+                _pass_along(energies[base:], weights[base:], bench.own[:block], high, rate, tolerance, lowest, heavy)
             elif received == 0:
                 _begin_along(energies[base:], weights[base:], bench.own[:block], high, sums, products)
             else:
                 _go_on_along(energies[base:], weights[base:], block, sums, products)
             received, giver = received + 1, plan.next_giver[giver]
-        target = places[rank] + number * block
-        _close(sums, products, rate, tolerance, energies[target : target + block], weights[target : target + block])
+        if not lone:
+            _close(sums, products, rate, tolerance, lowest, heavy)
 
 
 @compiled
@@ -244,16 +249,44 @@ def _gather(energies: F64, weights: F64, base: int, offsets: I32, bench: Bench, 
 def _close(sums: F64, products: F64, rate: float, tolerance: float, energies: F64, weights: F64) -> None:
     """The lower of the two energies of every entry, and the weight of both."""
     up, down, up_weight, down_weight = sums[0], sums[1], products[0], products[1]
+    for x in range(len(energies)):
+        energies[x] = min(up[x], down[x])
     if np.isinf(rate):
         for x in range(len(energies)):
-            rise = down[x] - up[x]
-            energies[x] = up[x] if rise >= 0.0 else down[x]
-            weights[x] = (up_weight[x] if rise >= -tolerance else 0.0) + (down_weight[x] if rise <= tolerance else 0.0)
-        return
-    for x in range(len(energies)):
-        rise = down[x] - up[x]
-        falls = rise < 0.0
-        energies[x] = down[x] if falls else up[x]
-        factor = boltzmann_factor(rate * abs(rise))
-        # choosing between two factors and not between two weights, which the compiler would fetch one by one
-        weights[x] = up_weight[x] * (factor if falls else 1.0) + down_weight[x] * (1.0 if falls else factor)
+            weights[x] = _count(down[x] - up[x], up_weight[x], down_weight[x], tolerance)
+    else:
+        for x in range(len(energies)):
+            weights[x] = _weigh(down[x] - up[x], up_weight[x], down_weight[x], rate)
+
+
+@compiled
+def _pass_along(
+    energies: F64, weights: F64, own: F64, high: float, rate: float, tolerance: float, lowest: F64, heavy: F64
+) -> None:
+    """All of it at once where one table is received and its entries follow those of the block: mostly, on lattices."""
+    if np.isinf(rate):
+        for x in range(len(own)):
+            up, down = energies[2 * x] + (own[x] + high), energies[2 * x + 1] - (own[x] + high)
+            lowest[x] = min(up, down)
+            heavy[x] = _count(down - up, weights[2 * x], weights[2 * x + 1], tolerance)
+    else:
+        for x in range(len(own)):
+            up, down = energies[2 * x] + (own[x] + high), energies[2 * x + 1] - (own[x] + high)
+            lowest[x] = min(up, down)
+            heavy[x] = _weigh(down - up, weights[2 * x], weights[2 * x + 1], rate)
+
+
+@compiled
+def _count(rise: float, up_weight: float, down_weight: float, tolerance: float) -> float:
+    """The weight of whichever of two energies, ``rise`` apart, is the lower one, or of both where they tie."""
+    return (up_weight if rise >= -tolerance else 0.0) + (down_weight if rise <= tolerance else 0.0)
+
+
+@compiled
+def _weigh(rise: float, up_weight: float, down_weight: float, rate: float) -> float:
+    """The weight of two energies ``rise`` apart, in terms of the lower one.
+
+    It is two factors that are chosen and not two weights, which the compiler would then fetch one by one.
+    """
+    factor = boltzmann_factor(rate * abs(rise))
+    return up_weight * (factor if rise < 0.0 else 1.0) + down_weight * (1.0 if rise < 0.0 else factor)
