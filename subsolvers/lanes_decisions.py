@@ -9,10 +9,10 @@ Random numbers are the splitmix64 words of ``draws``, so that a stream gives the
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from typing import Any, cast
 
-import numpy as np
 from llvmlite import ir
 from numba import types
 from numba.core import cgutils
@@ -39,6 +39,8 @@ POWER_OF_TWO = (
     0.0013399931467670911, 0.00015345811473908133,
 )  # fmt: skip
 """A polynomial that is 2^r for |r| <= 1/2, relative error 2e-9 (least largest error, computed here)."""
+
+LOG2_E = math.log2(math.e)
 
 HOPELESS = -58.0
 """2^-58 lies below every random number drawn here, the least of which is 2^-33."""
@@ -346,5 +348,4 @@ def lowest_bit(_typing: Any, bits: Any) -> Any:
 
 def coldness_at(temperature: float) -> float:
     """What :func:`flips_that_happen` wants to know about the temperature."""
-    with np.errstate(divide="ignore"):
-        return float(-np.log2(np.e) / np.float64(temperature))
+    return -LOG2_E / float(temperature) if temperature > 0.0 else -math.inf

@@ -119,6 +119,8 @@ def sweep_packed(
             change += gained
             for flip in range(count):
                 prefetch_at(words, rows[chosen[min(flip + AHEAD, count - 1)]])
+                last = words[rows[chosen[min(flip + AHEAD // 2, count - 1)] + np.uint32(1)] - np.uint32(1)]
+                prefetch_at(local_fields, last & PLACE_MASK)  # the neighbour furthest on is the least likely in cache
                 place = chosen[flip]
                 spin = batch[place]
                 spins[spin] = -spins[spin]

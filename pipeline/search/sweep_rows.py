@@ -58,3 +58,13 @@ def sweep_matrix(matrix: F64, spins: I8, local_fields: F64, coldness: float, str
                     local_fields[other] += twice * matrix[spin, other]
     stream[0] = state
     return change
+
+
+@compiled
+def fields_from_matrix(matrix: F64, fields: F64, spins: I8) -> F64:
+    """The local fields (n,) of a configuration, to the bit what ``Problem.local_fields`` gives, in vector loops."""
+    local_fields = np.zeros(len(spins))
+    for other in range(len(spins)):
+        for spin in range(len(spins)):
+            local_fields[spin] += matrix[other, spin] * spins[other]
+    return local_fields + fields

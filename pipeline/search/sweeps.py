@@ -15,13 +15,16 @@ import numpy.typing as npt
 from patchwalk.problem.ising import Problem
 from patchwalk.search.sweep_colours import LANES, sweep_listed, sweep_packed
 from patchwalk.search.sweep_replicas import LaneTables, lane_tables, sweep_side_by_side
-from patchwalk.search.sweep_rows import sweep_matrix
-from patchwalk.search.sweep_tables import Batches, Palette, batches_of, palette_of
+from patchwalk.search.sweep_rows import fields_from_matrix, sweep_matrix
+from patchwalk.search.sweep_tables import U32, Batches, batches_of, palette_of
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
 from patchwalk.subsolvers.draws import happens, next_unit, stream_for
 from patchwalk.subsolvers.lanes_decisions import coldness_at
 from patchwalk.subsolvers.neighbours import TIE_CHANCE, turn
+
+LARGEST_CACHED_MATRIX = 2048
+"""Spins up to which a full matrix (32 MB) stays in cache; replicas of larger dense problems are swept in lanes."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -34,8 +37,8 @@ class Carrier:
     - ``"matrix"``: in order, decided a row of lanes ahead, with rows of a full matrix (``sweep_rows``);
     - ``"lists"``: in order, one by one (:func:`metropolis_sweep`).
 
-    Replicas together are swept in lanes whatever the problem (``sweep_replicas``); one replica among them takes
-    another path than :meth:`sweep` takes from the same seed, though of the same law. What a call does depends on its
+    Replicas together are swept in lanes (``sweep_replicas``) but for small dense problems; in lanes a replica takes
+    another path than :meth:`sweep` takes from the same seed, of the same law. What a call does depends on its
     arguments alone, and calls may run in several threads at once (kernels run without the interpreter lock).
     ``sweeps=0`` compiles and flips nothing.
     """
@@ -50,37 +53,63 @@ class Carrier:
         ``spins`` i8 (n,) and their ``local_fields`` f64 (n,), h_i + sum_j J_ij s_j, are both carried along;
         ``temperature`` in energy units, 0 allowed.
         """
-        problem, stream = self.problem, stream_for(seed)
-        cold, palette = coldness_at(temperature), self._palette
-        if self.representation == "colours" and palette is not None:
-            packed = (self.batches.order, self.batches.starts, palette.row_starts, palette.words, palette.values)
-            return sweep_packed(*packed, spins, local_fields, cold, stream, sweeps)
-        lists = (problem.row_starts, problem.neighbours, problem.couplings)
-        if self.representation == "colours":
-            unsigned = (self.batches.order, self.batches.starts, lists[0], lists[1].view(np.uint32), lists[2])
-            return sweep_listed(*unsigned, spins, local_fields, cold, stream, sweeps)
+        stream, cold = stream_for(seed), coldness_at(temperature)
         if self.representation == "matrix":
             return sweep_matrix(self._matrix, spins, local_fields, cold, stream, sweeps)
-        change = 0.0
-        for _ in range(sweeps):
-            change += metropolis_sweep(*lists, spins, local_fields, float(temperature), stream)
-        return change
+        if self.representation == "lists":
+            change = 0.0
+            for _ in range(sweeps):
+                change += metropolis_sweep(*self._lists, spins, local_fields, float(temperature), stream)
+            return change
+        if self._packed is not None:
+            return sweep_packed(*self._packed, spins, local_fields, cold, stream, sweeps)
+        return sweep_listed(*self._batched_lists, spins, local_fields, cold, stream, sweeps)
 
     def sweep_replicas(
         self, spins: I8, local_fields: F64 | None, temperatures: F64, seeds: U64, sweeps: int = 1
     ) -> F64:
         """Sweep R replicas in place, each at its own temperature; returns their energy changes f64 (R,).
 
-        ``spins`` i8 (R, n), ``temperatures`` f64 (R,), ``seeds`` u64 (R,). ``local_fields`` f64 (R, n) are filled in
-        afresh from the spins, once, at the end, to the bit what ``Problem.local_fields`` gives: that takes about as
-        long as one sweep, and None leaves it out. What becomes of a replica depends on its own row alone, to the
-        last bit, whatever the others are. Works on 16 or 32 replicas at a time: 1 takes as long as 16, 17 as 32.
+        ``spins`` i8 (R, n), ``local_fields`` f64 (R, n), ``temperatures`` f64 (R,), ``seeds`` u64 (R,). What becomes
+        of a replica depends on its own row alone, to the last bit, whatever the others are.
+
+        Small dense problems are swept one replica after the other, carrying ``local_fields`` along as :meth:`sweep`
+        does. All others are swept in lanes, 16 or 32 replicas at a time (1 takes as long as 16, 17 as 32), and
+        ``local_fields`` are filled in afresh from the spins at the end, to the bit what ``Problem.local_fields``
+        gives, which takes about as long as one sweep. With None they are not wanted: faster in lanes, slower for
+        dense problems, which then have to find them first.
         """
+        if self.representation == "matrix" and len(self.problem) <= LARGEST_CACHED_MATRIX:
+            return self._one_after_the_other(spins, local_fields, temperatures, seeds, sweeps)
         return sweep_side_by_side(self.problem, self._lane_tables, spins, local_fields, temperatures, seeds, sweeps)
 
+    def _one_after_the_other(
+        self, spins: I8, local_fields: F64 | None, temperatures: F64, seeds: U64, sweeps: int
+    ) -> F64:
+        changes = np.empty(len(spins))
+        for row, own in enumerate(spins):
+            if local_fields is None:
+                fields = fields_from_matrix(self._matrix, self.problem.fields, own)
+            else:
+                fields = local_fields[row]
+            changes[row] = self.sweep(own, fields, float(temperatures[row]), int(seeds[row]), sweeps)
+        return changes
+
     @cached_property
-    def _palette(self) -> Palette | None:
-        return palette_of(self.problem, self.batches) if self.representation == "colours" else None
+    def _lists(self) -> tuple[I64, I32, F64]:
+        return self.problem.row_starts, self.problem.neighbours, self.problem.couplings
+
+    @cached_property
+    def _batched_lists(self) -> tuple[U32, I64, I64, U32, F64]:
+        row_starts, neighbours, couplings = self._lists
+        return self.batches.order, self.batches.starts, row_starts, neighbours.view(np.uint32), couplings
+
+    @cached_property
+    def _packed(self) -> tuple[U32, I64, U32, U32, F64] | None:
+        palette = palette_of(self.problem, self.batches)
+        if palette is None:
+            return None
+        return self.batches.order, self.batches.starts, palette.row_starts, palette.words, palette.values
 
     @cached_property
     def _matrix(self) -> F64:
