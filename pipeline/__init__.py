@@ -9,6 +9,8 @@ import importlib
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
+    from patchwalk.commands.auditing import audit
+    from patchwalk.commands.bounding import bound
     from patchwalk.commands.forecasting import forecast
     from patchwalk.commands.resuming import resume
     from patchwalk.commands.sampling import sample
@@ -22,6 +24,8 @@ _HOMES = {
     "ProblemError": "patchwalk.problem.ising",
     "Solution": "patchwalk.commands.solving",
     "forecast": "patchwalk.commands.forecasting",
+    "audit": "patchwalk.commands.auditing",
+    "bound": "patchwalk.commands.bounding",
     "make": "patchwalk.problem.families",
     "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
@@ -34,6 +38,8 @@ __all__ = [
     "Problem",
     "ProblemError",
     "Solution",
+    "audit",
+    "bound",
     "forecast",
     "make",
     "read_problem",

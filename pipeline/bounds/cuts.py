@@ -26,7 +26,7 @@ class Cuts:
     @property
     def signs(self) -> F64:
         """The coefficients f64 (total,): +1 on F and -1 on the rest of the cycle."""
-        return np.asarray(2.0 * self.odd - 1.0, np.float64)
+        return np.where(self.odd == 1, 1.0, -1.0)
 
     @property
     def limits(self) -> F64:

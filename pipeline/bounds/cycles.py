@@ -9,7 +9,7 @@ from the multipliers (:func:`patchwalk.bounds.certificate.dual_value`).
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
+from collections.abc import Callable, Generator
 from dataclasses import dataclass
 from typing import Any
 
@@ -38,6 +38,14 @@ class Multipliers:
     values: F64
 
 
+class _Silent(highspy.Highs):
+    """A solver that keeps off standard output from the beginning: its banner comes with the callbacks."""
+
+    def enableCallbacks(self) -> None:  # noqa: N802 - the name is the library's
+        self.setOptionValue("output_flag", False)
+        super().enableCallbacks()  # type: ignore[no-untyped-call]
+
+
 class CycleProgram:
     """The linear program of a graph, its cuts and, after :meth:`solve`, its point ``x`` and its bound.
 
@@ -58,8 +66,7 @@ class CycleProgram:
         self.multipliers = Multipliers(np.empty(0, np.int32), np.empty(0))
         self.infeasible = False
         self.value = self._evaluate(np.empty(0))
-        self.solver: Any = highspy.Highs()  # type: ignore[no-untyped-call]
-        self.solver.setOptionValue("output_flag", False)
+        self.solver: Any = _Silent()  # type: ignore[no-untyped-call]
         self.solver.setOptionValue("threads", 1)
         self.solver.addVars(count, self.lower, self.upper)
         self.solver.changeColsCost(count, np.arange(count, dtype=np.int32), self.costs / self._scale)
@@ -158,6 +165,21 @@ class CycleProgram:
             self.costs, self.graph.constant, cuts.offsets, cuts.edges, cuts.odd, duals, self.lower, self.upper
         )
 
+    @property
+    def basis(self) -> tuple[list[Any], list[Any]]:
+        """The basis of the last simplex solve: the status of every column and of every row."""
+        basis = self.solver.getBasis()
+        return list(basis.col_status), list(basis.row_status)
+
+    def start_from(self, basis: tuple[list[Any], list[Any]]) -> None:
+        """Let the next simplex solve begin with a basis of this program when it had as many rows, or fewer."""
+        columns, rows = basis
+        fresh = highspy.HighsBasis()
+        fresh.valid = True
+        fresh.col_status = columns
+        fresh.row_status = rows + [highspy.HighsBasisStatus.kBasic] * (len(self.rows) - len(rows))
+        self.solver.setBasis(fresh)
+
     def drop_slack(self) -> None:
         """Take rows without multiplier that the point keeps clear of out of the program, if they are many."""
         if not len(self.rows):
@@ -173,7 +195,7 @@ class CycleProgram:
 
 
 @dataclass(frozen=True)
-class Round:
+class Tightened:
     """One round of tightening: its number from 1, cuts added before it, and whether the interior point was used."""
 
     number: int
@@ -181,35 +203,33 @@ class Round:
     interior: bool
 
 
-def tighten(
+def tightening(
     program: CycleProgram,
-    closed: Callable[[], bool],
     seconds_left: Callable[[], float],
-    after_round: Callable[[Round], None] = lambda _: None,
     interior_rounds: int = 12,
     most_rounds: int = 1000,
     least_gain: float = 0.0,
-) -> bool:
-    """Add cuts and solve until ``closed()``, until no cut is broken, until the time is up or ``most_rounds`` are over.
+) -> Generator[Tightened, None, bool]:
+    """Add cuts and solve, round by round, until no cut is broken, the time is up or ``most_rounds`` are over.
 
-    It also ends after three rounds in a row that raised the bound by less than ``least_gain`` each. Returns whether the
-    program is as tight as odd-cycle cuts can make it.
+    It also ends after three rounds in a row that raised the bound by less than ``least_gain`` each. The generator's
+    own value is whether the program is as tight as odd-cycle cuts can make it.
     """
     least, idle, interior = LEAST, 0, False
     for number in range(1, most_rounds + 1):
-        if closed() or seconds_left() <= 0.0:
+        if seconds_left() <= 0.0:
             return False
         added = program.separate(least)
-        if not added and not interior and least < LEAST:
-            return True
         if not added and not interior:
+            if least < LEAST:
+                return True
             least = LEAST / 10.0
             continue
         # where nothing is broken by an interior point, the dual simplex method has the last word
         before, interior = program.bound, bool(added) and number <= interior_rounds
-        if not program.solve(interior, seconds_left()) and not interior:
+        if not program.solve(interior, seconds_left()) and not interior and not program.solve(True, seconds_left()):
             return False
-        after_round(Round(number, added, interior))
+        yield Tightened(number, added, interior)
         if program.infeasible:
             return False
         if interior:
@@ -218,3 +238,21 @@ def tighten(
         if idle >= 3:
             return False
     return False
+
+
+def tighten(
+    program: CycleProgram,
+    closed: Callable[[], bool] = lambda: False,
+    seconds_left: Callable[[], float] = lambda: math.inf,
+    after_round: Callable[[Tightened], None] = lambda _: None,
+    interior_rounds: int = 12,
+) -> bool:
+    """All of :func:`tightening` in one go, or until ``closed()`` after a round; returns its value."""
+    rounds = tightening(program, seconds_left, interior_rounds)
+    while True:
+        try:
+            after_round(next(rounds))
+        except StopIteration as end:
+            return bool(end.value)
+        if closed():
+            return False

@@ -51,7 +51,7 @@ def random_problem(number: int) -> Problem:
 
 def tightened(problem: Problem, interior_rounds: int = 3) -> CycleProgram:
     program = CycleProgram(cut_graph(problem))
-    assert tighten(program, lambda: False, lambda: math.inf, interior_rounds=interior_rounds)
+    assert tighten(program, interior_rounds=interior_rounds)
     return program
 
 
@@ -69,9 +69,7 @@ def test_never_above_the_ground_energy(number: int) -> None:
     program = CycleProgram(cut_graph(problem))
     levels = energy_levels(problem)
     bounds = []
-    tighten(
-        program, lambda: False, lambda: math.inf, lambda _: bounds.append(program.bound), interior_rounds=number % 5
-    )
+    tighten(program, after_round=lambda _: bounds.append(program.bound), interior_rounds=number % 5)
     for bound in [*bounds, program.bound]:
         assert bound <= lowest + 1e-12 * abs(lowest)  # enumeration sums in floating point
         assert rounded_up(problem, bound, levels) <= lowest + 1e-12 * abs(lowest)

@@ -1,0 +1,368 @@
+"""Branch-and-bound: odd-cycle cuts below, roundings and cluster calls above, splits on agreements of two spins between.
+
+The node of lowest bound comes first. Its linear program is tightened; if the bound does not reach the best energy
+known, the node is split on a pair of coupled spins: in one half they agree, in the other they differ. The pair is
+chosen by reliability (Achterberg, Koch & Martin, Oper. Res. Lett. 33 (2005) 42): pairs whose effect has rarely been
+seen are tried out with a few simplex steps on either side, the others are judged by the average of what splits on
+them gained before. Clusters of spins the program leaves undecided go to the subsolver, as in neighbourhood search.
+
+Barahona, Grotschel, Junger & Reinelt, Oper. Res. 36 (1988) 493; De Simone et al., J. Stat. Phys. 80 (1995) 487.
+"""
+
+from __future__ import annotations
+
+import math
+import time
+from collections.abc import Callable, Generator, Iterator
+from dataclasses import dataclass
+
+import numpy as np
+
+from patchwalk.bounds.certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, Certificate, settled_energy
+from patchwalk.bounds.cut_graph import cut_graph
+from patchwalk.bounds.cycles import CycleProgram, Multipliers, tightening
+from patchwalk.bounds.energy_step import lower_energy
+from patchwalk.engine import release
+from patchwalk.problem.ising import Problem
+from patchwalk.records import Calls, Improvement, Round, Snapshot
+from patchwalk.search.branch_pairs import Half, PairChooser
+from patchwalk.search.branch_primal import Incumbent
+from patchwalk.search.branch_tree import Node, Tree
+from patchwalk.subsolvers.contract import I8, Subsolver
+
+ROUNDS_AT_ROOT, ROUNDS_AT_NODE = 400, 20
+NEAR = 1e-4
+"""Relative gap below which it is worth looking whether reduced costs leave one configuration only."""
+
+ROW_GROWTH = 3
+"""Rows are thinned out when there are so many times as many as after the root."""
+
+
+@dataclass(frozen=True)
+class BranchPlan:
+    """How to search. ``sweeps`` is how long the cooling lasts that gives the first configuration.
+
+    Any of ``cuts``, ``heuristic`` and ``branching`` may be switched off, to see what it is worth. Without ``cuts`` only
+    integral points that are no configuration are cut off; without ``heuristic`` the best energy comes from integral
+    points of the program alone, and no subsolver is asked; without ``branching`` only the root is worked on.
+    """
+
+    seconds: float | None = None
+    nodes: int | None = None
+    cluster_size: int = 12
+    clusters_per_round: int = 8
+    interior_rounds: int = 12
+    sweeps: int = 2000
+    cuts: bool = True
+    heuristic: bool = True
+    branching: bool = True
+
+
+@dataclass(frozen=True)
+class NodeLine:
+    """One line of the node log. ``bound`` is the bound of the whole problem, ``outcome`` what became of the node."""
+
+    node: int
+    depth: int
+    node_bound: float
+    bound: float
+    best: float
+    gap: float
+    open_nodes: int
+    cuts: int
+    seconds: float
+    outcome: str
+
+
+OUTCOMES = {BRANCHED: "split", BOUNDED: "bounded", EMPTY: "empty", SETTLED: "settled"}
+
+
+class BranchAndBound:
+    """One run. Iterate over :meth:`rounds`; then read ``status``, ``lower_bound``, ``best_spins``, ``certificate()``.
+
+    ``status`` is ``proved_optimal`` where the bound reached the best energy (within ``problem.tie_tolerance``), else
+    ``budget`` or ``interrupted``. ``log`` holds a line for each node worked on.
+    """
+
+    def __init__(
+        self,
+        problem: Problem,
+        subsolver: Subsolver | None,
+        plan: BranchPlan,
+        seed: int = 1,
+        start: I8 | None = None,
+        interrupted: Callable[[], bool] = lambda: False,
+    ) -> None:
+        self.problem, self.plan, self.seed = problem, plan, seed
+        self.graph = cut_graph(problem)
+        self.incumbent = Incumbent(
+            problem, self.graph, subsolver if plan.heuristic else None, plan.cluster_size, seed, start
+        )
+        self.program = CycleProgram(self.graph)
+        self.tree = Tree(problem, self.graph)
+        self.status, self.message = "budget", ""
+        self.log: list[NodeLine] = []
+        self.nodes_done = 0
+        self._interrupted = interrupted
+        self._current: Node | None = None
+        self._epoch, self._root_rows = 0, 0
+        self._chooser = PairChooser(self.program, self.tree)
+        self._began = time.perf_counter()
+
+    @property
+    def subsolver(self) -> Subsolver | None:
+        """Who answers the clusters."""
+        return self.incumbent.subsolver
+
+    @property
+    def best_energy(self) -> float:
+        """The lowest energy known."""
+        return self.incumbent.energy
+
+    @property
+    def best_spins(self) -> I8:
+        """Its configuration, i8 (n,)."""
+        return self.incumbent.spins
+
+    @property
+    def elapsed(self) -> float:
+        """Seconds since the search began, compiling apart."""
+        return time.perf_counter() - self._began
+
+    @property
+    def lower_bound(self) -> float:
+        """A true lower bound on the energy of every configuration, at any time."""
+        bound = min(self.tree.lowest_open, self.best_energy)
+        if self._current is not None:
+            bound = min(bound, self._current.bound)
+        return bound
+
+    @property
+    def gap(self) -> float:
+        """(best energy - lower bound) / max(1, |best energy|)."""
+        return (self.best_energy - self.lower_bound) / max(1.0, abs(self.best_energy))
+
+    @property
+    def stage(self) -> float:
+        """The fraction of the budget spent: of the nodes where they are limited, else of the seconds."""
+        if self.plan.nodes:
+            return min(1.0, self.nodes_done / self.plan.nodes)
+        return min(1.0, self.elapsed / self.plan.seconds) if self.plan.seconds else 0.0
+
+    def prepare(self) -> None:
+        """Compile everything and let the subsolver calibrate, before the clock starts."""
+        self.incumbent.prepare()
+        heads = [0, 1, 2, 0, 1, 3]
+        tails = [1, 2, 3, 3, 3, 4]
+        small = Problem.from_arrays(heads, tails, [1.0, 1.0, 1.0, 1.0, 0.5, 1.0], fields=[0.25, 0, 0, 0, 0])
+        rehearsal = BranchAndBound(small, None, BranchPlan(interior_rounds=2))
+        for _ in rehearsal.rounds():
+            pass
+        rehearsal.certificate()
+
+    def rounds(self) -> Iterator[Round]:
+        """Search until the bound reaches the best energy or an end is reached, one round at a time."""
+        self._began = time.perf_counter()
+        self.incumbent.begin()
+        try:
+            if self.plan.heuristic and self.plan.sweeps:
+                self.incumbent.cool(self.plan.sweeps, self._stopped)
+                yield self._round(())
+            program = self.program
+            root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
+            self.tree.open(root)
+            while self.tree.open_count and not self._ended():
+                self._current = self.tree.next()
+                yield from self._work_on(self._current)
+                self._current = None
+        finally:
+            if self._current is not None:
+                self.tree.open(self._current)
+                self._current = None
+            if self.subsolver is not None:
+                release(self.subsolver)
+        self._conclude()
+
+    def take_improvements(self) -> tuple[Improvement, ...]:
+        """The new best energies since the last call of this method, in order."""
+        taken = tuple(self.incumbent.improvements)
+        self.incumbent.improvements.clear()
+        return taken
+
+    def snapshot(self) -> Snapshot:
+        """The state between two rounds, as the run file keeps it."""
+        own = self.incumbent
+        return Snapshot(
+            own.round, own.calls, own.sweeps, own.energy, own.spins.copy(), self.problem.local_fields(own.spins),
+            own.energy, own.spins.copy(),
+        )  # fmt: skip
+
+    def certificate(self) -> Certificate:
+        """What proves the bound, as data that :func:`patchwalk.bounds.certificate.check` takes."""
+        return self.tree.certificate(self.program.pool, self.best_spins)
+
+    def _ended(self) -> bool:
+        plan = self.plan
+        if self.tree.lowest_open >= self._goal:
+            return True
+        if self._interrupted():
+            self.status, self.message = "interrupted", "interrupted; bound and configuration are the best so far"
+        elif plan.seconds is not None and self.elapsed >= plan.seconds:
+            self.message = f"the budget of {plan.seconds:g} seconds is spent"
+        elif plan.nodes is not None and self.nodes_done >= plan.nodes:
+            self.message = f"the budget of {plan.nodes:,} nodes is spent"
+        elif not plan.branching and self.nodes_done:
+            self.message = "branching is switched off and the root is done"
+        else:
+            return False
+        return True
+
+    def _stopped(self) -> bool:
+        return self._interrupted() or self._seconds_left() <= 0.0
+
+    def _seconds_left(self) -> float:
+        return math.inf if self.plan.seconds is None else self.plan.seconds - self.elapsed
+
+    @property
+    def _goal(self) -> float:
+        """A bound from here on closes a node."""
+        return self.best_energy - self.problem.tie_tolerance
+
+    def _conclude(self) -> None:
+        if self.lower_bound >= self._goal:
+            self.status = "proved_optimal"
+            self.message = "proved optimal"
+
+    def _round(self, calls: tuple[Calls, ...]) -> Round:
+        number = self.incumbent.round
+        self.incumbent.round += 1
+        return Round(number, self.stage, 0.0, calls, self.best_energy, self.take_improvements())
+
+    def _work_on(self, node: Node) -> Iterator[Round]:
+        """Tighten a node's program, and close the node, split it, or leave it open where time is up."""
+        if node.bound >= self._goal:
+            self._note(node)
+            return
+        self.program.confine(*self.tree.box(node))
+        if node.basis is not None and node.epoch == self._epoch:
+            self.program.start_from(node.basis)
+        if node.number and not self.program.solve(interior=False, seconds=self._seconds_left()):
+            self.program.solve(interior=True, seconds=self._seconds_left())
+        self._learn(node)
+        yield from self._tighten(node)
+        if self._stopped() and not self._closed(node):
+            self.tree.open(node)
+            return
+        self.nodes_done += 1
+        if node.number == 0:
+            self._root_rows = len(self.program.rows)
+        if not self._closed(node):
+            self._split(node)
+        self._note(node)
+
+    def _tighten(self, node: Node) -> Generator[Round, None, None]:
+        """Cuts and configurations in turn, until the node is closed or cuts do not pay any more."""
+        yield self._look_for_better()
+        while not self.plan.cuts and self._is_integral() and not self._closed(node) and self.program.separate():
+            self.program.solve(interior=False, seconds=self._seconds_left())
+            self._learn(node)
+        if not self.plan.cuts or self._closed(node):
+            return
+        is_root = node.number == 0
+        rounds = tightening(
+            self.program,
+            self._seconds_left,
+            interior_rounds=self.plan.interior_rounds if is_root else 0,
+            most_rounds=ROUNDS_AT_ROOT if is_root else ROUNDS_AT_NODE,
+            least_gain=0.0 if is_root else 0.02 * max(0.0, self.best_energy - node.bound),
+        )
+        for _ in rounds:
+            self._learn(node)
+            if self._closed(node):
+                return
+            yield self._look_for_better()
+            if self._closed(node) or self._stopped():
+                return
+
+    def _look_for_better(self) -> Round:
+        """Round the program's point off, and ask for clusters of what it leaves undecided."""
+        x, own = self.program.x, self.incumbent
+        if not self.plan.heuristic:
+            if self._is_integral():
+                own.round_off(x, tries=1)
+            return self._round(())
+        spins = own.round_off(x)
+        subject = spins if own.round % 2 else own.spins
+        return self._round(own.ask(x, subject, self.plan.clusters_per_round, self._stopped))
+
+    def _is_integral(self) -> bool:
+        x = self.program.x
+        return bool(np.all(np.minimum(x, 1.0 - x) < 1e-6))
+
+    def _learn(self, node: Node) -> None:
+        """Take over what the program now says about its box, if that is more than the node knows."""
+        program = self.program
+        if program.infeasible:
+            node.outcome, node.bound, node.multipliers = EMPTY, math.inf, program.multipliers
+            return
+        bound = self.tree.rounded_up(program.bound)
+        if bound > node.bound or (bound == node.bound and node.number == 0):
+            node.bound, node.multipliers = bound, program.multipliers
+        near = self.best_energy - program.bound < NEAR * abs(self.best_energy)
+        if bound < self._goal and (near or np.all(program.lower == program.upper)):
+            self._try_to_settle(node)
+
+    def _try_to_settle(self, node: Node) -> None:
+        """Close the node where reduced costs leave one configuration; that one is offered."""
+        program, target = self.program, lower_energy(self.problem, self.best_spins)
+        value = program.value
+        sure = np.abs(value.reduced) >= target - value.bound
+        if np.count_nonzero(sure | (program.lower == program.upper)) < self.graph.vertices - 1:
+            return
+        pairs = np.stack([self.graph.heads, self.graph.tails], axis=1)
+        reached = settled_energy(self.problem, pairs, value, program.lower, program.upper, target)
+        if reached >= target:
+            node.outcome, node.bound, node.multipliers = SETTLED, reached, program.multipliers
+
+    def _closed(self, node: Node) -> bool:
+        return node.outcome != BOUNDED or node.bound >= self._goal
+
+    def _split(self, node: Node) -> None:
+        """Choose a pair, and open the two halves."""
+        program = self.program
+        if self._root_rows and len(program.rows) > ROW_GROWTH * self._root_rows:
+            program.drop_slack()
+            self._epoch += 1
+            program.solve(interior=False, seconds=self._seconds_left())
+        basis = program.basis
+        split = self._chooser.choose(basis, self._goal, self._seconds_left)
+        node.outcome = BRANCHED
+        for side, half in enumerate((split.agree, split.differ)):
+            child = self.tree.add(node, split.edge, side, node.bound, node.multipliers)
+            child.basis, child.epoch = basis, self._epoch
+            _inherit(child, half, self.tree)
+            if child.outcome == EMPTY:
+                continue
+            self.tree.open(child)
+        node.basis, node.multipliers = None, Multipliers(np.empty(0, np.int32), np.empty(0))
+
+    def _note(self, node: Node) -> None:
+        best, bound = self.best_energy, self.lower_bound
+        if node.outcome == BRANCHED:  # the node is not what is open any longer, its halves are
+            bound = min(self.tree.lowest_open, best)
+        self.log.append(
+            NodeLine(
+                node.number, node.depth, min(node.bound, best), bound, best, (best - bound) / max(1.0, abs(best)),
+                self.tree.open_count, len(self.program.rows), self.elapsed, OUTCOMES[node.outcome],
+            )
+        )  # fmt: skip
+
+
+def _inherit(child: Node, half: Half | None, tree: Tree) -> None:
+    """Give a new node what trying it out proved."""
+    if half is None:
+        return
+    if half.empty:
+        child.outcome, child.bound, child.multipliers = EMPTY, math.inf, half.multipliers
+    elif tree.rounded_up(half.bound) > child.bound:
+        child.bound, child.multipliers = tree.rounded_up(half.bound), half.multipliers

@@ -1,0 +1,202 @@
+"""``bound`` and ``audit`` from outside: what they print is true of the file they were given."""
+
+from __future__ import annotations
+
+import json
+import os
+import signal
+import sqlite3
+import subprocess
+import sys
+import time
+from collections.abc import Callable
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+import pytest
+
+import patchwalk
+from patchwalk.commands.bounding import bounds_for
+from patchwalk.settings import SettingsError
+
+MINUTES = 300  # no run here takes a tenth of it, compiling included; beyond it something hangs
+START = "from patchwalk.interface.cli import main; main()"
+
+
+def command(*words: object, code: int = 0) -> dict[str, Any]:
+    """What the command prints with ``--json``; standard output must hold that one object and nothing else."""
+    done = subprocess.run(
+        [sys.executable, "-c", START, *map(str, words), "--json"], capture_output=True, text=True, timeout=MINUTES,
+        check=False,
+    )  # fmt: skip
+    assert done.returncode == code, done.stderr
+    assert len(done.stdout.splitlines()) == 1
+    result: dict[str, Any] = json.loads(done.stdout)
+    return result
+
+
+@pytest.fixture
+def lattice(tmp_path: Path) -> Path:
+    path = tmp_path / "glass.txt"
+    patchwalk.write_problem(patchwalk.make("lattice2d", 10, couplings="gaussian", seed=3), path)
+    return path
+
+
+def test_a_lattice_with_the_walk(lattice: Path, tmp_path: Path) -> None:
+    """The incumbent's improvements by the walk are in the run file, and its calls are rows like all others."""
+    run = tmp_path / "proof.sqlite"
+    result = command(
+        "bound", lattice, "--subsolver", "walk", "--cluster-size", "8", "--sweeps", "0", "--run", run, "--quiet"
+    )
+    assert result["status"] == "proved_optimal"
+    problem = patchwalk.read_problem(lattice)
+    assert problem.energy(result["spins"]) == pytest.approx(result["energy"], abs=1e-9)
+    assert result["lower_bound"] <= result["energy"] <= result["lower_bound"] + problem.tie_tolerance
+    with sqlite3.connect(run) as database:
+        finders = [finder for (finder,) in database.execute("SELECT finder FROM incumbents")]
+        assert "clusters" in finders
+        rows = database.execute(
+            "SELECT rule, k, length(members), hit_probability, energy_before, change FROM calls"
+        ).fetchall()
+        assert len(rows) == result["calls"] > 0
+        assert {(rule, k, length) for rule, k, length, *_ in rows} == {("fractional", 8, 32)}
+        assert all(0.0 < hit <= 1.0 for _, _, _, hit, _, _ in rows)
+        best = min(energy for (energy,) in database.execute("SELECT energy FROM incumbents"))
+        assert best == pytest.approx(result["energy"], abs=1e-9)
+        assert database.execute("SELECT count(*) FROM nodes").fetchone()[0] >= 1
+    audited = command("audit", lattice, run)
+    assert audited["status"] == "confirmed"
+    assert audited["proved_optimal"]
+    assert audited["lower_bound"] == result["lower_bound"]
+
+
+def test_a_run_file_that_was_tampered_with(lattice: Path, tmp_path: Path) -> None:
+    run = tmp_path / "proof.sqlite"
+    command("bound", lattice, "--run", run, "--quiet")
+    with sqlite3.connect(run) as database:
+        (data,) = database.execute("SELECT data FROM certificate_arrays WHERE name = 'duals'").fetchone()
+        duals = np.frombuffer(data).copy()
+        duals[np.argmax(duals)] *= 1.5
+        database.execute("UPDATE certificate_arrays SET data = ? WHERE name = 'duals'", (duals.tobytes(),))
+    audited = command("audit", lattice, run, code=1)
+    assert audited["status"] == "refuted"
+    assert "multipliers of node 0" in audited["message"]
+    assert not audited["proved_optimal"]
+    with sqlite3.connect(run) as database:
+        database.execute("DELETE FROM certificates")
+    assert "nothing that holds proves it" in command("audit", lattice, run, code=1)["message"]
+
+
+def test_an_energy_that_was_made_up(lattice: Path, tmp_path: Path) -> None:
+    run = tmp_path / "proof.sqlite"
+    command("bound", lattice, "--run", run, "--quiet")
+    with sqlite3.connect(run) as database:
+        database.execute("UPDATE runs SET energy = energy - 1")
+    assert "the configuration has" in command("audit", lattice, run, code=1)["message"]
+
+
+def test_another_problem_is_refused(lattice: Path, tmp_path: Path) -> None:
+    run, other = tmp_path / "proof.sqlite", tmp_path / "other.txt"
+    command("bound", lattice, "--run", run, "--quiet")
+    patchwalk.write_problem(patchwalk.make("lattice2d", 10, couplings="gaussian", seed=6), other)
+    assert "another problem" in command("audit", other, run, code=1)["message"]
+
+
+def test_an_answer_is_recomputed(lattice: Path, tmp_path: Path) -> None:
+    answer = tmp_path / "answer.txt"
+    answer.write_text(" ".join(["+1"] * 100))
+    audited = command("audit", lattice, answer)
+    assert audited["energy"] == pytest.approx(patchwalk.read_problem(lattice).energy([1] * 100), abs=1e-9)
+    assert audited["lower_bound"] is None
+    assert not audited["proved_optimal"]
+    answer.write_text("+1 -1")
+    command("audit", lattice, answer, code=3)
+
+
+def test_python_and_command_line_agree(lattice: Path, tmp_path: Path) -> None:
+    printed = command("bound", lattice, "--run", tmp_path / "one.sqlite", "--quiet")
+    found = patchwalk.bound(lattice, run=tmp_path / "two.sqlite")
+    assert found.as_json() | {"seconds": 0, "compile_seconds": 0, "run_path": ""} == printed | {
+        "seconds": 0, "compile_seconds": 0, "run_path": "",
+    }  # fmt: skip
+    assert patchwalk.audit(lattice, tmp_path / "two.sqlite").proved_optimal
+
+
+def test_cuts_in_the_users_own_terms(tmp_path: Path) -> None:
+    path = tmp_path / "graph.csv"
+    path.write_text("a,b,1\nb,c,2\nc,a,1\nc,d,1\n")
+    result = command("bound", path, "--kind", "maxcut", "--cluster-size", "3", "--run", tmp_path / "run.sqlite")
+    assert result["status"] == "proved_optimal"
+    assert result["cut"] == result["objective_bound"] == 4.0
+    assert result["lower_bound"] == -4.0
+
+
+def test_complaints_come_all_at_once(lattice: Path) -> None:
+    with pytest.raises(SettingsError) as refused:
+        patchwalk.bound(lattice, seconds=-1, nodes=0.5, without="luck", clustersize=3)
+    assert len(refused.value.complaints) == 4
+    assert "did you mean 'cluster_size'" in str(refused.value)
+    command("bound", lattice, "--seconds", "soon", code=2)
+
+
+def test_stopped_early_it_says_budget(tmp_path: Path) -> None:
+    """A dense problem far beyond a few seconds: a true bound, held against the best configuration known."""
+    problem = patchwalk.make("sk", 60, seed=1)
+    found = patchwalk.bound(problem, seconds=0.5, run=tmp_path / "run.sqlite")
+    assert found.status == "budget"
+    assert found.lower_bound < found.energy
+    assert patchwalk.audit(problem, tmp_path / "run.sqlite").status == "confirmed"
+
+
+def test_an_interrupt_keeps_the_bound(tmp_path: Path) -> None:
+    path, run = tmp_path / "dense.txt", tmp_path / "run.sqlite"
+    patchwalk.write_problem(patchwalk.make("sk", 70, seed=1), path)
+    words = ["bound", str(path), "--run", str(run), "--seconds", "200", "--json"]
+    process = subprocess.Popen(
+        [sys.executable, "-c", START, *words], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
+    )
+    deadline = time.monotonic() + MINUTES
+    while time.monotonic() < deadline:  # until the clock of the search has started
+        assert process.stderr is not None
+        if "compiled" in process.stderr.readline():
+            break
+    time.sleep(0.5)
+    os.kill(process.pid, signal.SIGINT)
+    out, _ = process.communicate(timeout=MINUTES)
+    assert process.returncode == 130
+    result = json.loads(out)
+    assert result["status"] == "interrupted"
+    assert result["lower_bound"] < result["energy"]
+    assert command("audit", path, run)["status"] == "confirmed"
+
+
+def test_for_callers_with_a_configuration_of_their_own() -> None:
+    problem = patchwalk.make("lattice2d", 8, seed=3)
+    found = bounds_for(problem, 60.0, start=np.ones(64, np.int8))
+    assert found.status == "proved_optimal"
+    assert found.run_path is None
+    assert bounds_for(problem, 60.0, start=found.spins, nodes=1).energy == found.energy
+
+
+def test_planar_problems_begin_with_their_ground_state(tmp_path: Path) -> None:
+    problem = patchwalk.make("lattice2d", 9, open=True, seed=3)
+    found = patchwalk.bound(problem, sweeps=0, run=tmp_path / "run.sqlite")
+    assert found.status == "proved_optimal"
+    with sqlite3.connect(tmp_path / "run.sqlite") as database:
+        assert ("matching",) in database.execute("SELECT finder FROM incumbents").fetchall()
+
+
+def test_open_instances(instance: Callable[[str], Path], tmp_path: Path) -> None:
+    """G11: 564 is optimal by exact transfer over rows."""
+    found = patchwalk.bound(instance("G11.txt"), kind="maxcut", run=tmp_path / "run.sqlite")
+    assert found.status == "proved_optimal"
+    assert found.objective == 564.0
+
+
+@pytest.mark.slow
+def test_a_gaussian_torus(instance: Callable[[str], Path], tmp_path: Path) -> None:
+    """41684814 is the optimum of torusg3-8 (7th DIMACS challenge set; from memory)."""
+    found = patchwalk.bound(instance("torusg3-8.dat"), kind="maxcut", seconds=600, run=tmp_path / "run.sqlite")
+    assert found.status == "proved_optimal"
+    assert found.objective == 41684814.0
