@@ -12,7 +12,8 @@ from patchwalk.commands.tasks import _check_memory, _check_sizes, _default_run_p
 from patchwalk.problem.files import read_start
 from patchwalk.problem.ising import Problem
 from patchwalk.search.branching import BranchPlan
-from patchwalk.settings import SettingsError, checked_settings, read_settings
+from patchwalk.settings import SearchSettings, SolveSettings
+from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import subsolver_from
 
@@ -50,13 +51,13 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
     input_path = source
     if not isinstance(source, Problem) and str(source).endswith(".toml"):
         input_path, whole = read_settings(Path(source))
-        checked_settings(whole, {}, str(source))
+        checked_settings(SolveSettings, whole, {}, str(source))
         table = {key: whole[key] for key in SHARED if key in whole}
     values = {**table, **_converted(given, spelled_as)}
-    problem, name = _problem_from(input_path, values.get("kind"))
+    problem, name = _problem_from(input_path, SearchSettings(kind=values.get("kind")))
     subsolver = subsolver_from(values.get("subsolver", DEFAULT_SUBSOLVER))
     size = values.get("cluster_size") or min(DEFAULT_SIZE, len(problem), subsolver.max_spins)
-    _check_sizes(size, problem, subsolver)
+    _check_sizes(size, problem, [subsolver])
     _check_memory(subsolver, size)
     nodes, seconds = values.get("nodes"), values.get("seconds")
     if seconds is None and nodes is None:

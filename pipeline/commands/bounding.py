@@ -22,9 +22,9 @@ from patchwalk.commands.answers import answer_for
 from patchwalk.commands.bound_task import DEFAULT_SIZE, DEFAULT_SUBSOLVER, BoundTask, bound_task_from
 from patchwalk.commands.interrupts import listening
 from patchwalk.evidence.certificates import store_certificate, store_node_log
-from patchwalk.evidence.runfile import RunFile, RunFileError, RunWriter
+from patchwalk.evidence.layout import RunFileError, packed
+from patchwalk.evidence.runfile import RunFacts, RunFile, RunWriter
 from patchwalk.problem.ising import Problem
-from patchwalk.search.branch_primal import RULE_NAME
 from patchwalk.search.branching import BranchAndBound, BranchPlan, NodeLine
 from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import spelled, subsolver_from
@@ -188,7 +188,11 @@ def _begin(task: BoundTask, search: BranchAndBound, runfile: RunFile) -> RunWrit
     subsolver = search.subsolver or task.subsolver
     spelling = spelled(subsolver)
     settings = {**task.written, "subsolver": spelling, "command": "bound"}
-    return runfile.begin(task.problem, subsolver, spelling, RULE_NAME, task.seed, settings, task.source, "all")
+    facts = RunFacts(
+        problem=task.problem, source=task.source, seed=task.seed, subsolver=spelling, settings=settings,
+        settings_file="", settings_table={}, rows="all",
+    )  # fmt: skip
+    return runfile.begin(facts, search.snapshot())
 
 
 def _searched(
@@ -210,7 +214,8 @@ def _searched(
     writer.finish(
         search.snapshot(), status=result.status, message=result.message, energy=result.energy,
         objective=result.objective, calls=result.calls, failed_calls=result.failed_calls,
-        sweeps=search.incumbent.sweeps, seconds=result.seconds, compile_seconds=compile_seconds,
+        sweeps=search.incumbent.sweeps, seconds=result.seconds, compile_seconds=compile_seconds, skipped=0,
+        lower_bound=result.lower_bound, spins=packed(result.spins),
     )  # fmt: skip
     return result
 

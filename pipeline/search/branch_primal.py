@@ -86,7 +86,7 @@ class Incumbent:
             if sweep % 16 == 0 and stopped():
                 break
             stream = stream_for(self.seed, SWEEP, sweep)
-            metropolis_sweep(*self._csr, spins, local_fields, cooling.at(sweep / wanted), stream)
+            metropolis_sweep(*self._csr, spins, local_fields, cooling.temperature(sweep / wanted), stream)
             self.sweeps += 1
         descend(*self._csr, spins, problem.local_fields(spins), problem.tie_tolerance)
         self.offer(spins, "sweeps")
@@ -114,8 +114,11 @@ class Incumbent:
             self.calls += len(own)
             self._count_failures(answered.proposals.status, answered.proposals.messages)
             done.append(
-                Calls(own, answered.batch, answered.proposals, chosen, change, accepted, before[:-1], answered.start,
-                      answered.seconds)
+                Calls(
+                    own, np.zeros(len(own), np.int64), np.arange(answered.start, answered.start + len(own)), RULE_NAME,
+                    self.subsolver, answered.batch, answered.proposals, chosen, change, accepted, before[:-1],
+                    answered.seconds,
+                )
             )  # fmt: skip
             if stopped():
                 break

@@ -192,9 +192,12 @@ class BranchAndBound:
     def snapshot(self) -> Snapshot:
         """The state between two rounds, as the run file keeps it."""
         own = self.incumbent
+        spins, size = own.spins.copy(), len(self.problem)
         return Snapshot(
-            own.round, own.calls, own.sweeps, own.energy, own.spins.copy(), self.problem.local_fields(own.spins),
-            own.energy, own.spins.copy(),
+            round=own.round, calls=own.calls, sweeps=own.sweeps, seconds=self.elapsed, spins=spins[None],
+            local_fields=self.problem.local_fields(spins)[None], energies=np.array([own.energy]),
+            best_energy=own.energy, best_spins=spins, elites=np.empty((0, size), np.int8),
+            counts=np.zeros(size, np.int64),
         )  # fmt: skip
 
     def certificate(self) -> Certificate:
@@ -236,7 +239,7 @@ class BranchAndBound:
     def _round(self, calls: tuple[Calls, ...]) -> Round:
         number = self.incumbent.round
         self.incumbent.round += 1
-        return Round(number, self.stage, 0.0, calls, self.best_energy, self.take_improvements())
+        return Round(number, self.stage, np.zeros(1), calls, np.array([self.best_energy]), self.take_improvements())
 
     def _work_on(self, node: Node) -> Iterator[Round]:
         """Tighten a node's program, and close the node, split it, or leave it open where time is up."""
