@@ -54,7 +54,7 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
         checked_settings(SolveSettings, whole, {}, str(source))
         table = {key: whole[key] for key in SHARED if key in whole}
     values = {**table, **_converted(given, spelled_as)}
-    problem, name = _problem_from(input_path, SearchSettings(kind=values.get("kind")))
+    problem, name = _problem_from(input_path, SearchSettings.model_validate({"kind": values.get("kind")}))
     subsolver = subsolver_from(values.get("subsolver", DEFAULT_SUBSOLVER))
     size = values.get("cluster_size") or min(DEFAULT_SIZE, len(problem), subsolver.max_spins)
     _check_sizes(size, problem, [subsolver])
