@@ -14,7 +14,7 @@ import numpy as np
 from patchwalk.bounds.certificate import Certificate, CertificateError, check
 from patchwalk.commands.answers import answer_for
 from patchwalk.evidence.certificates import stored_certificate
-from patchwalk.evidence.runfile import RunFileError
+from patchwalk.evidence.layout import RunFileError
 from patchwalk.problem.files import read_problem, read_start
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import I8
