@@ -205,6 +205,10 @@ class SolveSettings(SearchSettings):
     coolings: int = Field(
         3, ge=1, le=20, description="How often it falls from hot to cold, every time over twice as long as before."
     )
+    bound: float | None = Field(
+        None, gt=0, allow_inf_nan=False,
+        description="Spend at most so many seconds after the search on a lower bound, or a proof of the optimum.",
+    )  # fmt: skip
     answer: FileName | None = Field(
         None, description="Write the answer, in the problem's own terms, to a file: .txt, .csv or .json."
     )

@@ -12,6 +12,7 @@ from typing import Any, Protocol
 from patchwalk.commands.answers import answer_for, settled, spoken
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.tasks import Task, task_from
+from patchwalk.evidence.certificates import store_certificate
 from patchwalk.evidence.kept_answers import KeptAnswers
 from patchwalk.evidence.layout import RunFileError, packed
 from patchwalk.evidence.runfile import RunFacts, RunFile
@@ -35,8 +36,9 @@ class Solution:
     ``interrupted`` or ``error``), ``message``, ``seconds`` without and ``compile_seconds`` for compiling, ``calls``,
     ``failed_calls``, ``skipped`` (clusters for which nobody was called), ``sweeps``, ``seed``, ``run_path``,
     ``alternatives`` i8 (E, n), the best distinct configurations. None unless a bound was computed: ``lower_bound``,
-    ``gap``. ``spoken`` is the answer in words, for problems that were encoded; their ``spins`` are mended where a cheap
-    repair makes them feasible. ``runs`` holds every run where several seeds were asked for, this one being the best.
+    ``gap`` (``status`` is then ``proved_optimal`` where they meet, and ``message`` names the certificate). ``spoken`` is the
+    answer in words, for problems that were encoded; their ``spins`` are mended where a cheap repair makes them
+    feasible. ``runs`` holds every run where several seeds were asked for, this one being the best.
     """
 
     spins: I8
@@ -60,6 +62,7 @@ class Solution:
     alternatives: I8 | None = None
     lower_bound: float | None = None
     gap: float | None = None
+    bound_seconds: float = 0.0
     spoken: tuple[str, ...] = ()
     runs: tuple[Solution, ...] = ()
 
@@ -68,8 +71,8 @@ class Solution:
         fields = {
             name: getattr(self, name)
             for name in (
-                "energy", "lower_bound", "gap", "feasible", "status", "message", "seconds", "compile_seconds", "calls",
-                "failed_calls", "skipped", "sweeps", "seed", "start_energy", "answer", "notes",
+                "energy", "lower_bound", "gap", "bound_seconds", "feasible", "status", "message", "seconds",
+                "compile_seconds", "calls", "failed_calls", "skipped", "sweeps", "seed", "start_energy", "answer", "notes",
             )
         }  # fmt: skip
         fields = {"spins": self.spins.tolist(), **fields, "run_path": str(self.run_path)}
@@ -96,6 +99,8 @@ class Watcher(Protocol):
 
     def stopping(self) -> None: ...
 
+    def bounding(self, seconds: float) -> None: ...
+
     def ended(self, search: NeighbourhoodSearch) -> None: ...
 
 
@@ -118,6 +123,9 @@ class Silent:
         pass
 
     def stopping(self) -> None:
+        pass
+
+    def bounding(self, seconds: float) -> None:
         pass
 
     def ended(self, search: NeighbourhoodSearch) -> None:
@@ -225,15 +233,42 @@ def carry_out_one(
     seconds = search.elapsed
     writer.add_improvements(search.take_improvements())
     solution = _solution(task, search, start_energy, seconds, compile_seconds)
+    if task.settings.bound is not None and search.status not in ("error", "interrupted"):
+        watcher.bounding(task.settings.bound)
+        solution = bounded(solution, task, runfile, writer.run, search.interrupted)
     with contextlib.suppress(*(() if search.status != "error" else (RunFileError,))):
         writer.finish(
             search.snapshot(), status=solution.status, message=solution.message, energy=solution.energy,
             objective=solution.objective, calls=solution.calls, failed_calls=solution.failed_calls,
-            skipped=solution.skipped, sweeps=solution.sweeps, seconds=seconds, compile_seconds=compile_seconds,
-            spins=packed(solution.spins),
+            skipped=solution.skipped, lower_bound=solution.lower_bound, sweeps=solution.sweeps, seconds=seconds,
+            compile_seconds=compile_seconds, spins=packed(solution.spins),
         )  # fmt: skip
     watcher.ended(search)
     return solution
+
+
+def bounded(solution: Solution, task: Task, runfile: RunFile, run: int, interrupted: Callable[[], bool]) -> Solution:
+    """The solution with a lower bound, whose certificate is kept in the run file; a better configuration is taken."""
+    from patchwalk.commands.bounding import bounds_for
+
+    found = bounds_for(task.problem, task.settings.bound, start=solution.spins, interrupted=interrupted)
+    proof = found.certificate
+    store_certificate(runfile.database, run, proof.fingerprint, proof.method, proof.bound, proof.arrays)
+    proved = found.status == "proved_optimal"
+    better = found.energy < solution.energy - task.problem.tie_tolerance
+    if better:
+        solution = replace(
+            solution, spins=found.spins, energy=found.energy, objective=found.objective, feasible=found.feasible,
+            answer=found.answer,
+        )  # fmt: skip
+    return replace(
+        solution,
+        lower_bound=found.lower_bound,
+        gap=max(0.0, solution.energy - found.lower_bound) / max(1.0, abs(solution.energy)),
+        status="proved_optimal" if proved else solution.status,
+        message=f"proved optimal by {found.proof}" if proved else solution.message,
+        bound_seconds=found.seconds,
+    )
 
 
 def facts_of(task: Task, search: NeighbourhoodSearch) -> RunFacts:

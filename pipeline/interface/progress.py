@@ -77,6 +77,10 @@ class Narrator:
             self._lines_calls = search.calls
             self._calls_seen = self._accepted = 0
 
+    def bounding(self, seconds: float) -> None:
+        self._stop_live()
+        self._say(f"looking for a lower bound, for at most {seconds:g} s")
+
     def stopping(self) -> None:
         self._say("stopping after the slice in flight; Ctrl-C once more stops at once")
 

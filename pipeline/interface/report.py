@@ -23,12 +23,22 @@ def in_words(solution: Solution) -> str:
     lines.append(f"{solution.objective_name} {solution.objective:,.10g}; {solution.message}")
     lines.append(
         f"{solution.calls:,} cluster calls and {solution.sweeps:,} sweeps in {solution.seconds:.1f} s "
-        f"(compiling {solution.compile_seconds:.1f} s apart); no lower bound was computed"
+        f"(compiling {solution.compile_seconds:.1f} s apart)"
     )
+    lines.append(_bound_line(solution))
     if solution.failed_calls:
         lines.append(f"{solution.failed_calls:,} calls FAILED and changed nothing; their rows hold the reasons")
     lines.append(f"run file: {solution.run_path}")
     return "\n".join(lines)
+
+
+def _bound_line(solution: Solution) -> str:
+    if solution.lower_bound is None or solution.gap is None:
+        return "no lower bound was computed (--bound SECONDS looks for one)"
+    return (
+        f"no configuration has an energy below {solution.lower_bound:,.10g}: a gap of {100 * solution.gap:.3g} %, "
+        f"found in {solution.bound_seconds:.1f} s; patchwalk audit checks the certificate"
+    )
 
 
 def _beacon_lines(answer: dict[str, Any]) -> list[str]:
