@@ -53,38 +53,24 @@ class StripRule:
 
     def pick(self, problem: Problem, size: int, count: int, seed: int, marks: Marks) -> I32:
         """Up to ``count`` clusters that do not touch, i32 (B, size) or shorter, members rising in each row."""
-        count = max(1, min(count, len(problem) // size))
-        members = np.empty((count, size), np.int32)
-        found, size = _pick_strips(
-            problem.row_starts, problem.neighbours, self.width, self.widest, members, stream_for(seed),
-            marks.visited, marks.queue, marks.turn,
-        )  # fmt: skip
-        return np.ascontiguousarray(members[:found, :size])
-
-
-@compiled
-def _pick_strips(
-    starts: I64, neighbours: I32, width: int, widest: int, members: I32, stream: U64,
-    visited: I64, queue: I32, turn: I64,
-) -> tuple[int, int]:  # fmt: skip
-    """Fill rows of ``members``; returns how many clusters there are, and of how many spins each."""
-    count, size = members.shape
-    contacts = np.zeros(len(starts) - 1, np.int32)
-    found, misses = 0, 0
-    while found < count and misses < ATTEMPTS:
-        cluster = queue[:size]
-        filled, apart = _grow(starts, neighbours, width, found == 0, contacts, visited, stream, cluster, turn)
-        fits = filled == size and is_narrow(starts, neighbours, cluster, widest)
-        if found == 0 and not fits:
-            size = longest_narrow(starts, neighbours, cluster, apart, widest)
-            fits = True
-        _release(starts, neighbours, queue[:filled], contacts, False)
-        misses = 0 if fits else misses + 1
-        if fits:
-            _release(starts, neighbours, queue[:size], contacts, True)
-            members[found, :size] = np.sort(queue[:size])
-            found += 1
-    return found, size
+        starts, neighbours, stream = problem.row_starts, problem.neighbours, stream_for(seed)
+        contacts = np.zeros(len(problem), np.int32)
+        count, misses = max(1, min(count, len(problem) // size)), 0
+        found: list[I32] = []
+        while len(found) < count and misses < ATTEMPTS:
+            queue = marks.queue[:size]
+            filled, apart = _grow(
+                starts, neighbours, self.width, not found, contacts, marks.visited, stream, queue, marks.turn
+            )
+            fits = filled == size and is_narrow(problem, np.sort(queue), self.widest)
+            if not found and not fits:
+                size, fits = longest_narrow(problem, queue, apart, self.widest), True
+            _release(starts, neighbours, queue[:filled], contacts, False)
+            misses = 0 if fits else misses + 1
+            if fits:
+                _release(starts, neighbours, queue[:size], contacts, True)
+                found.append(np.sort(queue[:size]))
+        return np.stack(found)
 
 
 @compiled
