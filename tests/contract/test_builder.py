@@ -248,6 +248,7 @@ TIGHT: dict[str, Callable[[], ProblemBuilder]] = {
     "one-hot": lambda: triangle("one-hot"),
     "a domain wall": dear_middle,
     "an equation": lambda: forbidden(at_most_one=False),
+    "two that exclude each other": lambda: forbidden(at_most_one=True),
 }
 
 
