@@ -200,7 +200,7 @@ def _joined(
     settings: tuple[str, ...],
     usual: float = 0.0,
 ) -> Listing:
-    """Pairs, and behind them what stands ``alone`` and differs from ``usual``, as pairs of a vertex with itself."""
+    """Pairs, and behind them, as pairs of a vertex with itself, what stands ``alone`` and differs from ``usual``."""
     sites = np.flatnonzero(alone != usual)
     heads, tails = (np.concatenate([end, sites]).astype(np.int64) for end in ends)
     return Listing(size, names, heads, tails, np.concatenate([weights, alone[sites]]), settings)

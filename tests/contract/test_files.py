@@ -419,6 +419,7 @@ def test_a_spoilt_file_is_a_problem_or_a_problem_error(tmp_path, name, packed, e
     if packed and len(edits) % 2:
         data = gzip.compress(data, mtime=0)
     path = tmp_path / (name + ".gz" * packed)
+    path.unlink(missing_ok=True)  # to write over a file again and again makes the disk wait
     path.write_bytes(data)
     try:
         problem, message = read_problem(path, kind), None
