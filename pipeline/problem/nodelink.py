@@ -9,7 +9,6 @@ mean in :mod:`patchwalk.problem.graphml`. Errors name the line on which an entry
 
 from __future__ import annotations
 
-import importlib.util
 import json
 import os
 import re
@@ -46,14 +45,13 @@ def read(path: PathLike, kind: str | None) -> Problem:
 
 def _constrained(path: PathLike, kind: str | None, text: str) -> Problem | None:
     """The problem of choices under constraints, where the text is one in our own layout."""
-    if importlib.util.find_spec("patchwalk.problem.layout_json") is None:
-        return None
-    layout = importlib.import_module("patchwalk.problem.layout_json")
-    if not layout.is_ours(text):
+    from patchwalk.problem.layout_json import is_ours, problem_from_json
+
+    if not is_ours(text):
         return None
     if kind not in (None, "constrained"):
         fail(path, None, f"the file states choices under constraints, but kind {kind} was asked for; drop it")
-    return layout.problem_from_json(text, os.fspath(path))
+    return problem_from_json(text, os.fspath(path))
 
 
 class _Graph:

@@ -58,9 +58,7 @@ def read_one(path: str) -> None:
 def main() -> None:
     with tempfile.TemporaryDirectory() as folder:
         write_files(Path(folder))
-        print(
-            f"{'file':14} {'MB':>6} {'couplings':>10} {'seconds':>8} {'processor':>10} {'GB peak':>8} {'of the aim':>11}"
-        )
+        print("file               MB  couplings  seconds  processor  GB peak  of the aim")
         for path in sorted(Path(folder).iterdir()):
             run = subprocess.run([sys.executable, __file__, str(path)], capture_output=True, text=True, check=True)
             row = json.loads(run.stdout)
