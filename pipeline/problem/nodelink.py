@@ -17,7 +17,7 @@ from typing import IO, Any, NoReturn
 
 import numpy as np
 
-from patchwalk.problem.forms import PathLike
+from patchwalk.problem.forms import PAIR_KINDS, PathLike
 from patchwalk.problem.ising import Problem
 from patchwalk.problem.pairs import Pairs, different_names, listing
 from patchwalk.problem.sources import LARGEST_NUMBER, SETTINGS, chunks, fail, quoted, stated
@@ -74,6 +74,8 @@ class _Graph:
         settings = {name: (self.settings[name], 0) for name in SETTINGS if name in self.settings and name != "names"}
         source = stated(self.path, settings)
         kind = source.kind(kind)
+        if kind not in PAIR_KINDS:
+            source.fail(None, f"this is node-link data of a graph, which kind {kind} cannot be read from")
         pairs = Pairs(source, kind)
         if self.directed:
             pairs.notes.append("the directions of edges are left out")

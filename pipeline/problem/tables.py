@@ -88,6 +88,14 @@ def _read_pairs(source: Source, kind: str) -> Problem:
     return table.problem()
 
 
+class _Numbered(dict[str, int]):
+    """Names numbered from 0 in the order in which they are first looked up."""
+
+    def __missing__(self, name: str) -> int:
+        place = self[name] = len(self)
+        return place
+
+
 class _Table:
     """Rows of pairs as they are read; ``places`` numbers the names."""
 
@@ -96,7 +104,9 @@ class _Table:
         self.notes = self.pairs.notes
         self.width = 0
         self.stated = source.names(None)
-        self.places = {name: place for place, name in enumerate(self.stated or ())}
+        self.places: dict[str, int] = _Numbered()
+        if self.stated is not None:
+            self.places = {name: place for place, name in enumerate(self.stated)}
 
     def take(self, lines: Lines, separator: str) -> None:
         """Add all rows that follow."""
@@ -114,24 +124,23 @@ class _Table:
         if '"' in joined or "#" in joined or {text.count(separator) for text in texts} != {self.width - 1}:
             return False
         cells = joined.split(separator)
-        heads = list(map(str.strip, cells[:: self.width]))
-        tails = list(map(str.strip, cells[1 :: self.width]))
-        fresh = dict.fromkeys(chain.from_iterable(zip(heads, tails, strict=True)))
-        weights = None
-        if "" in fresh or (self.stated is not None and not fresh.keys() <= self.places.keys()):
+        weights = _numbers(cells[2::3]) if self.width == 3 else None
+        if self.width == 3 and weights is None:
             return False
-        if self.width == 3:
-            weights = _numbers(cells[2::3])
-            if weights is None:
-                return False
-        new = [name for name in fresh if name not in self.places]
-        self.places.update(zip(new, range(len(self.places), len(self.places) + len(new)), strict=True))
-        first, second = (
-            np.fromiter(map(self.places.__getitem__, names), np.int64, len(names)) for names in (heads, tails)
-        )
-        if not self.pairs.takes_loops and np.any(first == second):
+        names = [""] * (2 * len(texts))  # heads and tails in turn, as they appear
+        names[::2], names[1::2] = cells[:: self.width], cells[1 :: self.width]
+        # most files have no spaces but the ends of lines; then three cells a line need no stripping
+        if self.width == 2 or separator.isspace() or joined[0].isspace() or len(joined.split()) != len(texts):
+            names = list(map(str.strip, names))
+        if "" in names:
             return False
-        self.pairs.extend(first, second, weights)
+        try:
+            ends = np.fromiter(map(self.places.__getitem__, names), np.int64, len(names)).reshape(-1, 2)
+        except KeyError:  # a name that is not among those stated
+            return False
+        if not self.pairs.takes_loops and np.any(ends[:, 0] == ends[:, 1]):
+            return False
+        self.pairs.extend(ends[:, 0], ends[:, 1], weights)
         return True
 
     def take_row(self, line: int, cells: list[str]) -> None:

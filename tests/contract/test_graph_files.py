@@ -7,6 +7,7 @@ import io
 import json
 import pickle
 import zipfile
+from pathlib import Path
 
 import networkx as nx
 import numpy as np
@@ -343,6 +344,19 @@ def test_arrays_that_unpack_without_end_are_refused(tmp_path, monkeypatch):
     with pytest.raises(ProblemError, match="unpacks to more than 100 times its size"):
         read_problem(path)
     assert sources.UNPACKED_ALWAYS > 100_000
+
+
+def test_constrained_problems_come_through_the_same_door(tmp_path):
+    rota = Path(__file__).parents[2] / "configs" / "kiosk-rota.json"
+    problem = read_problem(rota)
+    assert problem.kind == "constrained"
+    write_problem(problem, tmp_path / "again.json.gz")
+    assert read_problem(tmp_path / "again.json.gz", "constrained").fingerprint == problem.fingerprint
+    with pytest.raises(ProblemError, match="but kind maxcut was asked for"):
+        read_problem(rota, "maxcut")
+    (tmp_path / "graph.json").write_text('{"graph": {"kind": "constrained"}, "nodes": [{"id": 1}], "edges": []}')
+    with pytest.raises(ProblemError, match="node-link data of a graph, which kind constrained cannot be read from"):
+        read_problem(tmp_path / "graph.json")
 
 
 @settings(max_examples=50)
