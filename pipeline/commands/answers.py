@@ -37,7 +37,7 @@ def settled(problem: Problem, spins: I8) -> I8:
 
     Auxiliary spins are as they cost least, so that its energy is that of the answer's objective.
     """
-    return encoding_of(problem).decode(spins).spins
+    return spins if problem.encoding is None else problem.encoding.decode(spins).spins
 
 
 def spoken(problem: Problem, spins: I8) -> list[str]:

@@ -278,6 +278,15 @@ def test_hard_clauses_are_priced_part_by_part() -> None:
     assert problem.flip_change([1, 1], 0) == pytest.approx(penalties.MARGIN * 1 - 1)
 
 
+def test_hard_clauses_are_mended_by_flips_that_help() -> None:
+    rows = [[-1, -2], [-2, -3], [1, 2, 3], [2]]
+    problem = encodings.encode_max3sat(rows, [math.inf, math.inf, math.inf, 5], 3)
+    answer = problem.encoding.decode([-1, -1, -1, *[1] * (len(problem) - 3)])
+    assert answer.mended == ("clause 1 (not 1 or not 2) is not satisfied", "clause 2 (not 2 or not 3) is not satisfied")
+    assert answer.value == {"assignment": {"1": True, "2": False, "3": True}}
+    assert problem.energy(answer.spins) == -answer.objective == 0
+
+
 def test_a_million_clauses_need_no_loop_over_clauses() -> None:
     """A table of clauses, as a reader of large files gives it, and lists make the same problem."""
     draws = np.random.default_rng(3)

@@ -24,6 +24,8 @@ F64 = npt.NDArray[np.float64]
 Clauses = I64 | Sequence[Sequence[int]]
 
 BROKEN_LISTED = 100
+MOST_FLIPS, MOST_LOOKED_AT = 1000, 10_000_000
+"""A repair that takes more flips, or looks at more clauses, would not be cheap."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -58,6 +60,24 @@ class ClauseForm(Encoding):
 
     def settle(self, spins: I8) -> I8:
         return self.encode(self.read(spins))
+
+    def mend(self, spins: I8) -> I8:
+        """While that leaves fewer hard clauses broken, the best flip in the first that is broken."""
+        hard = self.literals[np.isinf(self.weights)]
+        values = truth_values(self.read(spins), self.main, self.labels)
+        broken = np.flatnonzero(~np.any(self._true(values, hard), axis=1))
+        for _ in range(min(MOST_FLIPS, MOST_LOOKED_AT // max(len(hard), 1))):
+            if not len(broken):
+                break
+            trials = []
+            for literal in hard[broken[0]][hard[broken[0]] != 0].tolist():
+                flipped = values.copy()
+                flipped[abs(literal) - 1] = literal > 0
+                trials.append((flipped, np.flatnonzero(~np.any(self._true(flipped, hard), axis=1))))
+            if not trials or min(len(left) for _, left in trials) >= len(broken):
+                break
+            values, broken = min(trials, key=lambda trial: len(trial[1]))
+        return self.encode({self.main: dict(zip(self.labels, values.tolist(), strict=True))})
 
     def _true(self, values: npt.NDArray[np.int64], literals: I64) -> npt.NDArray[np.bool_]:
         known = np.concatenate([[False], values == 1])
