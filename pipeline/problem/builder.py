@@ -9,9 +9,9 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from patchwalk.problem import networks
+from patchwalk.problem.choice_spins import encode_choices
 from patchwalk.problem.choices import FORMS, UNBOUNDED, Choices, Form, Rule, Variable
 from patchwalk.problem.ising import Problem, ProblemError
-from patchwalk.problem.kinds.chosen import encode_choices
 from patchwalk.problem.sources import LARGEST_NUMBER
 
 if TYPE_CHECKING:

@@ -12,7 +12,9 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+import patchwalk
 from patchwalk.commands.answers import answer_for, settled, spoken
+from patchwalk.interface.report import in_words
 from patchwalk.problem import encodings
 from patchwalk.problem.decoding import audit_answer, encoding_of, read_answer, verdict, write_answer
 from patchwalk.problem.families import make
@@ -202,3 +204,14 @@ def test_any_json_is_judged_or_refused(name: str, answer: dict[str, Any]) -> Non
     except ProblemError:
         return
     assert feasible == (not broken)
+
+
+def test_solve_says_first_that_an_answer_is_not_valid(tmp_path: Path) -> None:
+    """Three vertices that are all joined have no two colours; whatever is found, it is not called good."""
+    triangle = encodings.encode_colouring([(0, 1), (1, 2), (2, 0)], 2)
+    result = patchwalk.solve(triangle, subsolver="uniform", cluster_size=3, calls=20, run=tmp_path / "run.sqlite")
+    assert not result.feasible
+    assert in_words(result).splitlines()[0] == result.answer["verdict"]
+    assert result.answer["verdict"].startswith("NOT VALID: ")
+    assert result.objective == result.answer["conflicts"]
+    assert audit_answer(triangle, result.as_json())[1:] == (False, tuple(result.answer["broken"]))
