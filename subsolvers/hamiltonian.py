@@ -7,10 +7,11 @@ from __future__ import annotations
 
 from typing import Any
 
+import numpy as np
 import numpy.typing as npt
 
 from patchwalk.subsolvers.compiled import compiled
-from patchwalk.subsolvers.contract import F64, I64
+from patchwalk.subsolvers.contract import F64, I8, I64
 from patchwalk.subsolvers.drivers import COMPLETE, HYPERCUBE, PAIRS, driver_range
 from patchwalk.subsolvers.lanes import (
     CACHE_LINE,
@@ -20,6 +21,7 @@ from patchwalk.subsolvers.lanes import (
     fma,
     fms,
     load,
+    load_bytes,
     neighbours,
     prefetch,
     splat,
@@ -36,6 +38,14 @@ Number = Any
 
 SUMS_BYTES = 1 << 24
 """Memory for the sums of one recursion; more measuring times than fit are split over several recursions."""
+
+
+FAR_BYTES = 1 << 20
+"""Size of a vector from which on a pass waits for memory more than for additions."""
+
+BYTE_STEP = 2.0**-31
+"""What one step is worth where bytes hold what single precision rounds away of the diagonal: as this lies between -2
+and 2, that is at most 2^-24."""
 
 
 @compiled
@@ -136,6 +146,13 @@ def spins_of(size: int) -> int:
 
 
 @compiled
+def is_far(driver: int, size: int, itemsize: int) -> bool:
+    """Whether vectors are too long for near caches and a pass is :func:`advance_far`, for which single precision keeps
+    what it rounds away of the diagonal in bytes rather than in numbers."""
+    return driver == HYPERCUBE and size * itemsize >= FAR_BYTES
+
+
+@compiled
 def _at_rest(diagonal: Vector, now: Vector, here: Block, earlier: Block, first: int) -> Block:
     """One block of 2 (diagonal part of H) now - earlier.
 
@@ -145,6 +162,17 @@ def _at_rest(diagonal: Vector, now: Vector, here: Block, earlier: Block, first: 
     result = fms(load(diagonal, first), here, earlier)
     if width_in(now) > WIDTH:
         result = fma(load(diagonal, padded(len(now), now.itemsize) + first), here, result)
+    return result
+
+
+@compiled
+def _at_rest_far(diagonal: Vector, rest: I8, now: Vector, here: Block, earlier: Block, first: int) -> Block:
+    """The same for long vectors, with that second part in bytes; ``rest`` is all of ``diagonal`` in bytes."""
+    result = fms(load(diagonal, first), here, earlier)
+    if width_in(now) > WIDTH:
+        steps = load_bytes(rest, padded(len(now), now.itemsize) * now.itemsize + first, here)
+        small = fma(here, splat(now.dtype.type(BYTE_STEP)), splat(now.dtype.type(0.0)))
+        result = fma(steps, small, result)
     return result
 
 
@@ -186,6 +214,23 @@ def advance(
         old, here = load(earlier, first), load(now, first)
         new = _at_rest(diagonal, now, here, old, first)
         new = _with_neighbours(spare, first, load(spare, first), hop, new) if driver == PAIRS else add(new, shift)
+        _keep(earlier, first, old, new, sums, base, weights, columns, active, term)
+
+
+@compiled
+def advance_far(
+    diagonal: Vector, pull: Number, now: Vector, earlier: Vector, sums: Vector, base: int, weights: F64, columns: I64,
+    active: int, term: int,
+) -> None:  # fmt: skip
+    """The same on the hypercube for vectors that near caches do not hold; asks for its blocks ahead of their use."""
+    size, width = len(now), width_in(now)
+    hop, in_bytes = splat(-pull), diagonal.view(np.int8)
+    for first in range(0, size, width):
+        prefetch(now, first + width)
+        prefetch(earlier, first + width)
+        prefetch(diagonal, first + width)
+        old, here = load(earlier, first), load(now, first)
+        new = _with_neighbours(now, first, here, hop, _at_rest_far(diagonal, in_bytes, now, here, old, first))
         _keep(earlier, first, old, new, sums, base, weights, columns, active, term)
 
 

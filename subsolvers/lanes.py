@@ -104,6 +104,21 @@ def load(_typing: Any, array: Any, _index: Any) -> Any:
 
 
 @_instruction
+def load_bytes(_typing: Any, array: Any, _index: Any, block: Any) -> Any:
+    """As many signed bytes as ``block`` has lanes, from array[index] on, as a block of its kind."""
+    if not (isinstance(array, types.Array) and array.layout == "C" and array.dtype == types.int8):
+        raise TypingError(f"bytes live in contiguous arrays of int8; this is {array}")
+
+    def generate(context: Any, builder: Any, signature: Any, args: Any) -> Any:
+        data = context.make_array(signature.args[0])(context, builder, args[0]).data
+        whole = ir.VectorType(ir.IntType(8), block.width)
+        address = builder.bitcast(builder.gep(data, [args[1]]), whole.as_pointer())
+        return builder.sitofp(builder.load(address, align=1), block.llvm)
+
+    return block(array, types.intp, block), generate
+
+
+@_instruction
 def store(_typing: Any, array: Any, _index: Any, block: Any) -> Any:
     """Write a block to the array, beginning at array[index]."""
     if _block_of(array) != block:

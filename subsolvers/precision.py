@@ -90,7 +90,8 @@ def single_error(moving: F64, resting: F64, longest: F64) -> F64:
     """
     width = moving + resting
     growth = np.where(moving >= WEAKLY_MOVED * width, 0.9, 1.5)
-    return 2.0**-24 * (2.0 + growth * np.sqrt(width * longest))
+    rounded_levels = 2.0**-34 * width * longest  # of very large clusters, see hamiltonian.BYTE_STEP
+    return 2.0**-24 * (2.0 + growth * np.sqrt(width * longest)) + rounded_levels
 
 
 def double_error(reach: F64) -> F64:

@@ -24,14 +24,17 @@ from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I64
 from patchwalk.subsolvers.drivers import DRIVERS, PAIRS, driver_range
 from patchwalk.subsolvers.hamiltonian import (
+    BYTE_STEP,
     Number,
     Vector,
     advance,
+    advance_far,
     advance_few,
     aligned,
     diagonal_vectors,
     half_width_within,
     held_vectors,
+    is_far,
     padded,
     spins_of,
     times_together,
@@ -81,7 +84,7 @@ def sum_series(
         now[start] = 1.0
     _watch(now, watched, weights, 0, amplitudes)
     last = len(weights) if len(watched) else terms[columns[0]]
-    active = len(columns)
+    active, far = len(columns), is_far(driver, size, diagonal.itemsize)
     for term in range(1, last):
         while active and terms[columns[active - 1]] <= term:
             active -= 1
@@ -89,6 +92,8 @@ def sum_series(
         summed = active if term % 4 >= 2 else 0
         if size < width_in(now):
             advance_few(driver, diagonal, pull, now, spare, earlier, sums, base, weights, columns, summed, term)
+        elif far:
+            advance_far(diagonal, pull, now, earlier, sums, base, weights, columns, summed, term)
         else:
             advance(driver, diagonal, pull, now, spare, earlier, sums, base, weights, columns, summed, term)
         if term == 1:
@@ -135,11 +140,17 @@ def scale_spectrum(diagonal: F64, driver: int, hopping: float, scaled: Vector) -
     if driver == PAIRS:
         pull *= 0.5
         constant = pull * spins
+    behind, in_bytes = padded(len(diagonal), scaled.itemsize), scaled.view(np.int8)
+    far = is_far(driver, len(diagonal), scaled.itemsize)
     for number in range(len(diagonal)):
         entry = (diagonal[number] - centre) * twice + constant
         scaled[number] = entry
         if scaled.itemsize == 4:
-            scaled[padded(len(diagonal), 4) + number] = entry - float(scaled[number])
+            rest = entry - float(scaled[number])
+            if far:
+                in_bytes[4 * behind + number] = np.int8(max(-127.0, min(127.0, np.rint(rest / BYTE_STEP))))
+            else:
+                scaled[behind + number] = rest
     return centre, half_width, pull
 
 

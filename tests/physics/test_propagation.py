@@ -14,8 +14,16 @@ from scipy.sparse.linalg import expm_multiply
 from patchwalk.subsolvers.coefficients import DOUBLE_DECAY, SINGLE_DECAY
 from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.drivers import DRIVERS, HYPERCUBE
-from patchwalk.subsolvers.hamiltonian import half_width_within, times_together
-from patchwalk.subsolvers.propagate import evolve, expected_applications, new_workspace, walk_law
+from patchwalk.subsolvers.hamiltonian import (
+    BYTE_STEP,
+    advance_far,
+    aligned,
+    half_width_within,
+    is_far,
+    padded,
+    times_together,
+)
+from patchwalk.subsolvers.propagate import evolve, expected_applications, new_workspace, scale_spectrum, walk_law
 
 UNORDERED_TIMES = np.array([2.9, 0.0, 7.3, 1e-12, 0.4])
 
@@ -122,6 +130,48 @@ def test_twelve_spins_against_sparse_exponential() -> None:
         vector = starting_vector(size, start).astype(complex)
         expected = expm_multiply(time * generator, vector, traceA=-1j * time * diagonal.sum())
         np.testing.assert_allclose(evolve(diagonal, hopping, time, start)[0], expected, rtol=0, atol=1e-11)
+
+
+@pytest.mark.parametrize(("spins", "single", "bound"), [(17, False, 1e-11), (18, False, 1e-11), (18, True, 1e-6)])
+@pytest.mark.parametrize("start", [-1, 77_777])
+def test_vectors_too_long_for_near_caches(spins: int, single: bool, bound: float, start: int) -> None:
+    """Independent spins, each of which turns about its own axis in closed form; half width times time is 220."""
+    size = 1 << spins
+    assert is_far(HYPERCUBE, size, 4 if single else 8)
+    fields, hopping, time = np.random.default_rng(spins).normal(size=spins), 1.1, 6.0
+    diagonal, exact = np.zeros(1), np.ones(1)
+    for spin, field in enumerate(fields):
+        rate = math.hypot(field, hopping)
+        matrix = math.cos(rate * time) * np.eye(2) - 1j * math.sin(rate * time) / rate * np.array(
+            [[field, -hopping], [-hopping, -field]]
+        )
+        one = np.full(2, 0.5**0.5) if start < 0 else np.eye(2)[start >> spin & 1]
+        exact = np.kron(np.abs(matrix @ one) ** 2, exact)
+        diagonal = np.add.outer([field, -field], diagonal).ravel()
+    law = np.empty((1, size))
+    decay = SINGLE_DECAY if single else DOUBLE_DECAY
+    walk_law(
+        diagonal, hopping, start, np.array([time]), law, HYPERCUBE, new_workspace(HYPERCUBE, spins, 1, single), decay
+    )
+    if single:
+        law /= law.sum()
+    assert 0.5 * np.abs(law[0] - exact).sum() < bound
+
+
+def test_bytes_hold_what_single_precision_rounds_away() -> None:
+    """Where nothing moves and the rounded diagonal is taken off again, one application leaves the rest of it."""
+    size, column = 1 << 18, np.zeros(0, np.int64)
+    diagonal = np.random.default_rng(2).normal(size=size)
+    workspace = aligned(new_workspace(HYPERCUBE, 18, 1, single=True))
+    stride = padded(size, 4)
+    scaled, now, earlier = workspace[: 2 * stride], workspace[2 * stride :][:size], workspace[3 * stride :][:size]
+    centre, half_width, _ = scale_spectrum(diagonal, HYPERCUBE, 0.05, scaled)
+    now[:], earlier[:] = 1.0, scaled[:size]
+    advance_far(scaled, np.float32(0.0), now, earlier, workspace[4 * stride :], 0, np.zeros((3, 0)), column, 0, 1)
+    rest = 2.0 * (diagonal - centre) / half_width - scaled[:size]
+    assert np.abs(rest).max() > 2.0**-25
+    assert np.abs(earlier - rest).mean() < 0.26 * BYTE_STEP
+    assert np.abs(earlier - rest).max() < 1.01 * BYTE_STEP  # a rest of 128 steps is held as 127
 
 
 @pytest.mark.parametrize("spins", [1, 2, 4, 5, 6, 7, 10, 13])
