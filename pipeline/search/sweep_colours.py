@@ -13,14 +13,8 @@ from patchwalk.search.sweep_tables import CODE_SHIFT, PLACE_MASK, U32
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I64, U64
 from patchwalk.subsolvers.draws import GOLDEN
-from patchwalk.subsolvers.lanes_decisions import (
-    draws_after,
-    flips_that_happen,
-    load_lanes,
-    lowest_bit,
-    prefetch_at,
-    spread,
-)
+from patchwalk.subsolvers.lanes_bits import load_lanes, lowest_bit, prefetch_at, spread
+from patchwalk.subsolvers.lanes_decisions import draws_after, flips_that_happen
 
 LANES = 32
 AHEAD = 8
@@ -119,8 +113,9 @@ def sweep_packed(
             change += gained
             for flip in range(count):
                 prefetch_at(words, rows[chosen[min(flip + AHEAD, count - 1)]])
-                last = words[rows[chosen[min(flip + AHEAD // 2, count - 1)] + np.uint32(1)] - np.uint32(1)]
-                prefetch_at(local_fields, last & PLACE_MASK)  # the neighbour furthest on is the least likely in cache
+                soon = rows[chosen[min(flip + AHEAD // 2, count - 1)] + np.uint32(1)]
+                if soon > 0:  # the neighbour furthest on is the least likely in cache
+                    prefetch_at(local_fields, words[soon - np.uint32(1)] & PLACE_MASK)
                 place = chosen[flip]
                 spin = batch[place]
                 spins[spin] = -spins[spin]

@@ -16,20 +16,22 @@ from patchwalk.problem.ising import Problem
 from patchwalk.search.sweep_tables import U32, Batches, batches_of, common_unit
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64
-from patchwalk.subsolvers.lanes_decisions import (
+from patchwalk.subsolvers.lanes_bits import (
     add_lanes,
     add_where,
     against_bits,
-    coldness_at,
-    flips_that_happen,
     less_where,
     load_lanes,
-    lower_half,
-    next_states,
     spread,
     store_lanes,
-    upper_half,
     with_spins,
+)
+from patchwalk.subsolvers.lanes_decisions import (
+    coldness_at,
+    flips_that_happen,
+    lower_half,
+    next_states,
+    upper_half,
     words_of,
 )
 

@@ -7,14 +7,8 @@ import numpy as np
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, U64
 from patchwalk.subsolvers.draws import GOLDEN
-from patchwalk.subsolvers.lanes_decisions import (
-    against_spins,
-    draws_after,
-    flips_that_happen,
-    load_lanes,
-    lowest_bit,
-    spread,
-)
+from patchwalk.subsolvers.lanes_bits import against_spins, load_lanes, lowest_bit, spread
+from patchwalk.subsolvers.lanes_decisions import draws_after, flips_that_happen
 
 LANES = 32
 

@@ -166,6 +166,22 @@ def test_local_fields_come_from_a_matrix_as_from_the_problem() -> None:
     assert np.array_equal(fields_from_matrix(problem.matrix.toarray(), problem.fields, spins), local)
 
 
+@pytest.mark.parametrize("pairs", [0, 2])
+@pytest.mark.parametrize("strength", [1.0, 0.3])
+def test_spins_without_neighbours_follow_their_fields(pairs: int, strength: float) -> None:
+    """Also before the first coupling, after the last, and where there is none at all."""
+    fields = np.where(np.arange(300) % 3 == 0, 1.0, -1.0)
+    problem = Problem.from_arrays([50, 51][:pairs], [51, 52][:pairs], [strength] * pairs, size=300, fields=fields)
+    for carrier in carriers(problem):
+        spins, local = begin(problem, 1)
+        carrier.sweep(spins, local, 0.0, 5, 50)
+        assert np.array_equal(spins[:50], -fields[:50])
+        assert np.array_equal(spins[53:], -fields[53:])
+    together, local, seeds = replicas(problem, 5)
+    carrier_for(problem).sweep_replicas(together, local, np.zeros(5), seeds, 50)
+    assert np.array_equal(together[:, 53:], np.tile(-fields[53:], (5, 1)))
+
+
 def test_no_sweeps_change_nothing() -> None:
     problem = make("lattice2d", 6, seed=1)
     for carrier in carriers(problem):

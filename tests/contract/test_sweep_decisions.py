@@ -11,14 +11,8 @@ from patchwalk.search.sweep_tables import batches_of, common_unit, greedy_colour
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.draws import next_word, stream_for
-from patchwalk.subsolvers.lanes_decisions import (
-    coldness_at,
-    draws_after,
-    flips_that_happen,
-    load_lanes,
-    spread,
-    store_lanes,
-)
+from patchwalk.subsolvers.lanes_bits import load_lanes, spread, store_lanes
+from patchwalk.subsolvers.lanes_decisions import coldness_at, draws_after, flips_that_happen
 from patchwalk.subsolvers.neighbours import TIE_CHANCE
 
 
