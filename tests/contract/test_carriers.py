@@ -244,6 +244,22 @@ def test_replicas_sample_the_boltzmann_law(case: int) -> None:
     assert surprise(boltzmann(problem, 1.5 * temperature)) > 5
 
 
+def test_spins_that_are_not_coupled_are_not_correlated() -> None:
+    """No two spins share a draw: 780 correlations of 2048 samples, all within 5 standard errors (1 in 2000 falsely)."""
+    problem = Problem.from_arrays([], [], [], size=40, fields=np.full(40, 0.3))
+    spins, _, seeds = replicas(problem, 2048, seed=6)
+    carrier_for(problem).sweep_replicas(spins, None, np.ones(2048), seeds, 4)
+    samples = [spins]
+    for carrier in carriers(problem):
+        alone, _, _ = replicas(problem, 2048, seed=6)
+        for row, own in enumerate(alone):
+            carrier.sweep(own, problem.fields.copy(), 1.0, int(seeds[row]), 4)
+        samples.append(alone)
+    for sample in samples:
+        correlations = np.corrcoef(sample.T)
+        assert np.abs(correlations[np.triu_indices(40, 1)]).max() < 5 / np.sqrt(2048)
+
+
 def test_a_ring_cools_to_its_ground_state() -> None:
     """Domain walls must meet: with ties always flipped they travel with the batches and never do."""
     ring = Problem.from_arrays(range(100), [*range(1, 100), 0], [1.0] * 100)
