@@ -35,8 +35,8 @@ class Solution:
     under ``objective_name``, ``feasible``, ``answer``, ``status`` (``target_reached``, ``budget``, ``stalled``,
     ``interrupted`` or ``error``), ``message``, ``seconds`` without and ``compile_seconds`` for compiling, ``calls``,
     ``failed_calls``, ``skipped`` (clusters for which nobody was called), ``sweeps``, ``seed``, ``run_path``,
-    ``alternatives`` i8 (E, n), the best distinct configurations. None unless a bound was computed: ``lower_bound``,
-    ``gap`` (``status`` is then ``proved_optimal`` where they meet, and ``message`` names the certificate). ``spoken`` is the
+    ``alternatives`` i8 (E, n), the best distinct configurations. None unless a bound was computed: ``lower_bound`` and
+    ``gap``; where they meet, ``status`` is ``proved_optimal`` and ``message`` names the certificate. ``spoken`` is the
     answer in words, for problems that were encoded; their ``spins`` are mended where a cheap repair makes them
     feasible. ``runs`` holds every run where several seeds were asked for, this one being the best.
     """
@@ -72,7 +72,8 @@ class Solution:
             name: getattr(self, name)
             for name in (
                 "energy", "lower_bound", "gap", "bound_seconds", "feasible", "status", "message", "seconds",
-                "compile_seconds", "calls", "failed_calls", "skipped", "sweeps", "seed", "start_energy", "answer", "notes",
+                "compile_seconds", "calls", "failed_calls", "skipped", "sweeps", "seed", "start_energy", "answer",
+                "notes",
             )
         }  # fmt: skip
         fields = {"spins": self.spins.tolist(), **fields, "run_path": str(self.run_path)}
