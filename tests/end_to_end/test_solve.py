@@ -29,12 +29,13 @@ FIELDS: dict[str, tuple[type, ...]] = {
     "spins": (list,), "energy": NUMBER, "lower_bound": (type(None), *NUMBER), "gap": (type(None), *NUMBER),
     "feasible": (bool,), "status": (str,), "message": (str,), "seconds": NUMBER, "compile_seconds": NUMBER,
     "calls": (int,), "failed_calls": (int,), "sweeps": (int,), "seed": (int,), "start_energy": (type(None), *NUMBER),
-    "run_path": (str,), "answer": (dict,), "notes": (list,),
+    "run_path": (str,), "answer": (dict,), "notes": (list,), "skipped": (int,), "alternatives": (list,),
+    "bound_seconds": NUMBER,
 }  # fmt: skip
 SPELLED = {"external": f'external,command="{sys.executable} {DEMO.with_name("device-template.py")}"'}
 """How to write those subsolvers that cannot be made from their name alone."""
 
-MEASURED = {"seconds", "compile_seconds", "run_path"}  # may differ between two runs that are the same
+MEASURED = {"seconds", "compile_seconds", "bound_seconds", "run_path"}  # may differ between two runs that are the same
 
 
 def patchwalk_command(
