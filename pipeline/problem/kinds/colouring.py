@@ -10,11 +10,14 @@ import numpy as np
 import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem, ProblemError
-from patchwalk.problem.kinds.vertices import edges_of
+from patchwalk.problem.kinds.vertices import edges_of, once_each
 from patchwalk.problem.meanings import I8, Encoding, by_name, labels_of
 from patchwalk.problem.penalties import MOST_COUPLINGS, above, problem_of_bits
 
 I64 = npt.NDArray[np.int64]
+
+MOST_MENDED = 20_000
+"""Where more vertices are wrong, no repair is tried: it would not be cheap."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -39,13 +42,19 @@ class Colouring(Encoding):
         }
 
     def judge(self, value: Mapping[str, Any]) -> tuple[float, tuple[str, ...]]:
-        rows = self._rows(value)
+        return self._judge(self._rows(value))
+
+    def judge_spins(self, spins: I8) -> tuple[float, tuple[str, ...]]:
+        return self._judge(spins.reshape(len(self.labels), self.colours) == -1)
+
+    def _judge(self, rows: npt.NDArray[np.bool_]) -> tuple[float, tuple[str, ...]]:
         counts = rows.sum(axis=1)
         broken = [f"{self.labels[place]} has {counts[place] or 'no'} colours" for place in np.flatnonzero(counts != 1)]
         shared = rows[self.edges[:, 0]] & rows[self.edges[:, 1]]
-        for edge in np.flatnonzero(np.any(shared, axis=1)):
-            one, other = (self.labels[end] for end in self.edges[edge])
-            broken.append(f"{one} and {other} are joined, and both have colour {np.argmax(shared[edge]) + 1}")
+        edges = np.flatnonzero(np.any(shared, axis=1))
+        both = (np.argmax(shared[edges], axis=1) + 1).tolist()
+        for (one, other), colour in zip(self.edges[edges].tolist(), both, strict=True):
+            broken.append(f"{self.labels[one]} and {self.labels[other]} are joined, and both have colour {colour}")
         return float(shared.sum()), tuple(broken)
 
     def encode(self, value: Mapping[str, Any]) -> I8:
@@ -54,14 +63,17 @@ class Colouring(Encoding):
     def mend(self, spins: I8) -> I8:
         """Vertex by vertex, the colour that its neighbours use least, where it has not one of its own."""
         rows = spins.reshape(len(self.labels), self.colours) == -1
-        neighbours: list[list[int]] = [[] for _ in self.labels]
-        for one, other in self.edges.tolist():
-            neighbours[one].append(other)
-            neighbours[other].append(one)
-        for place in range(len(self.labels)):
-            around = rows[neighbours[place]].sum(axis=0)
-            if rows[place].sum() != 1 or around[rows[place]].sum():
-                rows[place] = np.arange(self.colours) == np.argmin(around)
+        clashing = self.edges[np.any(rows[self.edges[:, 0]] & rows[self.edges[:, 1]], axis=1)]
+        wrong = np.union1d(np.flatnonzero(rows.sum(axis=1) != 1), clashing)
+        if len(wrong) > MOST_MENDED:
+            return spins
+        heads = self.edges.ravel()
+        order = np.argsort(heads, kind="stable")
+        tails, starts = self.edges[:, ::-1].ravel()[order], np.searchsorted(heads[order], np.arange(len(rows) + 1))
+        for vertex in wrong.tolist():
+            around = rows[tails[starts[vertex] : starts[vertex + 1]]].sum(axis=0)
+            if rows[vertex].sum() != 1 or around[rows[vertex]].sum():
+                rows[vertex] = np.arange(self.colours) == np.argmin(around)
         return np.where(rows, -1, 1).astype(np.int8).ravel()
 
     def _rows(self, value: Mapping[str, Any]) -> npt.NDArray[np.bool_]:
@@ -103,7 +115,7 @@ def encode_colouring(
     """
     kept = None if names is None else tuple(names)
     pairs, count = edges_of(edges, size if size is not None or kept is None else len(kept))
-    pairs = np.unique(pairs, axis=0)
+    pairs = once_each(pairs, count)
     if colours < 2:
         raise ProblemError(f"{colours} colours leave nothing to decide; give two or more")
     if colours * (len(pairs) + count * (colours - 1) / 2) > MOST_COUPLINGS:

@@ -164,7 +164,7 @@ def _graph(
     values = np.ones(count) if weights is None else np.array(weights, np.float64).ravel()
     if len(values) != count:
         raise ProblemError(f"{len(values)} weights for {count} vertices; give one each")
-    return np.unique(pairs, axis=0), values, kept
+    return once_each(pairs, count), values, kept
 
 
 def edges_of(edges: npt.ArrayLike, size: int | None) -> tuple[I64, int]:
@@ -182,3 +182,9 @@ def edges_of(edges: npt.ArrayLike, size: int | None) -> tuple[I64, int]:
     if len(loops):
         raise ProblemError(f"vertex {pairs[loops[0], 0]} is joined to itself; leave that edge out")
     return np.sort(pairs, axis=1), count
+
+
+def once_each(pairs: I64, count: int) -> I64:
+    """Edges i64 (m, 2), lesser vertex first, without repeats and rising."""
+    keys = np.unique(pairs[:, 0] * count + pairs[:, 1])
+    return np.stack(np.divmod(keys, max(count, 1)), axis=1)
