@@ -26,8 +26,9 @@ LEAST = 1e-3
 """Cuts broken by less are left alone until nothing else is broken, and then a tenth of it, once."""
 
 INTERIOR_TOLERANCE = 1e-5
-SLACK_TO_DROP = 0.1
-SHARE_TO_DROP = 0.1
+SLACK_TO_DROP, SHARE_TO_DROP = 0.05, 0.1
+THIN_OUT = 3
+"""Rows without multiplier that are slack by so much are dropped, if they are such a share of all, every third round."""
 
 
 @dataclass(frozen=True, eq=False)
@@ -209,10 +210,12 @@ def tightening(
     interior_rounds: int = 12,
     most_rounds: int = 1000,
     least_gain: float = 0.0,
+    thin_out: bool = True,
 ) -> Generator[Tightened, None, bool]:
     """Add cuts and solve, round by round, until no cut is broken, the time is up or ``most_rounds`` are over.
 
-    It also ends after three rounds in a row that raised the bound by less than ``least_gain`` each. The generator's
+    It also ends after three rounds in a row that raised the bound by less than ``least_gain`` each. With ``thin_out``
+    rows that have become slack leave the program again, and earlier bases do not fit it any more. The generator's
     own value is whether the program is as tight as odd-cycle cuts can make it.
     """
     least, idle, interior = LEAST, 0, False
@@ -232,7 +235,7 @@ def tightening(
         yield Tightened(number, added, interior)
         if program.infeasible:
             return False
-        if interior:
+        if interior or (thin_out and number % THIN_OUT == 0):
             program.drop_slack()
         idle = idle + 1 if program.bound - before < least_gain else 0
         if idle >= 3:

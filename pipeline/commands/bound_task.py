@@ -12,7 +12,7 @@ from patchwalk.commands.tasks import _check_memory, _check_sizes, _default_run_p
 from patchwalk.problem.files import read_start
 from patchwalk.problem.ising import Problem
 from patchwalk.search.branching import BranchPlan
-from patchwalk.settings import SearchSettings, SolveSettings
+from patchwalk.settings import DEFAULT_CLUSTER_SIZE, SearchSettings, SolveSettings
 from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import subsolver_from
@@ -26,7 +26,11 @@ SHARED = ("kind", "start")
 
 PARTS = ("cuts", "heuristic", "branching")
 DEFAULT_SECONDS = 60.0
-DEFAULT_SUBSOLVER, DEFAULT_SIZE = "elimination", 40
+DEFAULT_SUBSOLVER = "elimination"
+SIZES = ((4.5, 140), (6.5, 45))
+"""Spins in a cluster where couplings per spin are at most so many: elimination then takes milliseconds."""
+
+DENSE_SIZE = 20
 
 
 @dataclass(frozen=True, eq=False)
@@ -56,7 +60,7 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
     values = {**table, **_converted(given, spelled_as)}
     problem, name = _problem_from(input_path, SearchSettings.model_validate({"kind": values.get("kind")}))
     subsolver = subsolver_from(values.get("subsolver", DEFAULT_SUBSOLVER))
-    size = values.get("cluster_size") or min(DEFAULT_SIZE, len(problem), subsolver.max_spins)
+    size = values.get("cluster_size") or default_size(problem, subsolver)
     _check_sizes(size, problem, [subsolver])
     _check_memory(subsolver, size)
     nodes, seconds = values.get("nodes"), values.get("seconds")
@@ -74,6 +78,15 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
     run_path = Path(values["run"]) if values.get("run") else _default_run_path(name)
     written = {**values, "cluster_size": size, "seconds": seconds, "without": list(off)}
     return BoundTask(problem, name, subsolver, plan, values.get("seed", 1), start, run_path, written)
+
+
+def default_size(problem: Problem, subsolver: Subsolver) -> int:
+    """Spins in a cluster where nothing is said: by the couplings per spin for elimination, else up to 12."""
+    degree = 2 * problem.coupling_count / len(problem)
+    size = next((size for most, size in SIZES if degree <= most), DENSE_SIZE)
+    if subsolver.name != DEFAULT_SUBSOLVER:
+        size = DEFAULT_CLUSTER_SIZE
+    return min(size, len(problem), subsolver.max_spins)
 
 
 def _converted(given: dict[str, Any], spelled_as: str) -> dict[str, Any]:

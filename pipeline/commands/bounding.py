@@ -19,7 +19,7 @@ from typing import Any, Protocol
 from patchwalk.bounds.certificate import Certificate, check
 from patchwalk.bounds.planar import MOST_FRUSTRATED, frustrated_faces, is_planar, planar_minimum
 from patchwalk.commands.answers import answer_for
-from patchwalk.commands.bound_task import DEFAULT_SIZE, DEFAULT_SUBSOLVER, BoundTask, bound_task_from
+from patchwalk.commands.bound_task import DEFAULT_SUBSOLVER, BoundTask, bound_task_from, default_size
 from patchwalk.commands.interrupts import listening
 from patchwalk.evidence.certificates import store_certificate, store_node_log
 from patchwalk.evidence.layout import RunFileError, packed
@@ -141,7 +141,7 @@ def bounds_for(
     after ``nodes``, when ``interrupted()``, or with a proof.
     """
     chosen = subsolver if subsolver is not None else subsolver_from(DEFAULT_SUBSOLVER)
-    size = cluster_size or min(DEFAULT_SIZE, len(problem), chosen.max_spins)
+    size = cluster_size or default_size(problem, chosen)
     search = BranchAndBound(problem, chosen, BranchPlan(seconds, nodes, size), seed, start, interrupted)
     began = time.perf_counter()
     search.prepare()

@@ -21,8 +21,10 @@ EXIT_CODES = {"interrupted": 130, "error": 1}
     metavar="NAME[,key=value...]",
     help="Who answers clusters of spins that the linear program leaves undecided.  [default: elimination]",
 )
-@click.option("--cluster-size", metavar="NUMBER", help="Spins in each cluster; 40 if problem and subsolver allow.")
-@click.option("--sweeps", metavar="NUMBER", help="Sweeps of a first cooling, 0 for none.  [default: 2000]")
+@click.option(
+    "--cluster-size", metavar="NUMBER", help="Spins in each cluster; by default what the subsolver answers at once."
+)
+@click.option("--sweeps", metavar="NUMBER", help="Sweeps of the first cooling, 0 for none at all.  [default: 2000]")
 @click.option("--seed", metavar="NUMBER", help="The seed of the run.  [default: 1]")
 @click.option("--start", metavar="FILE", help="A configuration to begin with.")
 @click.option("--run", metavar="FILE", help="Where the run file goes: calls, node log and certificate.")

@@ -70,10 +70,11 @@ def in_words(result: Bound) -> str:
             f"{word} is {side} {result.objective_bound:,.10g}; the best found is {result.objective:,.10g} "
             f"(gap {100 * result.gap:.3f} %); {result.message}"
         )
+    counted = "1 node" if result.nodes == 1 else f"{result.nodes:,} nodes"
     lines = [
         first,
         f"certificate: {result.proof}",
-        f"{result.nodes:,} nodes, {result.open_nodes:,} of them open, and {result.calls:,} cluster calls in "
+        f"{counted}, {result.open_nodes:,} of them open, and {result.calls:,} cluster calls in "
         f"{result.seconds:.1f} s (compiling {result.compile_seconds:.1f} s apart)",
     ]
     if result.failed_calls:

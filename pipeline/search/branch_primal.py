@@ -23,15 +23,21 @@ from patchwalk.search.sweeps import descend, flip_accepted, metropolis_sweep
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64, ClusterBatch, Status, Subsolver
-from patchwalk.subsolvers.draws import call_seeds, next_below, next_unit, seed_for, stream_for
+from patchwalk.subsolvers.draws import call_seeds, generator_for, next_below, next_unit, seed_for, stream_for
 
 ROUND_OFF, CLUSTER, CALL, SWEEP, START = 11, 12, 13, 14, 15
 """Words that tell the streams of one run seed apart."""
 
 RULE_NAME = "fractional"
 
+WARM = 0.4
+"""Where a cooling from the best configuration begins, in units of the median local field."""
+
+SWEEPS_AT_ONCE = 100
+"""An interrupt or the clock is looked at after so many sweeps."""
+
 MOST_UPDATES = 4_000_000
-"""Work that the cooling which gives the first configuration may take: sweeps times spins and couplings."""
+"""Work that one cooling may take: sweeps times spins and couplings."""
 
 
 class Incumbent:
@@ -76,18 +82,28 @@ class Incumbent:
         return True
 
     def cool(self, sweeps: int, stopped: Callable[[], bool]) -> None:
-        """One slow cooling by ``sweeps`` Metropolis sweeps, fewer (but 20) on large problems."""
+        """A slow cooling by ``sweeps`` Metropolis sweeps, fewer on large problems.
+
+        In turn from a random configuration and, from below the glass transition, from the best one.
+        """
         problem = self.problem
         wanted = min(sweeps, max(20, MOST_UPDATES // (len(problem) + problem.coupling_count)))
-        cooling = GeometricCooling(1.0, 0.05, problem.field_scale, 1)
-        spins = self.spins.copy()
+        again = self.round % 2 == 1
+        cooling = GeometricCooling(WARM if again else 1.0, 0.05, problem.field_scale, 1)
+        spins = (
+            self.spins.copy()
+            if again
+            else 1 - 2 * generator_for(self.seed, START, self.round).integers(0, 2, len(problem), dtype=np.int8)
+        )
         local_fields = problem.local_fields(spins)
-        for sweep in range(wanted):
-            if sweep % 16 == 0 and stopped():
+        temperatures = np.array([cooling.temperature(sweep / wanted) for sweep in range(wanted)])
+        stream = stream_for(self.seed, SWEEP, self.round)
+        for first in range(0, wanted, SWEEPS_AT_ONCE):
+            if stopped():
                 break
-            stream = stream_for(self.seed, SWEEP, sweep)
-            metropolis_sweep(*self._csr, spins, local_fields, cooling.temperature(sweep / wanted), stream)
-            self.sweeps += 1
+            part = temperatures[first : first + SWEEPS_AT_ONCE]
+            _sweep_down(*self._csr, spins, local_fields, part, stream)
+            self.sweeps += len(part)
         descend(*self._csr, spins, problem.local_fields(spins), problem.tie_tolerance)
         self.offer(spins, "sweeps")
 
@@ -136,7 +152,7 @@ class Incumbent:
             judge(batch, failed(batch, "rehearsal"))
             outcomes, chosen = batch.spins[:, None, :].copy(), np.zeros(1, np.int64)
             flip_accepted(*self._csr, spins, fields, members, outcomes, chosen, np.zeros(1, np.bool_))
-        metropolis_sweep(*self._csr, spins, fields, 0.0, stream_for(0))
+        _sweep_down(*self._csr, spins, fields, np.zeros(1), stream_for(0))
         descend(*self._csr, spins, fields, self.problem.tie_tolerance)
         rounded(self.graph, half, 0, 1)
 
@@ -160,6 +176,15 @@ class Incumbent:
         self.failed_calls += len(bad)
         if len(bad):
             self.message = messages[bad[-1]]
+
+
+@compiled
+def _sweep_down(
+    row_starts: I64, neighbours: I32, couplings: F64, spins: I8, local_fields: F64, temperatures: F64, stream: U64
+) -> None:
+    """A sweep at each of the temperatures."""
+    for temperature in temperatures:
+        metropolis_sweep(row_starts, neighbours, couplings, spins, local_fields, temperature, stream)
 
 
 @compiled

@@ -34,13 +34,17 @@ ROUNDS_AT_ROOT, ROUNDS_AT_NODE = 400, 20
 NEAR = 1e-4
 """Relative gap below which it is worth looking whether reduced costs leave one configuration only."""
 
-ROW_GROWTH = 3
+LATER_COOLINGS = 2
+"""By how much coolings after the first are shorter."""
+
+ROW_GROWTH = 1.5
 """Rows are thinned out when there are so many times as many as after the root."""
 
 
 @dataclass(frozen=True)
 class BranchPlan:
-    """How to search. ``sweeps`` is how long the cooling lasts that gives the first configuration.
+    """How to search. ``sweeps`` is how long the cooling lasts that gives the first configuration; another one, half
+    as long, goes with every round of cuts.
 
     Any of ``cuts``, ``heuristic`` and ``branching`` may be switched off, to see what it is worth. Without ``cuts`` only
     integral points that are no configuration are cut off; without ``heuristic`` the best energy comes from integral
@@ -277,6 +281,7 @@ class BranchAndBound:
             self._seconds_left,
             interior_rounds=self.plan.interior_rounds if is_root else 0,
             most_rounds=ROUNDS_AT_ROOT if is_root else ROUNDS_AT_NODE,
+            thin_out=is_root,
             least_gain=0.0 if is_root else 0.02 * max(0.0, self.best_energy - node.bound),
         )
         for _ in rounds:
@@ -295,6 +300,8 @@ class BranchAndBound:
                 own.round_off(x, tries=1)
             return self._round(())
         spins = own.round_off(x)
+        if self.plan.sweeps // LATER_COOLINGS and own.round:
+            own.cool(self.plan.sweeps // LATER_COOLINGS, self._stopped)
         subject = spins if own.round % 2 else own.spins
         return self._round(own.ask(x, subject, self.plan.clusters_per_round, self._stopped))
 
