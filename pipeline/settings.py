@@ -247,7 +247,7 @@ class SolveSettings(SearchSettings):
         return self.seconds
 
 
-class SampleSettings(SearchSettings):
+class SamplingSettings(SearchSettings):
     """Everything that ``sample`` can be told."""
 
     temperatures: Annotated[list[AboveZero], BeforeValidator(_number_list)] = Field(

@@ -11,7 +11,7 @@ import numpy as np
 
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.solving import hired
-from patchwalk.commands.tasks import SampleTask, sample_task_from
+from patchwalk.commands.tasks import SamplingTask, sample_task_from
 from patchwalk.evidence.layout import packed
 from patchwalk.evidence.runfile import Measured, RunFacts, RunFile, RunWriter
 from patchwalk.problem.ising import Problem
@@ -91,8 +91,8 @@ class SilentSampleWatcher:
 def sample(problem: Problem | str | Path, **settings: Any) -> Sampled:
     """Averages over the Boltzmann law at the ``temperatures`` given, with cluster proposals of an admissible subsolver.
 
-    Keywords are the names of :class:`patchwalk.settings.SampleSettings`. Raises ``InadmissibleError`` for a combination
-    that would sample another law, and what :func:`patchwalk.solve` raises for problem and settings.
+    Keywords are the names of :class:`patchwalk.settings.SamplingSettings`. Raises ``InadmissibleError`` for what
+    would sample another law, and what :func:`patchwalk.solve` raises for problem and settings.
 
     >>> import os, tempfile
     >>> pair = Problem.from_arrays([0], [1], [1.0])
@@ -106,7 +106,7 @@ def sample(problem: Problem | str | Path, **settings: Any) -> Sampled:
     return carry_out(sample_task_from(problem, settings), SilentSampleWatcher())
 
 
-def carry_out(task: SampleTask, watcher: SampleWatcher) -> Sampled:
+def carry_out(task: SamplingTask, watcher: SampleWatcher) -> Sampled:
     """:func:`sample`, watched."""
     watcher.understood([task.problem.summary(), *task.problem.notes])
     seed = 1 if task.settings.seed is None else task.settings.seed
@@ -120,7 +120,7 @@ def carry_out(task: SampleTask, watcher: SampleWatcher) -> Sampled:
             runfile.close()
 
 
-def _carry_out(task: SampleTask, sampling: BoltzmannSampling, runfile: RunFile, watcher: SampleWatcher) -> Sampled:
+def _carry_out(task: SamplingTask, sampling: BoltzmannSampling, runfile: RunFile, watcher: SampleWatcher) -> Sampled:
     watcher.compiling()
     began = time.perf_counter()
     sampling.prepare()
@@ -137,7 +137,7 @@ def _carry_out(task: SampleTask, sampling: BoltzmannSampling, runfile: RunFile, 
 
 
 def _finished(
-    task: SampleTask, sampling: BoltzmannSampling, writer: RunWriter, seconds: float, compile_seconds: float
+    task: SamplingTask, sampling: BoltzmannSampling, writer: RunWriter, seconds: float, compile_seconds: float
 ) -> Sampled:
     measured, plan = sampling.observables.measured, sampling.plan
     whole = measured == plan.rounds
@@ -173,7 +173,7 @@ def _series(sampling: BoltzmannSampling) -> list[Measured]:
     ]  # fmt: skip
 
 
-def _facts(task: SampleTask, sampling: BoltzmannSampling) -> RunFacts:
+def _facts(task: SamplingTask, sampling: BoltzmannSampling) -> RunFacts:
     callers = "; ".join(
         "nothing" if case.subsolver is None else spelled(case.subsolver) for case in sampling.caller.policy.cases
     )

@@ -22,7 +22,7 @@ from patchwalk.search.ladder import Ladder
 from patchwalk.search.neighbourhood import Plan
 from patchwalk.search.sampling import SamplingPlan
 from patchwalk.search.temperature import AdaptiveCooling, GeometricCooling, Temperatures
-from patchwalk.settings import DEFAULT_CLUSTER_SIZE, DEFAULT_RUNGS, SampleSettings, SearchSettings, SolveSettings
+from patchwalk.settings import DEFAULT_CLUSTER_SIZE, DEFAULT_RUNGS, SamplingSettings, SearchSettings, SolveSettings
 from patchwalk.settings_checks import Model, SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import DENSE_LIMIT, I8, ClusterBatch, Edges, Subsolver
 from patchwalk.subsolvers.registry import SubsolverError
@@ -93,7 +93,7 @@ class Task(Errand[SolveSettings]):
 
 
 @dataclass(frozen=True, eq=False)
-class SampleTask(Errand[SampleSettings]):
+class SamplingTask(Errand[SamplingSettings]):
     """What ``sample`` has to do."""
 
     @property
@@ -118,9 +118,9 @@ def task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: s
     return Task(**_read(SolveSettings, source, given, spelled_as))
 
 
-def sample_task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> SampleTask:
+def sample_task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> SamplingTask:
     """What ``sample`` is told, read and checked; nothing is written yet."""
-    return SampleTask(**_read(SampleSettings, source, given, spelled_as))
+    return SamplingTask(**_read(SamplingSettings, source, given, spelled_as))
 
 
 def _read(

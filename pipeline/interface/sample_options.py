@@ -10,7 +10,7 @@ from rich.console import Console
 
 from patchwalk.interface.cli import fail, print_json
 from patchwalk.interface.solve_options import setting_options
-from patchwalk.settings import SampleSettings
+from patchwalk.settings import SamplingSettings
 
 if TYPE_CHECKING:
     from patchwalk.commands.sampling import Sampled
@@ -19,7 +19,7 @@ if TYPE_CHECKING:
 
 @click.command(context_settings={"max_content_width": 110})
 @click.argument("source", metavar="INPUT")
-@setting_options(SampleSettings)
+@setting_options(SamplingSettings)
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 @click.option("--quiet", is_flag=True, help="No progress on standard error.")
 def sample_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None:
