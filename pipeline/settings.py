@@ -91,12 +91,14 @@ class SearchSettings(BaseModel):
 
     model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True, strict=False)
 
-    kind: str | None = Field(None, description="What the file's numbers mean: ising, maxcut, qubo and so on.")
+    kind: str | None = Field(
+        None, description="What the file's numbers mean, unless it says so itself: ising, maxcut, qubo ..."
+    )
     field_file: FileName | None = Field(
-        None, description="A CSV of fields (name, field) that belongs to a CSV of pairs."
+        None, description="A CSV of names and fields that are added to the couplings of INPUT (kind ising)."
     )
     flip_sign: bool = Field(
-        False, description="The file's couplings and fields have the opposite sign: they favour equal spins."
+        False, description="The numbers of INPUT are of the opposite sign convention, E = -sum J s s - sum h s (ising)."
     )
     subsolver: Annotated[Any, BeforeValidator(_spelled_subsolver)] = Field(
         "walk",

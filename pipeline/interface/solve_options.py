@@ -10,6 +10,7 @@ import click
 from pydantic.fields import FieldInfo
 
 from patchwalk.interface.cli import fail, print_json
+from patchwalk.problem.forms import table_of_kinds
 from patchwalk.settings import SearchSettings, SolveSettings
 from patchwalk.settings_checks import plain_type
 
@@ -61,12 +62,18 @@ def _help(field: FieldInfo) -> str:
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 @click.option("--quiet", is_flag=True, help="No progress on standard error.")
 def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None:
-    """Search for the lowest energy of INPUT: a problem file (edge list or CSV, .gz or not) or a settings TOML.
+    """Search for the lowest energy of INPUT: a problem file (see below) or a settings TOML.
 
     \b
     patchwalk solve configs/quillmere.toml
     patchwalk solve glass.txt --kind ising --subsolver walk,shots=4 --cluster-size 10 --seconds 20
+    patchwalk solve couplings.csv --kind ising --field-file fields.csv --flip-sign
     patchwalk solve graph.csv --kind maxcut --sweeps 0 --calls 3000 --seeds 1..5 --json
+
+    What a file may mean (--kind), each plain or packed (.gz):
+
+    \b
+    KINDS_OF_FILES
 
     The first Ctrl-C finishes the slice in flight and returns the best configuration so far (exit 130); the second
     stops at once. Exit codes: 0 finished, 1 error, 2 settings, 3 problem file, 4 memory, 5 no feasible answer,
@@ -93,3 +100,6 @@ def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None
 def leave_with(solution: Solution) -> None:
     """End the program with the exit code that tells how the run ended."""
     raise SystemExit(EXIT_CODES.get(solution.status, 0 if solution.feasible else EXIT_INFEASIBLE))
+
+
+solve_command.help = (solve_command.help or "").replace("KINDS_OF_FILES", table_of_kinds().replace("\n", "\n    "))

@@ -64,8 +64,11 @@ def homes_of(kind: str) -> str:
 
 
 def table_of_kinds() -> str:
-    """The table for the help: every form with its endings and kinds, a line each."""
-    return "\n".join(
-        f"{'/'.join(form.endings).replace('/any other', ', others'):14} {form.what}: {', '.join(form.kinds)}"
-        for form in FORMS
-    )
+    """The table for the help: endings, what such a file holds, and which kinds it can be of."""
+    rows = []
+    for form in FORMS:
+        endings = "others" if "any other" in form.endings else " ".join(form.endings)
+        kinds = "kinds of pairs" if form.kinds == PAIR_KINDS else ", ".join(form.kinds)
+        rows.append(f"{endings:10} {form.what}: {kinds}")
+    pairs = [", ".join(PAIR_KINDS[:4]) + ",", ", ".join(PAIR_KINDS[4:])]
+    return "\n".join([*rows, f"kinds of pairs: {pairs[0]}", f"{'':16}{pairs[1]}"])

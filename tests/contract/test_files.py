@@ -11,12 +11,14 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from click.testing import CliRunner
 from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
+from patchwalk.interface.solve_options import solve_command
 from patchwalk.problem import edges, sources, tables
 from patchwalk.problem.files import read_problem, read_start, write_problem
-from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.ising import KINDS, Problem, ProblemError
 
 
 def written(folder, name, content):
@@ -207,6 +209,24 @@ def test_the_opposite_sign_convention_is_turned(tmp_path):
         read_problem(graph, "maxcut", flip_sign=True)
     with pytest.raises(ProblemError, match="field_file belongs to kind ising"):
         read_problem(graph, "maxcut", field_file=fields)
+
+
+def test_solve_takes_a_file_of_fields_and_turned_signs(tmp_path):
+    written(tmp_path, "pairs.csv", "a,b,1\nb,c,1\n")
+    written(tmp_path, "fields.csv", "a,5\nc,2\n")
+    words = ["pairs.csv", "--kind", "ising", "--field-file", "fields.csv", "--flip-sign", "--json", "--quiet"]
+    words += ["--subsolver", "enumeration", "--cluster-size", "3", "--calls", "3"]
+    run = CliRunner().invoke(solve_command, words)
+    said = json.loads(run.stdout)
+    assert said["energy"] == -9  # all up: every coupling and field is satisfied once turned
+    assert said["spins"] == [1, 1, 1]
+
+
+def test_the_help_says_what_a_file_may_mean():
+    said = CliRunner().invoke(solve_command, ["--help"]).stdout
+    for kind in KINDS:
+        assert kind in said
+    assert max(map(len, said.splitlines())) <= 110
 
 
 @pytest.mark.parametrize("name", ["G.txt", "G.csv"])
