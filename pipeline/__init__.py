@@ -15,12 +15,14 @@ if TYPE_CHECKING:
     from patchwalk.commands.resuming import resume
     from patchwalk.commands.sampling import sample
     from patchwalk.commands.solving import Solution, solve
+    from patchwalk.problem.builder import ProblemBuilder
     from patchwalk.problem.families import make
     from patchwalk.problem.files import read_problem, write_problem
     from patchwalk.problem.ising import Problem, ProblemError
 
 _HOMES = {
     "Problem": "patchwalk.problem.ising",
+    "ProblemBuilder": "patchwalk.problem.builder",
     "ProblemError": "patchwalk.problem.ising",
     "Solution": "patchwalk.commands.solving",
     "forecast": "patchwalk.commands.forecasting",
@@ -36,6 +38,7 @@ _HOMES = {
 
 __all__ = [
     "Problem",
+    "ProblemBuilder",
     "ProblemError",
     "Solution",
     "audit",
