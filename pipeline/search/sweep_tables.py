@@ -94,11 +94,12 @@ def common_unit(problem: Problem, most: float) -> float | None:
     0.5
     """
     sizes = np.abs(np.concatenate([problem.couplings, problem.fields]))
-    sizes = np.unique(sizes[sizes > 0.0])
+    sizes = sizes[sizes > 0.0]
     if not len(sizes):
         return 1.0
-    if strongest_pull(problem) > most * sizes[0]:
+    if strongest_pull(problem) > most * sizes.min():
         return None
+    sizes = np.unique(sizes)
     mantissas, exponents = np.frexp(sizes)
     whole = np.ldexp(mantissas, 53).astype(np.int64)
     odd_bits = np.log2((whole & -whole).astype(np.float64)).astype(np.int64)
