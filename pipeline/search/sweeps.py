@@ -74,7 +74,8 @@ class Carrier:
         of a replica depends on its own row alone, to the last bit, whatever the others are.
 
         Small dense problems are swept one replica after the other, carrying ``local_fields`` along as :meth:`sweep`
-        does. All others are swept in lanes, 16 or 32 replicas at a time (1 takes as long as 16, 17 as 32), and
+        does. All others are swept in lanes, 16 or 32 replicas at a time (1 takes as long as 16, 17 as 32; fewer
+        than about six are faster through :meth:`sweep`, each by itself), and
         ``local_fields`` are filled in afresh from the spins at the end, to the bit what ``Problem.local_fields``
         gives, which takes about as long as one sweep. With None they are not wanted: faster in lanes, slower for
         dense problems, which then have to find them first.
