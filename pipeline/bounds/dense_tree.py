@@ -78,11 +78,12 @@ def branch_dense(
     seconds: float = math.inf,
     nodes: int = 1_000_000,
     seed: int = 0,
-    tell: Callable[[Progress], None] | None = None,
+    tell: Callable[[Progress], bool | None] | None = None,
 ) -> DenseProof:
     """The ground state with its proof, or the best bound within ``seconds`` or ``nodes``, the root alone at least.
 
-    ``start`` is a configuration known beforehand; ``tell`` hears of every split. Equal calls give equal bits unless
+    ``start`` is a configuration known beforehand; ``tell`` hears of every split, and ends the work
+    where it returns True. Equal calls give equal bits unless
     ``seconds`` ends them. An open node of 100 groups holds about 0.2 MB. Raises ``ValueError`` beyond 2000 spins.
 
     >>> triangle = Problem.from_arrays([0, 1, 2], [1, 2, 0], [1, 1, 1])
@@ -100,8 +101,8 @@ def branch_dense(
     tree.plant()
     while tree.open and len(tree.nodes) + 2 <= nodes and not (seconds < math.inf and perf_counter() >= deadline):
         tree.split()
-        if tell is not None:
-            tell(tree.log[-1])
+        if tell is not None and tell(tree.log[-1]):
+            break
     return tree.proof()
 
 
