@@ -11,8 +11,8 @@ value says that the leaf is empty. Beyond that, an edge e whose wrong side costs
 settled wherever the bound plus ``|d_e|`` reaches the energy in question; where settled edges reach every spin, only one
 configuration is left, and the leaf is worth its energy.
 
-This module and :mod:`patchwalk.bounds.energy_step`, which it uses, import the problem alone (and, for planar
-problems, the matching that is made once more): nothing that searches.
+This module and :mod:`patchwalk.bounds.energy_step`, which it uses, import the problem alone (and, late, the check of
+semidefinite trees and the matching that is made once more): nothing that searches.
 """
 
 from __future__ import annotations
@@ -47,8 +47,9 @@ class CertificateError(ValueError):
 class Certificate:
     """A proof that no configuration of the problem with this fingerprint lies below ``bound``.
 
-    ``method`` says which: ``cycles`` (a tree of odd-cycle cuts), ``matching`` (planar, made once more by the check), or
-    the name of a check in ``EXTRA_CHECKS``. ``arrays`` holds its numbers.
+    ``method`` says which: ``cycles`` (a tree of odd-cycle cuts), ``semidefinite``
+    (:mod:`patchwalk.bounds.dense_certificate` says what its arrays hold) or ``matching`` (planar, made once more by
+    the check).
 
     ``cycles``: ``pairs`` i32 (m, 2), the edges by their spins, a field being a pair with spin n; cuts as ``cut_starts``
     i64 (c+1,), ``cut_edges`` i32 and ``cut_odd`` i8; nodes as ``parents`` i64 (N,), -1 for the first,
@@ -112,7 +113,23 @@ def check(problem: Problem, certificate: Certificate) -> float:
         if proved < certificate.bound:
             raise CertificateError(f"matching gives {proved:.12g}, the certificate states {certificate.bound:.12g}")
         return certificate.bound
-    raise CertificateError(f"the method {certificate.method!r} is not known here; it is cycles or matching")
+    if certificate.method == "semidefinite":
+        return _checked_semidefinite(problem, certificate)
+    raise CertificateError(
+        f"the method {certificate.method!r} is not known here; it is cycles, semidefinite or matching"
+    )
+
+
+def _checked_semidefinite(problem: Problem, certificate: Certificate) -> float:
+    from patchwalk.bounds.dense_certificate import checked_tree
+
+    try:
+        proved = checked_tree(problem, certificate.arrays)
+    except (ValueError, KeyError, IndexError) as error:
+        raise CertificateError(f"the semidefinite certificate does not hold: {error}") from error
+    if not proved >= certificate.bound:
+        raise CertificateError(f"the tree proves {proved:.12g} only, the certificate states {certificate.bound:.12g}")
+    return certificate.bound
 
 
 class _Tree:

@@ -18,12 +18,13 @@ from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import subsolver_from
 
 SETTINGS = {
-    "kind": "word", "seconds": "number", "nodes": "whole", "subsolver": "spelling", "cluster_size": "whole",
-    "sweeps": "whole", "seed": "whole", "start": "file", "run": "file", "without": "words",
+    "kind": "word", "method": "method", "seconds": "number", "nodes": "whole", "subsolver": "spelling",
+    "cluster_size": "whole", "sweeps": "whole", "seed": "whole", "start": "file", "run": "file", "without": "words",
 }  # fmt: skip
 SHARED = ("kind", "start")
 """What ``bound`` takes over from a settings TOML, which is written for ``solve``."""
 
+METHODS = ("auto", "cycles", "semidefinite")
 PARTS = ("cuts", "heuristic", "branching")
 DEFAULT_SECONDS = 60.0
 DEFAULT_SUBSOLVER = "elimination"
@@ -41,6 +42,7 @@ class BoundTask:
     source: str
     subsolver: Subsolver
     plan: BranchPlan
+    method: str
     seed: int
     start: I8 | None
     run_path: Path
@@ -74,10 +76,11 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
         sweeps=values.get("sweeps", BranchPlan.sweeps),
         **{part: part not in off for part in PARTS},
     )
+    method = values.get("method", "auto")
     start = None if values.get("start") is None else read_start(values["start"], problem)
     run_path = Path(values["run"]) if values.get("run") else _default_run_path(name)
     written = {**values, "cluster_size": size, "seconds": seconds, "without": list(off)}
-    return BoundTask(problem, name, subsolver, plan, values.get("seed", 1), start, run_path, written)
+    return BoundTask(problem, name, subsolver, plan, method, values.get("seed", 1), start, run_path, written)
 
 
 def default_size(problem: Problem, subsolver: Subsolver) -> int:
@@ -123,6 +126,8 @@ def _value(key: str, value: Any) -> Any:
         return number
     if what == "file" and str(value) == "":
         raise ValueError("is empty; give the name of a file")
+    if what == "method" and value not in METHODS:
+        raise ValueError(f"is one of: {', '.join(METHODS)}")
     if what == "words":
         words = [word.strip() for word in value.split(",")] if isinstance(value, str) else list(value)
         unknown = [word for word in words if word not in PARTS]

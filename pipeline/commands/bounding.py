@@ -1,7 +1,7 @@
 """``bound``: how low the energy of a problem can be, with a certificate, and a proof of optimality where it is reached.
 
-A planar problem without fields is solved by matching, which gives the configuration; every other problem, and the proof
-itself, goes to branch-and-bound with odd-cycle cuts.
+Sparse problems go to branch-and-bound with odd-cycle cuts, which begins with the matching's ground state where the
+problem is planar and has no fields; dense ones go to the tree of semidefinite bounds.
 """
 
 from __future__ import annotations
@@ -25,9 +25,12 @@ from patchwalk.evidence.certificates import store_certificate, store_node_log
 from patchwalk.evidence.layout import RunFileError, packed
 from patchwalk.evidence.runfile import RunFacts, RunFile, RunWriter
 from patchwalk.problem.ising import Problem
+from patchwalk.search.branch_dense import DenseBranching, is_dense
 from patchwalk.search.branching import BranchAndBound, BranchPlan, NodeLine
 from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import spelled, subsolver_from
+
+Search = BranchAndBound | DenseBranching
 
 
 @dataclass(frozen=True, eq=False)
@@ -56,7 +59,6 @@ class Bound:
     compile_seconds: float
     nodes: int
     open_nodes: int
-    cuts: int
     calls: int
     failed_calls: int
     seed: int
@@ -83,7 +85,7 @@ class Watcher(Protocol):
 
     def compiled(self, seconds: float) -> None: ...
 
-    def moved(self, search: BranchAndBound) -> None: ...
+    def moved(self, search: Search) -> None: ...
 
     def stopping(self) -> None: ...
 
@@ -100,7 +102,7 @@ class Silent:
     def compiled(self, seconds: float) -> None:
         pass
 
-    def moved(self, search: BranchAndBound) -> None:
+    def moved(self, search: Search) -> None:
         pass
 
     def stopping(self) -> None:
@@ -110,9 +112,9 @@ class Silent:
 def bound(problem: Problem | str | Path, **settings: Any) -> Bound:
     """A lower bound on the energy of a problem, a problem file or a settings TOML, with its certificate in a run file.
 
-    Keywords are the options of ``patchwalk bound``: ``kind, seconds, nodes, subsolver, cluster_size, sweeps, seed,
-    start, run, without``. Raises ``SettingsError``, ``ProblemError``, ``SubsolverError`` or ``RunFileError`` before
-    any work is done.
+    Keywords are the options of ``patchwalk bound``: ``kind, method, seconds, nodes, subsolver, cluster_size, sweeps,
+    seed, start, run, without``. Raises ``SettingsError``, ``ProblemError``, ``SubsolverError`` or ``RunFileError``
+    before any work is done.
 
     >>> import os, tempfile
     >>> ring = Problem.from_arrays([0, 1, 2, 3, 4], [1, 2, 3, 4, 0], [1.0] * 5, kind="maxcut")
@@ -132,6 +134,7 @@ def bounds_for(
     nodes: int | None = None,
     subsolver: Subsolver | None = None,
     cluster_size: int | None = None,
+    method: str = "auto",
     seed: int = 1,
     interrupted: Callable[[], bool] = lambda: False,
 ) -> Bound:
@@ -142,7 +145,7 @@ def bounds_for(
     """
     chosen = subsolver if subsolver is not None else subsolver_from(DEFAULT_SUBSOLVER)
     size = cluster_size or default_size(problem, chosen)
-    search = BranchAndBound(problem, chosen, BranchPlan(seconds, nodes, size), seed, start, interrupted)
+    search = search_for(problem, method)(problem, chosen, BranchPlan(seconds, nodes, size), seed, start, interrupted)
     began = time.perf_counter()
     search.prepare()
     compile_seconds = time.perf_counter() - began
@@ -152,7 +155,14 @@ def bounds_for(
     return _result(search, compile_seconds, None)
 
 
-def offer_planar(search: BranchAndBound) -> None:
+def search_for(problem: Problem, method: str) -> type[BranchAndBound] | type[DenseBranching]:
+    """The search by this method; ``auto`` takes the semidefinite tree for dense problems and cycles for the rest."""
+    if method == "auto":
+        method = "semidefinite" if is_dense(problem) else "cycles"
+    return DenseBranching if method == "semidefinite" else BranchAndBound
+
+
+def offer_planar(search: Search) -> None:
     """Where the problem is planar and small enough for matching, let the search begin with its ground state."""
     problem = search.problem
     if is_planar(problem) and frustrated_faces(problem) <= MOST_FRUSTRATED:
@@ -166,14 +176,16 @@ def carry_out(task: BoundTask, watcher: Watcher) -> Bound:
     runfile = RunFile(task.run_path)
     try:
         with listening(watcher.stopping) as interrupted:
-            search = BranchAndBound(problem, task.subsolver, task.plan, task.seed, task.start, interrupted)
+            kind = search_for(problem, task.method)
+            search = kind(problem, task.subsolver, task.plan, task.seed, task.start, interrupted)
+            search.told = lambda: watcher.moved(search)
             watcher.compiling()
             began = time.perf_counter()
             search.prepare()
             compile_seconds = time.perf_counter() - began
             watcher.compiled(compile_seconds)
             writer = _begin(task, search, runfile)
-            result = _searched(task, search, writer, compile_seconds, watcher)
+            result = _searched(task, search, writer, compile_seconds)
             run = writer.run
     finally:
         runfile.close()
@@ -184,7 +196,7 @@ def carry_out(task: BoundTask, watcher: Watcher) -> Bound:
     return result
 
 
-def _begin(task: BoundTask, search: BranchAndBound, runfile: RunFile) -> RunWriter:
+def _begin(task: BoundTask, search: Search, runfile: RunFile) -> RunWriter:
     subsolver = search.subsolver or task.subsolver
     spelling = spelled(subsolver)
     settings = {**task.written, "subsolver": spelling, "command": "bound"}
@@ -195,9 +207,7 @@ def _begin(task: BoundTask, search: BranchAndBound, runfile: RunFile) -> RunWrit
     return runfile.begin(facts, search.snapshot())
 
 
-def _searched(
-    task: BoundTask, search: BranchAndBound, writer: RunWriter, compile_seconds: float, watcher: Watcher
-) -> Bound:
+def _searched(task: BoundTask, search: Search, writer: RunWriter, compile_seconds: float) -> Bound:
     if task.plan.heuristic:
         offer_planar(search)
     try:
@@ -205,10 +215,8 @@ def _searched(
             writer.add(round_)
             if writer.due:
                 writer.close_group(search.snapshot())
-            watcher.moved(search)
     except RunFileError as error:  # bound and answer so far are worth more than the record that could not be kept
         search.status, search.message = "error", str(error)
-    watcher.moved(search)
     writer.add_improvements(search.take_improvements())
     result = _result(search, compile_seconds, task.run_path)
     writer.finish(
@@ -220,7 +228,7 @@ def _searched(
     return result
 
 
-def _result(search: BranchAndBound, compile_seconds: float, run_path: Path | None) -> Bound:
+def _result(search: Search, compile_seconds: float, run_path: Path | None) -> Bound:
     """What the search ended with. Its certificate is checked here once more, and what it states is the bound."""
     problem, seconds = search.problem, search.elapsed
     certificate = search.certificate()
@@ -230,16 +238,13 @@ def _result(search: BranchAndBound, compile_seconds: float, run_path: Path | Non
     status, message = search.status, search.message
     if status == "proved_optimal" and proved < energy - problem.tie_tolerance:
         status, message = "budget", "the certificate proves less than the search took it for"
-    nodes = len(search.tree.nodes)
-    cuts = len(certificate.arrays["cut_starts"]) - 1
-    counted = "1 node" if nodes == 1 else f"{nodes:,} nodes"
     return Bound(
         spins=search.best_spins, energy=energy, lower_bound=proved,
         gap=max(0.0, energy - proved) / max(1.0, abs(energy)),
-        status=status, message=message, proof=f"{cuts:,} odd-cycle cuts with their multipliers over {counted}",
+        status=status, message=message, proof=search.proof,
         objective=problem.objective(energy), objective_bound=problem.objective(proved),
         objective_name=problem.objective_name, feasible=feasible, answer=answer, seconds=seconds,
-        compile_seconds=compile_seconds, nodes=nodes, open_nodes=search.tree.open_count, cuts=cuts,
+        compile_seconds=compile_seconds, nodes=search.node_count, open_nodes=search.open_count,
         calls=search.incumbent.calls, failed_calls=search.incumbent.failed_calls, seed=search.seed,
         certificate=certificate, log=tuple(_finite(line) for line in search.log), run_path=run_path,
     )  # fmt: skip

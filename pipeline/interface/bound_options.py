@@ -14,6 +14,9 @@ EXIT_CODES = {"interrupted": 130, "error": 1}
 @click.command(context_settings={"max_content_width": 110})
 @click.argument("source", metavar="INPUT")
 @click.option("--kind", metavar="WORD", help="What the file's numbers mean: ising, maxcut or beacons.")
+@click.option(
+    "--method", metavar="WORD", help="What bounds: cycles, semidefinite, or auto (by density).  [default: auto]"
+)
 @click.option("--seconds", metavar="NUMBER", help="Stop after so many seconds, compiling apart.  [default: 60]")
 @click.option("--nodes", metavar="NUMBER", help="Stop after so many nodes of the tree; no limit in seconds then.")
 @click.option(
@@ -34,7 +37,7 @@ EXIT_CODES = {"interrupted": 130, "error": 1}
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 @click.option("--quiet", is_flag=True, help="No progress on standard error.")
 def bound_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None:
-    """Bound the lowest energy of INPUT from below: odd-cycle cuts over a linear program, then branch-and-bound.
+    """Bound the lowest energy of INPUT from below: odd-cycle cuts, or semidefinite duals where it is dense.
 
     \b
     patchwalk bound glass.txt --seconds 20

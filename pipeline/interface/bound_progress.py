@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from rich.console import Console
 
-from patchwalk.commands.bounding import Bound
+from patchwalk.commands.bounding import Bound, Search
 from patchwalk.problem.ising import Problem
-from patchwalk.search.branching import BranchAndBound, NodeLine
+from patchwalk.search.branching import NodeLine
 
 COLUMNS = (("node", 7), ("depth", 6), ("node bound", 14), ("bound", 14), ("best", 14), ("gap", 9), ("open", 7),
            ("cuts", 8), ("time", 9), ("outcome", 9))  # fmt: skip
@@ -33,13 +33,13 @@ class NodeNarrator:
     def compiled(self, seconds: float) -> None:
         self._say(f"compiled and prepared in {seconds:.1f} s, which no budget counts")
 
-    def moved(self, search: BranchAndBound) -> None:
+    def moved(self, search: Search) -> None:
         if not self._head:
             self._head = True
             self._say("".join(f"{name:>{width}}" for name, width in COLUMNS))
         if len(search.log) > self._seen:
             self._seen = len(search.log)
-            if search.elapsed >= self._next or not search.tree.open_count:
+            if search.elapsed >= self._next or not search.open_count:
                 self._next = search.elapsed + min(SLOWEST_LINE_SECONDS, 0.05 * search.elapsed)
                 self._say(self._line(search.log[-1]))
 

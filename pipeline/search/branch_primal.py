@@ -18,7 +18,7 @@ from patchwalk.bounds.rounding import rounded
 from patchwalk.clusters.conditioning import condition
 from patchwalk.engine import answers, failed, prepared
 from patchwalk.problem.ising import Problem
-from patchwalk.records import Calls, Improvement
+from patchwalk.records import Calls, Improvement, Round, Snapshot
 from patchwalk.search.sweeps import descend, flip_accepted, metropolis_sweep
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers.compiled import compiled
@@ -66,6 +66,22 @@ class Incumbent:
         self._began = time.perf_counter()
         self._places: I32 = np.full(len(problem), -1, np.int32)
         self._csr = (problem.row_starts, problem.neighbours, problem.couplings)
+
+    def snapshot(self, seconds: float) -> Snapshot:
+        """The configuration and the counts as the run file keeps them."""
+        size = len(self.problem)
+        return Snapshot(
+            round=self.round, calls=self.calls, sweeps=self.sweeps, seconds=seconds, spins=self.spins[None].copy(),
+            local_fields=self.problem.local_fields(self.spins)[None], energies=np.array([self.energy]),
+            best_energy=self.energy, best_spins=self.spins.copy(), elites=np.empty((0, size), np.int8),
+            counts=np.zeros(size, np.int64),
+        )  # fmt: skip
+
+    def round_of(self, number: int, stage: float, calls: tuple[Calls, ...]) -> Round:
+        """The record of a round that is over, with the new best energies since the last one."""
+        improvements = tuple(self.improvements)
+        self.improvements.clear()
+        return Round(number, stage, np.zeros(1), calls, np.array([self.energy]), improvements)
 
     def begin(self) -> None:
         """Start the clock of the improvements."""

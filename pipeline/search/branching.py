@@ -85,7 +85,7 @@ class BranchAndBound:
     """One run. Iterate over :meth:`rounds`; then read ``status``, ``lower_bound``, ``best_spins``, ``certificate()``.
 
     ``status`` is ``proved_optimal`` where the bound reached the best energy (within ``problem.tie_tolerance``), else
-    ``budget`` or ``interrupted``. ``log`` holds a line for each node worked on.
+    ``budget`` or ``interrupted``. ``log`` holds a line for each node worked on, after which ``told`` is called.
     """
 
     def __init__(
@@ -106,6 +106,7 @@ class BranchAndBound:
         self.tree = Tree(problem, self.graph)
         self.status, self.message = "budget", ""
         self.log: list[NodeLine] = []
+        self.told: Callable[[], None] = lambda: None
         self.nodes_done = 0
         self._interrupted = interrupted
         self._current: Node | None = None
@@ -140,6 +141,23 @@ class BranchAndBound:
         if self._current is not None:
             bound = min(bound, self._current.bound)
         return bound
+
+    @property
+    def node_count(self) -> int:
+        """Nodes of the tree."""
+        return len(self.tree.nodes)
+
+    @property
+    def open_count(self) -> int:
+        """How many of them wait."""
+        return self.tree.open_count
+
+    @property
+    def proof(self) -> str:
+        """What proves the bound, in words."""
+        cuts = np.unique(np.concatenate([node.multipliers.cuts for node in self.tree.nodes]))
+        nodes = "1 node" if self.node_count == 1 else f"{self.node_count:,} nodes"
+        return f"{len(cuts):,} odd-cycle cuts with their multipliers over {nodes}"
 
     @property
     def gap(self) -> float:
@@ -195,14 +213,7 @@ class BranchAndBound:
 
     def snapshot(self) -> Snapshot:
         """The state between two rounds, as the run file keeps it."""
-        own = self.incumbent
-        spins, size = own.spins.copy(), len(self.problem)
-        return Snapshot(
-            round=own.round, calls=own.calls, sweeps=own.sweeps, seconds=self.elapsed, spins=spins[None],
-            local_fields=self.problem.local_fields(spins)[None], energies=np.array([own.energy]),
-            best_energy=own.energy, best_spins=spins, elites=np.empty((0, size), np.int8),
-            counts=np.zeros(size, np.int64),
-        )  # fmt: skip
+        return self.incumbent.snapshot(self.elapsed)
 
     def certificate(self) -> Certificate:
         """What proves the bound, as data that :func:`patchwalk.bounds.certificate.check` takes."""
@@ -243,7 +254,7 @@ class BranchAndBound:
     def _round(self, calls: tuple[Calls, ...]) -> Round:
         number = self.incumbent.round
         self.incumbent.round += 1
-        return Round(number, self.stage, np.zeros(1), calls, np.array([self.best_energy]), self.take_improvements())
+        return self.incumbent.round_of(number, self.stage, calls)
 
     def _work_on(self, node: Node) -> Iterator[Round]:
         """Tighten a node's program, and close the node, split it, or leave it open where time is up."""
@@ -366,6 +377,7 @@ class BranchAndBound:
                 self.tree.open_count, len(self.program.rows), self.elapsed, OUTCOMES[node.outcome],
             )
         )  # fmt: skip
+        self.told()
 
 
 def _inherit(child: Node, half: Half | None, tree: Tree) -> None:

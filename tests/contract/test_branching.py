@@ -37,9 +37,9 @@ def run(
 
 
 def random_problem(number: int) -> Problem:
-    """One of 200: with and without fields, integer and real, dense and sparse; n up to 12."""
+    """One of 200: with and without fields, integer and real, dense and sparse; n up to 16."""
     draws = np.random.default_rng(1000 + number)
-    size = int(draws.integers(2, 13))
+    size = int(draws.integers(2, 17))
     heads, tails = np.triu_indices(size, 1)
     kept = draws.random(len(heads)) < (1.0 if number % 2 else 3.0 / size)
     kept[0] = True

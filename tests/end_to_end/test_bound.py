@@ -140,19 +140,21 @@ def test_complaints_come_all_at_once(lattice: Path) -> None:
     command("bound", lattice, "--seconds", "soon", code=2)
 
 
-def test_stopped_early_it_says_budget(tmp_path: Path) -> None:
-    """A dense problem far beyond a few seconds: a true bound, held against the best configuration known."""
-    problem = patchwalk.make("sk", 60, seed=1)
-    found = patchwalk.bound(problem, seconds=0.5, run=tmp_path / "run.sqlite")
+@pytest.mark.parametrize(("size", "method"), [(60, "cycles"), (150, "semidefinite")])
+def test_stopped_early_it_says_budget(size: int, method: str, tmp_path: Path) -> None:
+    """Dense problems far beyond half a second: a true bound, held against the best configuration known."""
+    problem = patchwalk.make("sk", size, seed=1)
+    found = patchwalk.bound(problem, method=method, seconds=0.5, run=tmp_path / "run.sqlite")
     assert found.status == "budget"
     assert found.lower_bound < found.energy
     assert patchwalk.audit(problem, tmp_path / "run.sqlite").status == "confirmed"
 
 
-def test_an_interrupt_keeps_the_bound(tmp_path: Path) -> None:
+@pytest.mark.parametrize("method", ["cycles", "semidefinite"])
+def test_an_interrupt_keeps_the_bound(method: str, tmp_path: Path) -> None:
     path, run = tmp_path / "dense.txt", tmp_path / "run.sqlite"
-    patchwalk.write_problem(patchwalk.make("sk", 70, seed=1), path)
-    words = ["bound", str(path), "--run", str(run), "--seconds", "200", "--json"]
+    patchwalk.write_problem(patchwalk.make("sk", 90, seed=1), path)
+    words = ["bound", str(path), "--run", str(run), "--method", method, "--seconds", "200", "--json"]
     process = subprocess.Popen(
         [sys.executable, "-c", START, *words], stdout=subprocess.PIPE, stderr=subprocess.PIPE, text=True
     )
@@ -169,6 +171,23 @@ def test_an_interrupt_keeps_the_bound(tmp_path: Path) -> None:
     assert result["status"] == "interrupted"
     assert result["lower_bound"] < result["energy"]
     assert command("audit", path, run)["status"] == "confirmed"
+
+
+def test_dense_glasses_are_proved_by_semidefinite_duals(tmp_path: Path) -> None:
+    problem, run = patchwalk.make("sk", 40, seed=1), tmp_path / "run.sqlite"
+    found = patchwalk.bound(problem, run=run)
+    assert found.status == "proved_optimal"
+    assert found.certificate.method == "semidefinite"
+    assert found.calls > 0
+    by_cycles = patchwalk.bound(patchwalk.make("sk", 16, seed=1), method="cycles", run=tmp_path / "two.sqlite")
+    by_duals = patchwalk.bound(patchwalk.make("sk", 16, seed=1), run=tmp_path / "three.sqlite")
+    assert by_cycles.energy == pytest.approx(by_duals.energy, abs=1e-9)
+    assert patchwalk.audit(problem, run).proved_optimal
+    with sqlite3.connect(run) as database:
+        (data,) = database.execute("SELECT data FROM certificate_arrays WHERE name = 'diagonals'").fetchone()
+        raised = np.frombuffer(data) + 1e-3
+        database.execute("UPDATE certificate_arrays SET data = ? WHERE name = 'diagonals'", (raised.tobytes(),))
+    assert patchwalk.audit(problem, run).status == "refuted"
 
 
 def test_for_callers_with_a_configuration_of_their_own() -> None:

@@ -35,7 +35,7 @@ def ground_energy(problem: Problem) -> float:
 def random_problem(number: int) -> Problem:
     """One of 200 small problems: with and without fields, integer and real, dense and sparse."""
     draws = np.random.default_rng(number)
-    size = int(draws.integers(3, 15))
+    size = int(draws.integers(3, 18))
     heads, tails = np.triu_indices(size, 1)
     kept = draws.random(len(heads)) < (1.0 if number % 2 else 3.0 / size)
     kept[0] = True
