@@ -8,6 +8,11 @@ because every cluster may choose its spins alone (Lagrangian decomposition: Guig
 215; for graphical models Wainwright, Jaakkola & Willsky, IEEE Trans. Inf. Theory 51 (2005) 3697; both from memory). The
 shares are found by climbing the smoothed minima -T ln Z_c while T falls. A share is right where clusters agree on the
 mean of every spin and product they have in common.
+
+Where it beats the rest (computed here): on geometric graphs, full of small dense parts, such as beacons. Their gap at
+n = 150, seeds 1 to 3, was 0.04 to 0.07 %, against 2.0 to 3.8 % by odd cycles, 4.6 to 5.0 % by the semidefinite bound
+and 0.4 to 0.5 % with odd cuts on it, which takes five times longer. On lattices and random graphs of low degree odd cycles
+are at least as good, and where all spins are coupled the semidefinite bound is far better.
 """
 
 from __future__ import annotations
@@ -25,7 +30,7 @@ from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import I64
 
 LARGEST = 20
-HOTTEST, COLDEST, COOLING = 0.5, 0.01, 0.55
+HOTTEST, COLDEST, COOLING = 0.5, 0.003, 0.55
 """Temperatures in units of the typical local field: the first, the last, and the factor between rounds."""
 
 
@@ -56,8 +61,8 @@ class ClusterBound:
 def cluster_bound(
     problem: Problem,
     *,
-    cluster_size: int = 9,
-    overlap: int = 9,
+    cluster_size: int = 10,
+    overlap: int = 10,
     steps: int = 30,
     seconds: float = math.inf,
 ) -> ClusterBound:
