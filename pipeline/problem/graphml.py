@@ -42,7 +42,7 @@ def read(path: PathLike, kind: str | None) -> Problem:
     except ProblemError:
         raise
     except (LookupError, ValueError) as error:  # an encoding that does not exist, or that expat cannot use
-        fail(path, document.line, f"not XML that can be read: {error}")
+        fail(path, document.line, f"not XML that can be read: {str(error)[:100]}")
     return document.problem(kind)
 
 

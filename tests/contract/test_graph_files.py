@@ -190,6 +190,7 @@ FAULTS = [
     ("g.graphml", "<html/>", "line 1: the document is 'html'; expected graphml"),
     ("g.graphml", BOMB, "line 1: a document type is not read, for what it may define; remove the DOCTYPE"),
     ("g.graphml", '<?xml version="1.0" encoding="klingon"?><graphml/>', "line 1: not XML that can be read"),
+    ("g.graphml", f'<?xml version="1.0" encoding="{"9" * 5000}"?><graphml/>', "line 1: not XML that can be read"),
     ("g.graphml", "<graphml/>", "there are no nodes"),
     ("g.graphml", XML + "\n<node/></graph></graphml>", "line 5: node without id"),
     ("g.graphml", XML + '\n<node id="a"/></graph></graphml>', "line 5: node 'a' is there already"),
