@@ -67,6 +67,21 @@ def audit(
         raise RunFileError(f"{evidence}: cannot be read as a run file: {error}") from error
 
 
+def stored_run(problem: Problem, path: Path, run: int) -> tuple[I8, Certificate]:
+    """Best configuration and certificate of a run, as they stand in the file: check them before use."""
+    with contextlib.closing(sqlite3.connect(f"file:{path}?mode=ro", uri=True)) as database:
+        (blob,) = database.execute("SELECT spins FROM runs WHERE run = ?", (run,)).fetchone()
+        stored = stored_certificate(database, run)
+        if stored is None:
+            raise RunFileError(f"{path}: run {run} has no certificate")
+        return _unpacked(blob, problem), Certificate(*stored)
+
+
+def _unpacked(blob: bytes, problem: Problem) -> I8:
+    bits = np.unpackbits(np.frombuffer(blob, np.uint8), count=len(problem), bitorder="little")
+    return np.where(bits == 1, -1, 1).astype(np.int8)
+
+
 def _is_run_file(path: Path) -> bool:
     try:
         with path.open("rb") as file:

@@ -8,6 +8,8 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any
 
+from patchwalk.bounds.certificate import Certificate
+from patchwalk.commands.auditing import audit, stored_run
 from patchwalk.commands.tasks import _check_memory, _check_sizes, _default_run_path, _problem_from
 from patchwalk.problem.files import read_start
 from patchwalk.problem.ising import Problem
@@ -19,7 +21,8 @@ from patchwalk.subsolvers.registry import subsolver_from
 
 SETTINGS = {
     "kind": "word", "method": "method", "seconds": "number", "nodes": "whole", "subsolver": "spelling",
-    "cluster_size": "whole", "sweeps": "whole", "seed": "whole", "start": "file", "run": "file", "without": "words",
+    "cluster_size": "whole", "sweeps": "whole", "seed": "whole", "start": "file", "earlier": "file", "run": "file",
+    "without": "words",
 }  # fmt: skip
 SHARED = ("kind", "start")
 """What ``bound`` takes over from a settings TOML, which is written for ``solve``."""
@@ -45,6 +48,7 @@ class BoundTask:
     method: str
     seed: int
     start: I8 | None
+    earlier: Certificate | None
     run_path: Path
     written: dict[str, Any]
 
@@ -78,9 +82,21 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
     )
     method = values.get("method", "auto")
     start = None if values.get("start") is None else read_start(values["start"], problem)
+    earlier = None
+    if values.get("earlier"):
+        start, earlier = _earlier_run(Path(values["earlier"]), problem)
+        method = "cycles"
     run_path = Path(values["run"]) if values.get("run") else _default_run_path(name)
     written = {**values, "cluster_size": size, "seconds": seconds, "without": list(off)}
-    return BoundTask(problem, name, subsolver, plan, method, values.get("seed", 1), start, run_path, written)
+    return BoundTask(problem, name, subsolver, plan, method, values.get("seed", 1), start, earlier, run_path, written)
+
+
+def _earlier_run(path: Path, problem: Problem) -> tuple[I8, Certificate]:
+    """Best configuration and tree of an earlier run on the same problem."""
+    found = audit(problem, path)
+    if found.status != "confirmed" or found.method != "cycles" or found.run is None:
+        raise SettingsError([f"earlier: {path} holds no tree of odd-cycle cuts to go on from: {found.message}"])
+    return stored_run(problem, path, found.run)
 
 
 def default_size(problem: Problem, subsolver: Subsolver) -> int:

@@ -113,8 +113,8 @@ def bound(problem: Problem | str | Path, **settings: Any) -> Bound:
     """A lower bound on the energy of a problem, a problem file or a settings TOML, with its certificate in a run file.
 
     Keywords are the options of ``patchwalk bound``: ``kind, method, seconds, nodes, subsolver, cluster_size, sweeps,
-    seed, start, run, without``. Raises ``SettingsError``, ``ProblemError``, ``SubsolverError`` or ``RunFileError``
-    before any work is done.
+    seed, start, earlier, run, without``. Raises ``SettingsError``, ``ProblemError``, ``SubsolverError`` or
+    ``RunFileError`` before any work is done.
 
     >>> import os, tempfile
     >>> ring = Problem.from_arrays([0, 1, 2, 3, 4], [1, 2, 3, 4, 0], [1.0] * 5, kind="maxcut")
@@ -178,6 +178,8 @@ def carry_out(task: BoundTask, watcher: Watcher) -> Bound:
         with listening(watcher.stopping) as interrupted:
             kind = search_for(problem, task.method)
             search = kind(problem, task.subsolver, task.plan, task.seed, task.start, interrupted)
+            if task.earlier is not None and isinstance(search, BranchAndBound):
+                search.take_up(task.earlier)
             search.told = lambda: watcher.moved(search)
             watcher.compiling()
             began = time.perf_counter()

@@ -30,6 +30,9 @@ EXIT_CODES = {"interrupted": 130, "error": 1}
 @click.option("--sweeps", metavar="NUMBER", help="Sweeps of the first cooling, 0 for none at all.  [default: 2000]")
 @click.option("--seed", metavar="NUMBER", help="The seed of the run.  [default: 1]")
 @click.option("--start", metavar="FILE", help="A configuration to begin with.")
+@click.option(
+    "--earlier", metavar="RUN", help="Go on from the tree and the best configuration of an earlier run of this command."
+)
 @click.option("--run", metavar="FILE", help="Where the run file goes: calls, node log and certificate.")
 @click.option(
     "--without", metavar="WORDS", help="Switch parts off to see what they are worth: cuts, heuristic, branching."

@@ -64,6 +64,32 @@ class Tree:
     def __post_init__(self) -> None:
         self.levels = energy_levels(self.problem)
 
+    @classmethod
+    def taken_up(cls, problem: Problem, graph: CutGraph, certificate: Certificate) -> Tree:
+        """The tree behind a certificate of cycles, to go on with; its cuts are then the pool, in the same order.
+
+        Raises ``ValueError`` for a certificate of another kind or of another problem.
+        """
+        given = certificate.arrays
+        pairs = np.stack([graph.heads, graph.tails], axis=1)
+        if certificate.method != "cycles" or certificate.fingerprint != problem.fingerprint:
+            raise ValueError("only a tree of odd-cycle cuts on the same problem can be taken up again")
+        if not np.array_equal(given["pairs"], pairs):
+            raise ValueError("the certificate numbers its edges in another order")
+        tree = cls(problem, graph)
+        for number, parent in enumerate(given["parents"].tolist()):
+            own = slice(*given["dual_starts"][number : number + 2])
+            multipliers = Multipliers(given["dual_cuts"][own].astype(np.int32), given["duals"][own].copy())
+            above = None if parent < 0 else tree.nodes[parent]
+            edge, side = int(given["split_edges"][number]), int(given["split_sides"][number])
+            node = tree.add(above, edge, side, tree.rounded_up(float(given["node_bounds"][number])), multipliers)
+            node.outcome = int(given["outcomes"][number])
+            if node.outcome == EMPTY:
+                node.bound = math.inf
+            elif node.outcome == BOUNDED:
+                tree.open(node)
+        return tree
+
     def rounded_up(self, bound: float) -> float:
         """A true bound rounded up to the next reachable energy."""
         return rounded_up(self.problem, bound, self.levels)

@@ -20,6 +20,7 @@ import numpy as np
 
 from patchwalk.bounds.certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, Certificate, settled_energy
 from patchwalk.bounds.cut_graph import cut_graph
+from patchwalk.bounds.cuts import Cuts
 from patchwalk.bounds.cycles import CycleProgram, Multipliers, tightening
 from patchwalk.bounds.energy_step import lower_energy
 from patchwalk.engine import release
@@ -171,6 +172,19 @@ class BranchAndBound:
             return min(1.0, self.nodes_done / self.plan.nodes)
         return min(1.0, self.elapsed / self.plan.seconds) if self.plan.seconds else 0.0
 
+    def take_up(self, certificate: Certificate) -> None:
+        """Go on from the tree of an earlier run, whose best configuration is to be given as ``start``.
+
+        Raises ``ValueError`` for a certificate of another kind or of another problem.
+        """
+        self.tree = Tree.taken_up(self.problem, self.graph, certificate)
+        self._chooser = PairChooser(self.program, self.tree)
+        given = certificate.arrays
+        self.program.add(Cuts(given["cut_starts"], given["cut_edges"], given["cut_odd"]))
+        self._root_rows = len(self.program.rows)
+        if len(self.tree.nodes) > 1:  # the program's first point, for roundings
+            self.program.solve(interior=False, seconds=self._seconds_left())
+
     def prepare(self) -> None:
         """Compile everything and let the subsolver calibrate, before the clock starts."""
         self.incumbent.prepare()
@@ -191,8 +205,9 @@ class BranchAndBound:
                 self.incumbent.cool(self.plan.sweeps, self._stopped)
                 yield self._round(())
             program = self.program
-            root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
-            self.tree.open(root)
+            if not self.tree.nodes:
+                root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
+                self.tree.open(root)
             while self.tree.open_count and not self._ended():
                 self._current = self.tree.next()
                 yield from self._work_on(self._current)

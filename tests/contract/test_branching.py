@@ -223,3 +223,26 @@ def test_a_start_is_never_lost() -> None:
     for _ in again.rounds():
         pass
     assert again.best_energy == lowest
+
+
+@pytest.mark.parametrize("nodes", [1, 2, 4])
+def test_a_stopped_run_is_taken_up(branching_problem: Problem, nodes: int) -> None:
+    first, _ = run(branching_problem, nodes=nodes)
+    second = BranchAndBound(branching_problem, None, BranchPlan(), start=first.best_spins)
+    second.take_up(first.certificate())
+    assert second.node_count == first.node_count
+    assert second.lower_bound == first.lower_bound
+    for _ in second.rounds():
+        pass
+    assert second.status == "proved_optimal"
+    assert second.best_energy == ground_energy(branching_problem)
+    assert check(branching_problem, second.certificate()) == second.best_energy
+    whole, _ = run(branching_problem)
+    assert second.nodes_done < whole.nodes_done + 3  # what was done is not done again
+
+
+def test_a_tree_of_another_problem_is_not_taken_up(branching_problem: Problem) -> None:
+    first, _ = run(branching_problem, nodes=1)
+    other = BranchAndBound(make("sk", 9, seed=1), None, BranchPlan())
+    with pytest.raises(ValueError, match="same problem"):
+        other.take_up(first.certificate())

@@ -13,11 +13,13 @@ from collections.abc import Callable
 from pathlib import Path
 from typing import Any
 
+import networkx as nx
 import numpy as np
 import pytest
 
 import patchwalk
 from patchwalk.commands.bounding import bounds_for
+from patchwalk.evidence.runfile import RunFileError
 from patchwalk.settings import SettingsError
 
 MINUTES = 300  # no run here takes a tenth of it, compiling included; beyond it something hangs
@@ -171,6 +173,20 @@ def test_an_interrupt_keeps_the_bound(method: str, tmp_path: Path) -> None:
     assert result["status"] == "interrupted"
     assert result["lower_bound"] < result["energy"]
     assert command("audit", path, run)["status"] == "confirmed"
+
+
+def test_a_stopped_run_is_gone_on_with(tmp_path: Path) -> None:
+    stopped, proved = tmp_path / "one.sqlite", tmp_path / "two.sqlite"
+    problem = patchwalk.Problem.from_networkx(nx.complete_graph(10))
+    first = patchwalk.bound(problem, method="cycles", nodes=2, run=stopped)
+    assert first.status == "budget"
+    second = patchwalk.bound(problem, earlier=stopped, run=proved)
+    assert second.status == "proved_optimal"
+    assert second.objective == 25.0  # floor(n^2 / 4)
+    assert second.nodes > first.nodes
+    assert patchwalk.audit(problem, proved).proved_optimal
+    with pytest.raises(RunFileError, match="another problem"):
+        patchwalk.bound(patchwalk.make("sk", 20, seed=1), earlier=stopped, run=tmp_path / "three.sqlite")
 
 
 def test_dense_glasses_are_proved_by_semidefinite_duals(tmp_path: Path) -> None:
