@@ -11,8 +11,8 @@ mean of every spin and product they have in common.
 
 Where it beats the rest (computed here): on geometric graphs, full of small dense parts, such as beacons. Their gap at
 n = 150, seeds 1 to 3, was 0.04 to 0.07 %, against 2.0 to 3.8 % by odd cycles, 4.6 to 5.0 % by the semidefinite bound
-and 0.4 to 0.5 % with odd cuts on it, which takes five times longer. On lattices and random graphs of low degree odd cycles
-are at least as good, and where all spins are coupled the semidefinite bound is far better.
+and 0.4 to 0.5 % with odd cuts on it, which takes five times longer. On lattices and random graphs of low degree odd
+cycles are at least as good, and where all spins are coupled the semidefinite bound is far better.
 """
 
 from __future__ import annotations
