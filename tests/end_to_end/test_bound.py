@@ -20,7 +20,7 @@ import pytest
 import patchwalk
 from patchwalk.commands.bounding import bounds_for
 from patchwalk.evidence.runfile import RunFileError
-from patchwalk.settings import SettingsError
+from patchwalk.settings_checks import SettingsError
 
 MINUTES = 300  # no run here takes a tenth of it, compiling included; beyond it something hangs
 START = "from patchwalk.interface.cli import main; main()"
