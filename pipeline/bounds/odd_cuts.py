@@ -100,14 +100,17 @@ def smoothed_dual(
 
 
 @compiled
-def triangles_broken(gram: F64, threshold: float) -> tuple[I32, I8, F64]:
+def triangles_broken(gram: F64, threshold: float, most: int) -> tuple[I32, I8, F64]:
     """Triangles with 1 - b^T X b above ``threshold``: members (T, 5), signs (T, 5), and by how much (T,).
 
-    Of the four sign patterns of a triple at most one can be broken.
+    Of the four sign patterns of a triple at most one can be broken. The threshold is doubled until no more than
+    ``most`` are left, so that they fit into memory.
     """
     size, count = len(gram), 0
     members, signs, excess = np.zeros((0, WIDEST), np.int32), np.zeros((0, WIDEST), np.int8), np.zeros(0)
-    for writing in range(2):
+    writing, done = False, False
+    while not done:
+        done = writing
         if writing:
             members, signs = np.zeros((count, WIDEST), np.int32), np.zeros((count, WIDEST), np.int8)
             excess, count = np.zeros(count), 0
@@ -128,6 +131,10 @@ def triangles_broken(gram: F64, threshold: float) -> tuple[I32, I8, F64]:
                             signs[count, 0], signs[count, 1], signs[count, 2] = 1, sign_j, sign_k
                             excess[count] = -2.0 - 2.0 * lowest
                         count += 1
+        if not done:
+            writing = count <= most
+            if not writing:
+                threshold, count = 2.0 * threshold, 0
     return members, signs, excess
 
 

@@ -25,6 +25,9 @@ MOST_GROUPS = 2000
 NEW_CUTS = 5
 """New cuts of each width a round, per group."""
 
+MOST_FOUND = 1_000_000
+"""Violated triangles looked at, 33 bytes each."""
+
 SMOOTHEST, SHARPEST, SHARPENING = 2.5e-2, 3e-4, 0.6
 """Smoothing in units of the mean |u|: the first, the last, and the factor between rounds."""
 
@@ -122,7 +125,7 @@ def with_new_cuts(dual: Dual, gram: F64) -> Dual:
     kept = dual.weights > 1e-7 * float(np.abs(dual.diagonal).mean())
     members, signs = dual.members[kept], dual.signs[kept]
     limit = NEW_CUTS * size
-    found = [_strongest(*triangles_broken(gram, 0.01), 4 * limit)]
+    found = [_strongest(*triangles_broken(gram, 0.01, MOST_FOUND), 4 * limit)]
     narrow = signs[:, 3] == 0
     if np.any(narrow):
         wide, wide_signs, excess = widened(gram, members[narrow], signs[narrow])

@@ -277,7 +277,7 @@ def test_cuts_hold_for_all_configurations_and_are_violated() -> None:
     problem = make("sk", 10, seed=1)
     bound = semidefinite_bound(problem)
     gram = bound.vectors @ bound.vectors.T
-    members, signs, excess = triangles_broken(gram, 0.0)
+    members, signs, excess = triangles_broken(gram, 0.0, 1000)
     wide, wide_signs, wide_excess = widened(gram, members, signs)
     configurations = 1.0 - 2.0 * ((np.arange(1024)[:, None] >> np.arange(10)) & 1)
     for some, some_signs, claimed in ((members, signs, excess), (wide, wide_signs, wide_excess)):
@@ -291,6 +291,10 @@ def test_cuts_hold_for_all_configurations_and_are_violated() -> None:
     patterns = [(1, 1, 1), (1, -1, -1), (-1, 1, -1), (-1, -1, 1)]
     broken = sum(a * gram[i, j] + b * gram[i, k] + c * gram[j, k] < -1 for i, j, k in triples for a, b, c in patterns)
     assert len(members) == broken
+    few = triangles_broken(gram, 0.01, broken // 2)[2]
+    assert len(few) <= broken // 2
+    assert np.all(np.isin(np.sort(few), excess))
+    assert few.max() == excess.max()
 
 
 def test_the_slope_of_the_dual_is_its_derivative() -> None:
