@@ -61,6 +61,10 @@ def checked_tree(problem: Problem, arrays: Arrays) -> float:
     parents = arrays["parents"]
     if len(parents) == 0 or parents[0] != -1:
         raise CertificateError("the tree has no root; the first node must have parent -1")
+    lengths = {"firsts": 0, "seconds": 0, "signs": 0, "diagonal_starts": 1, "cut_starts": 1}
+    for name, more in lengths.items():
+        if len(arrays[name]) != len(parents) + more:
+            raise CertificateError(f"{name} has {len(arrays[name])} entries for {len(parents)} nodes")
     children = _children(parents)
     groups = _groups(problem, arrays, children)
     bounds = [

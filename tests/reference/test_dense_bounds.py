@@ -241,7 +241,11 @@ def test_a_tree_with_a_node_missing_or_a_bound_stretched_is_refused() -> None:
     problem = make("sk", 40, seed=2, fields=True)
     arrays = branch_dense(problem).arrays
     checked_tree(problem, arrays)
-    shorter = {name: arrays[name][:-1] for name in ("parents", "firsts", "seconds", "signs")}
+    names = ("parents", "firsts", "seconds", "signs", "diagonal_starts", "cut_starts")
+    shorter = {name: arrays[name][:-1] for name in names}
+    for name in names[1:]:
+        with pytest.raises(CertificateError, match=name):
+            checked_tree(problem, {**arrays, name: arrays[name][:-1]})
     with pytest.raises(CertificateError, match="missing"):
         checked_tree(problem, {**arrays, **shorter})
     with pytest.raises(CertificateError, match="missing"):
