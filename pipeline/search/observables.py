@@ -44,9 +44,9 @@ class Observables:
         magnetisations = self.magnetisations[: self.measured, level]
         return Level(
             temperature=temperature,
-            energy=_over_copies(energies),
-            magnetisation=_over_copies(magnetisations),
-            absolute_magnetisation=_over_copies(np.abs(magnetisations)),
+            energy=mean_of(energies),
+            magnetisation=mean_of(magnetisations),
+            absolute_magnetisation=mean_of(np.abs(magnetisations)),
             overlap=None if energies.shape[1] < 2 else mean_of(self.overlaps[: self.measured, level]),
             absolute_overlap=None if energies.shape[1] < 2 else mean_of(np.abs(self.overlaps[: self.measured, level])),
             heat_capacity=_heat_capacity(energies, temperature, size),
@@ -88,22 +88,5 @@ class Level:
         }  # fmt: skip
 
 
-def _over_copies(series: F64) -> Estimate:
-    """The mean over independent copies (N, C), whose errors add up as squares."""
-    own = [mean_of(series[:, copy]) for copy in range(series.shape[1])]
-    return _combined(own)
-
-
 def _heat_capacity(energies: F64, temperature: float, size: int) -> Estimate:
-    def capacity(series: F64) -> float:
-        return float(series.var()) / (size * temperature * temperature)
-
-    return _combined([function_of(energies[:, copy], capacity) for copy in range(energies.shape[1])])
-
-
-def _combined(own: list[Estimate]) -> Estimate:
-    count = len(own)
-    value = sum(one.value for one in own) / count
-    error = float(np.sqrt(sum(one.error**2 for one in own))) / count
-    total = sum(one.n for one in own)
-    return Estimate(value, error, total / sum(one.effective for one in own), total)
+    return function_of(energies, lambda series: float(series.var()) / (size * temperature * temperature))
