@@ -20,6 +20,10 @@ Item = TypeVar("Item")
 Result = TypeVar("Result")
 
 
+PATIENCE_SECONDS = 10.0
+"""So long a Dask cluster may take to answer."""
+
+
 class WorkersError(RuntimeError):
     """Workers that cannot be had, must not be used, or are lost; the message says which and what to do."""
 
@@ -100,9 +104,15 @@ class DaskWorkers:
         try:
             if scheduler is None:
                 self._cluster = library.LocalCluster(
-                    n_workers=count, threads_per_worker=1, processes=True, dashboard_address=None, silence_logs=50
+                    n_workers=count,
+                    threads_per_worker=1,
+                    processes=True,
+                    dashboard_address="127.0.0.1:0",
+                    silence_logs=50,
                 )
-            self._client: Any = library.Client(self._cluster or scheduler, timeout="10s", set_as_default=False)
+            self._client: Any = library.Client(
+                self._cluster or scheduler, timeout=PATIENCE_SECONDS, set_as_default=False
+            )
             self._client.wait_for_workers(1, timeout=30)
         except Exception as error:
             self.close()
