@@ -100,3 +100,28 @@ def test_a_wrong_answer_is_a_failed_call_that_changes_nothing(wrong: object, wor
     _, change, accepted = judge(batch, proposals)
     assert not accepted.any()
     assert not change.any()
+
+
+@pytest.mark.parametrize(("rise", "taken"), [(-1.0, True), (0.0, True), (0.7, True), (0.8, True), (0.9, False)])
+def test_a_threshold_takes_rises_up_to_the_temperature(rise: float, taken: bool) -> None:
+    batch = one_field(50, -rise / 2, 0.8)
+    _, change, accepted = judge(batch, answer(batch, [[-1, 1]]), "threshold")
+    assert np.all(change == rise)
+    assert np.all(accepted == taken)
+
+
+@pytest.mark.parametrize(("rise", "taken"), [(-1.0, True), (0.0, True), (1e-6, False)])
+def test_greed_takes_no_rise_however_hot(rise: float, taken: bool) -> None:
+    batch = one_field(50, -rise / 2, 100.0)
+    _, _, accepted = judge(batch, answer(batch, [[-1, 1]]), "greedy")
+    assert np.all(accepted == taken)
+
+
+def test_hastings_takes_a_rise_with_its_ratio() -> None:
+    """exp(-1/0.8 + 0.5), and never a call whose ratio is not known."""
+    batch = one_field(20_000, -0.5, 0.8)
+    ratio = np.where(np.arange(20_000) % 2, 0.5, np.nan)
+    shots = np.tile(np.array([[-1, 1]], np.int8), (20_000, 1, 1))
+    _, _, accepted = judge(batch, Proposals(shots, Work(), *all_well(20_000), log_ratio=ratio), "hastings")
+    assert not accepted[::2].any()
+    assert binomtest(int(accepted.sum()), 10_000, np.exp(-1 / 0.8 + 0.5)).pvalue > 1e-6
