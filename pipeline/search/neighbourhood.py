@@ -150,7 +150,7 @@ class NeighbourhoodSearch:
         """Compile the loop's kernels on a small ring."""
         caller = rehearsing(self.caller)
         ring, counts = Replicas.random(caller.problem, 1, 1), np.zeros(len(caller.problem), np.int64)
-        for cut in caller.cuts(self.rules.rules[0], ring, 0, 1, counts, ring.spins):
+        for cut in caller.cuts(self.plan.rules.rules[0], ring, 0, 1, counts, ring.spins):
             batch = caller.question(cut, ring, np.zeros(1))
             caller.settle(cut, Answered(0, batch, failed(batch, "rehearsal"), 0.0), "rehearsal", self.subsolver, ring)
         descend(*_graph(caller.problem), ring.spins[0], ring.local_fields[0], 0.0)
