@@ -18,6 +18,8 @@ from patchwalk.subsolvers.contract import Subsolver
 DEFAULT_SECONDS = 60.0
 DEFAULT_CLUSTER_SIZE = 12
 DEFAULT_RUNGS = 16
+DEFAULT_SWEEPS = 10
+LADDER_LIMIT = 20_000
 
 
 def _seed_list(value: object) -> object:
@@ -125,7 +127,9 @@ class SearchSettings(BaseModel):
     clusters_per_round: int = Field(
         64, ge=1, le=65536, description="At most this many clusters a round, no two of which touch."
     )
-    sweeps: int = Field(2, ge=0, description="Metropolis sweeps of the whole problem after each round; 0 for none.")
+    sweeps: int = Field(
+        DEFAULT_SWEEPS, ge=0, description="Metropolis sweeps of the whole problem after each round; 0 for none."
+    )
     start: FileName | None = Field(
         None, description="A file with a start configuration: +1 and -1 in the input's order, or what --json printed."
     )
@@ -180,10 +184,11 @@ class SolveSettings(SearchSettings):
         None, ge=1, le=4096,
         description=f"Configurations searched side by side; 1, and {DEFAULT_RUNGS} on a ladder.",
     )  # fmt: skip
-    tempering: Literal["cooling", "adaptive", "ladder"] = Field(
-        "cooling",
-        description="How hot the replicas are: cooling (geometric), adaptive (slower where the energy depends on "
-        "temperature most) or ladder (a temperature each, traded between neighbours).",
+    tempering: Literal["ladder", "cooling", "adaptive"] | None = Field(
+        None,
+        description="How hot the replicas are: ladder (a temperature each, traded between neighbours), cooling "
+        "(geometric) or adaptive (slower where the energy depends on temperature most). Left out: ladder, and cooling "
+        f"for more than {LADDER_LIMIT:,} spins or where coolings are given.",
     )
     acceptance: Literal["metropolis", "threshold", "greedy"] = Field(
         "metropolis",

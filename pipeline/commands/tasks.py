@@ -22,7 +22,14 @@ from patchwalk.search.ladder import Ladder
 from patchwalk.search.neighbourhood import Plan
 from patchwalk.search.sampling import SamplingPlan
 from patchwalk.search.temperature import AdaptiveCooling, GeometricCooling, Temperatures
-from patchwalk.settings import DEFAULT_CLUSTER_SIZE, DEFAULT_RUNGS, SamplingSettings, SearchSettings, SolveSettings
+from patchwalk.settings import (
+    DEFAULT_CLUSTER_SIZE,
+    DEFAULT_RUNGS,
+    LADDER_LIMIT,
+    SamplingSettings,
+    SearchSettings,
+    SolveSettings,
+)
 from patchwalk.settings_checks import Model, SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import DENSE_LIMIT, I8, ClusterBatch, Edges, Subsolver
 from patchwalk.subsolvers.registry import SubsolverError
@@ -61,7 +68,17 @@ class Task(Errand[SolveSettings]):
         """How many configurations are searched side by side."""
         if self.settings.replicas is not None:
             return self.settings.replicas
-        return DEFAULT_RUNGS if self.settings.tempering == "ladder" else 1
+        return DEFAULT_RUNGS if self.tempering == "ladder" else 1
+
+    @property
+    def tempering(self) -> str:
+        """How hot the replicas are: as asked for, else a ladder where it pays and is possible."""
+        settings = self.settings
+        if settings.tempering is not None:
+            return settings.tempering
+        small = 2 <= len(self.problem) <= LADDER_LIMIT and self.problem.field_scale > 0.0
+        fit = settings.replicas != 1 and settings.cold > 0.0 and "coolings" not in settings.model_fields_set
+        return "ladder" if small and fit else "cooling"
 
     def plan_for(self, seed: int) -> Plan:
         """The settings as the search understands them, for the run with this seed."""
@@ -85,11 +102,11 @@ class Task(Errand[SolveSettings]):
 
     def _temperatures(self, seed: int) -> Temperatures:
         settings, scale = self.settings, self.problem.field_scale
-        if settings.tempering == "ladder" and scale > 0.0:
+        if self.tempering == "ladder" and scale > 0.0:
             rungs = scale * np.geomspace(settings.hot, settings.cold, self.replicas)
             return Ladder(rungs, seed, adapting=1.0)
         cooling = GeometricCooling(settings.hot, settings.cold, scale, settings.coolings, self.replicas)
-        return AdaptiveCooling(cooling) if settings.tempering == "adaptive" else cooling
+        return AdaptiveCooling(cooling) if self.tempering == "adaptive" else cooling
 
 
 @dataclass(frozen=True, eq=False)

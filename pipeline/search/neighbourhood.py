@@ -102,7 +102,7 @@ class NeighbourhoodSearch:
         self.failures = Failures()
         self.replicas = Replicas.random(problem, plan.replicas, seed)
         if start is not None:
-            self.replicas.put(0, start)
+            self.replicas.put(plan.replicas - 1, start)  # the coldest one, where temperatures differ
         self.caller = Caller(problem, plan.policy, plan.cluster_size, plan.acceptance, seed, self.workers)
         self.carrying = Carrying(problem, seed, self.workers)
         self.elites = Elites.none_yet(len(problem), plan.keep, plan.distance, not np.any(problem.fields))

@@ -106,6 +106,16 @@ def test_twenty_kills_change_no_bit(tmp_path: Path) -> None:
     assert last_state(tmp_path / "broken.sqlite") == last_state(tmp_path / "straight.sqlite")
 
 
+def test_defaults_stay_what_they_were(tmp_path: Path) -> None:
+    """What a run chose by itself is written down, so that its resume does not choose anew."""
+    straight = solve(GLASS, calls=300, cluster_size=6, run=tmp_path / "straight.sqlite")
+    run = broken_off(tmp_path, GLASS, calls=300, cluster_size=6)
+    with closing(sqlite3.connect(run)) as database:
+        settings = json.loads(database.execute("SELECT settings FROM runs").fetchone()[0])
+    assert (settings["tempering"], settings["replicas"]) == ("ladder", 16)
+    assert resume(run).spins.tobytes() == straight.spins.tobytes()
+
+
 def test_an_interrupted_run_goes_on_to_the_same_bits(tmp_path: Path) -> None:
     write_problem(GLASS, tmp_path / "glass.txt")
     solve(tmp_path / "glass.txt", **SETTINGS, run=tmp_path / "straight.sqlite")
@@ -177,7 +187,7 @@ def test_kept_answers_come_back_to_the_last_bit(tmp_path: Path) -> None:
     file.close()
 
 
-def broken_off(tmp_path: Path, source: Path, **settings: Any) -> Path:
+def broken_off(tmp_path: Path, source: Path | Problem, **settings: Any) -> Path:
     """A run file whose run has a checkpoint and no end."""
     run = tmp_path / "run.sqlite"
     solve(source, **settings, run=run)
