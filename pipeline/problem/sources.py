@@ -265,4 +265,4 @@ def open_source(path: PathLike, lines: Lines, is_comment: Callable[[str], bool],
         key, _, value = text.strip().lstrip(f"{marks} \t").partition("=")
         if key.strip() in SETTINGS:
             settings[key.strip()] = value.strip(), number
-    fail(path, None, "the file is empty, or holds nothing but comments")
+    fail(path, None, "the file is empty, or holds nothing but comments; an edge list begins with a line 'n m'")
