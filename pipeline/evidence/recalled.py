@@ -7,7 +7,7 @@ bit. Calls that have no row of their own (see ``tallies``) cannot be recalled.
 from __future__ import annotations
 
 import sqlite3
-from collections.abc import Iterator
+from collections.abc import Container, Iterator
 from dataclasses import dataclass
 from typing import Any
 
@@ -57,13 +57,20 @@ class RecalledCalls:
         return len(self.changes)
 
 
-def recalled_calls(file: StoredFile, run: int, problem: Problem) -> Iterator[RecalledCalls]:
-    """All calls of a run that have rows, in pieces of at most 4096, by subsolver and size."""
+def recalled_calls(
+    file: StoredFile, run: int, problem: Problem, wanted: Container[tuple[int, int, int]] | None = None
+) -> Iterator[RecalledCalls]:
+    """The calls of a run that have rows, in pieces of at most 4096, by subsolver and size.
+
+    All of them, or those whose (round, replica, place) are ``wanted``.
+    """
     kinds = file.rows("SELECT DISTINCT subsolver, k FROM calls WHERE run = ? ORDER BY subsolver, k", (run,))
     for kind in list(kinds):
         query = "SELECT * FROM calls WHERE run = ? AND subsolver = ? AND k = ? ORDER BY round, replica, place"
         piece: list[sqlite3.Row] = []
         for row in file.rows(query, (run, kind["subsolver"], kind["k"])):
+            if wanted is not None and (row["round"], row["replica"], row["place"]) not in wanted:
+                continue
             piece.append(row)
             if len(piece) == ROWS_AT_ONCE:
                 yield _recalled(piece, problem)

@@ -32,3 +32,16 @@ def test_asked_again_the_answers_are_the_same(tmp_path: Path, size: int) -> None
         before, after = calls.batch.spins[0].astype(float), calls.proposals[0].astype(float)
         change = calls.batch.fields[0] @ (after - before) + 0.5 * (after @ inside @ after - before @ inside @ before)
         assert calls.changes[0] == pytest.approx(change, abs=1e-9)
+
+
+def test_only_the_calls_wanted_come_back(tmp_path: Path) -> None:
+    glass = make("lattice2d", 6, seed=3)
+    solution = solve(glass, subsolver="uniform", cluster_size=4, calls=30, record="all", run=tmp_path / "run.sqlite")
+    with stored_file(solution.run_path) as file:
+        everything = next(recalled_calls(file, 1, file.problem(glass.fingerprint)))
+        names = list(
+            zip(everything.rounds.tolist(), everything.replicas.tolist(), everything.places.tolist(), strict=True)
+        )
+        (piece,) = recalled_calls(file, 1, file.problem(glass.fingerprint), set(names[7:9]))
+    assert len(piece) == 2
+    assert np.array_equal(piece.batch.seeds, everything.batch.seeds[7:9])
