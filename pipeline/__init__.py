@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from patchwalk.commands.auditing import audit
     from patchwalk.commands.bounding import bound
     from patchwalk.commands.forecasting import forecast
+    from patchwalk.commands.replaying import replay
     from patchwalk.commands.resuming import resume
     from patchwalk.commands.sampling import sample
     from patchwalk.commands.solving import Solution, solve
@@ -29,6 +30,7 @@ _HOMES = {
     "audit": "patchwalk.commands.auditing",
     "bound": "patchwalk.commands.bounding",
     "make": "patchwalk.problem.families",
+    "replay": "patchwalk.commands.replaying",
     "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
     "sample": "patchwalk.commands.sampling",
@@ -46,6 +48,7 @@ __all__ = [
     "forecast",
     "make",
     "read_problem",
+    "replay",
     "resume",
     "sample",
     "solve",

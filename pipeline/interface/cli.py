@@ -17,6 +17,7 @@ COMMANDS = {
         "patchwalk.interface.sample_options:sample_command",
         "Averages over the Boltzmann law, with error bars.",
     ),
+    "replay": ("patchwalk.interface.replay_options:replay_command", "Run rivals on the very clusters of a run."),
     "forecast": ("patchwalk.interface.forecast_options:forecast_command", "What working on an input will need."),
     "bound": ("patchwalk.interface.bound_options:bound_command", "Bound the energy from below, or prove an optimum."),
     "audit": ("patchwalk.interface.audit_options:audit_command", "Check an answer or a certificate once more."),
