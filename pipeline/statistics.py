@@ -1,4 +1,4 @@
-"""Averages with their errors: of correlated series, of functions of averages.
+"""Averages with their errors: of correlated series, of functions of averages, of whole runs, of counts.
 
 An average without an error bar is no result. Of a correlated series only n / tau values count, tau being the integrated
 autocorrelation time, 1 + 2 sum of the autocorrelations: (1 + a) / (1 - a) for an AR(1) series with coefficient a.
@@ -11,8 +11,9 @@ from collections.abc import Callable
 from dataclasses import dataclass
 
 import numpy as np
+from scipy import special
 
-from patchwalk.subsolvers.contract import F64
+from patchwalk.subsolvers.contract import F64, I64
 
 WINDOW = 6.0
 """The sum of autocorrelations is cut at this many autocorrelation times (Madras & Sokal)."""
@@ -103,3 +104,108 @@ def function_of(series: F64, function: Callable[[F64], float]) -> Estimate:
     without = np.array([function(np.delete(flat, slice(first, last))) for first, last in starts])
     error = float(np.sqrt((blocks - 1) * np.mean((without - without.mean()) ** 2)))
     return Estimate(blocks * plain - (blocks - 1) * float(without.mean()), error, tau, values.size)
+
+
+RESAMPLES = 2000
+"""Bootstrap resamples: the 2.5 % quantile is then known within about half a per cent of probability."""
+
+
+@dataclass(frozen=True)
+class Interval:
+    """A value with a confidence interval at ``level``; ``low`` and ``high`` are nan for fewer than two runs.
+
+    The value is nan where it is undefined and may be infinite where that is an answer.
+    """
+
+    value: float
+    low: float
+    high: float
+    runs: int
+    level: float = 0.95
+
+    @property
+    def known(self) -> bool:
+        """Whether there is an interval at all."""
+        return not (np.isnan(self.low) or np.isnan(self.high))
+
+    @property
+    def above_zero(self) -> bool:
+        """Whether the whole interval lies above zero."""
+        return bool(self.low > 0.0)
+
+    @property
+    def below_zero(self) -> bool:
+        """Whether the whole interval lies below zero."""
+        return bool(self.high < 0.0)
+
+    def __str__(self) -> str:
+        if np.isnan(self.value):
+            return "undefined"
+        return (
+            f"{self.value:.4g} [{self.low:.4g}, {self.high:.4g}]" if self.known else f"{self.value:.4g} [no interval]"
+        )
+
+
+def bootstrap(
+    sums: F64, statistic: Callable[[F64], F64], *, level: float = 0.95, logarithmic: bool = False, seed: int = 1
+) -> Interval:
+    """A statistic of sums over runs, with its interval from resampled runs (Efron, Ann. Stat. 7 (1979) 1).
+
+    ``sums`` f64 (R, C) holds a row for each run; runs all of whose sums are zero say nothing and are left out.
+    ``statistic`` maps column sums (D, C) to values (D,), on the ``logarithmic`` scale if those are ratios.
+
+    Quantiles of so few resampled runs lie too close together. They are moved away from the value by
+    sqrt(R / (R - 1)) t / z, the quantiles of Student's and of the normal law, which for a mean of normal values gives
+    the usual width (a rougher form of Hesterberg's expanded percentiles, Am. Stat. 69 (2015) 371).
+
+    >>> spread = bootstrap(np.array([[1.0, 1.0], [2.0, 1.0], [3.0, 1.0]]), lambda sums: sums[:, 0] / sums[:, 1])
+    >>> spread.value, spread.low < 0.5, spread.high > 3.5
+    (2.0, True, True)
+    """
+    telling = sums[np.any(sums != 0.0, axis=1)]
+    runs = len(telling)
+    value = float(statistic(telling.sum(axis=0, keepdims=True))[0]) if runs else np.nan
+    if runs < 2 or np.isnan(value):
+        return Interval(value, np.nan, np.nan, runs, level)
+    counts = np.random.default_rng(seed).multinomial(runs, np.full(runs, 1.0 / runs), size=RESAMPLES)
+    values = statistic(counts.astype(np.float64) @ telling)
+    values = values[~np.isnan(values)]
+    tail = 0.5 * (1.0 - level)
+    stretch = (runs / (runs - 1)) ** 0.5 * special.stdtrit(runs - 1, 1.0 - tail) / special.ndtri(1.0 - tail)
+    if len(values) < (1.0 - tail) * RESAMPLES:  # too often undefined for an end of the interval to mean anything
+        return Interval(value, np.nan, np.nan, runs, level)
+    ends = float(np.quantile(values, tail, method="lower")), float(np.quantile(values, 1.0 - tail, method="higher"))
+    low, high = (_moved_away(value, end, stretch, logarithmic) for end in ends)
+    return Interval(value, low, high, runs, level)
+
+
+def _moved_away(value: float, end: float, stretch: float, logarithmic: bool) -> float:
+    """The end of an interval ``stretch`` times as far from the value; infinite ends stay."""
+    if not (np.isfinite(value) and np.isfinite(end)) or (logarithmic and min(value, end) <= 0.0):
+        return end
+    return value * (end / value) ** stretch if logarithmic else value + stretch * (end - value)
+
+
+def ratio(sums: F64) -> F64:
+    """The first column over the second (D,), nan where there is nothing to divide by."""
+    return np.divide(sums[:, 0], sums[:, 1], out=np.full(len(sums), np.nan), where=sums[:, 1] != 0.0)
+
+
+def by_run(runs: I64, *columns: F64) -> F64:
+    """Sums (R, C) of the columns f64 (N,) over the rows of each run, ``runs`` i64 (N,) counted from 0."""
+    count = int(runs.max(initial=-1)) + 1
+    return np.stack([np.bincount(runs, column, count) for column in columns], axis=1)
+
+
+def binomial_interval(successes: int, trials: int, level: float = 0.95) -> Interval:
+    """The share of successes with its exact interval (Clopper & Pearson, Biometrika 26 (1934) 404).
+
+    >>> binomial_interval(0, 10).high < 0.31
+    True
+    """
+    if not 0 <= successes <= trials or trials == 0:
+        raise ValueError(f"{successes} successes in {trials} trials; give at least one trial, and no more successes")
+    tail = 0.5 * (1.0 - level)
+    low = 0.0 if successes == 0 else float(special.betaincinv(successes, trials - successes + 1, tail))
+    high = 1.0 if successes == trials else float(special.betaincinv(successes + 1, trials - successes, 1.0 - tail))
+    return Interval(successes / trials, low, high, trials, level)
