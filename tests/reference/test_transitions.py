@@ -1,9 +1,9 @@
 """Two transitions of random problems appear in what ``make`` writes and ``solve`` finds, at small sizes.
 
-Random Max-2-SAT can be satisfied in full below one clause per variable and not above (Coppersmith et al., Random Struct.
-Alg. 24 (2004) 502); random numbers can be split evenly below one bit per number and not above (Borgs, Chayes & Pittel,
-Random Struct. Alg. 19 (2001) 247). Both are sharp only in the limit: far from it on either side, small sizes must agree.
-The problem is one cluster, answered by enumeration, so that what is found is the optimum.
+Random Max-2-SAT can be satisfied in full below one clause per variable and not above (Coppersmith et al., Random
+Struct. Alg. 24 (2004) 502); random numbers can be split evenly below one bit per number and not above (Borgs, Chayes &
+Pittel, Random Struct. Alg. 19 (2001) 247). Both are sharp only in the limit: far from it on either side, small sizes
+must agree. The problem is one cluster, answered by enumeration, so that what is found is the optimum.
 """
 
 from __future__ import annotations
