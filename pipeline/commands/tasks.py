@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import re
+import tempfile
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import datetime
@@ -15,8 +16,9 @@ import numpy as np
 from patchwalk.clusters.mixture import Mixture, mixture_of
 from patchwalk.clusters.policy import Policy, PolicyError, policy_from
 from patchwalk.engine import forecast_of
+from patchwalk.problem.decoding import encoding_of, write_answer
 from patchwalk.problem.files import read_problem, read_start
-from patchwalk.problem.ising import Problem, known_kind
+from patchwalk.problem.ising import Problem, ProblemError, known_kind
 from patchwalk.search.ends import Ends
 from patchwalk.search.ladder import Ladder
 from patchwalk.search.neighbourhood import Plan
@@ -132,7 +134,10 @@ class SamplingTask(Errand[SamplingSettings]):
 
 def task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> Task:
     """What ``solve`` is told, read and checked; nothing is written yet."""
-    return Task(**_read(SolveSettings, source, given, spelled_as))
+    task = Task(**_read(SolveSettings, source, given, spelled_as))
+    if task.settings.answer is not None:
+        _check_answer(task.settings.answer, task.problem)
+    return task
 
 
 def sample_task_from(source: Problem | str | Path, given: dict[str, Any], spelled_as: str = "{}") -> SamplingTask:
@@ -209,6 +214,20 @@ def _check_sizes(size: int, problem: Problem, subsolvers: list[Subsolver]) -> No
                 f"{subsolver.name}: takes clusters of at most {subsolver.max_spins} spins, cluster_size is {size}; "
                 "give a smaller --cluster-size or another --subsolver"
             )
+
+
+def _check_answer(path: Path, problem: Problem) -> None:
+    """Refuse, before anything is searched, a place or a form in which the answer could not be written."""
+    if not path.parent.is_dir():
+        raise SettingsError([f"answer: the folder {path.parent} is not there; make it, or name another file"])
+    if ".csv" not in path.suffixes:
+        return
+    with tempfile.TemporaryDirectory() as folder:
+        try:
+            anything = encoding_of(problem).decode(np.ones(len(problem), np.int8))
+            write_answer(Path(folder) / path.name, problem, anything)
+        except ProblemError as error:
+            raise SettingsError([f"answer: {error}"]) from error
 
 
 def _check_memory(subsolver: Subsolver, size: int) -> None:

@@ -431,9 +431,14 @@ def test_a_share_of_the_rows_changes_nothing_but_the_rows(instances: Path) -> No
 EVERY_SETTING: dict[str, Any] = {
     "kind": "ising", "subsolver": "walk,shots=2,time_in_hops=[0.5, 1.0]", "cluster_size": 5, "rule": "scattered",
     "clusters_per_round": 3, "sweeps": 1, "seconds": 250.0, "calls": 90, "total_sweeps": 400, "target": -500.0,
-    "seed": 7, "record": "all", "hot": 0.8, "cold": 0.2, "coolings": 2, "failures": 9,
+    "seed": 7, "record": "all", "hot": 0.8, "cold": 0.2, "coolings": 2, "failures": 9, "flip_sign": True,
+    "rule_weights": "fixed", "workers": 2, "replicas": 3, "tempering": "adaptive", "acceptance": "threshold",
+    "stall": 5000, "restart_after": 4, "keep": 3, "distance": 5, "mixed_workers": True,
 }  # fmt: skip
-ELSEWHERE = {"start", "run", "seeds"}  # paths, and what cannot stand beside seed: tried on their own
+ELSEWHERE = {
+    "start", "run", "seeds", "answer", "callers", "field_file",  # paths, and what cannot stand beside others: below
+    "engine", "scheduler", "bound",  # test_workers, test_bound
+}  # fmt: skip
 
 
 def test_every_setting_is_tried() -> None:
@@ -446,11 +451,17 @@ def toml_value(value: object) -> str:
     return json.dumps(value)
 
 
+def option(name: str, value: object) -> str:
+    """A setting as it is written on a command line."""
+    dashed = f"--{name.replace('_', '-')}"
+    return dashed if value is True else f"{dashed}={value}"
+
+
 def test_file_command_line_and_python_are_one(instances: Path, tmp_path: Path) -> None:
     glass = instances / "glass.txt"
     lines = [f"{name} = {toml_value(value)}" for name, value in EVERY_SETTING.items()]
     (tmp_path / "all.toml").write_text("\n".join([f"input = {toml_value(str(glass))}", *lines]))
-    options = [f"--{name.replace('_', '-')}={value}" for name, value in EVERY_SETTING.items()]
+    options = [option(name, value) for name, value in EVERY_SETTING.items()]
     by_file, by_options = solved("all.toml", "--run", "1.sqlite"), solved(glass, *options, "--run", "2.sqlite")
     solution = patchwalk.solve(glass, **EVERY_SETTING, run="3.sqlite")
     by_python = json.loads(json.dumps(solution.as_json()))
@@ -461,10 +472,82 @@ def test_file_command_line_and_python_are_one(instances: Path, tmp_path: Path) -
     for settings in stored:
         settings.pop("run")
     assert stored[0] == stored[1] == stored[2]
-    assert {**stored[0], **EVERY_SETTING, "subsolver": stored[0]["subsolver"]} == stored[0]
+    given = {**EVERY_SETTING, "subsolver": stored[0]["subsolver"], "seed": None, "seeds": [EVERY_SETTING["seed"]]}
+    assert {**stored[0], **given} == stored[0]
     assert isinstance(solution.spins, np.ndarray)
     assert solution.spins.dtype == np.int8
     assert solution.run_path == Path("3.sqlite")
+
+
+CALLERS = [
+    {"when": "stage < 0.3", "subsolver": "nothing"},
+    {"when": "pull > 0.5", "subsolver": "walk,shots=2"},
+    {"subsolver": "metropolis,sweeps=2"},
+]
+
+
+def test_callers_are_the_same_in_file_command_line_and_python(instances: Path, tmp_path: Path) -> None:
+    glass, options = instances / "glass.txt", ("--cluster-size", 6, "--calls", 100, "--record", "all")
+    cases = ["\n".join(f"{key} = {toml_value(value)}" for key, value in case.items()) for case in CALLERS]
+    tables = "".join(f"[[callers]]\n{case}\n" for case in cases)
+    (tmp_path / "callers.toml").write_text(f"input = {toml_value(str(glass))}\n{tables}")
+    inline = ", ".join("{" + ", ".join(f"{k} = '{v}'" for k, v in case.items()) + "}" for case in CALLERS)
+    by_file = solved("callers.toml", *options)
+    by_options = solved(glass, "--callers", f"[{inline}]", *options)
+    solution = patchwalk.solve(glass, callers=CALLERS, cluster_size=6, calls=100, record="all")
+    assert bits_of(by_file) == bits_of(by_options) == bits_of(json.loads(json.dumps(solution.as_json())))
+    assert by_file["calls"] + by_file["skipped"] == 100
+    assert 25 <= by_file["skipped"] <= 64
+    asked = {row["subsolver"].split(",")[0] for row in rows_of(by_file["run_path"], "SELECT subsolver FROM calls")}
+    assert asked == {"walk", "metropolis"}
+
+
+def test_the_answer_is_written_in_the_problems_own_terms(instances: Path, tmp_path: Path) -> None:
+    options = {"kind": "maxcut", "calls": 60, "cluster_size": 6}
+    words = [option(name, value) for name, value in options.items()]
+    pairs = instances / "pairs.csv"
+    (tmp_path / "job.toml").write_text(
+        f'input = {toml_value(str(pairs))}\nkind = "maxcut"\ncalls = 60\ncluster_size = 6\nanswer = "file.csv"\n'
+    )
+    by_file, by_options = solved("job.toml"), solved(pairs, *words, "--answer", "option.csv")
+    patchwalk.solve(pairs, **options, answer="python.csv")  # type: ignore[arg-type]
+    texts = {name: (tmp_path / f"{name}.csv").read_text() for name in ("file", "option", "python")}
+    assert len(set(texts.values())) == 1
+    assert by_file["spins"] == by_options["spins"]
+    for ending in ("txt", "json"):
+        solved(pairs, *words, "--answer", f"answer.{ending}")
+    read = json.loads((tmp_path / "answer.json").read_text())
+    assert "cut" in json.dumps(read)
+    names = {name for part in by_file["answer"]["parts"] for name in part}
+    for text in (texts["file"], (tmp_path / "answer.txt").read_text(), (tmp_path / "answer.json").read_text()):
+        assert all(name in text for name in names), "every name of the input stands in the answer"
+
+
+@pytest.mark.parametrize(
+    ("answer", "words"), [("no/such/folder/answer.json", "no/such/folder"), ("answer.csv", "these spins have no names")]
+)
+def test_an_answer_that_cannot_be_written_is_refused_before_the_search(
+    instances: Path, tmp_path: Path, answer: str, words: str
+) -> None:
+    done = patchwalk_command("solve", instances / "tiny.txt", "--cluster-size", 4, "--answer", answer)
+    assert done.returncode == 2
+    assert f"answer: {words}" in done.stderr.replace("the folder ", "")
+    assert not list(tmp_path.iterdir()), "nothing was begun"
+
+
+def test_fields_from_a_file_of_their_own(tmp_path: Path) -> None:
+    (tmp_path / "pairs.csv").write_text("a,b,1\nb,c,2\nc,d,-1\n")
+    (tmp_path / "fields.csv").write_text("a,0.5\nd,-3\n")
+    (tmp_path / "job.toml").write_text(
+        'input = "pairs.csv"\nkind = "ising"\nfield_file = "fields.csv"\ncalls = 30\ncluster_size = 3\nrecord = "all"\n'
+    )
+    options = ("--kind", "ising", "--calls", 30, "--cluster-size", 3, "--record", "all")
+    by_file, by_option = solved("job.toml"), solved("pairs.csv", "--field-file", "fields.csv", *options)
+    by_python = patchwalk.solve(
+        "pairs.csv", kind="ising", field_file="fields.csv", calls=30, cluster_size=3, record="all"
+    )
+    assert bits_of(by_file) == bits_of(by_option) == bits_of(json.loads(json.dumps(by_python.as_json())))
+    assert by_file["energy"] == -1 - 2 - 1 - 3 + 0.5, "a, c and d up, b down: only the field of a is not obeyed"
 
 
 def test_a_problem_made_in_python_is_solved_like_its_file(instances: Path) -> None:
