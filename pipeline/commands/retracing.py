@@ -21,6 +21,7 @@ from pydantic import ValidationError
 from patchwalk.commands.tasks import Task, policy_of
 from patchwalk.cost import priced
 from patchwalk.engine import Answered, answers, prepared
+from patchwalk.evidence.cost_models import work_of
 from patchwalk.evidence.layout import unpacked_rows
 from patchwalk.evidence.stored import StoredFile, StoredRun
 from patchwalk.evidence.sweep_curves import CallName, StateBefore
@@ -30,7 +31,6 @@ from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import F64, WORK_FIELDS, ClusterBatch, Proposals, Subsolver, Work
 from patchwalk.workers import Serial, Workers
 
-COUNTED = {"shots", "amplitude_updates", "spin_updates", "energies", "table_entries"}
 Row = sqlite3.Row
 
 
@@ -53,7 +53,7 @@ def retrace(
 def _task_of(stored: StoredFile, run: StoredRun) -> Task:
     """What there was to do, as the run file tells."""
     place = f"{stored.path}: run {run.number}"
-    if any(name in run.settings for name in ("burn_in", "temperatures", "nodes")):
+    if any(name in run.settings for name in ("burn_in", "command")):
         raise SettingsError([f"{place}: only runs of solve can be gone through again; leave the rival none out"])
     alone = {"workers": None, "scheduler": None, "engine": "threads", "run": stored.path, "bound": None}
     try:
@@ -171,11 +171,7 @@ def _stored_answer(rows: list[Row]) -> Proposals:
 
 
 def _work(rows: list[Row]) -> Work:
-    known = [name for name in WORK_FIELDS if any(row[name] is not None for row in rows)]
-    columns: dict[str, Any] = {
-        name: np.array([row[name] or 0 for row in rows], np.int64 if name in COUNTED else np.float64) for name in known
-    }
-    return Work(**columns)
+    return work_of({name: [row[name] for row in rows] for name in WORK_FIELDS})
 
 
 def _part(answered: Answered, first: int, stop: int) -> Answered:

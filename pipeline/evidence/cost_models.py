@@ -20,7 +20,7 @@ from __future__ import annotations
 import difflib
 import math
 import tomllib
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 from typing import Any, NamedTuple
@@ -34,6 +34,7 @@ from patchwalk.subsolvers.drivers import DRIVERS, heuristic_hopping, hop_scale, 
 
 DEVICE_KEYS = ("load_s", "evolve_s_per_hop", "read_s", "wait_s")
 PRICE_KEYS = ("amplitude_updates", "spin_updates", "energies", "table_entries")
+TIMES = ("evolution_time", "load_s", "evolve_s", "read_s", "wait_s")
 
 
 class Costs(NamedTuple):
@@ -122,6 +123,20 @@ def _nearest(word: str, known: tuple[str, ...]) -> str:
     close = difflib.get_close_matches(word, known, n=1, cutoff=0.5)
     hint = f"; did you mean {close[0]}?" if close else ";"
     return f"{hint} there are: {', '.join(known)}"
+
+
+def work_of(columns: Mapping[str, Sequence[Any]]) -> Work:
+    """Counted work from columns by name, as rows of a run file hold them: NULL counts as 0, a column of NULL as None.
+
+    >>> work_of({"shots": [1, 2], "energies": [None, None]}).energies is None
+    True
+    """
+    known: dict[str, Any] = {
+        name: np.array([value or 0 for value in values], np.float64 if name in TIMES else np.int64)
+        for name, values in columns.items()
+        if any(value is not None for value in values)
+    }
+    return Work(**known)
 
 
 def evolves(work: Work) -> bool:

@@ -35,6 +35,7 @@ NONE = "none"
 """The rival that calls nobody and sweeps instead."""
 
 GROUP_SECONDS = 1.0
+SAMPLE_CALLS = 16
 REPLAY_COLUMNS = 15 + len(WORK_FIELDS)
 INSERT_REPLAY = f"INSERT OR REPLACE INTO replays VALUES ({','.join('?' * REPLAY_COLUMNS)})"
 INSERT_CURVE = "INSERT OR REPLACE INTO sweep_curves VALUES (?,?,?,?,?,?,?,?)"
@@ -95,6 +96,7 @@ class _Replay:
         self.file, self.stored, self.run, self.plan = file, stored, run, plan
         self.workers, self.watcher, self.problem, self.listed = workers, watcher, problem, listed
         rule = run.settings.get("acceptance", "hastings" if "burn_in" in run.settings else "metropolis")
+        self._samples: dict[int, ClusterBatch] = {}
         self.acceptance: AcceptanceRule = rule if rule in get_args(AcceptanceRule) else "metropolis"
 
     def missing(self, rival: str) -> set[CallName]:
@@ -135,7 +137,7 @@ class _Replay:
         subsolver = self.plan.made.get(rival) or subsolver_from(rival)
         sentence = _too_large(subsolver, batch)
         try:
-            ready = subsolver if sentence else prepared(subsolver, batch)
+            ready = subsolver if sentence else prepared(subsolver, self._sample(batch.size))
             bounds = [] if sentence else slice_bounds(ready, batch, self.workers)
         except NotReadyError:
             raise
@@ -151,6 +153,16 @@ class _Replay:
                 yield start, drops
         finally:
             release(ready)
+
+    def _sample(self, size: int) -> ClusterBatch:
+        """The first calls of this size: what rivals get ready on, so that calibration depends on the run alone."""
+        if size not in self._samples:
+            query = (
+                "SELECT round, replica, place FROM calls WHERE run = ? AND k = ? ORDER BY round, replica, place LIMIT ?"
+            )
+            first = {CallName(*row) for row in self.stored.rows(query, (self.run.number, size, SAMPLE_CALLS))}
+            self._samples[size] = next(recalled_calls(self.stored, self.run.number, self.problem, first)).batch
+        return self._samples[size]
 
     def sweep(self, retrace: Retrace) -> None:
         """The rival that calls nobody: curves of sweeps from the states that the run went through."""

@@ -47,7 +47,7 @@ def selection(strata: I64, wanted: int | None, seed: int) -> I64:
 
     A smaller sample of the same calls and seed is part of a larger one.
 
-    >>> selection(np.array([0, 0, 0, 1]), 2, seed=1).size
+    >>> selection(np.array([0, 0, 1, 1]), 2, seed=1).size
     2
     """
     if wanted is None or wanted >= len(strata):

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import sqlite3
+import sys
 from contextlib import closing
 from pathlib import Path
 from typing import Any
@@ -86,6 +87,25 @@ def test_what_is_there_is_left_as_it_is(walked: Path) -> None:
     for rival in before:
         assert kept[rival] <= set(rows(walked, stamp, rival))
     assert {weight for (weight,) in rows(walked, "SELECT weight FROM replays")} == {1.0}
+
+
+def test_neither_workers_nor_pieces_change_a_bit(walked: Path) -> None:
+    """A calibrated rival, too, whether replayed at once or first in part."""
+    copy = walked.with_name("copy.sqlite")
+    copy.write_bytes(walked.read_bytes())
+    rivals = ["walk,hopping=calibrated", "metropolis,sweeps=3", "none"]
+    replay(walked, rivals, workers=2)
+    replay(copy, rivals, workers=1, calls=40, seed=3)
+    replay(copy, rivals, workers=1)
+    query = f"SELECT rival, round, replica, place, {COLUMNS} FROM replays ORDER BY 1, 2, 3, 4"
+    assert rows(walked, query) == rows(copy, query)
+
+
+def test_a_run_without_rows_says_so(tmp_path: Path) -> None:
+    path = solve(make("lattice2d", 5, seed=2), subsolver="uniform", cluster_size=3, calls=3, run=tmp_path / "r.sqlite")
+    replayed = replay(path.run_path, ["tabu", "none"])
+    assert replayed.rivals == ()
+    assert "3 cheap calls have no row" in replayed.notes[0]
 
 
 def test_weights_make_up_for_what_a_sample_leaves_out(walked: Path) -> None:
@@ -216,6 +236,19 @@ def test_a_sampling_run_is_replayed_but_not_swept(tmp_path: Path) -> None:
     assert replay(path, ["uniform"]).rivals[0].exact == 1.0  # symmetric, so that its chance of acceptance is known
     with pytest.raises(SettingsError, match="only runs of solve"):
         replay(path, ["none"])
+
+
+def test_an_external_backend_is_asked_again(tmp_path: Path) -> None:
+    template = Path(__file__).resolve().parents[2] / "configs" / "device-template.py"
+    name = f'external,command="{sys.executable} {template}"'
+    glass = make("lattice2d", 5, seed=2)
+    path = solve(glass, subsolver=name, cluster_size=4, calls=6, record="all", run=tmp_path / "run.sqlite").run_path
+    replayed = replay(path, ["none"], repetitions=2)
+    own = replayed.rivals[0]
+    assert own.own
+    assert own.calls == 6
+    assert own.failed == 0
+    assert own.exact == 0.0
 
 
 def test_python_subsolvers_may_be_rivals(walked: Path) -> None:
