@@ -36,13 +36,16 @@ class Elites:
         """Keep the configuration if it is good, or better than all those close to it."""
         if not self.wants(energy):
             return
-        close = self._distances(spins) < self.distance
-        if np.any(self.energies[close] <= energy):
+        apart = self._distances(spins) >= self.distance
+        if not apart.all() and self.energies[~apart][0] <= energy:
             return
-        place = int(np.searchsorted(self.energies[~close], energy, side="right"))
-        self.energies = np.insert(self.energies[~close], place, energy)[: self.limit]
-        self.spins = np.insert(self.spins[~close], place, spins, axis=0)[: self.limit]
+        kept, configurations = self.energies[apart], self.spins[apart]
+        place = int(np.searchsorted(kept, energy, side="right"))
+        self.energies = np.concatenate([kept[:place], [energy], kept[place:]])[: self.limit]
+        self.spins = np.concatenate([configurations[:place], spins[None], configurations[place:]])[: self.limit]
 
     def _distances(self, spins: I8) -> np.typing.NDArray[np.int64]:
-        apart = np.count_nonzero(self.spins != spins, axis=1)
+        apart: np.typing.NDArray[np.int64] = np.array(
+            [np.count_nonzero(kept != spins) for kept in self.spins], np.int64
+        )
         return np.minimum(apart, len(spins) - apart) if self.symmetric else apart

@@ -31,6 +31,7 @@ from patchwalk.subsolvers.contract import F64, I8, I32, I64, Status, Subsolver
 from patchwalk.subsolvers.draws import generator_for, seed_for
 from patchwalk.workers import Serial, Workers
 
+FAILED = int(Status.FAILED)
 RESTART, MIXTURE = 6, 7
 """Words that tell the streams of one run seed apart."""
 
@@ -73,10 +74,13 @@ class Failures:
     def count(self, calls: Calls) -> None:
         """Take in the statuses of one slice."""
         status = calls.proposals.status
-        bad, well = np.flatnonzero(status == Status.FAILED), np.flatnonzero(status != Status.FAILED)
+        failed = status == FAILED
+        if not failed.any():
+            self.in_a_row = 0
+            return
+        bad, well = np.flatnonzero(failed), np.flatnonzero(~failed)
         self.total += len(bad)
-        if len(bad):
-            self.sentence = calls.proposals.messages[bad[-1]]
+        self.sentence = calls.proposals.messages[bad[-1]]
         self.in_a_row = len(status) - 1 - int(well[-1]) if len(well) else self.in_a_row + len(status)
 
 
@@ -221,7 +225,8 @@ class NeighbourhoodSearch:
         return Round(number, stage, temperatures, calls, self.replicas.energies.copy(), self.take_improvements(), whole)
 
     def _cuts(self, wanted: int) -> list[Cut]:
-        self._drawn = self.rules.drawn(seed_for(self.seed, MIXTURE, self.round), self.weights)
+        several = len(self.rules.rules) > 1
+        self._drawn = self.rules.drawn(seed_for(self.seed, MIXTURE, self.round), self.weights) if several else 0
         rule = self.rules.rules[self._drawn]
         return self.caller.cuts(rule, self.replicas, self.round, wanted, self.counts, self.elites.spins)
 
@@ -230,15 +235,17 @@ class NeighbourhoodSearch:
         wanted = self.plan.clusters_per_round
         if self.plan.ends.calls is not None:
             wanted = min(wanted, self.plan.ends.calls - self.calls - self.skipped)
-        cuts, worth = self._cuts(wanted), Worth()
+        cuts, worth, several = self._cuts(wanted), Worth(), len(self.rules.rules) > 1
         name = self.rules.rules[self._drawn].name
         for calls in self.caller.carry_out(cuts, name, self.replicas, temperatures, stage, self._must_stop):
             self.calls += len(calls)
             self.failures.count(calls)
             np.add.at(self.counts, calls.members.ravel(), 1)
-            worth.count(np.maximum(0.0, -calls.change) * calls.accepted, calls)
+            if several:
+                worth.count(np.maximum(0.0, -calls.change) * calls.accepted, calls)
             yield calls
-        self.weights.reward(self._drawn, *worth.of_the_round())
+        if several:
+            self.weights.reward(self._drawn, *worth.of_the_round())
 
     def _sweep(self, temperatures: F64) -> bool:
         """The sweeps of a round; False where the round was cut short, here or before."""
@@ -290,7 +297,7 @@ class NeighbourhoodSearch:
         energy = float(self.replicas.energies[lowest])
         if energy < self.best_energy - self.problem.tie_tolerance:
             self.best_energy = energy
-            self.best_spins[:] = self.replicas.spins[lowest]
+            self.best_spins = self.replicas.spins[lowest].copy()
             self._rounds_without_gain = 0
             spent = 0.0 if finder == "start" else self.elapsed
             self._improvements.append(Improvement(energy, finder, self.round, self.calls, self.sweeps, spent))
@@ -314,7 +321,7 @@ class NeighbourhoodSearch:
         return Snapshot(
             self.round, self.calls, self.sweeps, self.elapsed, self.replicas.spins.copy(),
             self.replicas.local_fields.copy(), self.replicas.energies.copy(), float(self.best_energy),
-            self.best_spins.copy(), self.elites.spins, self.counts.copy(), details,
+            self.best_spins, self.elites.spins, self.counts.copy(), details,
         )  # fmt: skip
 
     def go_on_from(self, state: Snapshot) -> None:
