@@ -12,6 +12,8 @@ import numpy as np
 from patchwalk.subsolvers.contract import WORK_FIELDS, ClusterBatch, Proposals, Status, Work
 
 PER_CALL = ("log_ratio", "hit_probability", "noiseless_hit")
+WORK_MEMBERS = tuple((f"work.{name}", name) for name in WORK_FIELDS)
+LAST_STATUS = max(Status)
 
 
 def shape_complaint(proposals: object, batch: ClusterBatch) -> str:
@@ -28,7 +30,7 @@ def shape_complaint(proposals: object, batch: ClusterBatch) -> str:
         return f"status and messages must have {rows} entries, one per call"
     if not isinstance(status, np.ndarray) or status.dtype != np.uint8:
         return "status must be a uint8 array"
-    if not all(isinstance(message, str) for message in messages):
+    if any(not issubclass(kind, str) for kind in set(map(type, messages))):
         return "messages must be texts"
     if not isinstance(proposals.work, Work):
         return f"work is a {type(proposals.work).__name__}, expected Work"
@@ -44,7 +46,7 @@ def value_complaint(proposals: Proposals) -> str:
     """What is wrong with the numbers in an answer of the right shape, or nothing; nan marks a call that has none."""
     if not np.all(np.abs(proposals.outcomes) == 1):
         return "outcomes holds numbers other than +1 and -1"
-    if proposals.status.max() > max(Status):
+    if proposals.status.max() > LAST_STATUS:
         return f"status holds {proposals.status.max()}, it is 0, 1 or 2"
     for name, (values, _) in _extras(proposals).items():
         if values is None or name == "log_ratio":
@@ -61,4 +63,4 @@ def _extras(proposals: Proposals) -> dict[str, tuple[Any, tuple[int, ...]]]:
     rows, shots, _ = proposals.outcomes.shape
     extras: dict[str, tuple[Any, tuple[int, ...]]] = {name: (getattr(proposals, name), (rows,)) for name in PER_CALL}
     extras["times"] = (proposals.times, (rows, shots))
-    return extras | {f"work.{name}": (getattr(proposals.work, name), (rows,)) for name in WORK_FIELDS}
+    return extras | {key: (getattr(proposals.work, name), (rows,)) for key, name in WORK_MEMBERS}
