@@ -345,7 +345,9 @@ def _is_dear(subsolver: Subsolver, batch: ClusterBatch) -> bool:
 
 
 def _blobs(rows: np.typing.NDArray[Any]) -> list[bytes]:
-    return [row.tobytes() for row in rows]
+    """The bytes of every row: cut from those of all, several times as quick as asking row by row."""
+    together, length = rows.tobytes(), rows.itemsize * rows.shape[1]
+    return [together[first : first + length] for first in range(0, len(together), length)]
 
 
 def _column(values: np.typing.NDArray[Any] | None, kept: np.typing.NDArray[np.intp]) -> list[int | float | None]:
