@@ -130,7 +130,7 @@ class RunFile:
         """A writer that goes on with a run from its last checkpoint; what was written of later rounds is forgotten."""
         with self.database:
             self.database.execute("BEGIN")
-            for table in ("calls", "incumbents"):
+            for table in ("calls", "incumbents", "replays", "sweep_curves"):
                 self.database.execute(f"DELETE FROM {table} WHERE run = ? AND round >= ?", (run, state.round))
             self.database.execute("UPDATE runs SET status = 'running', message = NULL WHERE run = ?", (run,))
         return RunWriter(self, run, problem, rows)
