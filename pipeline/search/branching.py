@@ -36,6 +36,9 @@ INTERIOR_ROUNDS, DEGENERATE_ROUNDS, FLAT = 12, 40, 4.5
 """Rounds by the interior point at the root; the larger number where energies move in steps and a spin has at most so
 many couplings (measured: 50 x 50 +-J in 2 s of processor time instead of 2 to 15)."""
 
+LEAST_SHARE = 0.1
+"""Below the root, rounds of cuts go on while they gain such a share of what is missing to close the node."""
+
 NEAR = 1e-4
 """Relative gap below which it is worth looking whether reduced costs leave one configuration only."""
 
@@ -312,7 +315,7 @@ class BranchAndBound:
             interior_rounds=self._interior_rounds if is_root else 0,
             most_rounds=ROUNDS_AT_ROOT if is_root else ROUNDS_AT_NODE,
             thin_out=is_root,
-            least_gain=0.0 if is_root else 0.02 * max(0.0, self.best_energy - node.bound),
+            least_gain=0.0 if is_root else LEAST_SHARE * self._missing,
         )
         for _ in rounds:
             self._learn(node)
@@ -322,6 +325,11 @@ class BranchAndBound:
                 yield self._look_for_better()
             if self._closed(node) or self._stopped():
                 return
+
+    @property
+    def _missing(self) -> float:
+        """By how much the program's own bound must still rise to close its node."""
+        return max(0.0, self._goal - float(self.tree.levels[0]) - self.program.value.bound)
 
     @property
     def _interior_rounds(self) -> int:
