@@ -81,7 +81,7 @@ class Rule:
         held = np.ones(len(lesson.runs), np.bool_)
         for condition in self.conditions:
             held &= condition.holds(lesson.quantities)
-        worths: dict[str, F64] = {**lesson.worths, NOBODY: np.zeros(len(held))}
+        worths = {NOBODY: np.zeros(len(held)), **lesson.worths}
         return np.where(held, worths[self.then], worths[self.otherwise])
 
 
