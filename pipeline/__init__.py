@@ -12,6 +12,7 @@ if TYPE_CHECKING:
     from patchwalk.commands.auditing import audit
     from patchwalk.commands.bounding import bound
     from patchwalk.commands.forecasting import forecast
+    from patchwalk.commands.profiling import profile
     from patchwalk.commands.replaying import replay
     from patchwalk.commands.resuming import resume
     from patchwalk.commands.sampling import sample
@@ -30,6 +31,7 @@ _HOMES = {
     "audit": "patchwalk.commands.auditing",
     "bound": "patchwalk.commands.bounding",
     "make": "patchwalk.problem.families",
+    "profile": "patchwalk.commands.profiling",
     "replay": "patchwalk.commands.replaying",
     "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
@@ -47,6 +49,7 @@ __all__ = [
     "bound",
     "forecast",
     "make",
+    "profile",
     "read_problem",
     "replay",
     "resume",

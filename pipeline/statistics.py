@@ -171,7 +171,7 @@ def bootstrap(
     values = statistic(counts.astype(np.float64) @ telling)
     values = values[~np.isnan(values)]
     tail = 0.5 * (1.0 - level)
-    stretch = (runs / (runs - 1)) ** 0.5 * special.stdtrit(runs - 1, 1.0 - tail) / special.ndtri(1.0 - tail)
+    stretch = (runs / (runs - 1)) ** 0.5 * float(special.stdtrit(runs - 1, 1.0 - tail) / special.ndtri(1.0 - tail))
     if len(values) < (1.0 - tail) * RESAMPLES:  # too often undefined for an end of the interval to mean anything
         return Interval(value, np.nan, np.nan, runs, level)
     ends = float(np.quantile(values, tail, method="lower")), float(np.quantile(values, 1.0 - tail, method="higher"))

@@ -8,6 +8,7 @@ c / f, meets the subsolver's drop. With load, read and wait held fixed only the 
 
 from __future__ import annotations
 
+import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
@@ -39,7 +40,7 @@ class BreakEven:
             return f"undefined: {self.reason}"
         if np.isinf(self.held.value):
             return f"{self.factor}; with load, read and wait held fixed no speed-up suffices"
-        if self.held.value == self.factor.value:
+        if math.isclose(self.held.value, self.factor.value):
             return f"{self.factor}"
         return f"{self.factor}; with load, read and wait held fixed {self.held}"
 

@@ -87,11 +87,11 @@ class Profile:
 
 
 def profile_of(replayed: Replayed, baseline: str | None = None, cost_model: str = "the fixed prices") -> Profile:
-    """The profile of replayed calls; the ``baseline`` is by default ``none``, else the rival replayed first.
+    """The profile of replayed calls; the ``baseline`` is by default ``none``, else the strongest rival.
 
     Raises :class:`RunFileError` where no rival was replayed, or not the baseline.
     """
-    held = baseline or (NONE if NONE in replayed.answers else next(iter(replayed.rivals), ""))
+    held = baseline or (NONE if NONE in replayed.answers else _strongest(replayed))
     if held not in replayed.rivals:
         there = ", ".join(replayed.rivals) or "none at all"
         raise RunFileError(
@@ -121,6 +121,11 @@ def lesson_of(replayed: Replayed, baseline: str) -> Lesson:
     full = {name: own for name, own in worths.items() if not np.isnan(own[usable]).any()}
     quantities = {name: replayed.quantities[name][usable] for name in QUANTITIES}
     return Lesson(replayed.runs[usable], weights[usable], quantities, {name: own[usable] for name, own in full.items()})
+
+
+def _strongest(replayed: Replayed) -> str:
+    """The rival of the highest mean drop, empty where there is none."""
+    return max(replayed.rivals, key=lambda rival: paired_help(replayed, rival).rival_drop, default="")
 
 
 def _moved(replayed: Replayed) -> Interval:

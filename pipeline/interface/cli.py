@@ -21,6 +21,10 @@ COMMANDS = {
     "forecast": ("patchwalk.interface.forecast_options:forecast_command", "What working on an input will need."),
     "bound": ("patchwalk.interface.bound_options:bound_command", "Bound the energy from below, or prove an optimum."),
     "audit": ("patchwalk.interface.audit_options:audit_command", "Check an answer or a certificate once more."),
+    "profile": (
+        "patchwalk.interface.profile_options:profile_command",
+        "Where calls helped; break-even; the rule it suggests.",
+    ),
     "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
     "backends": ("patchwalk.interface.backends_options:backends_command", "List backends, check one, or time one."),
 }

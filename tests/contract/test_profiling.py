@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+from dataclasses import replace
 
 import numpy as np
 import pytest
@@ -109,8 +110,8 @@ def test_with_load_and_reading_held_fixed_no_speed_may_suffice() -> None:
     drops = replayed.answers["walk"].drops
     for evolving, factor in ((0.2, np.inf), (0.8, 8.0 / 3.0)):
         replayed = made_up(rival=answers(drops, cost=COST / 2.0))
-        replayed = Replayed(**{**vars(replayed), "answers": {
-            **replayed.answers, "walk": answers(drops, evolving=evolving * COST)}})  # fmt: skip
+        own = answers(drops, evolving=evolving * COST)
+        replayed = replace(replayed, answers={**replayed.answers, "walk": own})
         found = break_even(replayed, "rival")
         assert found.factor.value == pytest.approx(2.0)
         assert found.held.value == pytest.approx(factor)
@@ -140,7 +141,7 @@ def test_noise_at_which_help_vanishes() -> None:
         "walk,precision_bits=4": answers(1.5 * ones), "walk,shots=2,dephasing=0.9": answers(0.0 * ones),
     }  # fmt: skip
     replayed = made_up(**rivals)
-    replayed = Replayed(**{**vars(replayed), "answers": {**replayed.answers, "walk": answers(2.0 * ones + noise)}})
+    replayed = replace(replayed, answers={**replayed.answers, "walk": answers(2.0 * ones + noise)})
     dephasing, precision = noise_limits(replayed, "none")
     assert dephasing.parameter == "dephasing"
     assert [one.value for one in dephasing.members] == [0.0, 0.1, 0.2]
@@ -179,6 +180,16 @@ def test_bins_of_a_quantity_with_few_values() -> None:
     grid = help_map(replayed, "none")
     assert grid is not None
     assert grid.calls.sum() == RUNS * CALLS
+
+
+def test_without_sweeps_the_strongest_rival_is_the_baseline() -> None:
+    ones = np.ones(RUNS * CALLS)
+    replayed = made_up(uniform=answers(0.1 * ones), enumeration=answers(3.0 * ones), tabu=answers(2.0 * ones))
+    kept = {name: own for name, own in replayed.answers.items() if name != "none"}
+    found = profile_of(replace(replayed, answers=kept))
+    assert found.baseline == "enumeration"
+    assert "enumeration win" in str(found)
+    assert found.verdict == "do not call"
 
 
 def test_a_baseline_that_was_not_replayed_is_named() -> None:
