@@ -16,6 +16,7 @@ if TYPE_CHECKING:
     from patchwalk.commands.replaying import replay
     from patchwalk.commands.resuming import resume
     from patchwalk.commands.sampling import sample
+    from patchwalk.commands.scaling import scale
     from patchwalk.commands.solving import Solution, solve
     from patchwalk.problem.builder import ProblemBuilder
     from patchwalk.problem.families import make
@@ -36,6 +37,7 @@ _HOMES = {
     "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
     "sample": "patchwalk.commands.sampling",
+    "scale": "patchwalk.commands.scaling",
     "solve": "patchwalk.commands.solving",
     "write_problem": "patchwalk.problem.files",
 }
@@ -54,6 +56,7 @@ __all__ = [
     "replay",
     "resume",
     "sample",
+    "scale",
     "solve",
     "write_problem",
 ]
