@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import typing
-from collections.abc import Callable
+from collections.abc import Callable, Collection
 from typing import TYPE_CHECKING, Any
 
 import click
@@ -27,11 +27,15 @@ METAVARS = {
 EXIT_CODES = {"interrupted": 130, "error": 1}
 
 
-def setting_options(model: type[SearchSettings]) -> Callable[[Callable[..., None]], Callable[..., None]]:
-    """Give a command an option for every setting of the model; all are text, checked together later."""
+def setting_options(
+    model: type[SearchSettings], without: Collection[str] = ()
+) -> Callable[[Callable[..., None]], Callable[..., None]]:
+    """Give a command an option for every setting of the model but some; all are text, checked together later."""
 
     def decorated(command: Callable[..., None]) -> Callable[..., None]:
         for name, field in reversed(model.model_fields.items()):
+            if name in without:
+                continue
             option, kind = f"--{name.replace('_', '-')}", plain_type(model, name)
             if kind is bool:
                 command = click.option(option, name, is_flag=True, default=None, help=field.description)(command)
