@@ -11,6 +11,7 @@ from typing import TYPE_CHECKING, Any
 if TYPE_CHECKING:
     from patchwalk.commands.auditing import audit
     from patchwalk.commands.bounding import bound
+    from patchwalk.commands.comparing import compare
     from patchwalk.commands.forecasting import forecast
     from patchwalk.commands.profiling import profile
     from patchwalk.commands.replaying import replay
@@ -28,6 +29,7 @@ _HOMES = {
     "ProblemBuilder": "patchwalk.problem.builder",
     "ProblemError": "patchwalk.problem.ising",
     "Solution": "patchwalk.commands.solving",
+    "compare": "patchwalk.commands.comparing",
     "forecast": "patchwalk.commands.forecasting",
     "audit": "patchwalk.commands.auditing",
     "bound": "patchwalk.commands.bounding",
@@ -49,6 +51,7 @@ __all__ = [
     "Solution",
     "audit",
     "bound",
+    "compare",
     "forecast",
     "make",
     "profile",

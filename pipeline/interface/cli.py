@@ -25,6 +25,7 @@ COMMANDS = {
         "patchwalk.interface.profile_options:profile_command",
         "Where calls helped; break-even; the rule it suggests.",
     ),
+    "compare": ("patchwalk.interface.compare_options:compare_command", "Whole runs at equal budget, paired by seed."),
     "scale": ("patchwalk.interface.scale_options:scale_command", "Success probability against cluster size."),
     "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
     "backends": ("patchwalk.interface.backends_options:backends_command", "List backends, check one, or time one."),
