@@ -18,7 +18,7 @@ from patchwalk.subsolvers.contract import Subsolver
 DEFAULT_SECONDS = 60.0
 DEFAULT_CLUSTER_SIZE = 12
 DEFAULT_RUNGS = 16
-DEFAULT_SWEEPS = 10
+FEWEST_SWEEPS, MOST_SWEEPS = 2, 1000
 LADDER_LIMIT = 20_000
 
 
@@ -127,9 +127,11 @@ class SearchSettings(BaseModel):
     clusters_per_round: int = Field(
         64, ge=1, le=65536, description="At most this many clusters a round, no two of which touch."
     )
-    sweeps: int = Field(
-        DEFAULT_SWEEPS, ge=0, description="Metropolis sweeps of the whole problem after each round; 0 for none."
-    )
+    sweeps: int | None = Field(
+        None, ge=0,
+        description="Metropolis sweeps of the whole problem after each round; 0 for none. Left out: as many as cost "
+        "about half of the calls at fixed prices, 2 to 1000.",
+    )  # fmt: skip
     start: FileName | None = Field(
         None, description="A file with a start configuration: +1 and -1 in the input's order, or what --json printed."
     )

@@ -176,7 +176,7 @@ def calls_worth(task: Task, model_seconds: float) -> int:
         if told is None:
             raise SettingsError([f"{subsolver.name} cannot forecast its work; give a budget in calls or seconds"])
         calling = float(priced(told.work, len(batch)).mean()) * clusters
-    sweeping = PRICES["spin_updates"] * task.settings.sweeps * len(task.problem) * task.replicas
+    sweeping = PRICES["spin_updates"] * task.sweeps * len(task.problem) * task.replicas
     if calling + sweeping <= 0.0:
         raise SettingsError(["a round of this contender has no price; give a budget in calls or seconds"])
     rounds = max(FEWEST_ROUNDS, round(model_seconds / (calling + sweeping)))

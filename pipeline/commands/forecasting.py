@@ -235,7 +235,7 @@ def _settings(task: Task) -> list[str]:
     target = "" if settings.target is None else f" or an objective of {settings.target:g}"
     return [
         f"clusters of {task.cluster_size} spins picked by {task.rules.name}, answered by {callers}",
-        f"up to {settings.clusters_per_round} clusters and {settings.sweeps} sweeps a round, until {until}{target}",
+        f"up to {settings.clusters_per_round} clusters and {task.sweeps} sweeps a round, until {until}{target}",
         f"{task.replicas} replica{'s' if task.replicas > 1 else ''}, {task.tempering}, temperatures "
         f"{settings.hot * task.problem.field_scale:.4g} to {settings.cold * task.problem.field_scale:.4g}",
         f"work shared by {settings.workers or cores()} {settings.engine}",

@@ -284,6 +284,7 @@ def facts_of(task: Task, search: NeighbourhoodSearch) -> RunFacts:
         **task.settings.model_dump(), "subsolver": cases[0]["subsolver"] if alone else None,
         "callers": None if alone else cases, "cluster_size": task.cluster_size, "seeds": task.settings.every_seed,
         "seed": None, "tempering": task.tempering, "replicas": task.replicas,
+        "sweeps": task.sweeps,
     }  # fmt: skip
     callers = "; ".join(" when ".join(case.values()) for case in cases)
     return RunFacts(

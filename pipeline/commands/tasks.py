@@ -15,6 +15,7 @@ import numpy as np
 
 from patchwalk.clusters.mixture import Mixture, mixture_of
 from patchwalk.clusters.policy import Policy, PolicyError, policy_from
+from patchwalk.cost import priced, sweep_seconds
 from patchwalk.engine import forecast_of
 from patchwalk.problem.decoding import encoding_of, write_answer
 from patchwalk.problem.files import read_problem, read_start
@@ -27,7 +28,9 @@ from patchwalk.search.temperature import AdaptiveCooling, GeometricCooling, Temp
 from patchwalk.settings import (
     DEFAULT_CLUSTER_SIZE,
     DEFAULT_RUNGS,
+    FEWEST_SWEEPS,
     LADDER_LIMIT,
+    MOST_SWEEPS,
     SamplingSettings,
     SearchSettings,
     SolveSettings,
@@ -73,6 +76,19 @@ class Task(Errand[SolveSettings]):
         return DEFAULT_RUNGS if self.tempering == "ladder" else 1
 
     @property
+    def sweeps(self) -> int:
+        """Sweeps after each round: as asked for, else as many as cost about half of the calls, at fixed prices."""
+        if self.settings.sweeps is not None:
+            return self.settings.sweeps
+        size, degree = len(self.problem), 2.0 * self.problem.coupling_count / len(self.problem)
+        apart = self.replicas * max(1, int(size / (self.cluster_size * (1.0 + degree))))  # clusters that do not touch
+        calls = min(self.settings.clusters_per_round, apart) * max(
+            _call_seconds(case.subsolver, self.cluster_size) for case in self.policy.cases if case.subsolver is not None
+        )
+        wanted = 0.5 * calls / sweep_seconds(size, degree, self.replicas)
+        return int(min(MOST_SWEEPS, max(FEWEST_SWEEPS, wanted)))
+
+    @property
     def tempering(self) -> str:
         """How hot the replicas are: as asked for, else a ladder where it pays and is possible."""
         settings = self.settings
@@ -91,7 +107,7 @@ class Task(Errand[SolveSettings]):
             rules=self.rules,
             cluster_size=self.cluster_size,
             clusters_per_round=settings.clusters_per_round,
-            sweeps_per_round=settings.sweeps,
+            sweeps_per_round=self.sweeps,
             temperatures=self._temperatures(seed),
             ends=Ends(settings.calls, settings.total_sweeps, settings.time_limit, target, settings.stall),
             acceptance=settings.acceptance,
@@ -124,7 +140,7 @@ class SamplingTask(Errand[SamplingSettings]):
             rules=self.rules,
             cluster_size=self.cluster_size,
             clusters_per_round=settings.clusters_per_round,
-            sweeps_per_round=settings.sweeps,
+            sweeps_per_round=FEWEST_SWEEPS if settings.sweeps is None else settings.sweeps,
             temperatures=np.array(sorted(settings.temperatures, reverse=True)),
             copies=settings.copies,
             burn_in=settings.burn_in_rounds,
@@ -241,6 +257,12 @@ def _check_memory(subsolver: Subsolver, size: int) -> None:
         f"{subsolver.name}: a cluster of {size} spins needs {needed / 1e9:.1f} GB, this machine has "
         f"{memory / 1e9:.1f} GB; the largest cluster that fits has {fitting} spins (--cluster-size {fitting})"
     )
+
+
+def _call_seconds(subsolver: Subsolver, size: int) -> float:
+    """What one call costs at the fixed prices; nothing where the subsolver cannot tell."""
+    forecast = forecast_of(subsolver, _blank_batch(size))
+    return 0.0 if forecast is None else float(priced(forecast.work, 1)[0])
 
 
 def _bytes_needed(subsolver: Subsolver, size: int) -> int:

@@ -255,6 +255,8 @@ class NeighbourhoodSearch:
                 break
             if self._must_stop():
                 return False
+            if self.plan.ends.sweeps is not None:
+                step = min(step, -(-(self.plan.ends.sweeps - self.sweeps) // len(self.replicas)))
             self.carrying.sweep(self.replicas, temperatures, self.round, first, step)
             self.sweeps += step * len(self.replicas)
             self._note_best("sweeps")
