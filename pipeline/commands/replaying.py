@@ -207,7 +207,8 @@ def _replay_file(
                 watcher.began(path, run.number, run.seed)
                 _replay_one(file, stored, run, plan, workers, watcher, interrupted)
                 rows.extend(_summaries(stored, run))
-                notes.extend(_notes(stored, run, plan))
+                if not interrupted():
+                    notes.extend(_notes(stored, run, plan))
         finally:
             file.close()
 
@@ -282,6 +283,10 @@ def _notes(stored: StoredFile, run: StoredRun, plan: ReplayPlan) -> list[str]:
         f"{place}: {row['rival']} FAILED on {row['calls']:,} calls: {row['said']}"
         for row in stored.rows(FAILURES, (run.number, int(Status.FAILED)))
     )
+    if NONE in plan.rivals and stored.problem(run.problem).groups:
+        found.append(
+            f"{place}: {NONE} sweeps single spins only; the carrier's moves inside groups of spins are left out"
+        )
     unswept = next(stored.rows(UNSWEPT, (run.number,)))["calls"] if NONE in plan.rivals else 0
     if unswept:
         found.append(f"{place}: for {unswept:,} calls the state before was not recomputed, so {NONE} has no row there")

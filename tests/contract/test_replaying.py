@@ -147,6 +147,30 @@ def test_every_state_comes_back(walked: Path) -> None:
     assert set(seen) == names
 
 
+@pytest.mark.parametrize(
+    "settings",
+    [
+        {"seconds": 0.3, "tempering": "adaptive"},
+        {"calls": 200, "rule": "ball,loose,stale,disputed", "rule_weights": "adaptive", "tempering": "adaptive"},
+        {"calls": 60, "replicas": 4, "acceptance": "threshold", "sweeps": 3, "workers": 2},
+        {"total_sweeps": 8, "stall": 3, "start": "START"},
+    ],
+    ids=["clock", "weights that learn", "threads", "from a start"],
+)
+def test_states_come_back_however_a_run_was_steered(tmp_path: Path, settings: dict[str, Any]) -> None:
+    glass = make("lattice2d", 7, couplings="gaussian", seed=6)
+    if "start" in settings:
+        settings = {**settings, "start": tmp_path / "start.txt"}
+        settings["start"].write_text("\n".join(["1"] * 49))
+    path = solve(
+        glass, subsolver="walk", cluster_size=5, record="all", run=tmp_path / "run.sqlite", **settings
+    ).run_path
+    replayed = replay(path, ["none"], calls=50)
+    counts = {one.rival: one.calls for one in replayed.rivals}
+    assert counts["none"] == counts["walk"] > 10
+    assert replayed.notes == ()
+
+
 def test_cheap_calls_without_rows_are_asked_again(tmp_path: Path) -> None:
     glass = make("lattice2d", 8, seed=2)
     solution = solve(glass, subsolver="uniform", cluster_size=4, calls=1500, run=tmp_path / "run.sqlite")
