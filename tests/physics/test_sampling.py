@@ -128,8 +128,14 @@ def test_a_small_ferromagnet_has_kaufmans_averages(name: str) -> None:
 @pytest.mark.parametrize("name", METHODS)
 def test_the_ferromagnet_has_kaufmans_averages(name: str, sweeps: int) -> None:
     """The 16 x 16 torus; also without sweeps, where cluster calls alone have to move it."""
+    rounds = 8000 if sweeps else 40_000  # autocorrelation times of up to 800 rounds without sweeps, 16 with them
     run = sampled(
-        ferromagnet(16), METHODS[name], sweeps_per_round=sweeps, clusters_per_round=96, burn_in=1000, rounds=8000
+        ferromagnet(16),
+        METHODS[name],
+        sweeps_per_round=sweeps,
+        clusters_per_round=96,
+        burn_in=rounds // 8,
+        rounds=rounds,
     )
     for level in levels_of(run):
         print(f"{name}, {sweeps} sweeps, T = {level.temperature}: E {level.energy}; C {level.heat_capacity}")
