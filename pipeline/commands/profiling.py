@@ -43,7 +43,7 @@ def profile(
 def kept_promise(runs: Runs, promised: str | Path, cost: str | Path | None = None) -> PromiseKept:
     """Whether replayed runs made with the settings ``promised``, as ``--apply`` wrote them, kept their promise."""
     with _opened(runs) as files:
-        return promise_kept(promise_from(Path(promised)), files, _pricing(cost)[0])
+        return promise_kept(promise_from(Path(promised)), files, *_pricing(cost))
 
 
 def apply_rule(profile: Profile, runs: Runs, path: str | Path) -> None:

@@ -141,7 +141,9 @@ def lines_of(profile: Profile) -> list[str]:
     lines = [f"{len(one):,} calls of {profile.own} in {runs} run{'s' if runs > 1 else ''}; costs: {profile.cost_model}"]
     if runs == 1:
         lines.append("one run has no interval over runs: run more seeds")
-    lines += [f"{profile.moved.value:.1%} of the calls changed a spin", "", *_cost_lines(profile), ""]
+    moved = profile.moved
+    lines.append(f"{moved.value:.1%} [{moved.low:.1%}, {moved.high:.1%}] of the calls changed a spin")
+    lines += ["", *_cost_lines(profile), ""]
     lines += [f"help per call against {profile.baseline}, by quantity (share of its variance explained)"]
     for name in sorted(profile.tables, key=lambda name: -profile.explained[name]):
         lines += _table_lines(name, profile.explained[name], profile.tables[name])
@@ -151,6 +153,7 @@ def lines_of(profile: Profile) -> list[str]:
     for best in profile.settings:
         lines += ["", f"{best.parameter}: most drop per second {best.fastest}; worth most a call {best.worthiest}"]
         lines += [f"  {m.setting or 'default':<14}drop {m.drop}  worth {m.worth}" for m in best.members]
+        lines.append(f"  {best.worthiest} is worth {best.over_own} more a call than {profile.own}")
     return [*lines, "", *_rule_lines(profile), "", f"{MODEL}; {NO_CLOCK}", profile.sentence]
 
 

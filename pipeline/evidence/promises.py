@@ -8,14 +8,14 @@ from __future__ import annotations
 import json
 import tomllib
 from collections.abc import Sequence
-from dataclasses import asdict, dataclass
+from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 
 import numpy as np
 
 from patchwalk.evidence.layout import RunFileError
 from patchwalk.evidence.profiling import Profile
-from patchwalk.evidence.replayed import Pricing, Replayed, fixed_prices, replayed_calls
+from patchwalk.evidence.replayed import NONE, Pricing, Replayed, fixed_prices, replayed_calls
 from patchwalk.evidence.rival_families import worths_of
 from patchwalk.evidence.rule_learning import NOBODY
 from patchwalk.evidence.stored import StoredFile
@@ -78,21 +78,31 @@ def promise_from(path: Path) -> Promise:
         ) from error
 
 
-def promise_kept(promise: Promise, files: Sequence[StoredFile], pricing: Pricing = fixed_prices) -> PromiseKept:
-    """Whether the calls made in these runs, which were replayed, are worth what was promised.
-
-    It is kept where the interval lies above zero and reaches what was promised, broken where it ends below that.
-    """
+def promise_kept(
+    promise: Promise, files: Sequence[StoredFile], pricing: Pricing = fixed_prices, cost_model: str = "the fixed prices"
+) -> PromiseKept:
+    """Whether the calls made in these runs, which were replayed, are worth what was promised."""
     found = _worth(promise, [replayed_calls(files, own, pricing) for own in _replayed_of(promise, files)])
-    if found.known and found.high < promise.low:
+    kept = judged(promise, found)
+    if promise.against != NONE or cost_model == promise.cost_model:
+        return kept
+    return replace(
+        kept, sentence=f"{kept.sentence} Costs differ: promised under {promise.cost_model}, now {cost_model}."
+    )
+
+
+def judged(promise: Promise, found: Interval) -> PromiseKept:
+    """Kept where what was found lies above zero and reaches the promise, broken where it ends below either."""
+    if found.known and (found.high < promise.low or found.high <= 0.0):
         verdict, word = "broken", "The promise was not kept"
     elif found.above_zero:
         verdict, word = "kept", "The promise was kept"
     else:
         verdict, word = "cannot tell", "Cannot tell whether the promise was kept"
     promised = Interval(promise.worth, promise.low, promise.high, 0)
+    runs = f"{found.runs} run" + ("" if found.runs == 1 else "s")
     few = "" if found.known else "; run more seeds"
-    sentence = f"{word}: promised {promised} a call against {promise.against}, found {found} in {found.runs} runs{few}."
+    sentence = f"{word}: promised {promised} a call against {promise.against}, found {found} in {runs}{few}."
     return PromiseKept(verdict, promise, found, sentence)
 
 

@@ -49,12 +49,17 @@ class NoiseLimit:
 
 @dataclass(frozen=True)
 class BestSetting:
-    """A family along a parameter of effort, and which member gives most per second and is worth most per call."""
+    """A family along a parameter of effort, and which member gives most per second and is worth most per call.
+
+    ``over_own`` is how much more a call of the worthiest is worth than one of the run's own, paired; picked for being
+    the best of them, it flatters itself a little.
+    """
 
     parameter: str
     members: tuple[Member, ...]
     fastest: str
     worthiest: str
+    over_own: Interval
 
 
 def parts_of(spelling: str) -> tuple[str, dict[str, str]]:
@@ -104,8 +109,12 @@ def best_settings(replayed: Replayed, baseline: str) -> tuple[BestSetting, ...]:
         members = _members(replayed, parameter, without, baseline)
         if members:
             fastest = max(members, key=lambda one: one.per_second.value)
-            worthiest = max(members, key=lambda one: one.worth.value)
-            found.append(BestSetting(parameter, members, fastest.rival, worthiest.rival))
+            worthiest = max(members, key=lambda one: one.worth.value).rival
+            more = worths_of(replayed, worthiest, baseline) - worths_of(replayed, replayed.own, baseline)
+            known = ~np.isnan(more)
+            weights = replayed.answers[worthiest].weights[known]
+            over_own = bootstrap(by_run(replayed.runs[known], weights * more[known], weights), ratio)
+            found.append(BestSetting(parameter, members, fastest.rival, worthiest, over_own))
     return tuple(found)
 
 

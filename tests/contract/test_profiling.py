@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 from dataclasses import replace
+from pathlib import Path
 
 import numpy as np
 import pytest
@@ -12,8 +13,11 @@ from patchwalk.evidence.break_even import break_even
 from patchwalk.evidence.help_tables import edges_of, explained, help_map, help_table, paired_help
 from patchwalk.evidence.layout import RunFileError
 from patchwalk.evidence.profiling import NO_CLOCK, profile_of
+from patchwalk.evidence.promises import Promise, judged, promise_from, promise_lines, promise_of
 from patchwalk.evidence.replayed import Answers, Replayed, swept
 from patchwalk.evidence.rival_families import best_settings, family, noise_limits, parts_of
+from patchwalk.settings_checks import SettingsError
+from patchwalk.statistics import Interval
 from patchwalk.subsolvers.contract import F64
 
 RUNS, CALLS = 6, 150
@@ -158,6 +162,9 @@ def test_the_best_number_of_shots() -> None:
     assert found.parameter == "shots"
     assert [one.value for one in found.members] == [1.0, 2.0, 4.0]
     assert (found.fastest, found.worthiest) == ("walk,shots=2", "walk,shots=2")
+    own = float(made_up().answers["walk"].drops.mean())
+    assert found.over_own.value == pytest.approx(2.5 - own)
+    assert found.over_own.low < 2.5 - own < found.over_own.high
     assert found.members[2].worth.value == pytest.approx(3.0 - 2.0)  # sweeps gain twice as much in twice the time
 
 
@@ -195,3 +202,32 @@ def test_without_sweeps_the_strongest_rival_is_the_baseline() -> None:
 def test_a_baseline_that_was_not_replayed_is_named() -> None:
     with pytest.raises(RunFileError, match="tabu was not replayed against walk; there are: none"):
         profile_of(made_up(), "tabu")
+
+
+def test_a_promise_is_read_back_as_it_was_written(tmp_path: Path) -> None:
+    promise = promise_of(profile_of(made_up()))
+    assert promise.called == ["walk"]
+    assert promise.low < promise.worth < promise.high
+    path = tmp_path / "next.toml"
+    path.write_text("\n".join(["# words", *promise_lines(promise), "seeds = [7, 8]"]))
+    assert promise_from(path) == promise
+    path.write_text("seeds = [7, 8]")
+    with pytest.raises(SettingsError, match="holds no promise"):
+        promise_from(path)
+
+
+@pytest.mark.parametrize(
+    ("found", "verdict"),
+    [
+        (Interval(1.1, 0.7, 1.5, 5), "kept"),
+        (Interval(3.0, 2.5, 3.5, 5), "kept"),
+        (Interval(0.3, 0.1, 0.5, 5), "broken"),
+        (Interval(-0.3, -0.5, -0.1, 5), "broken"),
+        (Interval(0.6, -0.5, 1.7, 5), "cannot tell"),
+        (Interval(1.0, np.nan, np.nan, 1), "cannot tell"),
+    ],
+)
+def test_whether_a_promise_was_kept(found: Interval, verdict: str) -> None:
+    kept = judged(Promise(["walk"], "none", 1.0, 0.8, 1.2, "the fixed prices"), found)
+    assert kept.verdict == verdict
+    assert ("run more seeds" in kept.sentence) == (found.runs == 1)
