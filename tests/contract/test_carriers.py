@@ -267,11 +267,11 @@ def test_a_ring_cools_to_its_ground_state() -> None:
     for carrier in carriers(ring):
         spins, local = begin(ring, 5)
         for sweep in range(2000):
-            carrier.sweep(spins, local, cooling.at(sweep / 2000), seed_for(1, sweep))
+            carrier.sweep(spins, local, cooling.temperature(sweep / 2000), seed_for(1, sweep))
         assert ring.energy(spins) == -100.0
     together, _, seeds = replicas(ring, 16)
     for sweep in range(2000):
-        temperatures = np.full(16, cooling.at(sweep / 2000))
+        temperatures = np.full(16, cooling.temperature(sweep / 2000))
         carrier_for(ring).sweep_replicas(together, None, temperatures, seeds + np.uint64(sweep << 32))
     assert np.count_nonzero([ring.energy(row) == -100.0 for row in together]) >= 14
 
@@ -286,12 +286,12 @@ def test_representations_cool_equally_well(couplings: str) -> None:
         for run in range(32):
             spins, local = begin(problem, run)
             for sweep in range(100):
-                carrier.sweep(spins, local, cooling.at(sweep / 99), seed_for(run, sweep))
+                carrier.sweep(spins, local, cooling.temperature(sweep / 99), seed_for(run, sweep))
             runs.append(problem.energy(spins))
         found.append(np.array(runs))
     together, _, seeds = replicas(problem, 32, seed=7)
     for sweep in range(100):
-        temperatures = np.full(32, cooling.at(sweep / 99))
+        temperatures = np.full(32, cooling.temperature(sweep / 99))
         carrier_for(problem).sweep_replicas(together, None, temperatures, seeds + np.uint64(sweep << 32))
     found.append(np.array([problem.energy(row) for row in together]))
     for one in found[1:]:

@@ -60,7 +60,7 @@ def test_a_ring_cools_to_its_ground_state() -> None:
     spins, local = begin(ring, 5)
     cooling, stream = GeometricCooling(0.7, 0.07, ring.field_scale), stream_for(1)
     for sweep in range(2000):
-        metropolis_sweep(*graph(ring), spins, local, cooling.at(sweep / 2000), stream)
+        metropolis_sweep(*graph(ring), spins, local, cooling.temperature(sweep / 2000), stream)
     assert ring.energy(spins) == -100.0
 
 
@@ -87,7 +87,7 @@ def test_accepted_calls_and_only_those_are_put_in() -> None:
 
 def test_cooling_goes_from_hot_to_cold_in_the_problems_units() -> None:
     cooling = GeometricCooling(hot=2.0, cold=0.5, scale=3.0)
-    assert (cooling.at(0.0), cooling.at(0.5), cooling.at(1.0)) == (6.0, 3.0, 1.5)
+    assert (cooling.temperature(0.0), cooling.temperature(0.5), cooling.temperature(1.0)) == (6.0, 3.0, 1.5)
     assert GeometricCooling(0.0, 0.0, 3.0).at(0.3) == 0.0
 
 
@@ -95,8 +95,8 @@ def test_every_cooling_lasts_over_twice_as_long_as_the_one_before() -> None:
     cooling = GeometricCooling(hot=2.0, cold=0.5, scale=3.0, coolings=3)
     starts = [0.0, 1 / 7, 3 / 7]
     ends = [1 / 7 - 1e-9, 3 / 7 - 1e-9, 1.0]
-    assert [cooling.at(stage) for stage in starts] == pytest.approx([6.0] * 3)
-    assert [cooling.at(stage) for stage in ends] == pytest.approx([1.5] * 3, rel=1e-6)
+    assert [cooling.temperature(stage) for stage in starts] == pytest.approx([6.0] * 3)
+    assert [cooling.temperature(stage) for stage in ends] == pytest.approx([1.5] * 3, rel=1e-6)
     for begin, end in zip(starts, ends, strict=True):
-        temperatures = [cooling.at(begin + (end - begin) * step / 20) for step in range(21)]
+        temperatures = [cooling.temperature(begin + (end - begin) * step / 20) for step in range(21)]
         assert temperatures == sorted(temperatures, reverse=True)
