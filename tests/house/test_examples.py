@@ -55,11 +55,13 @@ def test_the_commands_in_help_texts_run(tmp_path: Path) -> None:
     assert len(examples) >= 6
     (tmp_path / "configs").symlink_to(ROOT / "configs")
     (tmp_path / "graph.csv").write_text("a,b,1\nb,c,2\nc,a,1\nc,d,1\n")
+    (tmp_path / "couplings.csv").write_text("a,b,1\nb,c,-2\nc,a,1\nc,d,1\n")
+    (tmp_path / "fields.csv").write_text("a,0.5\nd,-1\n")
     executable = Path(sys.executable).with_name("patchwalk")
     for example in examples:
         words = shlex.split(example)[1:]
         if words[0] == "solve":
-            size = ["--cluster-size", "3"] if "graph.csv" in words else []
+            size = ["--cluster-size", "3"] if "graph.csv" in words or "couplings.csv" in words else []
             words += ["--calls", "40", *size]
         if words[0] == "make":
             words.append("--force")
