@@ -64,7 +64,7 @@ class Profile:
     def sentence(self) -> str:
         """The one sentence in which it ends."""
         held = f"{self.baseline}" if self.baseline != NONE else "carrier sweeps for the same time"
-        found, alarms = self.judgement, f"false alarms at most {FALSE_ALARMS:.0%}"
+        found, alarms = self.judgement, f"false alarms at most {FALSE_ALARMS:.0%}, unless few runs lose much"
         if found.verdict == "call":
             return f"Call {self.own}: worth {found.always} a call against {held} ({alarms})."
         if found.verdict == "call when":

@@ -25,7 +25,8 @@ def profile_command(
 
     Differences are paired, on the very same clusters, and every interval is one over runs: solve with several seeds,
     then replay, then profile. It ends in one sentence: call; call when ...; do not call; or cannot tell from these
-    runs. Calls are advised where none helps in at most one case of twenty.
+    runs. Where no call helps, calls are advised in at most one case of twenty, unless a few runs lose far more than
+    the rest.
     """
     from patchwalk.commands.profiling import apply_rule, kept_promise, profile
 
