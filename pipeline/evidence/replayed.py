@@ -178,7 +178,7 @@ def _parts(file: StoredFile, run: StoredRun, own: str, pricing: Pricing, number:
     problem = file.problem(run.problem)
     best = next(file.rows("SELECT min(energy) AS energy FROM runs WHERE problem = ?", (run.problem,)))["energy"]
     lowest = -np.inf if best is None else float(best)
-    for calls in recalled_calls(file, run.number, problem):
+    for calls in recalled_calls(file, run.number, problem, tables[own]):
         part = _part(calls, tables, curves, own, pricing, number, problem.field_scale, lowest)
         if part is not None:
             parts.append(part)
