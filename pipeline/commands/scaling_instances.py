@@ -24,8 +24,8 @@ from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import I8, ClusterBatch
 from patchwalk.subsolvers.draws import seed_for
 
-STATE, PICK, CALL = 1, 2, 3
-"""Words of the streams of an instance: its configuration, its cluster, its call."""
+STATE, PICK, CALL, INSTANCE = 1, 2, 3, 4
+"""Words of the streams of an instance: its configuration, its cluster, its call, the problem itself."""
 
 
 @dataclass(eq=False)
@@ -110,8 +110,8 @@ class Instances:
         if not isinstance(self.source, str):
             which = number % len(self._files)
             return self._files[which], str(self.source[which])
-        own = self.seed + number
         wanted = size if self.within is None else self.within
+        own = seed_for(self.seed, INSTANCE, wanted, number) >> 33  # short enough to type after make --seed
         return make(self.source, wanted, seed=own, **self.options), f"{self.source} {wanted} seed {own}"
 
     def _configuration(self, problem: Problem, number: int) -> I8:

@@ -19,6 +19,9 @@ from patchwalk.workers import Workers
 FACTORS = (0.35, 0.5, 0.7, 1.0, 1.4, 2.0, 2.8, 4.0)
 """Times that are tried when they are tuned, in multiples of those given."""
 
+LONG = 4.0
+"""Measuring times from some to more than so many times as much are an average over times, with nothing to tune."""
+
 
 def measured_rows(
     subsolver: Subsolver, spelling: str, batch: ClusterBatch, origins: Sequence[str], numbers: Sequence[int],
@@ -82,11 +85,16 @@ def energies_of(batch: ClusterBatch, outcomes: np.typing.NDArray[np.int8]) -> F6
 
 
 def timed_variants(subsolver: Subsolver) -> list[Subsolver]:
-    """The subsolver with its time multiplied by each of ``FACTORS``; empty for one that has none to tune."""
+    """The subsolver with its time multiplied by each of ``FACTORS``; empty for one that has none to tune.
+
+    An interval that is long on purpose is an average, and stays as it is.
+    """
     if getattr(subsolver, "time", None) is not None or getattr(subsolver, "duration", None) is not None:
         return []
     if hasattr(subsolver, "time_in_hops"):
         ends = np.atleast_1d(subsolver.time_in_hops)
+        if ends[-1] > LONG * ends[0]:
+            return []
         return [_with(subsolver, time_in_hops=[_round(factor * end) for end in ends]) for factor in FACTORS]
     if hasattr(subsolver, "duration_in_hops") and getattr(subsolver, "_table", None) is None:
         hops = subsolver.duration_in_hops or getattr(subsolver, "default_in_hops", 1.0)

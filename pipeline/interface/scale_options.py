@@ -19,8 +19,8 @@ PATH = click.Path(path_type=Path)
 @click.argument("source", metavar="FAMILY|INPUT...", nargs=-1, required=True)
 @click.option("--sizes", required=True, metavar="6..14", help="Spins per instance or cluster: 6..14, or 6,8,10.")
 @click.option(
-    "--subsolver", "subsolvers", multiple=True, default=("walk",), show_default=True, metavar="NAME[,key=value...]",
-    help="Who is measured; give it several times for rivals.",
+    "--subsolver", "subsolvers", multiple=True, metavar="NAME[,key=value...]",
+    help="Who is measured; give it several times for rivals. By default walk, and walk averaged over long times.",
 )  # fmt: skip
 @click.option("--instances", type=click.IntRange(min=2), default=200, show_default=True, help="Instances of each size.")
 @click.option(
@@ -57,7 +57,7 @@ def scale_command(source: tuple[str, ...], sizes: str, as_json: bool, **given: A
 
     \b
     patchwalk scale sk --fields --sizes 5..8 --instances 20
-    patchwalk scale lattice2d --within 12 --sizes 5,6,7,8 --instances 20 --subsolver walk --subsolver metropolis
+    patchwalk scale lattice2d --within 12 --sizes 5,6,7,8 --instances 20 --subsolver walk --run cut.sqlite
 
     Each subsolver is measured as it is given and, where it has times to tune, once more with them tuned on half of
     the instances and measured on the other half. Printed are the mean, the median and the mean of logarithms, each
@@ -68,6 +68,8 @@ def scale_command(source: tuple[str, ...], sizes: str, as_json: bool, **given: A
     try:
         options = {name: given.pop(name) for name in ("couplings", "open", "fields", "degree", "density")}
         chosen = {name: value for name, value in options.items() if value is not None}
+        if not given["subsolvers"]:
+            del given["subsolvers"]
         found = scale(source, sizes_from(sizes), **given, **chosen)
     except Exception as error:
         fail(error, as_json)
