@@ -114,7 +114,7 @@ def _curve_lines(curve: ScalingCurve) -> list[str]:
     means = ", ".join(f"{size}: {values.mean():.3g}" for size, values in curve.success.items())
     lines = ["", curve.name, f"  mean success per shot ({how})  {means}"]
     for fit in curve.fits:
-        lines.append(f"  {fit.average:<20}2^(-{fit.exponent:.4f} k), 95 % interval [{fit.low:.4f}, {fit.high:.4f}]")
+        lines.append(f"  {fit.average:<20}2^({-fit.exponent:.4f} k), 95 % interval [{-fit.high:.4f}, {-fit.low:.4f}]")
         residuals = " ".join(f"{residual:+.3f}" for residual in fit.residuals)
         lines.append(f"  {'':<20}residuals of log2: {residuals}; {fit.best_model}")
     if not curve.fits:

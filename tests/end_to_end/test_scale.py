@@ -158,3 +158,12 @@ def test_the_walk_on_glasses_with_fields_falls_as_it_is_known_to() -> None:
     assert fit.low <= 0.41 <= fit.high
     assert fit.high - fit.low <= 0.04
     assert found.curve("guessing").fits[0].exponent == pytest.approx(1.0, abs=1e-9)
+
+
+def test_a_success_that_rises_with_size_is_written_with_one_sign() -> None:
+    from patchwalk.interface.scale_options import in_words
+
+    found = scale("sk", [3, 4, 5], subsolvers=["walk"], instances=4, fields=True, tune=False, run="a.sqlite")
+    fit = found.curve("walk").fits[0]
+    assert f"2^({-fit.exponent:.4f} k), 95 % interval [{-fit.high:.4f}, {-fit.low:.4f}]" in in_words(found)
+    assert "--" not in in_words(found)
