@@ -111,9 +111,10 @@ class Duel:
         if not self.difference.tells:
             return f"the difference between {self.one} and {self.other} cannot be told from none in these runs"
         better, worse = (self.one, self.other) if self.difference.value < 0 else (self.other, self.one)
+        least, most = sorted(abs(end) for end in (self.difference.low, self.difference.high) if end is not None)
         return (
             f"{better} ended lower than {worse}, by {abs(self.difference.value):.3g} in energy per spin "
-            f"({100 * self.level:.3g} % interval {self.difference.low:.3g} to {self.difference.high:.3g})"
+            f"({100 * self.level:.3g} % interval {least:.3g} to {most:.3g})"
         )
 
     def as_json(self) -> dict[str, Any]:

@@ -66,7 +66,8 @@ def test_runs_are_paired_by_instance_and_seed() -> None:
     duel = duels(runs, ["walk", "tabu"])[0]
     assert (duel.difference.value, duel.difference.low, duel.difference.high) == (0.5, 0.5, 0.5)
     assert (duel.wins, duel.ties, duel.losses) == (0, 0, 2)
-    assert duel.verdict.startswith("tabu ended lower than walk")
+    assert duel.verdict.startswith("tabu ended lower than walk, by 0.5 ")
+    assert duels(runs, ["tabu", "walk"])[0].verdict == duel.verdict  # told from the better one's side
 
 
 def test_equal_runs_cannot_be_told_apart() -> None:
