@@ -10,7 +10,7 @@ from typing import Any
 
 from patchwalk.bounds.certificate import Certificate
 from patchwalk.commands.auditing import audit, stored_run
-from patchwalk.commands.tasks import _check_memory, _check_sizes, _default_run_path, _problem_from
+from patchwalk.commands.tasks import check_memory, check_sizes, default_run_path, problem_from
 from patchwalk.problem.files import read_start
 from patchwalk.problem.ising import Problem
 from patchwalk.search.branching import BranchPlan
@@ -64,11 +64,11 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
         checked_settings(SolveSettings, whole, {}, str(source))
         table = {key: whole[key] for key in SHARED if key in whole}
     values = {**table, **_converted(given, spelled_as)}
-    problem, name = _problem_from(input_path, SearchSettings.model_validate({"kind": values.get("kind")}))
+    problem, name = problem_from(input_path, SearchSettings.model_validate({"kind": values.get("kind")}))
     subsolver = subsolver_from(values.get("subsolver", DEFAULT_SUBSOLVER))
     size = values.get("cluster_size") or default_size(problem, subsolver)
-    _check_sizes(size, problem, [subsolver])
-    _check_memory(subsolver, size)
+    check_sizes(size, problem, [subsolver])
+    check_memory(subsolver, size)
     nodes, seconds = values.get("nodes"), values.get("seconds")
     if seconds is None and nodes is None:
         seconds = DEFAULT_SECONDS
@@ -86,7 +86,7 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
     if values.get("earlier"):
         start, earlier = _earlier_run(Path(values["earlier"]), problem)
         method = "cycles"
-    run_path = Path(values["run"]) if values.get("run") else _default_run_path(name)
+    run_path = Path(values["run"]) if values.get("run") else default_run_path(name)
     written = {**values, "cluster_size": size, "seconds": seconds, "without": list(off)}
     return BoundTask(problem, name, subsolver, plan, method, values.get("seed", 1), start, earlier, run_path, written)
 

@@ -78,6 +78,7 @@ def _task_of(
     path: Path, stored: StoredFile, run: StoredRun, given_problem: Problem | None, given: dict[str, Any]
 ) -> Task:
     """The task as it was when the run began; refuses where settings or problem have changed since."""
+    _refuse_other_commands(path, stored, run)
     _check_settings_file(run)
     unknown = [key for key in given if key not in CHANGEABLE]
     if unknown:
@@ -100,6 +101,17 @@ def _task_of(
         settings_file=run.settings_file,
         settings_table=run.settings_table,
     )
+
+
+def _refuse_other_commands(path: Path, stored: StoredFile, run: StoredRun) -> None:
+    """Only runs of ``solve`` are resumed; the others say how they go on."""
+    tables = {row["name"] for row in stored.rows("SELECT name FROM sqlite_master WHERE type = 'table'")}
+    if "compared_runs" in tables:
+        raise RunFileError(f"{path}: holds compared runs; the same patchwalk compare command goes on with them")
+    if run.settings.get("command") == "bound":
+        raise RunFileError(f"{path}: holds a bound; patchwalk bound INPUT --earlier {path} goes on with it")
+    if "burn_in" in run.settings:
+        raise RunFileError(f"{path}: holds a sampling run, which cannot be resumed; sample anew with more rounds")
 
 
 def _check_settings_file(run: StoredRun) -> None:

@@ -176,14 +176,14 @@ def _read(
     key = "subsolver" if settings.callers is None else "callers"
     from_file = key in table and key not in given
     policy = policy_of(settings, folder if from_file else Path(), place if from_file else "")
-    problem, name = _problem_from(input_path, settings)
+    problem, name = problem_from(input_path, settings)
     subsolvers = [case.subsolver for case in policy.cases if case.subsolver is not None]
     size = settings.cluster_size or min(DEFAULT_CLUSTER_SIZE, len(problem), *(one.max_spins for one in subsolvers))
-    _check_sizes(size, problem, subsolvers)
+    check_sizes(size, problem, subsolvers)
     for subsolver in subsolvers:
-        _check_memory(subsolver, size)
+        check_memory(subsolver, size)
     start = None if settings.start is None else read_start(settings.start, problem)
-    run_path = settings.run if settings.run is not None else _default_run_path(name)
+    run_path = settings.run if settings.run is not None else default_run_path(name)
     return {
         "problem": problem, "source": name, "settings": settings, "policy": policy, "cluster_size": size,
         "start": start, "run_path": run_path, "settings_file": settings_file, "settings_table": table,
@@ -202,7 +202,7 @@ def policy_of(settings: SearchSettings, folder: Path, place: str) -> Policy:
         raise SubsolverError("\n".join(lines)) from error
 
 
-def _problem_from(source: Problem | str | Path, settings: SearchSettings) -> tuple[Problem, str]:
+def problem_from(source: Problem | str | Path, settings: SearchSettings) -> tuple[Problem, str]:
     if not isinstance(source, Problem):
         return read_again(source, settings), str(Path(source).absolute())
     for key in ("kind", "field_file", "flip_sign"):
@@ -217,7 +217,7 @@ def read_again(source: str | Path, settings: SearchSettings) -> Problem:
     return read_problem(source, kind=settings.kind, field_file=settings.field_file, flip_sign=settings.flip_sign)
 
 
-def _check_sizes(size: int, problem: Problem, subsolvers: list[Subsolver]) -> None:
+def check_sizes(size: int, problem: Problem, subsolvers: list[Subsolver]) -> None:
     if not subsolvers:
         raise SettingsError(["callers: every case calls nobody; name a subsolver in one of them"])
     if size > len(problem):
@@ -246,7 +246,7 @@ def _check_answer(path: Path, problem: Problem) -> None:
             raise SettingsError([f"answer: {error}"]) from error
 
 
-def _check_memory(subsolver: Subsolver, size: int) -> None:
+def check_memory(subsolver: Subsolver, size: int) -> None:
     """Refuse, before anything is allocated, a cluster size whose forecast goes beyond the machine's memory."""
     memory = os.sysconf("SC_PHYS_PAGES") * os.sysconf("SC_PAGE_SIZE")
     needed = _bytes_needed(subsolver, size)
@@ -280,7 +280,7 @@ def _blank_batch(size: int) -> ClusterBatch:
     )  # fmt: skip
 
 
-def _default_run_path(name: str) -> Path:
+def default_run_path(name: str) -> Path:
     stem = re.sub(r"[^A-Za-z0-9_-]+", "-", Path(name).name.split(".")[0]).strip("-") or "problem"
     base = f"patchwalk-{stem}-{datetime.now():%Y%m%d-%H%M%S}"
     path, number = Path(f"{base}.sqlite"), 2
