@@ -153,7 +153,7 @@ def _start_of(stored: StoredFile, run: StoredRun, settings: SolveSettings, probl
         return None
     query = "SELECT spins FROM checkpoints WHERE run = ? AND round = 0"
     row = next(stored.rows(query, (run.number,)))
-    return unpacked_rows(row["spins"], len(problem))[0]
+    return unpacked_rows(row["spins"], len(problem))[-1]  # the coldest replica
 
 
 def _bits_may_differ(run: StoredRun) -> list[str]:

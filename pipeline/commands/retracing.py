@@ -66,7 +66,7 @@ def _task_of(stored: StoredFile, run: StoredRun) -> Task:
     start = None
     if settings.start is not None:
         query = "SELECT spins FROM checkpoints WHERE run = ? AND round = 0"
-        start = unpacked_rows(next(stored.rows(query, (run.number,)))["spins"], len(problem))[0]
+        start = unpacked_rows(next(stored.rows(query, (run.number,)))["spins"], len(problem))[-1]  # the coldest replica
     assert settings.cluster_size is not None
     return Task(
         problem=problem, source=run.source, settings=settings, policy=policy_of(settings, Path(), ""),

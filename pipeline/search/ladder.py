@@ -72,6 +72,8 @@ class Ladder:
         """Move the inner rungs towards equal rates: a step's width follows how easily it is crossed."""
         rates = np.clip(self.chances / np.maximum(self.tried, 1.0), 0.01, 0.99)
         widths = -np.diff(np.log(self.temperatures))
+        if len(widths) < 2 or widths.sum() == 0.0:
+            return
         # minus the logarithm of a rate grows as the square of the step
         wanted = widths * (np.log(rates) / np.log(rates).mean()) ** -0.5
         wanted *= widths.sum() / wanted.sum()

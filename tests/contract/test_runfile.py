@@ -59,7 +59,7 @@ def test_a_row_is_enough_to_ask_again(tmp_path: Path) -> None:
 
 
 def test_energies_in_rows_follow_each_other(tmp_path: Path) -> None:
-    solution = solve(GLASS, cluster_size=8, calls=200, sweeps=0, run=tmp_path / "run.sqlite")
+    solution = solve(GLASS, cluster_size=8, calls=200, sweeps=0, replicas=1, run=tmp_path / "run.sqlite")
     with opened(solution.run_path) as database:
         rows = database.execute("SELECT * FROM calls ORDER BY round, place").fetchall()
         incumbents = database.execute("SELECT energy, finder FROM incumbents ORDER BY calls").fetchall()
@@ -94,7 +94,7 @@ def test_a_share_of_cheap_calls_has_rows_and_the_rest_is_tallied_exactly(tmp_pat
 
 
 def test_the_run_itself_is_described(tmp_path: Path) -> None:
-    solution = solve(GLASS, cluster_size=7, calls=30, seeds=[3, 4], hot=0.9, run=tmp_path / "two.sqlite")
+    solution = solve(GLASS, cluster_size=7, calls=30, seeds=[3, 4], hot=0.9, replicas=1, run=tmp_path / "two.sqlite")
     with opened(solution.run_path) as database:
         runs = database.execute("SELECT * FROM runs ORDER BY run").fetchall()
         problem = database.execute("SELECT * FROM problems").fetchone()
@@ -133,7 +133,13 @@ class Unreliable:
 
 def test_failed_calls_are_rows_and_too_many_end_the_run_with_the_incumbent(tmp_path: Path) -> None:
     solution = solve(
-        GLASS, subsolver=Unreliable(), cluster_size=6, calls=500, failures=20, run=tmp_path / "failed.sqlite"
+        GLASS,
+        subsolver=Unreliable(),
+        cluster_size=6,
+        calls=500,
+        failures=20,
+        replicas=1,
+        run=tmp_path / "failed.sqlite",
     )
     assert solution.status == "error"
     assert "the cooler is warm" in solution.message
@@ -165,7 +171,9 @@ def test_conditioning_again_gives_the_stored_fields(tmp_path: Path) -> None:
     """The first round's stored fields are those of the start configuration, conditioned afresh."""
     start = 1 - 2 * (np.arange(len(GLASS)) % 2)
     (tmp_path / "start.txt").write_text(" ".join(map(str, start)))
-    solution = solve(GLASS, cluster_size=7, calls=5, start=tmp_path / "start.txt", run=tmp_path / "run.sqlite")
+    solution = solve(
+        GLASS, cluster_size=7, calls=5, replicas=1, start=tmp_path / "start.txt", run=tmp_path / "run.sqlite"
+    )
     assert solution.start_energy == GLASS.energy(start)
     with opened(solution.run_path) as database:
         rows = database.execute("SELECT members, boundary_fields FROM calls WHERE round = 0 ORDER BY place").fetchall()
