@@ -12,7 +12,7 @@ from typing import Any
 import numpy as np
 
 from patchwalk.commands.tasks import Task, task_from
-from patchwalk.cost import PRICES, priced
+from patchwalk.cost import priced, sweep_seconds
 from patchwalk.engine import forecast_of
 from patchwalk.evidence.compared_runs import ComparedRun, digest_text
 from patchwalk.problem.ising import Problem
@@ -176,7 +176,8 @@ def calls_worth(task: Task, model_seconds: float) -> int:
         if told is None:
             raise SettingsError([f"{subsolver.name} cannot forecast its work; give a budget in calls or seconds"])
         calling = float(priced(told.work, len(batch)).mean()) * clusters
-    sweeping = PRICES["spin_updates"] * task.sweeps * len(task.problem) * task.replicas
+    size, degree = len(task.problem), 2.0 * task.problem.coupling_count / len(task.problem)
+    sweeping = task.sweeps * sweep_seconds(size, degree, task.replicas)
     if calling + sweeping <= 0.0:
         raise SettingsError(["a round of this contender has no price; give a budget in calls or seconds"])
     rounds = max(FEWEST_ROUNDS, round(model_seconds / (calling + sweeping)))

@@ -82,9 +82,9 @@ class Task(Errand[SolveSettings]):
             return self.settings.sweeps
         size, degree = len(self.problem), 2.0 * self.problem.coupling_count / len(self.problem)
         apart = self.replicas * max(1, int(size / (self.cluster_size * (1.0 + degree))))  # clusters that do not touch
-        calls = min(self.settings.clusters_per_round, apart) * max(
-            _call_seconds(case.subsolver, self.cluster_size) for case in self.policy.cases if case.subsolver is not None
-        )
+        asked = [case.subsolver for case in self.policy.cases if case.subsolver is not None]
+        dearest = max((_call_seconds(subsolver, self.cluster_size) for subsolver in asked), default=0.0)
+        calls = min(self.settings.clusters_per_round, apart) * dearest
         wanted = 0.5 * calls / sweep_seconds(size, degree, self.replicas)
         return int(min(MOST_SWEEPS, max(FEWEST_SWEEPS, wanted)))
 

@@ -16,7 +16,7 @@ import pytest
 from patchwalk import Problem, compare, make, solve, write_problem
 from patchwalk.commands import comparing
 from patchwalk.commands.comparing_tasks import calls_worth, entries_of, question_from
-from patchwalk.cost import PRICES
+from patchwalk.cost import sweep_seconds
 from patchwalk.evidence.stored import stored_file
 from patchwalk.settings_checks import SettingsError
 
@@ -83,9 +83,10 @@ def test_nobody_is_called_by_none() -> None:
 
 def test_model_seconds_are_worth_so_many_calls() -> None:
     """Sweeps alone cost a spin update a spin, which leaves nothing to a forecast."""
-    question = question_from([GLASS], ["none", "walk"], {"model_seconds": 1e-4, "cluster_size": 4, "seeds": [1]})
+    question = question_from([GLASS], ["none", "walk"], {"model_seconds": 1e-4, "cluster_size": 4, "seeds": [1],
+                                                         "sweeps": 2, "replicas": 1})  # fmt: skip
     entries = entries_of(question)
-    sweeping = PRICES["spin_updates"] * 2 * len(GLASS)
+    sweeping = 2 * sweep_seconds(len(GLASS), 2.0 * GLASS.coupling_count / len(GLASS), 1)
     calls = {entry.compared.contender: entry.task.settings.calls for entry in entries}
     assert calls["none"] is not None
     assert calls["walk"] is not None
