@@ -208,20 +208,20 @@ def _from_samples(
     subsolver: Subsolver, batch: ClusterBatch, first: Proposals, acceptance: AcceptanceRule, repetitions: int
 ) -> F64:
     """Averages over repeated calls; one that fails when repeated counts as no change."""
-    drops, falls, improved = (np.zeros((repetitions, len(batch))) for _ in range(3))
+    drops, falls, improved = (np.zeros((len(batch), repetitions)) for _ in range(3))  # a row's sum is its own
     shots, tolerances = [], tie_tolerances(batch)
     for turn in range(repetitions):
         asked = batch if turn == 0 else dataclasses.replace(batch, seeds=repeated_seeds(batch.seeds, turn))
         answer = first if turn == 0 else ask(subsolver, asked)
         _, change, _ = judge(asked, answer, "greedy")
         chance = acceptance_chances(change, batch.temperature, acceptance, answer.log_ratio)
-        drops[turn] = -change * chance
-        falls[turn] = np.maximum(0.0, -change) * chance
-        improved[turn] = (change < -tolerances) * chance
+        drops[:, turn] = -change * chance
+        falls[:, turn] = np.maximum(0.0, -change) * chance
+        improved[:, turn] = (change < -tolerances) * chance
         shots.append(answer.outcomes)
-    error = drops.std(axis=0, ddof=1) / np.sqrt(repetitions)
+    error = drops.std(axis=1, ddof=1) / np.sqrt(repetitions)
     hits = hit_shares(batch, np.concatenate(shots, axis=1))
-    return np.stack([drops.mean(axis=0), error, falls.mean(axis=0), improved.mean(axis=0), hits], axis=1)
+    return np.stack([drops.mean(axis=1), error, falls.mean(axis=1), improved.mean(axis=1), hits], axis=1)
 
 
 def acceptance_chances(change: F64, temperature: F64, acceptance: AcceptanceRule, log_ratio: F64 | None) -> F64:
