@@ -21,8 +21,8 @@ from patchwalk.bounds.spectral import vertex_count
 from patchwalk.bounds.tightening import MOST_GROUPS
 from patchwalk.engine import release
 from patchwalk.problem.ising import Problem
-from patchwalk.records import Calls, Improvement, Round, Snapshot
-from patchwalk.search.branch_primal import Incumbent
+from patchwalk.records import Calls, Round
+from patchwalk.search.branch_primal import Incumbent, Standing
 from patchwalk.search.branching import BranchPlan, NodeLine
 from patchwalk.subsolvers.contract import F64, I8, Subsolver
 
@@ -40,7 +40,7 @@ def is_dense(problem: Problem) -> bool:
     return crowded and vertex_count(problem) <= MOST_GROUPS
 
 
-class DenseBranching:
+class DenseBranching(Standing):
     """One run; :class:`patchwalk.search.branching.BranchAndBound` says what is to be read from it.
 
     Without ``cuts`` or ``branching`` the bound is the root's. ``told`` is called after every line of the log.
@@ -66,26 +66,6 @@ class DenseBranching:
         self._began = time.perf_counter()
 
     _proof: DenseProof | None
-
-    @property
-    def subsolver(self) -> Subsolver | None:
-        """Who answers the clusters."""
-        return self.incumbent.subsolver
-
-    @property
-    def best_energy(self) -> float:
-        """The lowest energy known."""
-        return self.incumbent.energy
-
-    @property
-    def best_spins(self) -> I8:
-        """Its configuration, i8 (n,)."""
-        return self.incumbent.spins
-
-    @property
-    def elapsed(self) -> float:
-        """Seconds since the search began, compiling apart."""
-        return time.perf_counter() - self._began
 
     @property
     def node_count(self) -> int:
@@ -137,16 +117,6 @@ class DenseBranching:
                 release(self.subsolver)
         self._prove()
         yield self._round(())
-
-    def take_improvements(self) -> tuple[Improvement, ...]:
-        """The new best energies since the last call of this method, in order."""
-        taken = tuple(self.incumbent.improvements)
-        self.incumbent.improvements.clear()
-        return taken
-
-    def snapshot(self) -> Snapshot:
-        """The state between two rounds, as the run file keeps it."""
-        return self.incumbent.snapshot(self.elapsed)
 
     def certificate(self) -> Certificate:
         """What proves the bound, as data that :func:`patchwalk.bounds.certificate.check` takes."""

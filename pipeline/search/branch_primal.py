@@ -67,6 +67,12 @@ class Incumbent:
         self._places: I32 = np.full(len(problem), -1, np.int32)
         self._csr = (problem.row_starts, problem.neighbours, problem.couplings)
 
+    def take_improvements(self) -> tuple[Improvement, ...]:
+        """The new best energies since the last call of this method, in order."""
+        taken = tuple(self.improvements)
+        self.improvements.clear()
+        return taken
+
     def snapshot(self, seconds: float) -> Snapshot:
         """The configuration and the counts as the run file keeps them."""
         size = len(self.problem)
@@ -79,9 +85,7 @@ class Incumbent:
 
     def round_of(self, number: int, stage: float, calls: tuple[Calls, ...]) -> Round:
         """The record of a round that is over, with the new best energies since the last one."""
-        improvements = tuple(self.improvements)
-        self.improvements.clear()
-        return Round(number, stage, np.zeros(1), calls, np.array([self.energy]), improvements)
+        return Round(number, stage, np.zeros(1), calls, np.array([self.energy]), self.take_improvements())
 
     def begin(self) -> None:
         """Start the clock of the improvements."""
@@ -268,3 +272,38 @@ def _undecided_start(
             if not inside[spin] and state[spin] == 0:
                 return spin
     return best
+
+
+class Standing:
+    """How a branch-and-bound stands: what either kind shows of its ``incumbent`` and its clock."""
+
+    incumbent: Incumbent
+    _began: float
+
+    @property
+    def subsolver(self) -> Subsolver | None:
+        """Who answers the clusters."""
+        return self.incumbent.subsolver
+
+    @property
+    def best_energy(self) -> float:
+        """The lowest energy known."""
+        return self.incumbent.energy
+
+    @property
+    def best_spins(self) -> I8:
+        """Its configuration, i8 (n,)."""
+        return self.incumbent.spins
+
+    @property
+    def elapsed(self) -> float:
+        """Seconds since the search began, compiling apart."""
+        return time.perf_counter() - self._began
+
+    def take_improvements(self) -> tuple[Improvement, ...]:
+        """The new best energies since the last call of this method, in order."""
+        return self.incumbent.take_improvements()
+
+    def snapshot(self) -> Snapshot:
+        """The state between two rounds, as the run file keeps it."""
+        return self.incumbent.snapshot(self.elapsed)

@@ -25,9 +25,9 @@ from patchwalk.bounds.cycles import CycleProgram, Multipliers, tightening
 from patchwalk.bounds.energy_step import lower_energy
 from patchwalk.engine import release
 from patchwalk.problem.ising import Problem
-from patchwalk.records import Calls, Improvement, Round, Snapshot
+from patchwalk.records import Calls, Round
 from patchwalk.search.branch_pairs import Half, PairChooser
-from patchwalk.search.branch_primal import Incumbent
+from patchwalk.search.branch_primal import Incumbent, Standing
 from patchwalk.search.branch_tree import Node, Tree
 from patchwalk.subsolvers.contract import I8, Subsolver
 
@@ -89,7 +89,7 @@ class NodeLine:
 OUTCOMES = {BRANCHED: "split", BOUNDED: "bounded", EMPTY: "empty", SETTLED: "settled"}
 
 
-class BranchAndBound:
+class BranchAndBound(Standing):
     """One run. Iterate over :meth:`rounds`; then read ``status``, ``lower_bound``, ``best_spins``, ``certificate()``.
 
     ``status`` is ``proved_optimal`` where the bound reached the best energy (within ``problem.tie_tolerance``), else
@@ -121,26 +121,6 @@ class BranchAndBound:
         self._epoch, self._root_rows = 0, 0
         self._chooser = PairChooser(self.program, self.tree)
         self._began = time.perf_counter()
-
-    @property
-    def subsolver(self) -> Subsolver | None:
-        """Who answers the clusters."""
-        return self.incumbent.subsolver
-
-    @property
-    def best_energy(self) -> float:
-        """The lowest energy known."""
-        return self.incumbent.energy
-
-    @property
-    def best_spins(self) -> I8:
-        """Its configuration, i8 (n,)."""
-        return self.incumbent.spins
-
-    @property
-    def elapsed(self) -> float:
-        """Seconds since the search began, compiling apart."""
-        return time.perf_counter() - self._began
 
     @property
     def lower_bound(self) -> float:
@@ -226,16 +206,6 @@ class BranchAndBound:
             if self.subsolver is not None:
                 release(self.subsolver)
         self._conclude()
-
-    def take_improvements(self) -> tuple[Improvement, ...]:
-        """The new best energies since the last call of this method, in order."""
-        taken = tuple(self.incumbent.improvements)
-        self.incumbent.improvements.clear()
-        return taken
-
-    def snapshot(self) -> Snapshot:
-        """The state between two rounds, as the run file keeps it."""
-        return self.incumbent.snapshot(self.elapsed)
 
     def certificate(self) -> Certificate:
         """What proves the bound, as data that :func:`patchwalk.bounds.certificate.check` takes."""

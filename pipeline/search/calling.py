@@ -25,6 +25,7 @@ from patchwalk.search.replicas import Replicas
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64, ClusterBatch, Subsolver
 from patchwalk.subsolvers.draws import call_seeds, seed_for
+from patchwalk.subsolvers.neighbours import turn
 from patchwalk.workers import Serial, Workers
 
 RULE, CALL = 2, 4
@@ -196,7 +197,4 @@ def _flip_accepted(
         for i in range(members.shape[1]):
             spin = members[row, i]
             if spins[spin] != outcomes[row, chosen[row], i]:
-                spins[spin] = -spins[spin]
-                turned = 2.0 * spins[spin]
-                for place in range(row_starts[spin], row_starts[spin + 1]):
-                    local_fields[neighbours[place]] += turned * couplings[place]
+                turn(spin, spins, local_fields, row_starts, neighbours, couplings)
