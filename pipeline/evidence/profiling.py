@@ -81,7 +81,8 @@ class Profile:
         """Plain values for ``--json``; what is unknown or infinite is None or the text ``infinite``."""
         fields = {field.name: getattr(self, field.name) for field in dataclasses.fields(self)}
         replayed = fields.pop("replayed")
-        fields |= {"runs": list(replayed.run_names), "calls": len(replayed), "sentence": self.sentence}
+        fields |= {"runs": list(replayed.run_names), "calls": len(replayed)}
+        fields |= {"verdict": self.verdict, "sentence": self.sentence}
         fields |= {"rule": str(self.judgement.rule), "callers": self.judgement.rule.callers}
         return {name: plain(value) for name, value in fields.items()}
 
