@@ -9,7 +9,7 @@ from typing import Any
 
 import numpy as np
 
-from patchwalk.commands.answers import answer_for
+from patchwalk.commands.answers import answered, settled
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.solving import Silent, Solution, Watcher, best_of, carry_out_one, delivered, hired, runs_of
 from patchwalk.commands.tasks import Task, policy_of, read_again
@@ -167,14 +167,16 @@ def _bits_may_differ(run: StoredRun) -> list[str]:
 def _solution_of(stored: StoredFile, run: StoredRun, task: Task) -> Solution:
     """The solution of a run that has ended."""
     row = next(stored.rows("SELECT * FROM runs WHERE run = ?", (run.number,)))
-    problem = task.problem
-    spins = unpacked(row["spins"], len(problem))
-    energy = problem.energy(spins)
-    feasible, answer = answer_for(problem, spins)
     return Solution(
-        spins=spins, energy=energy, objective=problem.objective(energy), objective_name=problem.objective_name,
-        feasible=feasible, answer=answer, status=row["status"], message=row["message"], seconds=row["seconds"],
-        compile_seconds=row["compile_seconds"], calls=row["calls"], failed_calls=row["failed_calls"],
-        skipped=row["skipped"], sweeps=row["sweeps"], seed=run.seed, run_path=task.run_path, notes=problem.notes,
-        lower_bound=row["lower_bound"],
+        **answered(task.problem, _found_by(stored, run, task.problem, unpacked(row["spins"], len(task.problem)))),
+        status=row["status"], message=row["message"], seconds=row["seconds"], compile_seconds=row["compile_seconds"],
+        calls=row["calls"], failed_calls=row["failed_calls"], skipped=row["skipped"], sweeps=row["sweeps"],
+        seed=run.seed, run_path=task.run_path, notes=task.problem.notes, lower_bound=row["lower_bound"],
     )  # fmt: skip
+
+
+def _found_by(stored: StoredFile, run: StoredRun, problem: Problem, spins: I8) -> I8:
+    """What the search found before it was mended to ``spins``, so that the repair can be told once more."""
+    query = "SELECT best_spins FROM checkpoints WHERE run = ? ORDER BY round DESC LIMIT 1"
+    found = unpacked(next(stored.rows(query, (run.number,)))["best_spins"], len(problem))
+    return found if np.array_equal(settled(problem, found), spins) else spins

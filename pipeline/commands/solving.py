@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any, Protocol
 
-from patchwalk.commands.answers import answer_for, settled, spoken
+from patchwalk.commands.answers import answered
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.tasks import Task, task_from
 from patchwalk.evidence.certificates import store_certificate
@@ -17,7 +17,7 @@ from patchwalk.evidence.kept_answers import KeptAnswers
 from patchwalk.evidence.layout import RunFileError, packed
 from patchwalk.evidence.runfile import RunFacts, RunFile
 from patchwalk.evidence.stored import StoredRun
-from patchwalk.problem.decoding import encoding_of, write_answer
+from patchwalk.problem.decoding import Answer, write_answer
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
 from patchwalk.search.neighbourhood import NeighbourhoodSearch
@@ -32,13 +32,14 @@ class Solution:
     """What a run ended with.
 
     Always there: ``spins`` i8 (n,), ``energy`` (re-evaluated from the problem), ``objective`` in the user's terms
-    under ``objective_name``, ``feasible``, ``answer``, ``status`` (``target_reached``, ``budget``, ``stalled``,
-    ``interrupted`` or ``error``), ``message``, ``seconds`` without and ``compile_seconds`` for compiling, ``calls``,
-    ``failed_calls``, ``skipped`` (clusters for which nobody was called), ``sweeps``, ``seed``, ``run_path``,
-    ``alternatives`` i8 (E, n), the best distinct configurations. None unless a bound was computed: ``lower_bound`` and
-    ``gap``; where they meet, ``status`` is ``proved_optimal`` and ``message`` names the certificate. ``spoken`` is the
-    answer in words, for problems that were encoded; their ``spins`` are mended where a cheap repair makes them
-    feasible. ``runs`` holds every run where several seeds were asked for, this one being the best.
+    under ``objective_name``, ``feasible``, ``answer``, ``decoded`` (the same, as it is written to files), ``status``
+    (``target_reached``, ``budget``, ``stalled``, ``interrupted`` or ``error``), ``message``, ``seconds`` without and
+    ``compile_seconds`` for compiling, ``calls``, ``failed_calls``, ``skipped`` (clusters for which nobody was called),
+    ``sweeps``, ``seed``, ``run_path``, ``alternatives`` i8 (E, n), the best distinct configurations. None unless a
+    bound was computed: ``lower_bound`` and ``gap``; where they meet, ``status`` is ``proved_optimal`` and ``message``
+    names the certificate. ``spoken`` is the answer in words, for problems that were encoded; their ``spins`` are mended
+    where a cheap repair makes them feasible. ``runs`` holds every run where several seeds were asked for, this one
+    being the best.
     """
 
     spins: I8
@@ -47,6 +48,7 @@ class Solution:
     objective_name: str
     feasible: bool
     answer: dict[str, Any]
+    decoded: Answer
     status: str
     message: str
     seconds: float
@@ -202,7 +204,7 @@ def best_of(task: Task, solutions: Iterable[Solution]) -> Solution:
 def delivered(task: Task, solution: Solution) -> Solution:
     """The solution, after its answer was written to the file asked for."""
     if task.settings.answer is not None:
-        write_answer(task.settings.answer, task.problem, encoding_of(task.problem).decode(solution.spins))
+        write_answer(task.settings.answer, task.problem, solution.decoded)
     return solution
 
 
@@ -258,10 +260,7 @@ def bounded(solution: Solution, task: Task, runfile: RunFile, run: int, interrup
     proved = found.status == "proved_optimal"
     better = found.energy < solution.energy - task.problem.tie_tolerance
     if better:
-        solution = replace(
-            solution, spins=found.spins, energy=found.energy, objective=found.objective, feasible=found.feasible,
-            answer=found.answer,
-        )  # fmt: skip
+        solution = replace(solution, **answered(task.problem, found.spins))
     return replace(
         solution,
         lower_bound=found.lower_bound,
@@ -296,16 +295,9 @@ def facts_of(task: Task, search: NeighbourhoodSearch) -> RunFacts:
 def _solution(
     task: Task, search: NeighbourhoodSearch, start_energy: float | None, seconds: float, compile_seconds: float
 ) -> Solution:
-    problem, spins = task.problem, settled(task.problem, search.best_spins)
-    energy = problem.energy(spins)
-    feasible, answer = answer_for(problem, search.best_spins)
-    is_encoded = problem.encoding is not None
-    objective = answer[problem.objective_name] if is_encoded else problem.objective(energy)
     return Solution(
-        spins=spins, energy=energy, objective=objective, objective_name=problem.objective_name,
-        feasible=feasible, answer=answer, status=search.status, message=search.message, seconds=seconds,
+        **answered(task.problem, search.best_spins), status=search.status, message=search.message, seconds=seconds,
         compile_seconds=compile_seconds, calls=search.calls, failed_calls=search.failures.total,
         skipped=search.skipped, sweeps=search.sweeps, seed=search.seed, run_path=task.run_path,
-        start_energy=start_energy, notes=problem.notes, alternatives=search.elites.spins,
-        spoken=tuple(spoken(problem, search.best_spins)) if is_encoded else (),
+        start_energy=start_energy, notes=task.problem.notes, alternatives=search.elites.spins,
     )  # fmt: skip

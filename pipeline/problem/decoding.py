@@ -2,7 +2,7 @@
 
 A CSV of an answer has the header ``name,ENTRY`` with the entry that decides the kind's answer (``colours``,
 ``members``, ``parts``, ...), and a row for every name with its value, for every member of a set, or for every name
-with its part, 1 or 2. Its first line is a comment that says whether the answer is valid.
+with its part, 1 or 2. Comments before it say whether the answer is valid, what it breaks, and what a repair changed.
 """
 
 from __future__ import annotations
@@ -25,7 +25,7 @@ from patchwalk.problem.files import read_start
 from patchwalk.problem.forms import PathLike
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.kinds.plain import encoding_of
-from patchwalk.problem.meanings import Answer, Encoding
+from patchwalk.problem.meanings import Answer, Encoding, in_words
 from patchwalk.problem.sources import fail, numbered_lines
 
 __all__ = [
@@ -187,7 +187,9 @@ def _json_lines(problem: Problem, answer: Answer) -> Iterator[str]:
         "feasible": answer.feasible,
         problem.objective_name: answer.objective,
         "broken": answer.broken,
+        "repaired": answer.repaired,
         "mended": answer.mended,
+        "changed": answer.changed,
         "answer": dict(answer.value),
         "spins": answer.spins.tolist(),
     }
@@ -197,6 +199,7 @@ def _json_lines(problem: Problem, answer: Answer) -> Iterator[str]:
 def _table_lines(problem: Problem, answer: Answer) -> Iterator[str]:
     encoding = encoding_of(problem)
     yield "# " + "; ".join([verdict(len(answer.broken), len(answer.mended)), _objective(problem, answer)])
+    yield from ("# " + " ".join(line.split()) for line in _account(answer))
     rows: list[tuple[Any, Any]] = [("name", encoding.main)]
     said = answer.value[encoding.main]
     if said is None:
@@ -217,12 +220,17 @@ def _objective(problem: Problem, answer: Answer) -> str:
     return f"{problem.objective_name} {answer.objective:.12g}"
 
 
+def _account(answer: Answer) -> Iterator[str]:
+    """What is broken; what had been and was mended, and what that changed."""
+    for word, sentences in (("broken", answer.broken), ("mended", answer.mended), ("changed", answer.changed)):
+        yield from (f"  {word}: {sentence}" for sentence in sentences)
+
+
 def answer_lines(problem: Problem, answer: Answer) -> Iterator[str]:
-    """The answer for people: whether it is valid, what is broken, the objective, then names and values."""
+    """The answer for people: whether it is valid, what is broken or was mended, the objective, names and values."""
     encoding = encoding_of(problem)
     yield verdict(len(answer.broken), len(answer.mended))
-    yield from (f"  broken: {sentence}" for sentence in answer.broken)
-    yield from (f"  mended: {sentence}" for sentence in answer.mended)
+    yield from _account(answer)
     yield _objective(problem, answer)
     said = answer.value[encoding.main]
     if said is None:
@@ -235,14 +243,8 @@ def answer_lines(problem: Problem, answer: Answer) -> Iterator[str]:
             yield f"part {part} ({len(names)}):"
             yield from _wrapped(names)
     else:
-        yield from (f"  {name}: {_in_words(one)}" for name, one in said.items())
+        yield from (f"  {name}: {in_words(one)}" for name, one in said.items())
 
 
 def _wrapped(names: list[Any]) -> list[str]:
     return textwrap.wrap(", ".join(map(str, names)), WIDTH, initial_indent="  ", subsequent_indent="  ")
-
-
-def _in_words(one: Any) -> str:
-    if isinstance(one, bool):
-        return "yes" if one else "no"
-    return " and ".join(map(str, one)) or "nothing" if isinstance(one, list) else str(one)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from abc import ABC, abstractmethod
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Any, Literal
 
 import numpy as np
@@ -22,14 +22,16 @@ class Answer:
     ``value`` is in the user's words: sets, colours, parts, truth values by name. ``objective`` is recomputed from the
     original problem, never from the energy. ``broken`` has a sentence for every violated constraint of ``value``;
     ``mended`` a sentence for every one that the configuration given violated, where a cheap repair gave the
-    ``value`` that violates none. ``spins`` i8 (n,) is the configuration of ``value``.
+    ``value`` that violates none, and ``changed`` one for everything the repair did. ``spins`` i8 (n,) is the
+    configuration of ``value``.
     """
 
     value: Mapping[str, Any]
     objective: float
     spins: I8
     broken: tuple[str, ...] = ()
-    mended: tuple[str, ...] = field(default=())
+    mended: tuple[str, ...] = ()
+    changed: tuple[str, ...] = ()
 
     @property
     def feasible(self) -> bool:
@@ -40,6 +42,13 @@ class Answer:
     def repaired(self) -> bool:
         """Whether it took a repair to keep them."""
         return bool(self.mended)
+
+
+def in_words(one: Any) -> str:
+    """The value of a name as people say it."""
+    if isinstance(one, bool):
+        return "yes" if one else "no"
+    return " and ".join(map(str, one)) or "nothing" if isinstance(one, list) else str(one)
 
 
 def labels_of(names: Sequence[str] | None, size: int) -> tuple[str, ...]:
@@ -154,4 +163,22 @@ class Encoding(ABC):
         new_objective, still_broken = self.judge(new_value)
         if still_broken:
             return Answer(value, objective, given, broken=broken)
-        return Answer(new_value, new_objective, self.settle(mended), mended=broken)
+        changed = _changes(self.shape, value[self.main], new_value[self.main])
+        return Answer(new_value, new_objective, self.settle(mended), mended=broken, changed=changed)
+
+
+def _changes(shape: str, before: Any, after: Any) -> tuple[str, ...]:
+    """A sentence for everything in which the deciding entries of two values differ."""
+    if shape == "set":
+        gone, new = set(before) - set(after), set(after) - set(before)
+        taken = [f"{name} was taken out" for name in before if name in gone]
+        return (*taken, *(f"{name} was put in" for name in after if name in new))
+    if shape == "parts":
+        sides = {name: part for part, names in enumerate(before, 1) for name in names}
+        moved = [(name, part) for part, names in enumerate(after, 1) for name in names if sides[name] != part]
+        return tuple(f"{name} went from part {sides[name]} to part {part}" for name, part in moved)
+    return tuple(
+        f"{name} was {in_words(before[name])}, now {in_words(now)}"
+        for name, now in after.items()
+        if before[name] != now
+    )

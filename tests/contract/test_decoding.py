@@ -109,9 +109,64 @@ def test_a_repair_is_reported_and_the_spins_are_those_of_the_answer() -> None:
     assert said["repaired"] is True
     assert said["verdict"] == "valid after a repair: 1 constraint had been broken"
     assert said["mended"] == ["ash and bay, the are joined, and both are members"]
+    assert said["changed"] == ["ash was taken out"]
     assert said["members"] == ["bay, the", "Dünë"]  # the lighter end went
     assert said["weight"] == 6
     assert settled(problem, np.array([-1, -1, 1, -1], np.int8)).tolist() == [1, -1, 1, -1]
+
+
+@pytest.mark.parametrize(
+    ("name", "spins", "mended", "changed"),
+    [
+        (
+            "vertex_cover", [1, 1, -1, 1],
+            "ash and bay, the are joined, and neither is in the cover", "ash was put in",
+        ),
+        ("colouring", [-1, 1, 1, 1, -1, 1, 1, 1, 1, 1, -1, 1], "cob has no colours", "cob was nothing, now 1"),
+        (
+            "balanced_partition", [1, 1, 1, -1],
+            "the parts have 3 and 1 vertices, not halves", "cob went from part 1 to part 2",
+        ),
+    ],
+)  # fmt: skip
+@pytest.mark.parametrize("ending", ["answer.txt", "answer.csv", "answer.json"])
+def test_a_written_answer_tells_what_a_repair_changed(
+    name: str, spins: list[int], mended: str, changed: str, ending: str, tmp_path: Path
+) -> None:
+    problem = PROBLEMS[name]
+    write_answer(tmp_path / ending, problem, encoding_of(problem).decode(spins))
+    text = (tmp_path / ending).read_text()
+    assert verdict(0, 1) in text
+    if ending == "answer.json":
+        table = json.loads(text)
+        assert (table["repaired"], table["mended"], table["changed"]) == (True, [mended], [changed])
+    else:
+        mark = "#" if ending == "answer.csv" else " "
+        assert f"{mark} mended: {mended}\n{mark} changed: {changed}\n" in text
+
+
+def test_names_of_several_lines_stay_inside_the_comments_of_a_csv(tmp_path: Path) -> None:
+    problem = encodings.encode_independent_set([(0, 1)], names=["a\nb", "c"])
+    answer = encoding_of(problem).decode([-1, -1])
+    write_answer(tmp_path / "a.csv", problem, answer)
+    assert audit_answer(problem, read_answer(tmp_path / "a.csv", problem)) == (1.0, True, ())
+
+
+def test_solve_and_resume_tell_of_a_repair_in_the_answer_they_write(tmp_path: Path) -> None:
+    """The start has two joined members, and a run that calls nobody lower than it leaves it to the repair."""
+    problem = encodings.encode_independent_set(PATH, [1, 2, 3, 4], names=NAMES)
+    (tmp_path / "start.txt").write_text("-1 -1 1 -1")
+    run = tmp_path / "run.sqlite"
+    settings = {"start": tmp_path / "start.txt", "run": run, "answer": tmp_path / "answer.json"}
+    result = patchwalk.solve(problem, calls=1, sweeps=0, cluster_size=1, subsolver="uniform,shots=1", **settings)
+    written = json.loads((tmp_path / "answer.json").read_text())
+    assert written["mended"] == result.answer["mended"]
+    assert written["changed"] == result.answer["changed"]
+    assert written["verdict"] == result.answer["verdict"] == result.spoken[0]
+    assert result.answer["repaired"], result.answer
+    again = patchwalk.resume(run, problem)
+    assert again.answer == result.answer
+    assert again.spoken == result.spoken
 
 
 def test_what_no_repair_mends_is_not_valid() -> None:
