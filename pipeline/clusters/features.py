@@ -37,7 +37,7 @@ FEATURES: Mapping[str, Feature] = {
         cheap=True,
     ),
     "pull": Feature(
-        "pull of the boundary: sum of |h| over the sum of |J| at all spins, sum_i |h_i| / sum_i sum_j |J_ij|, with the "
+        "pull of the boundary: sum of |h| over the sum of |J| at all spins; sum_i |h_i| / sum_i sum_j |J_ij|, with the "
         "frozen boundary folded into h; infinite for free spins in fields, 0 where there is neither",
         looks_at_spins=False,
         cheap=True,

@@ -27,17 +27,23 @@ FILES = ("field_file",)
 
 
 def profile(
-    runs: Runs, cost: str | Path | None = None, *, subsolver: str | None = None, against: str | None = None
+    runs: Runs,
+    cost: str | Path | None = None,
+    *,
+    subsolver: str | None = None,
+    against: str | None = None,
+    gap: bool = False,
 ) -> Profile:
     """Where the calls of one or more replayed run files helped; print it, or take its arrays.
 
     ``cost`` is a cost model in TOML, by default the fixed prices; ``subsolver``, spelled as in the run, by default the
     one that made most calls; ``against``, the rival against which tables and rule are made, by default ``none``.
+    ``gap`` adds a table by the gap of the walk's Hamiltonian, of a share of the calls (:mod:`patchwalk.evidence.gaps`).
     Raises ``RunFileError`` for files that cannot be read or were not replayed, ``SettingsError`` for a cost model.
     """
     with _opened(runs) as files:
         pricing, about = _pricing(cost)
-        return profile_of(replayed_calls(files, subsolver, pricing), against, about)
+        return profile_of(replayed_calls(files, subsolver, pricing, gap), against, about)
 
 
 def kept_promise(runs: Runs, promised: str | Path, cost: str | Path | None = None) -> PromiseKept:
@@ -73,7 +79,7 @@ def _opened(runs: Runs) -> Iterator[list[StoredFile]]:
 def _pricing(cost: str | Path | None) -> tuple[Pricing, str]:
     """How calls are priced, and what to call it."""
     if cost is None:
-        return fixed_prices, "the fixed prices of this program for one core, all of it shortened by a faster machine"
+        return fixed_prices, "the fixed prices of counted work on one core, all of which a faster machine shortens"
     model = read_cost_model(cost)
 
     def price(spelling: str, batch: ClusterBatch | None, work: Work, rows: int) -> tuple[F64, F64]:

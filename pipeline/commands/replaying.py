@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import html
 import math
 import time
 from collections.abc import Callable, Sequence
@@ -13,6 +14,7 @@ from patchwalk.commands.interrupts import listening
 from patchwalk.commands.retracing import retrace
 from patchwalk.evidence.drops import REPETITIONS
 from patchwalk.evidence.layout import RunFileError
+from patchwalk.evidence.profile_words import shown_names
 from patchwalk.evidence.replaying import NONE, ReplayPlan, Watcher, replay_run
 from patchwalk.evidence.runfile import RunFile
 from patchwalk.evidence.stored import StoredFile, StoredRun, stored_file
@@ -72,19 +74,25 @@ class Replayed:
         ]
         return {"status": self.status, "seconds": self.seconds, "notes": self.notes, "rivals": plain}
 
+    def _repr_html_(self) -> str:
+        """What a notebook shows."""
+        return f"<pre>{html.escape(str(self))}</pre>"
+
     def __str__(self) -> str:
         lines = []
         for path, run, seed in dict.fromkeys((one.run_path, one.run, one.seed) for one in self.rivals):
             lines.append(f"{path}, run {run}, seed {seed}")
             lines.append(f"  {'rival':<34}{'calls':>8}{'failed':>8}{'exact':>7}{'drop':>12}{'improves':>10}{'hits':>8}"
                          f"{'seconds':>10}")  # fmt: skip
-            lines.extend(_line(one) for one in self.rivals if (one.run_path, one.run) == (path, run))
+            own = [one for one in self.rivals if (one.run_path, one.run) == (path, run)]
+            shown = shown_names(one.rival for one in own)
+            lines.extend(_line(one, shown[one.rival]) for one in own)
         return "\n".join([*lines, *self.notes])
 
 
-def _line(one: RivalReplayed) -> str:
+def _line(one: RivalReplayed, shown: str) -> str:
     hits = "-" if math.isnan(one.hit_probability) else f"{one.hit_probability:.4f}"
-    name = f"{one.rival} (the run's own)" if one.own else one.rival
+    name = f"{shown} (the run's own)" if one.own else shown
     return (
         f"  {name:<34}{one.calls:>8,}{one.failed:>8,}{one.exact:>7.0%}{one.mean_drop:>12.5g}"
         f"{one.improve_probability:>10.4f}{hits:>8}{one.call_seconds:>10.2g}"

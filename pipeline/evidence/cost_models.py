@@ -186,11 +186,20 @@ def _by_prices(prices: Mapping[str, float], work: Work, rows: int) -> F64:
 def hops_of(subsolver: Subsolver, batch: ClusterBatch, work: Work) -> F64 | None:
     """The evolution of each call in hops, f64 (B,), from its evolution time; None where the work tells of none.
 
-    A hop is 1 / (hopping rate) on the hypercube, and as long a walk in the same sense under other drivers. The rate is
-    what the subsolver's parameters ``hopping``, ``hopping_factor`` and ``driver`` say, by default the heuristic one.
+    A hop is 1 / (hopping rate) on the hypercube, and as long a walk in the same sense under other drivers.
     """
     if work.evolution_time is None or batch.couplings is None:
         return None
+    return np.asarray(work.evolution_time * hypercube_rates(subsolver, batch))
+
+
+def hypercube_rates(subsolver: Subsolver | None, batch: ClusterBatch) -> F64:
+    """The hopping rate of each dense cluster f64 (B,), in energy units, as it would be on the hypercube.
+
+    It is what the subsolver's parameters ``hopping``, ``hopping_factor`` and ``driver`` say, by default the heuristic
+    one.
+    """
+    assert batch.couplings is not None
     rates = np.empty(len(batch))
     hopping = getattr(subsolver, "hopping", "heuristic")
     if isinstance(hopping, str):
@@ -198,4 +207,4 @@ def hops_of(subsolver: Subsolver, batch: ClusterBatch, work: Work) -> F64 | None
     else:
         driver = DRIVERS.index(getattr(subsolver, "driver", DRIVERS[0]))
         rates[:] = hopping / hop_scale(driver, batch.size)
-    return np.asarray(work.evolution_time * rates * getattr(subsolver, "hopping_factor", 1.0))
+    return np.asarray(rates * getattr(subsolver, "hopping_factor", 1.0))

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import dataclasses
+import html
 from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any
@@ -10,6 +11,7 @@ from typing import Any
 import numpy as np
 
 from patchwalk.clusters.policy import QUANTITIES
+from patchwalk.evidence import profile_words
 from patchwalk.evidence.break_even import BreakEven, break_even
 from patchwalk.evidence.help_tables import HelpBin, HelpMap, PairedHelp, explained, help_map, help_table, paired_help
 from patchwalk.evidence.layout import RunFileError
@@ -24,15 +26,11 @@ from patchwalk.evidence.rival_families import (
     noise_limits,
     worths_of,
 )
-from patchwalk.evidence.rule_learning import FALSE_ALARMS, Judgement, Lesson, suggested
+from patchwalk.evidence.rule_learning import Judgement, Lesson, suggested
 from patchwalk.statistics import Interval, binomial_interval, bootstrap, by_run, ratio
 
-MODEL = "This is a model's answer: costs are those of the written model"
-EXACT = ("enumeration", "elimination")
-NO_CLOCK = "simulator time says nothing about a device."
 
-
-@dataclass(frozen=True, eq=False)
+@dataclass(frozen=True, eq=False, repr=False)
 class Profile:
     """Where calls of ``own`` helped, against the rivals replayed and above all against ``baseline``.
 
@@ -63,19 +61,17 @@ class Profile:
     @property
     def sentence(self) -> str:
         """The one sentence in which it ends."""
-        held = f"{self.baseline}" if self.baseline != NONE else "carrier sweeps for the same time"
-        found, alarms = self.judgement, f"false alarms at most {FALSE_ALARMS:.0%}, unless few runs lose much"
-        if found.verdict == "call":
-            return f"Call {self.own}: worth {found.always} a call against {held} ({alarms})."
-        if found.verdict == "call when":
-            return f"Call when: {found.rule}; worth {found.promise} a call made against {held} ({alarms})."
-        if found.verdict == "do not call":
-            return f"Do not call {self.own}: worth {found.always} a call against {held}."
-        few = "" if found.always.known else "; run more seeds"
-        return f"Cannot tell from these runs: calls of {self.own} are worth {found.always} against {held}{few}."
+        return profile_words.sentence_of(self)
 
     def __str__(self) -> str:
-        return "\n".join(lines_of(self))
+        return "\n".join(profile_words.lines_of(self))
+
+    def __repr__(self) -> str:
+        return f"<profile of {len(self.replayed):,} calls in {len(self.replayed.run_names)} runs: {self.sentence}>"
+
+    def _repr_html_(self) -> str:
+        """What a notebook shows: all that is printed, in columns."""
+        return f"<pre>{html.escape(str(self))}</pre>"
 
     def as_json(self) -> dict[str, Any]:
         """Plain values for ``--json``; what is unknown or infinite is None or the text ``infinite``."""
@@ -134,71 +130,6 @@ def _moved(replayed: Replayed) -> Interval:
     weights = replayed.answers[replayed.own].weights
     over_runs = bootstrap(by_run(replayed.runs, weights * replayed.moved, weights), ratio)
     return over_runs if over_runs.known else binomial_interval(int(replayed.moved.sum()), len(replayed.moved))
-
-
-def lines_of(profile: Profile) -> list[str]:
-    """The profile in words and tables, a line each."""
-    runs, one = len(profile.replayed.run_names), profile.replayed
-    lines = [f"{len(one):,} calls of {profile.own} in {runs} run{'s' if runs > 1 else ''}; costs: {profile.cost_model}"]
-    if runs == 1:
-        lines.append("one run has no interval over runs: run more seeds")
-    moved = profile.moved
-    lines.append(f"{moved.value:.1%} [{moved.low:.1%}, {moved.high:.1%}] of the calls changed a spin")
-    lines += ["", *_cost_lines(profile), ""]
-    lines += [f"help per call against {profile.baseline}, by quantity (share of its variance explained)"]
-    for name in sorted(profile.tables, key=lambda name: -profile.explained[name]):
-        lines += _table_lines(name, profile.explained[name], profile.tables[name])
-    if profile.map is not None:
-        lines += ["", *_map_lines(profile.map)]
-    lines += [line for limit in profile.noise for line in ("", f"noise: {limit.sentence}")]
-    for best in profile.settings:
-        lines += ["", f"{best.parameter}: most drop per second {best.fastest}; worth most a call {best.worthiest}"]
-        lines += [f"  {m.setting or 'default':<14}drop {m.drop}  worth {m.worth}" for m in best.members]
-        lines.append(f"  {best.worthiest} is worth {best.over_own} more a call than {profile.own}")
-    return [*lines, "", *_rule_lines(profile), "", f"{MODEL}; {NO_CLOCK}", profile.sentence]
-
-
-def _cost_lines(profile: Profile) -> list[str]:
-    """Cost first: help and break-even against every rival."""
-    width = max(map(len, profile.helps)) + 2
-    lines = []
-    for rival, found in profile.helps.items():
-        lines.append(
-            f"{rival:<{width}}help per second {found.per_second}, per call {found.per_call} "
-            f"(drop {found.drop:.4g} against {found.rival_drop:.4g}, {found.calls:,} calls, {found.exact:.0%} exact)"
-        )
-        lines.append(f"{'':<{width}}break-even factor {profile.break_evens[rival]}")
-    exact = [
-        name for name, found in profile.helps.items() if name.split(",")[0] in EXACT and found.per_call.value <= 0.0
-    ]
-    if exact:
-        lines.append(f"{' and '.join(exact)} win per call, as exact answers to small clusters must: look at the cost")
-    return lines
-
-
-def _table_lines(name: str, share: float, table: tuple[HelpBin, ...]) -> list[str]:
-    lines = [f"{name} ({max(share, 0.0):.1%})"]
-    return lines + [f"  {one.low:>9.4g} to {one.high:<9.4g}{one.calls:>8,} calls  {one.help}" for one in table]
-
-
-def _map_lines(grid: HelpMap) -> list[str]:
-    lines = [f"mean help by {grid.first} (down) and {grid.second} (across)"]
-    heads = ["below", *(f"{edge:.3g}+" for edge in grid.second_edges)]
-    lines.append(" " * 12 + "".join(f"{head:>10}" for head in heads))
-    for head, means in zip(["below", *(f"{edge:.3g}+" for edge in grid.first_edges)], grid.means, strict=True):
-        lines.append(f"{head:>12}" + "".join(f"{'.' if np.isnan(mean) else f'{mean:.3g}':>10}" for mean in means))
-    return lines
-
-
-def _rule_lines(profile: Profile) -> list[str]:
-    found = profile.judgement
-    share = f"{found.called_share:.0%} called"
-    return [
-        f"rule learnt on {found.learnt_on} of the runs: {found.rule}",
-        f"  judged on the other {found.judged_on} with {found.worth.level:.1%} intervals:",
-        f"  worth {found.worth} a cluster, {share}",
-        f"  always: {found.always}; rule over always: {found.over_always}; never: 0",
-    ]
 
 
 def plain(value: Any) -> Any:

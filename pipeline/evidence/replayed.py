@@ -7,7 +7,7 @@ from __future__ import annotations
 
 import sqlite3
 from collections import Counter
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Collection, Container, Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
@@ -16,6 +16,7 @@ import numpy.typing as npt
 
 from patchwalk.clusters.features import cheap_features, exact_features
 from patchwalk.cost import priced
+from patchwalk.evidence.gaps import GAP, gaps_of, share_of
 from patchwalk.evidence.layout import RunFileError
 from patchwalk.evidence.recalled import COUNTED, RecalledCalls, recalled_calls
 from patchwalk.evidence.stored import StoredFile, StoredRun
@@ -113,8 +114,10 @@ def swept(budgets: F64, curves: F64, seconds: F64, room: F64) -> F64:
     return np.where(last == 0, np.nan, np.where(seconds <= most, between, beyond))
 
 
-def replayed_calls(files: Sequence[StoredFile], own: str | None = None, pricing: Pricing = fixed_prices) -> Replayed:
-    """The replayed calls of all runs of these files.
+def replayed_calls(
+    files: Sequence[StoredFile], own: str | None = None, pricing: Pricing = fixed_prices, gap: bool = False
+) -> Replayed:
+    """The replayed calls of all runs of these files, with the quantity ``gap`` where that is asked for.
 
     ``own`` is by default the subsolver replayed that made most calls. Raises :class:`RunFileError` where nothing was
     replayed.
@@ -124,7 +127,7 @@ def replayed_calls(files: Sequence[StoredFile], own: str | None = None, pricing:
     names: list[str] = []
     for file in files:
         for run in file.runs():
-            found = _parts(file, run, owner, pricing, len(names))
+            found = _parts(file, run, owner, pricing, len(names), gap)
             if found:
                 names.append(f"{file.path}, run {run.number}")
                 parts.extend(found)
@@ -163,7 +166,9 @@ class _Part:
     room: F64
 
 
-def _parts(file: StoredFile, run: StoredRun, own: str, pricing: Pricing, number: int) -> list[_Part]:
+def _parts(
+    file: StoredFile, run: StoredRun, own: str, pricing: Pricing, number: int, gap: bool
+) -> list[_Part]:  # fmt: skip
     tables: dict[str, dict[Name, sqlite3.Row]] = {}
     for row in file.rows("SELECT * FROM replays WHERE run = ? AND status != ?", (run.number, int(Status.FAILED))):
         if row["mean_drop"] is not None:
@@ -175,20 +180,27 @@ def _parts(file: StoredFile, run: StoredRun, own: str, pricing: Pricing, number:
         name = row["round"], row["replica"], row["place"]
         curves.setdefault(name, []).append((row["budget_s"], row["mean_drop"]))
     parts = []
+    asked = _gap_calls(file, run, tables[own]) if gap else None
     problem = file.problem(run.problem)
     best = next(file.rows("SELECT min(energy) AS energy FROM runs WHERE problem = ?", (run.problem,)))["energy"]
     lowest = -np.inf if best is None else float(best)
     for calls in recalled_calls(file, run.number, problem, tables[own]):
-        part = _part(calls, tables, curves, own, pricing, number, problem.field_scale, lowest)
+        part = _part(calls, tables, curves, own, pricing, number, problem.field_scale, lowest, asked)
         if part is not None:
             parts.append(part)
     return parts
 
 
+def _gap_calls(file: StoredFile, run: StoredRun, names: Collection[Name]) -> set[Name]:
+    """The calls of a run whose gap is computed."""
+    largest = next(file.rows("SELECT max(k) AS k FROM calls WHERE run = ?", (run.number,)))["k"]
+    return share_of(names, int(largest), run.seed)
+
+
 def _part(
     calls: RecalledCalls, tables: Mapping[str, Mapping[Name, sqlite3.Row]],
     curves: Mapping[Name, list[tuple[float, float]]], own: str, pricing: Pricing, number: int, scale: float,
-    lowest: float,
+    lowest: float, gap_calls: Container[Name] | None,
 ) -> _Part | None:  # fmt: skip
     """The calls of this piece that ``own`` was replayed on, None where there are none."""
     names = list(zip(calls.rounds.tolist(), calls.replicas.tolist(), calls.places.tolist(), strict=True))
@@ -211,6 +223,8 @@ def _part(
     }
     exact = exact_features(some) if some is not None and some.size <= SURVEYED_SPINS else {}
     quantities |= {name: exact.get(name, np.full(len(rows), np.nan)) for name in EXACT_QUANTITIES}
+    if gap_calls is not None:
+        quantities[GAP] = gaps_of(own, some, [name in gap_calls for name in names])
     answers = {rival: _answers(rival, some, [table.get(name) for name in names], pricing)
                for rival, table in tables.items()}  # fmt: skip
     return _Part(

@@ -118,27 +118,32 @@ def best_settings(replayed: Replayed, baseline: str) -> tuple[BestSetting, ...]:
     return tuple(found)
 
 
-def worths_of(replayed: Replayed, rival: str, baseline: str) -> F64:
+def worths_of(replayed: Replayed, rival: str, baseline: str, costs: F64 | None = None) -> F64:
     """What a rival is worth against the baseline on each call, f64 (N,), nan where unknown.
 
-    Against ``none``: its drop less what sweeps gain in the time it costs.
+    Against ``none``: its drop less what sweeps gain in the time it costs, or in ``costs`` f64 (N,).
     """
     answers = replayed.answers[rival]
     if baseline == NONE:
-        return answers.drops - replayed.swept(answers.costs)
+        return answers.drops - replayed.swept(answers.costs if costs is None else costs)
     return answers.drops - replayed.answers[baseline].drops
 
 
 def _members(replayed: Replayed, parameter: str, without: float, baseline: str) -> tuple[Member, ...]:
-    """The members of a family from the least noise, or effort, to the most; empty where there is none."""
+    """The members of a family from the least noise, or effort, to the most, on the calls that all were replayed on;
+    empty where there is no family."""
     members = []
+    given = _costs(replayed, parameter)
+    worths = {rival: worths_of(replayed, rival, baseline, given) for rival in family(replayed, parameter)}
+    worths = {rival: own for rival, own in worths.items() if not np.isnan(own).all()}
+    shared = ~np.isnan(np.stack(list(worths.values()))).any(axis=0) if worths else np.zeros(len(replayed), np.bool_)
     for rival, setting in family(replayed, parameter).items():
-        answers, worth = replayed.answers[rival], worths_of(replayed, rival, baseline)
-        known = ~np.isnan(worth) & ~np.isnan(answers.drops)
-        if not known.any():
+        if rival not in worths:
             continue
+        answers, worth = replayed.answers[rival], worths[rival]
+        known = shared if shared.any() else ~np.isnan(worth)
         runs, w = replayed.runs[known], answers.weights[known]
-        drops, costs = answers.drops[known], answers.costs[known]
+        drops, costs = answers.drops[known], (answers.costs if given is None else given)[known]
         members.append(
             Member(
                 rival, setting, _number(setting, without), bootstrap(by_run(runs, w * drops, w), ratio),
@@ -149,6 +154,11 @@ def _members(replayed: Replayed, parameter: str, without: float, baseline: str) 
     sign = -1.0 if parameter == "precision_bits" else 1.0
     ordered = sorted(members, key=lambda one: (np.isnan(one.value), sign * one.value))
     return tuple(ordered) if len(ordered) > 1 else ()
+
+
+def _costs(replayed: Replayed, parameter: str) -> F64 | None:
+    """A noisier device takes no longer, however much work it is to simulate: noise is judged at the run's own costs."""
+    return replayed.answers[replayed.own].costs if parameter in NOISE else None
 
 
 def _number(setting: str, without: float) -> float:
@@ -164,18 +174,22 @@ def _number(setting: str, without: float) -> float:
 def _limit(replayed: Replayed, parameter: str, members: tuple[Member, ...], baseline: str) -> NoiseLimit:
     """Straight lines between the levels of noise; the first level at which the worth comes down to zero."""
     levels = np.array([one.value for one in members])
-    worths = np.stack([worths_of(replayed, one.rival, baseline) for one in members])
+    worths = np.stack([worths_of(replayed, one.rival, baseline, _costs(replayed, parameter)) for one in members])
     known = ~np.isnan(worths).any(axis=0)
     runs, w = replayed.runs[known], replayed.answers[replayed.own].weights[known]
     sums = by_run(runs, *(w * own[known] for own in worths))
     vanishes = bootstrap(sums, lambda sums: np.array([_crossing(levels, own) for own in sums]))
     least, most = members[0].worth.value, members[-1].worth.value
     if least <= 0.0:
-        sentence = f"no help against {baseline} even at the least {parameter} replayed"
+        least_noise = f"at {members[0].setting}" if members[0].setting else "without any"
+        sentence = f"calls do not help against {baseline}, not even {least_noise}"
     elif np.isnan(vanishes.value):
-        sentence = f"help does not vanish up to {parameter}={members[-1].setting or 'none'}, worth {most:.4g} a call"
+        sentence = (
+            f"calls still help against {baseline} at {members[-1].setting or 'none'}, the most that was replayed, "
+            f"worth {most:.4g} each"
+        )
     else:
-        sentence = f"help against {baseline} vanishes at {parameter} = {vanishes}"
+        sentence = f"help against {baseline} vanishes at {vanishes}"
     return NoiseLimit(parameter, members, vanishes, sentence)
 
 

@@ -11,17 +11,39 @@ from patchwalk.interface.cli import fail, print_json
 
 @click.command(context_settings={"max_content_width": 110})
 @click.argument("runs", metavar="RUN...", nargs=-1, required=True)
-@click.option("--cost", metavar="FILE", help="A cost model in TOML; without it the fixed prices of counted work.")
-@click.option("--subsolver", metavar="NAME[,key=value...]", help="Whose calls; as spelled in the run, the busiest.")
-@click.option("--against", metavar="RIVAL", help="Whom tables and rule are held against: none, else the strongest.")
+@click.option(
+    "--cost", metavar="FILE",
+    help="A cost model in TOML, such as configs/device-*.toml.  [default: the fixed prices of counted work]",
+)  # fmt: skip
+@click.option(
+    "--subsolver", metavar="NAME[,key=value...]",
+    help="Whose calls, spelled as in the run.  [default: who made most of them]",
+)  # fmt: skip
+@click.option(
+    "--against", metavar="RIVAL",
+    help="The rival that tables and rule are held against.  [default: none, else the strongest replayed]",
+)  # fmt: skip
+@click.option(
+    "--gap", is_flag=True,
+    help="A table by the walk's spectral gap, too, of at most 200 calls a run and 14 spins: up to a minute a run.",
+)  # fmt: skip
 @click.option("--apply", "settings", metavar="FILE", help="Write the suggested rule as settings for the next solve.")
-@click.option("--promised", metavar="FILE", help="Say whether RUNs made with the settings in FILE kept their promise.")
+@click.option(
+    "--promised", metavar="FILE",
+    help="Instead of a profile: did RUNs that --apply's FILE made, replayed since, keep its promise?",
+)  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 def profile_command(
-    runs: tuple[str, ...], cost: str | None, subsolver: str | None, against: str | None, settings: str | None,
-    promised: str | None, as_json: bool,
+    runs: tuple[str, ...], cost: str | None, subsolver: str | None, against: str | None, gap: bool,
+    settings: str | None, promised: str | None, as_json: bool,
 ) -> None:  # fmt: skip
     """Where the calls of replayed RUN files helped: by rival, stage and feature, what it costs, and when to call.
+
+    \b
+    patchwalk make lattice2d --size 8 -o small.txt --force
+    patchwalk solve small.txt --subsolver walk --cluster-size 8 --calls 200 --seeds 1..4 --run several.sqlite
+    patchwalk replay several.sqlite --calls 50 --rival none --rival metropolis
+    patchwalk profile several.sqlite --gap
 
     Differences are paired, on the very same clusters, and every interval is one over runs: solve with several seeds,
     then replay, then profile. It ends in one sentence: call; call when ...; do not call; or cannot tell from these
@@ -38,7 +60,7 @@ def profile_command(
             else:
                 click.echo(kept.sentence)
             return
-        found = profile(runs, cost, subsolver=subsolver, against=against)
+        found = profile(runs, cost, subsolver=subsolver, against=against, gap=gap)
         if as_json:
             print_json(found.as_json())
         else:

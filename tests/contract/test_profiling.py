@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import html
 import json
 from dataclasses import replace
 from pathlib import Path
@@ -12,7 +13,8 @@ import pytest
 from patchwalk.evidence.break_even import break_even
 from patchwalk.evidence.help_tables import edges_of, explained, help_map, help_table, paired_help
 from patchwalk.evidence.layout import RunFileError
-from patchwalk.evidence.profiling import NO_CLOCK, profile_of
+from patchwalk.evidence.profile_words import NO_CLOCK, shown_names
+from patchwalk.evidence.profiling import profile_of
 from patchwalk.evidence.promises import Promise, judged, promise_from, promise_lines, promise_of
 from patchwalk.evidence.replayed import Answers, Replayed, swept
 from patchwalk.evidence.rival_families import best_settings, family, noise_limits, parts_of
@@ -79,6 +81,31 @@ def test_text_and_json_tell_everything() -> None:
     assert value["callers"][1] == {"subsolver": "nothing"}
     assert value["helps"]["none"]["calls"] == RUNS * CALLS
     assert value["sentence"] == lines[-1]
+
+
+def test_a_notebook_shows_what_is_printed() -> None:
+    found = profile_of(made_up())
+    shown = found._repr_html_()
+    assert shown == f"<pre>{html.escape(str(found))}</pre>"
+    assert "frustration &lt; 0." in shown or "frustration &gt;= 0." in shown
+    assert repr(found) == f"<profile of {RUNS * CALLS} calls in {RUNS} runs: {found.sentence}>"
+
+
+def test_a_program_of_the_users_is_called_by_its_own_name() -> None:
+    """Two that give themselves the same name are told apart by their full spellings."""
+    one, other = (f'external,command="python3 {name}.py",shots=4,device=lab,call_s=0.1' for name in ("one", "other"))
+    assert shown_names([one, "walk,shots=4"]) == {one: "external,device=lab,shots=4", "walk,shots=4": "walk,shots=4"}
+    assert shown_names([one, other]) == {one: one, other: other}
+    lines = str(profile_of(made_up(**{one: answers(np.ones(RUNS * CALLS))}))).splitlines()
+    assert f"external,device=lab,shots=4 stands for {one}" in lines
+    assert "against external,device=lab,shots=4" in lines
+    assert sum("one.py" in line for line in lines) == 1
+
+
+def test_what_is_the_same_for_all_calls_takes_one_line() -> None:
+    lines = str(profile_of(made_up())).splitlines()
+    assert "the same for all calls: degree 2, degeneracy 1" in lines
+    assert not any(line.startswith(("degree (", "stable (")) for line in lines)
 
 
 def test_one_run_asks_for_more_seeds() -> None:
@@ -151,7 +178,29 @@ def test_noise_at_which_help_vanishes() -> None:
     assert [one.value for one in dephasing.members] == [0.0, 0.1, 0.2]
     assert dephasing.vanishes.value == pytest.approx(0.15, abs=0.01)
     assert dephasing.vanishes.low <= dephasing.vanishes.value <= dephasing.vanishes.high
-    assert "does not vanish" in precision.sentence
+    assert "calls still help against none at" in precision.sentence
+
+
+def test_noise_is_judged_at_the_cost_of_a_call_without_it() -> None:
+    """Dephasing takes many trajectories to simulate and no device any longer: sweeps get no more time for it."""
+    ones = np.ones(RUNS * CALLS)
+    rivals = {"walk,dephasing=0.1": answers(2.0 * ones, cost=50.0 * COST)}
+    (dephasing,) = noise_limits(made_up(**rivals), "none")
+    assert dephasing.members[1].worth.value == pytest.approx(2.0 - 1.0)
+    assert dephasing.members[1].per_second.value == pytest.approx(2.0 / COST)
+    assert "at 0.1, the most that was replayed, worth 1 each" in dephasing.sentence
+
+
+def test_members_of_a_family_are_held_against_each_other_on_the_same_calls() -> None:
+    """Replayed on the second half of the calls alone, where drops are 1 lower, the twin is not the worse for it."""
+    half = np.arange(RUNS * CALLS) % 2 == 1
+    drops = np.where(half, 2.0, 3.0)
+    twin = answers(np.where(half, drops, np.nan))
+    replayed = made_up(**{"walk,shots=2": replace(twin, weights=half.astype(float))})
+    replayed = replace(replayed, answers={**replayed.answers, "walk": answers(drops)})
+    own, other = best_settings(replayed, "none")[0].members
+    assert own.drop.value == other.drop.value == 2.0
+    assert own.worth.value == other.worth.value
 
 
 def test_the_best_number_of_shots() -> None:
