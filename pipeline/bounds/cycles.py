@@ -3,7 +3,7 @@
 Barahona, Grotschel, Junger & Reinelt, Oper. Res. 36 (1988) 493. The program is solved by an interior point without
 crossover in the first rounds, whose points lie deep in the optimal face and break many cuts at once, and by the dual
 simplex method, warm from round to round, after that. The bound is never the solver's objective: it is computed anew
-from the multipliers (:func:`patchwalk.bounds.certificate.dual_value`).
+from the multipliers (:func:`patchwalk.bounds.cycle_certificate.dual_value`).
 """
 
 from __future__ import annotations
@@ -16,9 +16,9 @@ from typing import Any
 import highspy
 import numpy as np
 
-from patchwalk.bounds.certificate import DualValue, dual_value
 from patchwalk.bounds.cut_graph import CutGraph
 from patchwalk.bounds.cuts import Cuts
+from patchwalk.bounds.cycle_certificate import DualValue, dual_value
 from patchwalk.bounds.separation import violated_cuts
 from patchwalk.subsolvers.contract import F64, I32, I64
 

@@ -8,13 +8,13 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
+from patchwalk.bounds.certificate_error import CertificateError
 from patchwalk.bounds.energy_step import rounded_up
 from patchwalk.bounds.merging import tied
 from patchwalk.bounds.spectral import (
     I8,
     I32,
     WIDEST,
-    CertificateError,
     SquareCertificate,
     checked_bound,
     trivial_groups,

@@ -25,6 +25,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy import linalg, sparse
 
+from patchwalk.bounds.certificate_error import CertificateError
 from patchwalk.problem.ising import Problem
 
 F64 = npt.NDArray[np.float64]
@@ -38,10 +39,6 @@ WIDEST = 5
 """Members of the widest cuts."""
 
 UNIT = 2.0**-53
-
-
-class CertificateError(ValueError):
-    """A certificate that proves nothing; the message says why."""
 
 
 @dataclass(frozen=True, eq=False)

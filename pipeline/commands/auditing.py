@@ -11,7 +11,8 @@ from typing import Any
 
 import numpy as np
 
-from patchwalk.bounds.certificate import Certificate, CertificateError, check
+from patchwalk.bounds.certificate import Certificate, check
+from patchwalk.bounds.certificate_error import CertificateError
 from patchwalk.commands.answers import answer_for
 from patchwalk.evidence.certificates import stored_certificate
 from patchwalk.evidence.layout import RunFileError

@@ -13,7 +13,7 @@ from patchwalk.commands.auditing import audit, stored_run
 from patchwalk.commands.tasks import check_memory, check_sizes, default_run_path, problem_from
 from patchwalk.problem.files import read_start
 from patchwalk.problem.ising import Problem
-from patchwalk.search.branching import BranchPlan
+from patchwalk.search.bound_search import BranchPlan
 from patchwalk.settings import DEFAULT_CLUSTER_SIZE, SearchSettings, SolveSettings
 from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import I8, Subsolver
@@ -27,8 +27,8 @@ SETTINGS = {
 SHARED = ("kind", "start")
 """What ``bound`` takes over from a settings TOML, which is written for ``solve``."""
 
-METHODS = ("auto", "cycles", "semidefinite")
-PARTS = ("cuts", "heuristic", "branching")
+METHODS = ("auto", "cycles", "semidefinite", "clusters")
+PARTS = ("cuts", "heuristic", "branching", "clusters")
 DEFAULT_SECONDS = 60.0
 DEFAULT_SUBSOLVER = "elimination"
 SIZES = ((4.5, 140), (6.5, 45))
@@ -72,15 +72,16 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
     nodes, seconds = values.get("nodes"), values.get("seconds")
     if seconds is None and nodes is None:
         seconds = DEFAULT_SECONDS
-    off = values.get("without", ())
+    off, method = values.get("without", ()), values.get("method", "auto")
+    parts = {part: part not in off for part in PARTS}
+    parts["clusters"] &= method == "auto"
     plan = BranchPlan(
         seconds,
         nodes,
         size,
         sweeps=values.get("sweeps", BranchPlan.sweeps),
-        **{part: part not in off for part in PARTS},
+        **parts,
     )
-    method = values.get("method", "auto")
     start = None if values.get("start") is None else read_start(values["start"], problem)
     earlier = None
     if values.get("earlier"):
@@ -94,7 +95,7 @@ def bound_task_from(source: Problem | str | Path, given: dict[str, Any], spelled
 def _earlier_run(path: Path, problem: Problem) -> tuple[I8, Certificate]:
     """Best configuration and tree of an earlier run on the same problem."""
     found = audit(problem, path)
-    if found.status != "confirmed" or found.method != "cycles" or found.run is None:
+    if found.status != "confirmed" or found.method not in ("cycles", "clusters") or found.run is None:
         raise SettingsError([f"earlier: {path} holds no tree of odd-cycle cuts to go on from: {found.message}"])
     return stored_run(problem, path, found.run)
 

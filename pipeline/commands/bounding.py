@@ -1,7 +1,8 @@
 """``bound``: how low the energy of a problem can be, with a certificate, and a proof of optimality where it is reached.
 
-Sparse problems go to branch-and-bound with odd-cycle cuts, which begins with the matching's ground state where the
-problem is planar and has no fields; dense ones go to the tree of semidefinite bounds.
+Narrow problems are eliminated exactly. Other sparse ones go to branch-and-bound with odd-cycle cuts, beside which a
+cluster bound stands where it promises more, and which begins with the matching's ground state where the problem is
+planar and has no fields; dense ones go to the tree of semidefinite bounds.
 """
 
 from __future__ import annotations
@@ -17,6 +18,7 @@ from pathlib import Path
 from typing import Any, Protocol
 
 from patchwalk.bounds.certificate import Certificate, check
+from patchwalk.bounds.narrow import narrow_order
 from patchwalk.bounds.planar import MOST_FRUSTRATED, frustrated_faces, is_planar, planar_minimum
 from patchwalk.commands.answers import answer_for
 from patchwalk.commands.bound_task import DEFAULT_SUBSOLVER, BoundTask, bound_task_from, default_size
@@ -25,12 +27,16 @@ from patchwalk.evidence.certificates import store_certificate, store_node_log
 from patchwalk.evidence.layout import RunFileError, packed
 from patchwalk.evidence.runfile import RunFacts, RunFile, RunWriter
 from patchwalk.problem.ising import Problem
+from patchwalk.search.bound_search import BoundSearch, BranchPlan, NodeLine
 from patchwalk.search.branch_dense import DenseBranching, is_dense
-from patchwalk.search.branching import BranchAndBound, BranchPlan, NodeLine
+from patchwalk.search.branching import BranchAndBound
+from patchwalk.search.cluster_bounding import ClusterBounding
 from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import spelled, subsolver_from
 
-Search = BranchAndBound | DenseBranching
+SEARCHES: dict[str, type[BoundSearch]] = {
+    "cycles": BranchAndBound, "semidefinite": DenseBranching, "clusters": ClusterBounding,
+}  # fmt: skip
 
 
 @dataclass(frozen=True, eq=False)
@@ -85,7 +91,7 @@ class Watcher(Protocol):
 
     def compiled(self, seconds: float) -> None: ...
 
-    def moved(self, search: Search) -> None: ...
+    def moved(self, search: BoundSearch) -> None: ...
 
     def stopping(self) -> None: ...
 
@@ -102,7 +108,7 @@ class Silent:
     def compiled(self, seconds: float) -> None:
         pass
 
-    def moved(self, search: Search) -> None:
+    def moved(self, search: BoundSearch) -> None:
         pass
 
     def stopping(self) -> None:
@@ -145,7 +151,8 @@ def bounds_for(
     """
     chosen = subsolver if subsolver is not None else subsolver_from(DEFAULT_SUBSOLVER)
     size = cluster_size or default_size(problem, chosen)
-    search = search_for(problem, method)(problem, chosen, BranchPlan(seconds, nodes, size), seed, start, interrupted)
+    plan = BranchPlan(seconds, nodes, size, clusters=method == "auto")
+    search = search_for(problem, method)(problem, chosen, plan, seed, start, interrupted)
     began = time.perf_counter()
     search.prepare()
     compile_seconds = time.perf_counter() - began
@@ -155,14 +162,18 @@ def bounds_for(
     return _result(search, compile_seconds, None)
 
 
-def search_for(problem: Problem, method: str) -> type[BranchAndBound] | type[DenseBranching]:
-    """The search by this method; ``auto`` takes the semidefinite tree for dense problems and cycles for the rest."""
+def search_for(problem: Problem, method: str, clusters: bool = True) -> type[BoundSearch]:
+    """The search by this method; ``auto`` decides by the couplings alone, and whether ``clusters`` may be taken."""
     if method == "auto":
-        method = "semidefinite" if is_dense(problem) else "cycles"
-    return DenseBranching if method == "semidefinite" else BranchAndBound
+        method = "cycles"
+        if is_dense(problem):
+            method = "semidefinite"
+        elif clusters and narrow_order(problem) is not None:
+            method = "clusters"
+    return SEARCHES[method]
 
 
-def offer_planar(search: Search) -> None:
+def offer_planar(search: BoundSearch) -> None:
     """Where the problem is planar and small enough for matching, let the search begin with its ground state."""
     problem = search.problem
     if is_planar(problem) and frustrated_faces(problem) <= MOST_FRUSTRATED:
@@ -176,7 +187,7 @@ def carry_out(task: BoundTask, watcher: Watcher) -> Bound:
     runfile = RunFile(task.run_path)
     try:
         with listening(watcher.stopping) as interrupted:
-            kind = search_for(problem, task.method)
+            kind = search_for(problem, task.method, task.plan.clusters)
             search = kind(problem, task.subsolver, task.plan, task.seed, task.start, interrupted)
             if task.earlier is not None and isinstance(search, BranchAndBound):
                 search.take_up(task.earlier)
@@ -198,7 +209,7 @@ def carry_out(task: BoundTask, watcher: Watcher) -> Bound:
     return result
 
 
-def _begin(task: BoundTask, search: Search, runfile: RunFile) -> RunWriter:
+def _begin(task: BoundTask, search: BoundSearch, runfile: RunFile) -> RunWriter:
     subsolver = search.subsolver or task.subsolver
     spelling = spelled(subsolver)
     settings = {**task.written, "subsolver": spelling, "command": "bound"}
@@ -209,7 +220,7 @@ def _begin(task: BoundTask, search: Search, runfile: RunFile) -> RunWriter:
     return runfile.begin(facts, search.snapshot())
 
 
-def _searched(task: BoundTask, search: Search, writer: RunWriter, compile_seconds: float) -> Bound:
+def _searched(task: BoundTask, search: BoundSearch, writer: RunWriter, compile_seconds: float) -> Bound:
     if task.plan.heuristic:
         offer_planar(search)
     try:
@@ -230,7 +241,7 @@ def _searched(task: BoundTask, search: Search, writer: RunWriter, compile_second
     return result
 
 
-def _result(search: Search, compile_seconds: float, run_path: Path | None) -> Bound:
+def _result(search: BoundSearch, compile_seconds: float, run_path: Path | None) -> Bound:
     """What the search ended with. Its certificate is checked here once more, and what it states is the bound."""
     problem, seconds = search.problem, search.elapsed
     certificate = search.certificate()

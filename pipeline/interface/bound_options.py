@@ -15,7 +15,9 @@ EXIT_CODES = {"interrupted": 130, "error": 1}
 @click.argument("source", metavar="INPUT")
 @click.option("--kind", metavar="WORD", help="What the file's numbers mean: ising, maxcut or beacons.")
 @click.option(
-    "--method", metavar="WORD", help="What bounds: cycles, semidefinite, or auto (by density).  [default: auto]"
+    "--method",
+    metavar="WORD",
+    help="What bounds: cycles, semidefinite, clusters, or auto (by the couplings).  [default: auto]",
 )
 @click.option("--seconds", metavar="NUMBER", help="Stop after so many seconds, compiling apart.  [default: 60]")
 @click.option("--nodes", metavar="NUMBER", help="Stop after so many nodes of the tree; no limit in seconds then.")
@@ -35,7 +37,9 @@ EXIT_CODES = {"interrupted": 130, "error": 1}
 )
 @click.option("--run", metavar="FILE", help="Where the run file goes: calls, node log and certificate.")
 @click.option(
-    "--without", metavar="WORDS", help="Switch parts off to see what they are worth: cuts, heuristic, branching."
+    "--without",
+    metavar="WORDS",
+    help="Switch parts off to see what they are worth: cuts, heuristic, branching, clusters.",
 )
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 @click.option("--quiet", is_flag=True, help="No progress on standard error.")

@@ -4,9 +4,9 @@ from __future__ import annotations
 
 from rich.console import Console
 
-from patchwalk.commands.bounding import Bound, Search
+from patchwalk.commands.bounding import Bound
 from patchwalk.problem.ising import Problem
-from patchwalk.search.branching import NodeLine
+from patchwalk.search.bound_search import BoundSearch, NodeLine
 
 COLUMNS = (("node", 7), ("depth", 6), ("node bound", 14), ("bound", 14), ("best", 14), ("gap", 9), ("open", 7),
            ("cuts", 8), ("time", 9), ("outcome", 9))  # fmt: skip
@@ -33,7 +33,7 @@ class NodeNarrator:
     def compiled(self, seconds: float) -> None:
         self._say(f"compiled and prepared in {seconds:.1f} s, which no budget counts")
 
-    def moved(self, search: Search) -> None:
+    def moved(self, search: BoundSearch) -> None:
         if not self._head:
             self._head = True
             self._say("".join(f"{name:>{width}}" for name, width in COLUMNS))

@@ -2,29 +2,26 @@
 
 Odd-cycle programs are large and weak where every spin is coupled to most others. There the tree of
 :mod:`patchwalk.bounds.dense_tree` proves more; before it is planted, clusters of the spins that the semidefinite bound
-leaves undecided go to the subsolver, exactly as in :mod:`patchwalk.search.branching`, whose surface this search has.
+leaves undecided go to the subsolver, exactly as in :mod:`patchwalk.search.branching`.
 """
 
 from __future__ import annotations
 
 import math
-import time
-from collections.abc import Callable, Iterator
+from collections.abc import Iterator
 
 import numpy as np
 
 from patchwalk.bounds.certificate import Certificate
-from patchwalk.bounds.cut_graph import cut_graph
 from patchwalk.bounds.dense import semidefinite_bound
 from patchwalk.bounds.dense_tree import DenseProof, Progress, branch_dense
 from patchwalk.bounds.spectral import vertex_count
 from patchwalk.bounds.tightening import MOST_GROUPS
 from patchwalk.engine import release
 from patchwalk.problem.ising import Problem
-from patchwalk.records import Calls, Round
-from patchwalk.search.branch_primal import Incumbent, Standing
-from patchwalk.search.branching import BranchPlan, NodeLine
-from patchwalk.subsolvers.contract import F64, I8, Subsolver
+from patchwalk.records import Round
+from patchwalk.search.bound_search import BoundSearch, NodeLine
+from patchwalk.subsolvers.contract import F64
 
 CROWDED, SHARE = 12.0, 0.3
 """A problem counts as dense from so many couplings a spin on, or from such a share of all pairs."""
@@ -40,32 +37,11 @@ def is_dense(problem: Problem) -> bool:
     return crowded and vertex_count(problem) <= MOST_GROUPS
 
 
-class DenseBranching(Standing):
-    """One run; :class:`patchwalk.search.branching.BranchAndBound` says what is to be read from it.
+class DenseBranching(BoundSearch):
+    """One run. Without ``cuts`` or ``branching`` the bound is the root's."""
 
-    Without ``cuts`` or ``branching`` the bound is the root's. ``told`` is called after every line of the log.
-    """
-
-    def __init__(
-        self,
-        problem: Problem,
-        subsolver: Subsolver | None,
-        plan: BranchPlan,
-        seed: int = 1,
-        start: I8 | None = None,
-        interrupted: Callable[[], bool] = lambda: False,
-    ) -> None:
-        self.problem, self.plan, self.seed = problem, plan, seed
-        asked = subsolver if plan.heuristic else None
-        self.incumbent = Incumbent(problem, cut_graph(problem), asked, plan.cluster_size, seed, start)
-        self.status, self.message = "budget", ""
-        self.log: list[NodeLine] = []
-        self.told: Callable[[], None] = lambda: None
-        self.lower_bound = -math.inf
-        self._interrupted, self._proof = interrupted, None
-        self._began = time.perf_counter()
-
-    _proof: DenseProof | None
+    lower_bound: float = -math.inf
+    _proof: DenseProof | None = None
 
     @property
     def node_count(self) -> int:
@@ -94,29 +70,28 @@ class DenseBranching(Standing):
 
     def rounds(self) -> Iterator[Round]:
         """Look for a good configuration first, round by round, and then prove it."""
-        self._began = time.perf_counter()
+        self.begin()
         own, plan = self.incumbent, self.plan
-        own.begin()
         try:
             if plan.heuristic and plan.sweeps:
-                own.cool(plan.sweeps, self._stopped)
-                yield self._round(())
+                own.cool(plan.sweeps, self.stopped)
+                yield self.next_round(())
             root = semidefinite_bound(self.problem, tolerance=1e-3, seed=self.seed)
             own.offer(root.spins, "rounding")
             x = self._point(root.vectors)
             for _ in range(CLUSTER_ROUNDS if plan.heuristic else 0):
-                if self._stopped():
+                if self.stopped():
                     break
                 spins = own.round_off(x)
                 if plan.sweeps:
-                    own.cool(plan.sweeps, self._stopped)
+                    own.cool(plan.sweeps, self.stopped)
                 subject = spins if own.round % 2 else own.spins
-                yield self._round(own.ask(x, subject, plan.clusters_per_round, self._stopped))
+                yield self.next_round(own.ask(x, subject, plan.clusters_per_round, self.stopped))
         finally:
             if self.subsolver is not None:
                 release(self.subsolver)
         self._prove()
-        yield self._round(())
+        yield self.next_round(())
 
     def certificate(self) -> Certificate:
         """What proves the bound, as data that :func:`patchwalk.bounds.certificate.check` takes."""
@@ -128,31 +103,25 @@ class DenseBranching(Standing):
 
     def _point(self, vectors: F64) -> F64:
         """How sure the semidefinite bound is that the ends of each edge differ: (1 - cosine) / 2, f64 (m,)."""
-        graph = self.incumbent.graph
+        graph = self.graph
         cosines = np.einsum("ek,ek->e", vectors[graph.heads], vectors[graph.tails])
         return np.clip(0.5 - 0.5 * cosines, 0.0, 1.0)
 
     def _prove(self) -> None:
         plan, own = self.plan, self.incumbent
         nodes = plan.nodes if plan.nodes is not None else 1_000_000
-        root_only = not (plan.branching and plan.cuts) or self._stopped()
+        root_only = not (plan.branching and plan.cuts) or self.stopped()
         proof = branch_dense(
-            self.problem, own.spins, seconds=max(0.0, self._seconds_left()), nodes=1 if root_only else nodes,
+            self.problem, own.spins, seconds=max(0.0, self.seconds_left()), nodes=1 if root_only else nodes,
             seed=self.seed, tell=self._tell,
         )  # fmt: skip
         self._proof = proof
         own.offer(proof.spins, "rounding")
         self.lower_bound = proof.lower_bound
-        if proof.proved_optimal:
-            self.status, self.message = "proved_optimal", "proved optimal"
-        elif self._interrupted():
-            self.status, self.message = "interrupted", "interrupted; bound and configuration are the best so far"
-        elif plan.seconds is not None and self.elapsed >= plan.seconds:
-            self.message = f"the budget of {plan.seconds:g} seconds is spent"
-        elif root_only:
-            self.message = "cuts or branching are switched off and the root is done"
+        if root_only:
+            self.conclude("cuts or branching are switched off and the root is done")
         else:
-            self.message = f"the budget of {nodes:,} nodes is spent"
+            self.conclude(f"the budget of {nodes:,} nodes is spent")
 
     def _tell(self, progress: Progress) -> bool:
         """Write the log; True asks the tree to end."""
@@ -163,19 +132,7 @@ class DenseBranching(Standing):
             NodeLine(progress.nodes, 0, bound, bound, best, gap, progress.open_nodes, 0, self.elapsed, "split")
         )
         self.told()
-        return self._interrupted()
-
-    def _stopped(self) -> bool:
-        return self._interrupted() or self._seconds_left() <= 0.0
-
-    def _seconds_left(self) -> float:
-        return math.inf if self.plan.seconds is None else self.plan.seconds - self.elapsed
-
-    def _round(self, calls: tuple[Calls, ...]) -> Round:
-        number = self.incumbent.round
-        self.incumbent.round += 1
-        stage = min(1.0, self.elapsed / self.plan.seconds) if self.plan.seconds else 0.0
-        return self.incumbent.round_of(number, stage, calls)
+        return self.interrupted()
 
 
 def _counted(nodes: int) -> str:

@@ -272,38 +272,3 @@ def _undecided_start(
             if not inside[spin] and state[spin] == 0:
                 return spin
     return best
-
-
-class Standing:
-    """How a branch-and-bound stands: what either kind shows of its ``incumbent`` and its clock."""
-
-    incumbent: Incumbent
-    _began: float
-
-    @property
-    def subsolver(self) -> Subsolver | None:
-        """Who answers the clusters."""
-        return self.incumbent.subsolver
-
-    @property
-    def best_energy(self) -> float:
-        """The lowest energy known."""
-        return self.incumbent.energy
-
-    @property
-    def best_spins(self) -> I8:
-        """Its configuration, i8 (n,)."""
-        return self.incumbent.spins
-
-    @property
-    def elapsed(self) -> float:
-        """Seconds since the search began, compiling apart."""
-        return time.perf_counter() - self._began
-
-    def take_improvements(self) -> tuple[Improvement, ...]:
-        """The new best energies since the last call of this method, in order."""
-        return self.incumbent.take_improvements()
-
-    def snapshot(self) -> Snapshot:
-        """The state between two rounds, as the run file keeps it."""
-        return self.incumbent.snapshot(self.elapsed)

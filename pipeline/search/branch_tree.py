@@ -12,17 +12,10 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-from patchwalk.bounds.certificate import (
-    BOUNDED,
-    BRANCHED,
-    EMPTY,
-    SETTLED,
-    Certificate,
-    dual_value,
-    settled_energy,
-)
+from patchwalk.bounds.certificate import Certificate
 from patchwalk.bounds.cut_graph import CutGraph
 from patchwalk.bounds.cuts import Cuts
+from patchwalk.bounds.cycle_certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, dual_value, settled_energy
 from patchwalk.bounds.cycles import Multipliers
 from patchwalk.bounds.energy_step import energy_levels, lower_energy, rounded_up
 from patchwalk.problem.ising import Problem

@@ -12,22 +12,21 @@ Barahona, Grotschel, Junger & Reinelt, Oper. Res. 36 (1988) 493; De Simone et al
 from __future__ import annotations
 
 import math
-import time
 from collections.abc import Callable, Generator, Iterator
-from dataclasses import dataclass
 
 import numpy as np
 
-from patchwalk.bounds.certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, Certificate, settled_energy
-from patchwalk.bounds.cut_graph import cut_graph
+from patchwalk.bounds.certificate import Certificate
+from patchwalk.bounds.clusters import ClusterBound, cluster_bound, promising
 from patchwalk.bounds.cuts import Cuts
+from patchwalk.bounds.cycle_certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, settled_energy
 from patchwalk.bounds.cycles import CycleProgram, Multipliers, tightening
 from patchwalk.bounds.energy_step import lower_energy
 from patchwalk.engine import release
 from patchwalk.problem.ising import Problem
-from patchwalk.records import Calls, Round
+from patchwalk.records import Round
+from patchwalk.search.bound_search import BoundSearch, BranchPlan, NodeLine
 from patchwalk.search.branch_pairs import Half, PairChooser
-from patchwalk.search.branch_primal import Incumbent, Standing
 from patchwalk.search.branch_tree import Node, Tree
 from patchwalk.subsolvers.contract import I8, Subsolver
 
@@ -49,52 +48,12 @@ ROW_GROWTH = 1.5
 """Rows are thinned out when there are so many times as many as after the root."""
 
 
-@dataclass(frozen=True)
-class BranchPlan:
-    """How to search. ``sweeps`` is how long the cooling lasts that gives the first configuration; another one, half
-    as long, goes with every round of cuts.
-
-    Any of ``cuts``, ``heuristic`` and ``branching`` may be switched off, to see what it is worth. Without ``cuts`` only
-    integral points that are no configuration are cut off; without ``heuristic`` the best energy comes from integral
-    points of the program alone, and no subsolver is asked; without ``branching`` only the root is worked on.
-    """
-
-    seconds: float | None = None
-    nodes: int | None = None
-    cluster_size: int = 12
-    clusters_per_round: int = 8
-    interior_rounds: int | None = None
-    sweeps: int = 2000
-    cuts: bool = True
-    heuristic: bool = True
-    branching: bool = True
-
-
-@dataclass(frozen=True)
-class NodeLine:
-    """One line of the node log. ``bound`` is the bound of the whole problem, ``outcome`` what became of the node."""
-
-    node: int
-    depth: int
-    node_bound: float
-    bound: float
-    best: float
-    gap: float
-    open_nodes: int
-    cuts: int
-    seconds: float
-    outcome: str
-
-
 OUTCOMES = {BRANCHED: "split", BOUNDED: "bounded", EMPTY: "empty", SETTLED: "settled"}
 
 
-class BranchAndBound(Standing):
-    """One run. Iterate over :meth:`rounds`; then read ``status``, ``lower_bound``, ``best_spins``, ``certificate()``.
-
-    ``status`` is ``proved_optimal`` where the bound reached the best energy (within ``problem.tie_tolerance``), else
-    ``budget`` or ``interrupted``. ``log`` holds a line for each node worked on, after which ``told`` is called.
-    """
+class BranchAndBound(BoundSearch):
+    """The tree of odd-cycle programs. Another proof may stand beside it, such as the cluster bound where the root
+    leaves a gap and clusters promise more: the higher of the two is the bound."""
 
     def __init__(
         self,
@@ -105,30 +64,32 @@ class BranchAndBound(Standing):
         start: I8 | None = None,
         interrupted: Callable[[], bool] = lambda: False,
     ) -> None:
-        self.problem, self.plan, self.seed = problem, plan, seed
-        self.graph = cut_graph(problem)
-        self.incumbent = Incumbent(
-            problem, self.graph, subsolver if plan.heuristic else None, plan.cluster_size, seed, start
-        )
+        super().__init__(problem, subsolver, plan, seed, start, interrupted)
         self.program = CycleProgram(self.graph)
         self.tree = Tree(problem, self.graph)
-        self.status, self.message = "budget", ""
-        self.log: list[NodeLine] = []
-        self.told: Callable[[], None] = lambda: None
+        self.beside: ClusterBound | None = None
         self.nodes_done = 0
-        self._interrupted = interrupted
         self._current: Node | None = None
         self._epoch, self._root_rows = 0, 0
         self._chooser = PairChooser(self.program, self.tree)
-        self._began = time.perf_counter()
 
     @property
     def lower_bound(self) -> float:
         """A true lower bound on the energy of every configuration, at any time."""
+        return max(self._tree_bound, self._floor)
+
+    @property
+    def _tree_bound(self) -> float:
+        """What the tree alone proves."""
+        if not self.tree.nodes:
+            return min(self.program.bound, self.best_energy)
         bound = min(self.tree.lowest_open, self.best_energy)
-        if self._current is not None:
-            bound = min(bound, self._current.bound)
-        return bound
+        return bound if self._current is None else min(bound, self._current.bound)
+
+    @property
+    def _floor(self) -> float:
+        """The bound of the proof beside the tree."""
+        return -math.inf if self.beside is None else min(self.beside.lower_bound, self.best_energy)
 
     @property
     def node_count(self) -> int:
@@ -143,34 +104,35 @@ class BranchAndBound(Standing):
     @property
     def proof(self) -> str:
         """What proves the bound, in words."""
+        if self.beside is not None and self._floor >= self._tree_bound:
+            return self.beside.proof
         cuts = np.unique(np.concatenate([node.multipliers.cuts for node in self.tree.nodes]))
         nodes = "1 node" if self.node_count == 1 else f"{self.node_count:,} nodes"
         return f"{len(cuts):,} odd-cycle cuts with their multipliers over {nodes}"
-
-    @property
-    def gap(self) -> float:
-        """(best energy - lower bound) / max(1, |best energy|)."""
-        return (self.best_energy - self.lower_bound) / max(1.0, abs(self.best_energy))
 
     @property
     def stage(self) -> float:
         """The fraction of the budget spent: of the nodes where they are limited, else of the seconds."""
         if self.plan.nodes:
             return min(1.0, self.nodes_done / self.plan.nodes)
-        return min(1.0, self.elapsed / self.plan.seconds) if self.plan.seconds else 0.0
+        return super().stage
 
     def take_up(self, certificate: Certificate) -> None:
         """Go on from the tree of an earlier run, whose best configuration is to be given as ``start``.
 
-        Raises ``ValueError`` for a certificate of another kind or of another problem.
+        Where clusters proved more than its tree, there is none: then their bound stands beside a new tree. Raises
+        ``ValueError`` for a certificate of another kind or of another problem.
         """
+        if certificate.method == "clusters" and certificate.fingerprint == self.problem.fingerprint:
+            self.beside = ClusterBound(certificate.bound, certificate.arrays, 0)
+            return
         self.tree = Tree.taken_up(self.problem, self.graph, certificate)
         self._chooser = PairChooser(self.program, self.tree)
         given = certificate.arrays
         self.program.add(Cuts(given["cut_starts"], given["cut_edges"], given["cut_odd"]))
         self._root_rows = len(self.program.rows)
         if len(self.tree.nodes) > 1:  # the program's first point, for roundings
-            self.program.solve(interior=False, seconds=self._seconds_left())
+            self.program.solve(interior=False, seconds=self.seconds_left())
 
     def prepare(self) -> None:
         """Compile everything and let the subsolver calibrate, before the clock starts."""
@@ -185,12 +147,11 @@ class BranchAndBound(Standing):
 
     def rounds(self) -> Iterator[Round]:
         """Search until the bound reaches the best energy or an end is reached, one round at a time."""
-        self._began = time.perf_counter()
-        self.incumbent.begin()
+        self.begin()
         try:
             if self.plan.heuristic and self.plan.sweeps:
-                self.incumbent.cool(self.plan.sweeps, self._stopped)
-                yield self._round(())
+                self.incumbent.cool(self.plan.sweeps, self.stopped)
+                yield self.next_round(())
             program = self.program
             if not self.tree.nodes:
                 root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
@@ -205,21 +166,19 @@ class BranchAndBound(Standing):
                 self._current = None
             if self.subsolver is not None:
                 release(self.subsolver)
-        self._conclude()
+        self.conclude(self.message)
 
     def certificate(self) -> Certificate:
         """What proves the bound, as data that :func:`patchwalk.bounds.certificate.check` takes."""
+        if self.beside is not None and self._floor >= self._tree_bound:
+            return Certificate(self.problem.fingerprint, "clusters", self.beside.lower_bound, self.beside.arrays)
         return self.tree.certificate(self.program.pool, self.best_spins)
 
     def _ended(self) -> bool:
         plan = self.plan
-        if self.tree.lowest_open >= self._goal:
+        if max(self.tree.lowest_open, self._floor) >= self.goal or self.stopped():
             return True
-        if self._interrupted():
-            self.status, self.message = "interrupted", "interrupted; bound and configuration are the best so far"
-        elif plan.seconds is not None and self.elapsed >= plan.seconds:
-            self.message = f"the budget of {plan.seconds:g} seconds is spent"
-        elif plan.nodes is not None and self.nodes_done >= plan.nodes:
+        if plan.nodes is not None and self.nodes_done >= plan.nodes:
             self.message = f"the budget of {plan.nodes:,} nodes is spent"
         elif not plan.branching and self.nodes_done:
             self.message = "branching is switched off and the root is done"
@@ -227,61 +186,51 @@ class BranchAndBound(Standing):
             return False
         return True
 
-    def _stopped(self) -> bool:
-        return self._interrupted() or self._seconds_left() <= 0.0
-
-    def _seconds_left(self) -> float:
-        return math.inf if self.plan.seconds is None else self.plan.seconds - self.elapsed
-
-    @property
-    def _goal(self) -> float:
-        """A bound from here on closes a node."""
-        return self.best_energy - self.problem.tie_tolerance
-
-    def _conclude(self) -> None:
-        if self.lower_bound >= self._goal:
-            self.status = "proved_optimal"
-            self.message = "proved optimal"
-
-    def _round(self, calls: tuple[Calls, ...]) -> Round:
-        number = self.incumbent.round
-        self.incumbent.round += 1
-        return self.incumbent.round_of(number, self.stage, calls)
-
     def _work_on(self, node: Node) -> Iterator[Round]:
         """Tighten a node's program, and close the node, split it, or leave it open where time is up."""
-        if node.bound >= self._goal:
+        if node.bound >= self.goal:
             self._note(node)
             return
         self.program.confine(*self.tree.box(node))
         if node.basis is not None and node.epoch == self._epoch:
             self.program.start_from(node.basis)
-        if node.number and not self.program.solve(interior=False, seconds=self._seconds_left()):
-            self.program.solve(interior=True, seconds=self._seconds_left())
+        if node.number and not self.program.solve(interior=False, seconds=self.seconds_left()):
+            self.program.solve(interior=True, seconds=self.seconds_left())
         self._learn(node)
         yield from self._tighten(node)
-        if self._stopped() and not self._closed(node):
+        if self.stopped() and not self._closed(node):
             self.tree.open(node)
             return
         self.nodes_done += 1
         if node.number == 0:
             self._root_rows = len(self.program.rows)
-        if not self._closed(node):
+            self._try_clusters(node)
+        if self._floor >= self.goal:
+            self.tree.open(node)
+        elif not self._closed(node):
             self._split(node)
         self._note(node)
+
+    def _try_clusters(self, root: Node) -> None:
+        """Where the root leaves a gap and clusters promise to prove more, let their bound stand beside the tree."""
+        if self._closed(root) or not self.plan.clusters or not promising(self.problem):
+            return
+        found = cluster_bound(self.problem, stopped=self.stopped)
+        if self.beside is None or found.lower_bound > self.beside.lower_bound:
+            self.beside = found
 
     def _tighten(self, node: Node) -> Generator[Round, None, None]:
         """Cuts and configurations in turn, until the node is closed or cuts do not pay any more."""
         yield self._look_for_better()
         while not self.plan.cuts and self._is_integral() and not self._closed(node) and self.program.separate():
-            self.program.solve(interior=False, seconds=self._seconds_left())
+            self.program.solve(interior=False, seconds=self.seconds_left())
             self._learn(node)
         if not self.plan.cuts or self._closed(node):
             return
         is_root = node.number == 0
         rounds = tightening(
             self.program,
-            self._seconds_left,
+            self.seconds_left,
             interior_rounds=self._interior_rounds if is_root else 0,
             most_rounds=ROUNDS_AT_ROOT if is_root else ROUNDS_AT_NODE,
             thin_out=is_root,
@@ -293,13 +242,13 @@ class BranchAndBound(Standing):
                 return
             if is_root:  # below it, once a node
                 yield self._look_for_better()
-            if self._closed(node) or self._stopped():
+            if self._closed(node) or self.stopped():
                 return
 
     @property
     def _missing(self) -> float:
         """By how much the program's own bound must still rise to close its node."""
-        return max(0.0, self._goal - float(self.tree.levels[0]) - self.program.value.bound)
+        return max(0.0, self.goal - float(self.tree.levels[0]) - self.program.value.bound)
 
     @property
     def _interior_rounds(self) -> int:
@@ -315,12 +264,12 @@ class BranchAndBound(Standing):
         if not self.plan.heuristic:
             if self._is_integral():
                 own.round_off(x, tries=1)
-            return self._round(())
+            return self.next_round(())
         spins = own.round_off(x)
         if self.plan.sweeps // LATER_COOLINGS and own.round:
-            own.cool(self.plan.sweeps // LATER_COOLINGS, self._stopped)
+            own.cool(self.plan.sweeps // LATER_COOLINGS, self.stopped)
         subject = spins if own.round % 2 else own.spins
-        return self._round(own.ask(x, subject, self.plan.clusters_per_round, self._stopped))
+        return self.next_round(own.ask(x, subject, self.plan.clusters_per_round, self.stopped))
 
     def _is_integral(self) -> bool:
         x = self.program.x
@@ -336,7 +285,7 @@ class BranchAndBound(Standing):
         if bound > node.bound or (bound == node.bound and node.number == 0):
             node.bound, node.multipliers = bound, program.multipliers
         near = self.best_energy - program.bound < NEAR * abs(self.best_energy)
-        if bound < self._goal and (near or np.all(program.lower == program.upper)):
+        if bound < self.goal and (near or np.all(program.lower == program.upper)):
             self._try_to_settle(node)
 
     def _try_to_settle(self, node: Node) -> None:
@@ -352,7 +301,7 @@ class BranchAndBound(Standing):
             node.outcome, node.bound, node.multipliers = SETTLED, reached, program.multipliers
 
     def _closed(self, node: Node) -> bool:
-        return node.outcome != BOUNDED or node.bound >= self._goal
+        return node.outcome != BOUNDED or node.bound >= self.goal
 
     def _split(self, node: Node) -> None:
         """Choose a pair, and open the two halves."""
@@ -360,9 +309,9 @@ class BranchAndBound(Standing):
         if self._root_rows and len(program.rows) > ROW_GROWTH * self._root_rows:
             program.drop_slack()
             self._epoch += 1
-            program.solve(interior=False, seconds=self._seconds_left())
+            program.solve(interior=False, seconds=self.seconds_left())
         basis = program.basis
-        split = self._chooser.choose(basis, self._goal, self._seconds_left)
+        split = self._chooser.choose(basis, self.goal, self.seconds_left)
         node.outcome = BRANCHED
         for side, half in enumerate((split.agree, split.differ)):
             child = self.tree.add(node, split.edge, side, node.bound, node.multipliers)

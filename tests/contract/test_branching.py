@@ -10,12 +10,15 @@ import pytest
 from scipy.optimize import Bounds, LinearConstraint, milp
 
 from patchwalk.bounds.certificate import check
+from patchwalk.bounds.clusters import promising
 from patchwalk.bounds.cut_graph import cut_graph
+from patchwalk.bounds.narrow import narrow_minimum, narrow_order
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
+from patchwalk.search.bound_search import BranchPlan
 from patchwalk.search.branch_primal import RULE_NAME
-from patchwalk.search.branching import BranchAndBound, BranchPlan
+from patchwalk.search.branching import BranchAndBound
 from patchwalk.subsolvers.registry import make_subsolver
 
 SUBSOLVER = make_subsolver("enumeration")
@@ -246,3 +249,36 @@ def test_a_tree_of_another_problem_is_not_taken_up(branching_problem: Problem) -
     other = BranchAndBound(make("sk", 9, seed=1), None, BranchPlan())
     with pytest.raises(ValueError, match="same problem"):
         other.take_up(first.certificate())
+
+
+def crowded(size: int, degree: float, seed: int) -> Problem:
+    """Spins in a square, neighbours at odds: full of small dense parts, of which odd cycles see too little."""
+    draw = np.random.default_rng(seed)
+    graph = nx.random_geometric_graph(size, (degree / (np.pi * size)) ** 0.5, seed=seed)
+    heads, tails = np.array(graph.edges).T
+    fields = 0.5 * draw.standard_normal(size)
+    return Problem.from_arrays(heads, tails, draw.random(len(heads)), size=size, fields=fields)
+
+
+def test_clusters_beside_the_tree() -> None:
+    """Where they prove more than the root of the cycles, theirs is the bound and its certificate, which a later run
+    takes up; without them the root says less."""
+    problem = crowded(150, 10, 2)
+    _, bound = narrow_minimum(problem, narrow_order(problem))  # it is narrow, so that the truth is known
+    alone, _ = run(problem, nodes=1)
+    assert alone.certificate().method == "cycles"
+    found, _ = run(problem, nodes=1, clusters=True)
+    certificate = found.certificate()
+    assert certificate.method == "clusters"
+    assert "multipliers on what they share" in found.proof
+    assert alone.lower_bound + 0.1 < found.lower_bound == check(problem, certificate) <= bound.lower_bound + 1e-9
+    later = BranchAndBound(problem, None, BranchPlan(), start=found.best_spins)
+    later.take_up(certificate)
+    assert later.lower_bound == found.lower_bound
+
+
+def test_promising_are_problems_full_of_small_dense_parts() -> None:
+    assert promising(crowded(150, 10, 2))
+    assert promising(make("beacons", 150, seed=1))
+    for family, size in (("lattice2d", 12), ("lattice3d", 6), ("regular", 100)):
+        assert not promising(make(family, size, seed=1))

@@ -9,10 +9,13 @@ from typing import Any
 import numpy as np
 import pytest
 
-from patchwalk.bounds.certificate import BRANCHED, Certificate, CertificateError, check, dual_value
+from patchwalk.bounds.certificate import Certificate, check
+from patchwalk.bounds.certificate_error import CertificateError
+from patchwalk.bounds.cycle_certificate import BRANCHED, dual_value
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
-from patchwalk.search.branching import BranchAndBound, BranchPlan
+from patchwalk.search.bound_search import BranchPlan
+from patchwalk.search.branching import BranchAndBound
 
 
 def proved(problem: Problem, **plan: Any) -> BranchAndBound:

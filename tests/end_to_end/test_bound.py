@@ -21,6 +21,8 @@ import patchwalk
 from patchwalk.commands.bounding import bounds_for
 from patchwalk.evidence.runfile import RunFileError
 from patchwalk.settings_checks import SettingsError
+from patchwalk.subsolvers.contract import ClusterBatch, Edges
+from patchwalk.subsolvers.registry import make_subsolver
 
 MINUTES = 300  # no run here takes a tenth of it, compiling included; beyond it something hangs
 START = "from patchwalk.interface.cli import main; main()"
@@ -142,7 +144,7 @@ def test_complaints_come_all_at_once(lattice: Path) -> None:
     command("bound", lattice, "--seconds", "soon", code=2)
 
 
-@pytest.mark.parametrize(("size", "method"), [(60, "cycles"), (150, "semidefinite")])
+@pytest.mark.parametrize(("size", "method"), [(60, "cycles"), (150, "semidefinite"), (150, "clusters")])
 def test_stopped_early_it_says_budget(size: int, method: str, tmp_path: Path) -> None:
     """Dense problems far beyond half a second: a true bound, held against the best configuration known."""
     problem = patchwalk.make("sk", size, seed=1)
@@ -152,7 +154,7 @@ def test_stopped_early_it_says_budget(size: int, method: str, tmp_path: Path) ->
     assert patchwalk.audit(problem, tmp_path / "run.sqlite").status == "confirmed"
 
 
-@pytest.mark.parametrize("method", ["cycles", "semidefinite"])
+@pytest.mark.parametrize("method", ["cycles", "semidefinite", "clusters"])
 def test_an_interrupt_keeps_the_bound(method: str, tmp_path: Path) -> None:
     path, run = tmp_path / "dense.txt", tmp_path / "run.sqlite"
     patchwalk.write_problem(patchwalk.make("sk", 90, seed=1), path)
@@ -204,6 +206,63 @@ def test_dense_glasses_are_proved_by_semidefinite_duals(tmp_path: Path) -> None:
         raised = np.frombuffer(data) + 1e-3
         database.execute("UPDATE certificate_arrays SET data = ? WHERE name = 'diagonals'", (raised.tobytes(),))
     assert patchwalk.audit(problem, run).status == "refuted"
+
+
+QUILLMERE = Path(__file__).resolve().parents[2] / "configs" / "quillmere.csv"
+
+
+def altered(run: Path, name: str, place: int, change: float) -> None:
+    """Add ``change`` to one number of the certificate in a run file."""
+    with sqlite3.connect(run) as database:
+        (data,) = database.execute("SELECT data FROM certificate_arrays WHERE name = ?", (name,)).fetchone()
+        numbers = np.frombuffer(data).copy()
+        numbers[place] += change
+        database.execute("UPDATE certificate_arrays SET data = ? WHERE name = ?", (numbers.tobytes(), name))
+
+
+def test_the_demo_is_narrow_and_proved(tmp_path: Path) -> None:
+    """Its coast is eliminated from end to end; the kernels of the subsolver ``elimination`` find the same minimum."""
+    run = tmp_path / "run.sqlite"
+    found = command("bound", QUILLMERE, "--run", run, "--quiet")
+    assert found["status"] == "proved_optimal"
+    assert "eliminated" in found["proof"]
+    audited = command("audit", QUILLMERE, run)
+    assert audited["proved_optimal"]
+    assert audited["method"] == "clusters"
+    problem = patchwalk.read_problem(QUILLMERE)
+    edges = np.argwhere(np.triu(problem.matrix.toarray())).astype(np.int32)
+    whole = ClusterBatch(
+        fields=problem.fields[None], spins=np.ones((1, len(problem)), np.int8), temperature=np.zeros(1),
+        seeds=np.zeros(1, np.uint64),
+        edges=Edges(np.array([0, len(edges)]), edges, problem.matrix.toarray()[edges[:, 0], edges[:, 1]]),
+    )  # fmt: skip
+    (lowest,), _ = make_subsolver("elimination").minima(whole)
+    assert found["energy"] == pytest.approx(lowest + problem.offset, abs=1e-9)
+    altered(run, "coupling_shares", 7, 1e-3)
+    assert "do not add up" in command("audit", QUILLMERE, run, code=1)["message"]
+
+
+def test_overlapping_clusters_on_a_lattice(tmp_path: Path) -> None:
+    """Asked for by name where they are not the best: a true bound, turn by turn higher, and refused when a multiplier
+    is altered alone, when two are so that the shares add up again, and when the bound itself is."""
+    problem, run = patchwalk.make("lattice2d", 12, couplings="gaussian", seed=1), tmp_path / "run.sqlite"
+    found = patchwalk.bound(problem, method="clusters", nodes=2, run=run)
+    assert found.status == "budget"
+    assert [line.outcome for line in found.log] == ["8 spins", "10 spins"]
+    assert found.log[0].bound < found.lower_bound < found.energy
+    assert found.lower_bound <= bounds_for(problem, 60.0).energy
+    assert patchwalk.audit(problem, run).lower_bound == found.lower_bound
+    with sqlite3.connect(run) as database:
+        database.execute("UPDATE certificates SET bound = bound + 1e-6")
+    assert "clusters gives" in patchwalk.audit(problem, run).message
+    with sqlite3.connect(run) as database:
+        database.execute("UPDATE certificates SET bound = ?", (found.lower_bound,))
+    members = found.certificate.arrays["members"]
+    first, second = np.flatnonzero(members == members[0])[:2]
+    altered(run, "field_shares", first, 0.25)
+    assert "do not add up" in patchwalk.audit(problem, run).message
+    altered(run, "field_shares", second, -0.25)  # they add up again, and prove less than is stated
+    assert "clusters gives" in patchwalk.audit(problem, run).message
 
 
 def test_for_callers_with_a_configuration_of_their_own() -> None:

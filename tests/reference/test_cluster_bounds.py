@@ -2,13 +2,14 @@
 
 from __future__ import annotations
 
-import dataclasses
 import itertools
 
 import networkx as nx
 import numpy as np
 import pytest
 
+from patchwalk.bounds.certificate_error import CertificateError
+from patchwalk.bounds.cluster_certificate import WIDEST, checked_clusters, eliminated
 from patchwalk.bounds.cluster_dual import (
     cluster_minima,
     grow_clusters,
@@ -16,10 +17,12 @@ from patchwalk.bounds.cluster_dual import (
     smoothed_minima,
     transform,
 )
-from patchwalk.bounds.clusters import checked_cluster_bound, cluster_bound
-from patchwalk.bounds.spectral import CertificateError
+from patchwalk.bounds.clusters import cluster_bound
+from patchwalk.bounds.narrow import narrow_minimum, narrow_order
+from patchwalk.clusters.conditioning import condition
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
+from patchwalk.subsolvers.registry import make_subsolver
 from patchwalk.subsolvers.spectrum import cluster_energies
 
 
@@ -48,7 +51,7 @@ def test_bounds_stay_below_the_ground_energy(tens: int) -> None:
         problem = random_problem(number)
         bound = cluster_bound(problem, cluster_size=2 + number % 5, overlap=1 + number % 4)
         assert bound.lower_bound <= ground_energy(problem) + problem.tie_tolerance
-        assert checked_cluster_bound(problem, bound.certificate) == bound.lower_bound
+        assert checked_clusters(problem, bound.arrays) == bound.lower_bound
 
 
 @pytest.mark.parametrize("number", range(6))
@@ -78,35 +81,77 @@ def test_larger_clusters_and_multipliers_raise_the_bound() -> None:
     assert plaquettes.lower_bound > untouched.lower_bound + 1
 
 
-def test_shares_that_do_not_add_up_are_paid_for() -> None:
-    """A share raised raises one minimum at most by what is then missing from the whole."""
+@pytest.mark.parametrize("name", ["field_shares", "coupling_shares"])
+def test_shares_that_do_not_add_up_are_refused(name: str) -> None:
+    """One share altered alone, upwards or downwards, by much or by little; or left out altogether."""
+    problem = make("lattice2d", 4, seed=3, couplings="gaussian", fields=True)
+    arrays = cluster_bound(problem, cluster_size=6).arrays
+    for place in range(len(arrays[name])):
+        for change in (1.0, -1.0, 1e-9, -1e-12):
+            shares = arrays[name].copy()
+            shares[place] += change
+            with pytest.raises(CertificateError, match="do not add up"):
+                checked_clusters(problem, {**arrays, name: shares})
+    with pytest.raises(CertificateError, match="do not add up"):
+        checked_clusters(problem, {**arrays, name: 0 * arrays[name]})
+
+
+def test_shares_moved_from_one_cluster_to_another_prove_something_else() -> None:
+    """They add up still, so that what they prove is true; the climb left nothing to gain by it."""
     problem = make("lattice2d", 4, seed=3, couplings="gaussian", fields=True)
     bound = cluster_bound(problem, cluster_size=6)
-    ground = ground_energy(problem)
-    draw = np.random.default_rng(1)
-    for name in ("field_shares", "coupling_shares"):
-        for _ in range(30):
-            shares = getattr(bound.certificate, name).copy()
-            shares[draw.integers(len(shares))] += draw.normal()
-            altered = dataclasses.replace(bound.certificate, **{name: shares})
-            assert checked_cluster_bound(problem, altered) <= ground
-    emptied = dataclasses.replace(bound.certificate, coupling_shares=0 * bound.certificate.coupling_shares)
-    assert checked_cluster_bound(problem, emptied) < bound.lower_bound
+    draw, members = np.random.default_rng(1), bound.arrays["members"]
+    for _ in range(30):
+        one, other = draw.choice(np.flatnonzero(members == draw.integers(16)), 2, replace=False)
+        shares, change = bound.arrays["field_shares"].copy(), 2.0 ** draw.integers(-4, 2)
+        shares[one] += change
+        shares[other] -= change
+        proved = checked_clusters(problem, {**bound.arrays, "field_shares": shares})
+        assert proved <= min(bound.lower_bound + 1e-2, ground_energy(problem))
 
 
 def test_a_certificate_of_another_layout_is_refused() -> None:
     problem = make("lattice2d", 4, seed=3)
-    good = cluster_bound(problem, cluster_size=4, steps=0).certificate
+    good = cluster_bound(problem, cluster_size=4, steps=0).arrays
     for changes, words in (
-        ({"field_shares": good.field_shares[:-1]}, "shares for"),
-        ({"coupling_shares": good.coupling_shares * np.nan}, "not finite"),
-        ({"members": good.members + 1}, "from 0 to 15"),
-        ({"members": good.members[::-1]}, "must rise"),
-        ({"member_starts": good.member_starts[1:]}, "rise from 0"),
-        ({"member_starts": np.array([0, len(good.members)])}, "1 to 20 spins"),
+        ({"field_shares": good["field_shares"][:-1]}, "shares for"),
+        ({"coupling_shares": good["coupling_shares"] * np.nan}, "not finite"),
+        ({"members": good["members"] + 1}, "from 0 to 15"),
+        ({"members": 0 * good["members"]}, "a member twice"),
+        (
+            {"pairs": good["pairs"][::-1], "coupling_shares": good["coupling_shares"][::-1]},
+            "not one of two members",
+        ),
+        ({"pairs": good["pairs"] + 8}, "of spins from 0"),
+        ({"pairs": good["pairs"][:1]}, "shares for"),
+        ({"member_starts": good["member_starts"][1:]}, "starts"),
+        ({"pair_starts": good["pair_starts"][::-1]}, "rising"),
     ):
         with pytest.raises(CertificateError, match=words):
-            checked_cluster_bound(problem, dataclasses.replace(good, **changes))
+            checked_clusters(problem, {**good, **changes})
+    with pytest.raises(CertificateError, match="incomplete"):
+        checked_clusters(problem, {name: good[name] for name in good if name != "pairs"})
+
+
+@pytest.mark.parametrize("number", range(40))
+def test_elimination_of_the_check_against_enumeration(number: int) -> None:
+    """In any order: the lowest of all energies, and spins that have it."""
+    problem = random_problem(number)
+    order = np.random.default_rng(number).permutation(len(problem)).astype(np.int32)
+    pairs = np.argwhere(np.triu(problem.matrix.toarray())).astype(np.int32)
+    weights = problem.matrix.toarray()[pairs[:, 0], pairs[:, 1]]
+    lowest, found = eliminated(order, problem.fields[order], pairs, weights)
+    assert lowest + problem.offset == pytest.approx(ground_energy(problem), abs=1e-12)
+    spins = np.empty(len(problem), np.int8)
+    spins[order] = found
+    assert problem.energy(spins) == pytest.approx(lowest + problem.offset, abs=1e-12)
+
+
+def test_tables_too_wide_to_check_are_refused() -> None:
+    size = WIDEST + 2
+    heads, tails = np.triu_indices(size, 1)
+    with pytest.raises(ValueError, match=f"2\\^{size - 1} entries"):
+        eliminated(np.arange(size), np.zeros(size), np.stack([heads, tails], axis=1), np.ones(len(heads)))
 
 
 def test_impossible_settings_are_refused() -> None:
@@ -123,7 +168,7 @@ def test_equal_calls_give_equal_bits_at_every_scale() -> None:
     large = Problem.from_arrays(*pairs, weights * 2**20, fields=problem.fields * 2**20, offset=problem.offset * 2**20)
     first, second, third = (cluster_bound(it, cluster_size=6) for it in (problem, problem, large))
     assert first.lower_bound == second.lower_bound == third.lower_bound / 2**20
-    assert np.array_equal(first.certificate.coupling_shares, second.certificate.coupling_shares)
+    assert np.array_equal(first.arrays["coupling_shares"], second.arrays["coupling_shares"])
 
 
 @pytest.mark.parametrize(("size", "overlap"), [(2, 1), (4, 2), (9, 9)])
@@ -165,3 +210,41 @@ def test_the_transform_is_hadamards_matrix() -> None:
     table = values.copy()
     transform(table)
     assert np.allclose(table, matrix @ values, atol=1e-13)
+
+
+@pytest.mark.parametrize("family", ["beacons", "tree", "strip", "lone spins"])
+def test_narrow_problems_are_exact(family: str) -> None:
+    """Against the kernels of the subsolver ``elimination``, which share nothing with the check."""
+    draw = np.random.default_rng(3)
+    if family == "beacons":
+        problem = make("beacons", 200, seed=4)
+    elif family == "lone spins":
+        problem = Problem.from_arrays([0], [1], [1.0], size=70, fields=draw.standard_normal(70))
+    else:
+        graph = nx.random_labeled_tree(300, seed=2) if family == "tree" else nx.grid_2d_graph(6, 60)
+        edges = np.array(nx.convert_node_labels_to_integers(graph).edges)
+        problem = Problem.from_arrays(
+            *edges.T, draw.standard_normal(len(edges)), fields=draw.standard_normal(len(graph))
+        )
+    order = narrow_order(problem)
+    assert order is not None
+    spins, bound = narrow_minimum(problem, order)
+    everything = np.arange(len(problem), dtype=np.int32)[None]
+    up = np.ones(len(problem), np.int8)
+    whole = condition(
+        problem,
+        everything,
+        up,
+        problem.local_fields(up),
+        0.0,
+        np.zeros(1, np.uint64),
+        np.full(len(problem), -1, np.int32),
+    )
+    (lowest,), _ = make_subsolver("elimination").minima(whole)
+    assert bound.lower_bound <= problem.energy(spins) <= bound.lower_bound + problem.tie_tolerance
+    assert problem.energy(spins) == pytest.approx(lowest + problem.offset, rel=1e-12)
+
+
+def test_what_is_not_narrow() -> None:
+    assert narrow_order(make("lattice2d", 30, seed=1)) is None
+    assert narrow_order(make("sk", 40, seed=1)) is None

@@ -10,13 +10,13 @@ import numpy as np
 import pytest
 from scipy import optimize, sparse
 
+from patchwalk.bounds.certificate_error import CertificateError
 from patchwalk.bounds.dense import semidefinite_bound
 from patchwalk.bounds.dense_certificate import checked_tree
 from patchwalk.bounds.dense_tree import branch_dense
 from patchwalk.bounds.merging import merged, tied, unmerged
 from patchwalk.bounds.odd_cuts import list_pairs, smoothed_dual, triangles_broken, widened
 from patchwalk.bounds.spectral import (
-    CertificateError,
     checked_bound,
     grouped_matrix,
     spectral_bound,
