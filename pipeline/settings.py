@@ -86,10 +86,11 @@ def _path(value: object) -> object:
 FileName = Annotated[Path, BeforeValidator(_path)]
 Seed = Annotated[int, Field(ge=0, lt=2**63)]
 AboveZero = Annotated[float, Field(gt=0, allow_inf_nan=False)]
+SpelledSubsolver = Annotated[Any, BeforeValidator(_spelled_subsolver)]
 
 
-class SearchSettings(BaseModel):
-    """What every command that calls subsolvers on a problem can be told."""
+class ProblemSettings(BaseModel):
+    """What every command that reads a problem can be told."""
 
     model_config = ConfigDict(extra="forbid", frozen=True, arbitrary_types_allowed=True, strict=False)
 
@@ -102,7 +103,16 @@ class SearchSettings(BaseModel):
     flip_sign: bool = Field(
         False, description="The numbers of INPUT are of the opposite sign convention, E = -sum J s s - sum h s (ising)."
     )
-    subsolver: Annotated[Any, BeforeValidator(_spelled_subsolver)] = Field(
+
+    def conflicts(self) -> list[tuple[str, str]]:
+        """Settings that are each possible but not together: the setting to look at first, and a sentence."""
+        return []
+
+
+class SearchSettings(ProblemSettings):
+    """What every command that calls subsolvers on a problem can be told."""
+
+    subsolver: SpelledSubsolver = Field(
         "walk",
         description="Who answers the clusters: NAME, NAME,key=value,... , @file.toml or module:Object; "
         "patchwalk backends lists the names.",

@@ -16,9 +16,9 @@ from typing import Annotated, Any, TypeVar
 
 from pydantic import ValidationError
 
-from patchwalk.settings import SearchSettings
+from patchwalk.settings import ProblemSettings
 
-Model = TypeVar("Model", bound=SearchSettings)
+Model = TypeVar("Model", bound=ProblemSettings)
 
 
 class SettingsError(ValueError):
@@ -109,7 +109,7 @@ def _validated(
     return model.model_validate({key: value for key, value in values.items() if key not in complaints})
 
 
-def _type_complaint(model: type[SearchSettings], key: str, value: object, is_text: bool) -> str:
+def _type_complaint(model: type[ProblemSettings], key: str, value: object, is_text: bool) -> str:
     """What no conversion should forgive: true for a number, and in a file or in Python text for a number."""
     kind = plain_type(model, key)
     if kind not in (int, float):
@@ -119,7 +119,7 @@ def _type_complaint(model: type[SearchSettings], key: str, value: object, is_tex
     return ""
 
 
-def plain_type(model: type[SearchSettings], key: str) -> Any:
+def plain_type(model: type[ProblemSettings], key: str) -> Any:
     """The type of a setting without ``| None``; None for an unknown one."""
     if key not in model.model_fields:
         return None
@@ -129,7 +129,7 @@ def plain_type(model: type[SearchSettings], key: str) -> Any:
     return typing.get_args(inner)[0] if typing.get_origin(inner) is Annotated else inner
 
 
-def _in_words(model: type[SearchSettings], key: str, detail: Any) -> str:
+def _in_words(model: type[ProblemSettings], key: str, detail: Any) -> str:
     """One of pydantic's complaints, in words for people who never heard of it."""
     if detail["type"] == "extra_forbidden":
         return f"there is no such setting{_nearest(key, list(model.model_fields))}"

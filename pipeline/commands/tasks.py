@@ -9,7 +9,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass, field
 from datetime import datetime
 from pathlib import Path
-from typing import Any, Generic
+from typing import Any, Generic, TypeVar
 
 import numpy as np
 
@@ -31,13 +31,16 @@ from patchwalk.settings import (
     FEWEST_SWEEPS,
     LADDER_LIMIT,
     MOST_SWEEPS,
+    ProblemSettings,
     SamplingSettings,
     SearchSettings,
     SolveSettings,
 )
-from patchwalk.settings_checks import Model, SettingsError, checked_settings, read_settings
+from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import DENSE_LIMIT, I8, ClusterBatch, Edges, Subsolver
 from patchwalk.subsolvers.registry import SubsolverError
+
+Told = TypeVar("Told", bound=SearchSettings)
 
 
 class MemoryForecastError(MemoryError):
@@ -45,12 +48,12 @@ class MemoryForecastError(MemoryError):
 
 
 @dataclass(frozen=True, eq=False)
-class Errand(Generic[Model]):
+class Errand(Generic[Told]):
     """A problem, the settings of a command, and everything needed to work on it, checked and ready."""
 
     problem: Problem
     source: str
-    settings: Model
+    settings: Told
     policy: Policy
     cluster_size: int
     start: I8 | None
@@ -202,7 +205,7 @@ def policy_of(settings: SearchSettings, folder: Path, place: str) -> Policy:
         raise SubsolverError("\n".join(lines)) from error
 
 
-def problem_from(source: Problem | str | Path, settings: SearchSettings) -> tuple[Problem, str]:
+def problem_from(source: Problem | str | Path, settings: ProblemSettings) -> tuple[Problem, str]:
     if not isinstance(source, Problem):
         return read_again(source, settings), str(Path(source).absolute())
     for key in ("kind", "field_file", "flip_sign"):
@@ -212,7 +215,7 @@ def problem_from(source: Problem | str | Path, settings: SearchSettings) -> tupl
     return source, "problem"
 
 
-def read_again(source: str | Path, settings: SearchSettings) -> Problem:
+def read_again(source: str | Path, settings: ProblemSettings) -> Problem:
     """The problem of a file, read as the settings say."""
     return read_problem(source, kind=settings.kind, field_file=settings.field_file, flip_sign=settings.flip_sign)
 

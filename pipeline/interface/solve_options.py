@@ -11,7 +11,7 @@ from pydantic.fields import FieldInfo
 
 from patchwalk.interface.cli import fail, print_json
 from patchwalk.problem.forms import table_of_kinds
-from patchwalk.settings import SearchSettings, SolveSettings
+from patchwalk.settings import ProblemSettings, SolveSettings
 from patchwalk.settings_checks import plain_type
 
 if TYPE_CHECKING:
@@ -22,13 +22,13 @@ METAVARS = {
     "start": "FILE", "run": "FILE", "answer": "FILE", "field_file": "FILE", "seeds": "1..5",
     "subsolver": "NAME[,key=value...]", "scheduler": "tcp://HOST:PORT", "callers": "TABLES",
     "rule": "NAME[=WEIGHT,...]",
-    "temperatures": "NUMBERS",
+    "temperatures": "NUMBERS", "earlier": "RUN", "without": "WORDS",
 }  # fmt: skip
 EXIT_CODES = {"interrupted": 130, "error": 1}
 
 
 def setting_options(
-    model: type[SearchSettings], without: Collection[str] = ()
+    model: type[ProblemSettings], without: Collection[str] = ()
 ) -> Callable[[Callable[..., None]], Callable[..., None]]:
     """Give a command an option for every setting of the model but some; all are text, checked together later."""
 

@@ -9,6 +9,9 @@ import pytest
 from click.testing import CliRunner
 
 from patchwalk.clusters.mixture import mixture_of
+from patchwalk.commands.bound_settings import PARTS, BoundSettings
+from patchwalk.commands.bound_task import bound_task_from
+from patchwalk.interface.bound_options import bound_command
 from patchwalk.interface.solve_options import solve_command
 from patchwalk.settings import DEFAULT_SECONDS, SolveSettings
 from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
@@ -96,3 +99,63 @@ def test_a_broken_file_is_named(tmp_path: Path, text: str, words: str) -> None:
     with pytest.raises(SettingsError, match=words) as caught:
         read_settings(path)
     assert str(path) in str(caught.value)
+
+
+def test_every_setting_of_bound_is_an_option() -> None:
+    assert {parameter.name for parameter in bound_command.params} == {*BoundSettings.model_fields, "source", "as_json",
+                                                                      "quiet"}  # fmt: skip
+
+
+def test_mistakes_of_bound_come_at_once_with_those_of_the_file(tmp_path: Path) -> None:
+    path = tmp_path / "job.toml"
+    path.write_text('input = "glass.csv"\nkind = "izing"\nsweeeps = 3\n')
+    given = {"nodes": "0.5", "method": "cycle", "without": "cuts,luck", "seconds": "soon"}
+    with pytest.raises(SettingsError) as caught:
+        bound_task_from(path, given, "--{}")
+    complaints = caught.value.complaints
+    for place, words in (
+        (f"{path}: sweeeps", "did you mean 'sweeps'"),
+        ("--nodes", "whole number"),
+        ("--method", "did you mean 'cycles'"),
+        ("--without", "'luck' cannot be switched off"),
+        ("--seconds", "must be a number"),
+    ):
+        assert any(line.startswith(place) and words in line for line in complaints), (place, complaints)
+
+
+@pytest.mark.parametrize(
+    ("given", "words"),
+    [
+        ({"earlier": "run.sqlite", "method": "semidefinite"}, "by cycles only"),
+        ({"earlier": "run.sqlite", "start": "answer.txt"}, "cannot both be given"),
+        ({"start": ""}, "is empty"),
+        ({"seed": True}, "whole number"),
+        ({"without": 3}, "as words between commas"),
+        ({"subsolver": 3}, "write it as NAME"),
+    ],
+)
+def test_settings_of_bound_that_cannot_be(given: dict[str, Any], words: str) -> None:
+    with pytest.raises(SettingsError, match=words):
+        checked_settings(BoundSettings, {}, given, "")
+
+
+def test_parts_are_switched_off_and_clusters_only_where_the_method_is_open(tmp_path: Path) -> None:
+    path = tmp_path / "glass.csv"
+    path.write_text("a,b,1\nb,c,2\n")
+    whole = {"kind": "ising", "run": tmp_path / "run.sqlite"}
+    for off in PARTS:
+        plan = bound_task_from(path, {**whole, "without": off}).plan
+        assert {part: getattr(plan, part) for part in PARTS} == {part: part != off for part in PARTS}
+    assert not bound_task_from(path, {**whole, "method": "cycles"}).plan.clusters
+
+
+def test_bound_reads_the_input_of_a_file_as_solve_does(tmp_path: Path) -> None:
+    (tmp_path / "glass.csv").write_text("a,b,1\nb,c,2\n")
+    (tmp_path / "fields.csv").write_text("a,0.5\nc,-1\n")
+    path = tmp_path / "job.toml"
+    path.write_text(
+        'input = "glass.csv"\nkind = "ising"\nfield_file = "fields.csv"\nflip_sign = true\nclusters_per_round = 3\n'
+    )
+    problem = bound_task_from(path, {"run": tmp_path / "run.sqlite"}).problem
+    assert problem.fields.tolist() == [-0.5, 0.0, 1.0]
+    assert problem.couplings.max() == -1.0

@@ -191,6 +191,17 @@ def test_a_stopped_run_is_gone_on_with(tmp_path: Path) -> None:
         patchwalk.bound(patchwalk.make("sk", 20, seed=1), earlier=stopped, run=tmp_path / "three.sqlite")
 
 
+def test_a_dense_tree_is_not_gone_on_with(tmp_path: Path) -> None:
+    problem, run = patchwalk.make("sk", 30, seed=1), tmp_path / "run.sqlite"
+    assert patchwalk.bound(problem, nodes=1, run=run).certificate.method == "semidefinite"
+    with pytest.raises(SettingsError, match=r"semidefinite; only trees of cycles and clusters .* --start FILE"):
+        patchwalk.bound(problem, earlier=run, run=tmp_path / "later.sqlite")
+    (tmp_path / "answer.txt").write_text("+1 " * 30)
+    (tmp_path / "later.sqlite").unlink(missing_ok=True)
+    with pytest.raises(SettingsError, match="no certificate to go on from"):
+        patchwalk.bound(problem, earlier=tmp_path / "answer.txt", run=tmp_path / "later.sqlite")
+
+
 def test_dense_glasses_are_proved_by_semidefinite_duals(tmp_path: Path) -> None:
     problem, run = patchwalk.make("sk", 40, seed=1), tmp_path / "run.sqlite"
     found = patchwalk.bound(problem, run=run)
