@@ -103,6 +103,9 @@ class ProblemSettings(BaseModel):
     flip_sign: bool = Field(
         False, description="The numbers of INPUT are of the opposite sign convention, E = -sum J s s - sum h s (ising)."
     )
+    colours: int | None = Field(
+        None, ge=2, le=1000, description="How many colours there are, unless INPUT says so itself (kind colouring)."
+    )
 
     def conflicts(self) -> list[tuple[str, str]]:
         """Settings that are each possible but not together: the setting to look at first, and a sentence."""
@@ -174,7 +177,7 @@ class SearchSettings(ProblemSettings):
         """Settings that are each possible but not together: the setting to look at first, and a sentence."""
         if self.callers is not None and "subsolver" in self.model_fields_set and self.subsolver is not None:
             return [("callers", "callers and subsolver cannot both be given; make the subsolver a case")]
-        return []
+        return super().conflicts()
 
 
 class SolveSettings(SearchSettings):

@@ -13,12 +13,12 @@ from patchwalk.commands.tasks import check_memory, check_sizes, default_run_path
 from patchwalk.problem.files import read_start
 from patchwalk.problem.ising import Problem, known_kind
 from patchwalk.search.bound_search import BranchPlan
-from patchwalk.settings import DEFAULT_CLUSTER_SIZE, SolveSettings
+from patchwalk.settings import DEFAULT_CLUSTER_SIZE, ProblemSettings, SolveSettings
 from patchwalk.settings_checks import SettingsError, checked_settings, read_settings
 from patchwalk.subsolvers.contract import I8, Subsolver
 from patchwalk.subsolvers.registry import subsolver_from
 
-SHARED = ("kind", "field_file", "flip_sign", "start")
+SHARED = (*ProblemSettings.model_fields, "start")
 """What ``bound`` takes over from a settings TOML, which is written for ``solve``."""
 
 DEFAULT_SECONDS = 60.0

@@ -118,9 +118,9 @@ class Silent:
 def bound(problem: Problem | str | Path, **settings: Any) -> Bound:
     """A lower bound on the energy of a problem, a problem file or a settings TOML, with its certificate in a run file.
 
-    Keywords are the options of ``patchwalk bound``: ``kind, method, seconds, nodes, subsolver, cluster_size, sweeps,
-    seed, start, earlier, run, without``. Raises ``SettingsError``, ``ProblemError``, ``SubsolverError`` or
-    ``RunFileError`` before any work is done.
+    Keywords are the options of ``patchwalk bound``: ``kind, field_file, flip_sign, colours, method, seconds, nodes,
+    subsolver, cluster_size, sweeps, seed, start, earlier, run, without``. Raises ``SettingsError``, ``ProblemError``,
+    ``SubsolverError`` or ``RunFileError`` before any work is done.
 
     >>> import os, tempfile
     >>> ring = Problem.from_arrays([0, 1, 2, 3, 4], [1, 2, 3, 4, 0], [1.0] * 5, kind="maxcut")

@@ -208,7 +208,7 @@ def policy_of(settings: SearchSettings, folder: Path, place: str) -> Policy:
 def problem_from(source: Problem | str | Path, settings: ProblemSettings) -> tuple[Problem, str]:
     if not isinstance(source, Problem):
         return read_again(source, settings), str(Path(source).absolute())
-    for key in ("kind", "field_file", "flip_sign"):
+    for key in ProblemSettings.model_fields:
         given = getattr(settings, key)
         if given and given != getattr(source, key, None):
             raise SettingsError([f"{key} is {given!r}, but the problem is given as it is; leave {key} out"])
@@ -217,7 +217,7 @@ def problem_from(source: Problem | str | Path, settings: ProblemSettings) -> tup
 
 def read_again(source: str | Path, settings: ProblemSettings) -> Problem:
     """The problem of a file, read as the settings say."""
-    return read_problem(source, kind=settings.kind, field_file=settings.field_file, flip_sign=settings.flip_sign)
+    return read_problem(source, **{key: getattr(settings, key) for key in ProblemSettings.model_fields})
 
 
 def check_sizes(size: int, problem: Problem, subsolvers: list[Subsolver]) -> None:

@@ -72,6 +72,7 @@ def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None
     patchwalk solve configs/quillmere.toml
     patchwalk solve glass.txt --kind ising --subsolver walk,shots=4 --cluster-size 10 --seconds 20
     patchwalk solve couplings.csv --kind ising --field-file fields.csv --flip-sign
+    patchwalk solve graph.csv --kind colouring --colours 4
     patchwalk solve graph.csv --kind maxcut --sweeps 0 --calls 3000 --seeds 1..5 --json
 
     What a file may mean (--kind), each plain or packed (.gz):

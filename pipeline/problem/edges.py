@@ -47,13 +47,13 @@ def is_comment(text: str) -> bool:
     return text.lstrip()[:1] in ("#", "%")
 
 
-def read(path: PathLike, kind: str | None) -> Problem:
+def read(path: PathLike, kind: str | None, colours: int | None = None) -> Problem:
     """The problem in a weighted edge list, or in a list of numbers where that is the kind.
 
     Raises :class:`ProblemError` with file and line.
     """
     with contextlib.closing(numbered_lines(path)) as lines:
-        source = open_source(path, lines, is_comment)
+        source = open_source(path, lines, is_comment, colours=colours)
         kind = source.kind(kind)
         if kind == "partition":
             from patchwalk.problem.numbers import read_numbers

@@ -25,6 +25,7 @@ from patchwalk.problem.forms import PathLike, forms_of, homes_of
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.sources import fail, numbered_lines, quoted, replacing
 
+OPTIONS_OF_KINDS = {"flip_sign": "ising", "field_file": "ising", "colours": "colouring"}
 SPIN_WORDS = {"+1": 1, "1": 1, "-1": -1}
 
 
@@ -34,18 +35,23 @@ def read_problem(
     *,
     field_file: PathLike | None = None,
     flip_sign: bool = False,
+    colours: int | None = None,
 ) -> Problem:
     """The problem that a file holds; ``kind`` says what its numbers mean, unless the file itself does.
 
     Pairs that occur more than once are summed, with a note. ``field_file`` is a CSV of names and fields, which are
     added; ``flip_sign`` is for numbers of the opposite convention, E = -sum J s s - sum h s, and turns the signs of
-    couplings and fields (of both files). Both belong to kind ``ising``. Raises :class:`ProblemError` with file and
+    couplings and fields (of both files). Both belong to kind ``ising``. ``colours`` is how many there are, for kind
+    ``colouring``. Raises :class:`ProblemError` with file and
     line for whatever cannot be read, or does not make a problem.
     """
-    problem: Problem = _module(forms_of(path)[0].module).read(path, kind)
-    if problem.kind != "ising" and (flip_sign or field_file is not None):
-        option = "flip_sign" if flip_sign else "field_file"
-        raise ProblemError(f"{option} belongs to kind ising, but {path} is of kind {problem.kind}; leave it out")
+    forms = forms_of(path)
+    coloured = {"colours": colours} if any("colouring" in form.kinds for form in forms) else {}
+    problem: Problem = _module(forms[0].module).read(path, kind, **coloured)
+    given = {"flip_sign": flip_sign, "field_file": field_file is not None, "colours": colours is not None}
+    for option, own in OPTIONS_OF_KINDS.items():
+        if given[option] and problem.kind != own:
+            raise ProblemError(f"{option} belongs to kind {own}, but {path} is of kind {problem.kind}; leave it out")
     if field_file is not None:
         from patchwalk.problem.tables import read_fields
 

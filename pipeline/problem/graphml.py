@@ -30,7 +30,7 @@ LOOP_NAMES = ("field", "weight")
 CONTROL = re.compile("[\x00-\x08\x0b\x0c\x0e-\x1f\ud800-\udfff\ufffe\uffff]")
 
 
-def read(path: PathLike, kind: str | None) -> Problem:
+def read(path: PathLike, kind: str | None, colours: int | None = None) -> Problem:
     """The problem in a GraphML file; raises :class:`ProblemError` with file and line."""
     document = _Document(path)
     try:
@@ -43,7 +43,7 @@ def read(path: PathLike, kind: str | None) -> Problem:
         raise
     except (LookupError, ValueError) as error:  # an encoding that does not exist, or that expat cannot use
         fail(path, document.line, f"not XML that can be read: {str(error)[:100]}")
-    return document.problem(kind)
+    return document.problem(kind, colours)
 
 
 class _Document:
@@ -151,9 +151,9 @@ class _Document:
         elif owner in ("graph", "graphml") and name in SETTINGS:
             self.settings[name] = text, line
 
-    def problem(self, kind: str | None) -> Problem:
+    def problem(self, kind: str | None, colours: int | None) -> Problem:
         """The problem, once all is read."""
-        source = stated(self.path, self.settings)
+        source = stated(self.path, self.settings, colours)
         kind = source.kind(kind)
         if not self.nodes:
             source.fail(None, "there are no nodes; a problem needs two or more")

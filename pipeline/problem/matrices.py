@@ -36,11 +36,11 @@ BANNER = "%%matrixmarket"
 WORDS = (("matrix",), ("coordinate", "array"), ("real", "integer", "pattern"), ("symmetric", "general"))
 
 
-def read(path: PathLike, kind: str | None) -> Problem:
+def read(path: PathLike, kind: str | None, colours: int | None = None) -> Problem:
     """The problem in a Matrix Market file; raises :class:`ProblemError` with file and line."""
     with contextlib.closing(numbered_lines(path)) as lines:
         layout, values, symmetry = _read_banner(Source(path, {}, lines))
-        source = open_source(path, lines, is_comment)
+        source = open_source(path, lines, is_comment, colours=colours)
         kind = source.kind(kind)
         if layout == "array":
             pairs, size = _read_array(source, kind, symmetry)

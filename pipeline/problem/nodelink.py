@@ -25,7 +25,7 @@ from patchwalk.problem.sources import LARGEST_NUMBER, SETTINGS, chunks, fail, qu
 LOOP_NAMES = ("field", "weight")
 
 
-def read(path: PathLike, kind: str | None) -> Problem:
+def read(path: PathLike, kind: str | None, colours: int | None = None) -> Problem:
     """The problem in a JSON file; raises :class:`ProblemError` with file and line."""
     try:
         text = b"".join(chunks(path)).decode("utf-8-sig")
@@ -40,7 +40,7 @@ def read(path: PathLike, kind: str | None) -> Problem:
         fail(path, error.lineno, f"not JSON: {error.msg}")
     except (ValueError, RecursionError) as error:
         fail(path, None, f"not JSON that can be read: {str(error)[:100]}")
-    return _Graph(path, text, data).problem(kind)
+    return _Graph(path, text, data).problem(kind, colours)
 
 
 def _constrained(path: PathLike, kind: str | None, text: str) -> Problem | None:
@@ -70,9 +70,9 @@ class _Graph:
         self.edges: list[Any] = data[self.word]
         self.directed = bool(data.get("directed", False))
 
-    def problem(self, kind: str | None) -> Problem:
+    def problem(self, kind: str | None, colours: int | None) -> Problem:
         settings = {name: (self.settings[name], 0) for name in SETTINGS if name in self.settings and name != "names"}
-        source = stated(self.path, settings)
+        source = stated(self.path, settings, colours)
         kind = source.kind(kind)
         if kind not in PAIR_KINDS:
             source.fail(None, f"this is node-link data of a graph, which kind {kind} cannot be read from")

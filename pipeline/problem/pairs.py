@@ -38,9 +38,9 @@ class Pairs:
     def __init__(self, source: Source, kind: str) -> None:
         self.source, self.kind = source, kind
         self.heads, self.tails, self.weights = array("q"), array("q"), array("d")
-        self.colours = source.colours(MOST_COLOURS) if kind == "colouring" else 0
-        self.offset = source.offset(0.0)
         self.notes: list[str] = []
+        self.colours = source.colours(MOST_COLOURS, self.notes) if kind == "colouring" else 0
+        self.offset = source.offset(0.0)
 
     def __len__(self) -> int:
         return len(self.heads)

@@ -80,12 +80,12 @@ def chunks(path: PathLike) -> Generator[bytes, None, None]:
             yield chunk
 
 
-def stated(path: PathLike, settings: Mapping[str, tuple[object, int]]) -> Source:
+def stated(path: PathLike, settings: Mapping[str, tuple[object, int]], colours: int | None = None) -> Source:
     """A source without lines, for files that state their settings in another way: a value and its line for each."""
     texts = {
         name: (value if isinstance(value, str) else json.dumps(value), line) for name, (value, line) in settings.items()
     }
-    return Source(path, texts, iter(()))
+    return Source(path, texts, iter(()), colours)
 
 
 @contextlib.contextmanager
@@ -160,11 +160,15 @@ def replacing(path: PathLike) -> Iterator[IO[bytes]]:
 
 @dataclass(frozen=True)
 class Source:
-    """A file with its leading comments read: ``settings`` in them (text, line), ``lines`` still to come."""
+    """A file with its leading comments read: ``settings`` in them (text, line), ``lines`` still to come.
+
+    ``colours_asked`` is how many colours the caller asks for, whatever the file states.
+    """
 
     path: PathLike
     settings: Mapping[str, tuple[str, int]]
     lines: Lines
+    colours_asked: int | None = None
 
     def fail(self, line: int | None, message: str) -> NoReturn:
         """Raise the :class:`ProblemError` that names file and line."""
@@ -236,11 +240,23 @@ class Source:
             self.fail(line, "a name occurs twice in it; names must differ")
         return tuple(names)
 
-    def colours(self, most: int) -> int:
-        """How many colours a comment states; raises :class:`ProblemError` where none does."""
-        if "colours" not in self.settings:
-            self.fail(None, 'how many colours are there? Say so in a line before all others: "# colours = 3"')
-        text, line = self.settings["colours"]
+    def colours(self, most: int, notes: list[str]) -> int:
+        """How many colours the caller asks for or, failing that, the file states; raises :class:`ProblemError`.
+
+        A note says so where the two differ.
+        """
+        text, line = self.settings.get("colours", ("", None))
+        asked = self.colours_asked
+        if asked is not None:
+            if isinstance(asked, bool) or not 2 <= asked <= most:
+                self.fail(None, f"colours is {asked!r}; expected a whole number from 2 to {most}")
+            if text not in ("", str(asked)):
+                notes.append(f"{asked} colours, as asked for; the file states {shortened(text)}")
+            return asked
+        if not text:
+            self.fail(
+                line, "how many colours are there? Say --colours 3 or colours=3, or # colours = 3 in a line before all"
+            )
         if not (text.isascii() and text.isdigit() and len(text) < 10 and 2 <= int(text) <= most):
             self.fail(line, f"colours {quoted(text)} is not a whole number from 2 to {most}")
         return int(text)
@@ -253,7 +269,9 @@ class Source:
         return {"planted_energy": self.number(text, line, "planted_energy")}
 
 
-def open_source(path: PathLike, lines: Lines, is_comment: Callable[[str], bool], marks: str = "#%") -> Source:
+def open_source(
+    path: PathLike, lines: Lines, is_comment: Callable[[str], bool], marks: str = "#%", colours: int | None = None
+) -> Source:
     """The file with its leading comments read; raises :class:`ProblemError` where nothing follows them.
 
     ``marks`` are the characters with which comments begin.
@@ -261,7 +279,7 @@ def open_source(path: PathLike, lines: Lines, is_comment: Callable[[str], bool],
     settings: dict[str, tuple[str, int]] = {}
     for number, text in lines:
         if text.strip() and not is_comment(text):
-            return Source(path, settings, chain([(number, text)], lines))
+            return Source(path, settings, chain([(number, text)], lines), colours)
         key, _, value = text.strip().lstrip(f"{marks} \t").partition("=")
         if key.strip() in SETTINGS:
             settings[key.strip()] = value.strip(), number

@@ -48,10 +48,10 @@ def is_comment(text: str) -> bool:
     return text.startswith("#") and not text[1:2].strip()
 
 
-def read(path: PathLike, kind: str | None) -> Problem:
+def read(path: PathLike, kind: str | None, colours: int | None = None) -> Problem:
     """The problem in a CSV of pairs, or of beacons; raises :class:`ProblemError` with file and line."""
     with contextlib.closing(numbered_lines(path)) as lines:
-        source = open_source(path, lines, is_comment)
+        source = open_source(path, lines, is_comment, colours=colours)
         kind = source.kind(kind)
         if kind == "beacons":
             from patchwalk.problem.beacons import read_beacons

@@ -222,6 +222,55 @@ def test_solve_takes_a_file_of_fields_and_turned_signs(tmp_path):
     assert said["spins"] == [1, 1, 1]
 
 
+COLOURABLE = {
+    "edges.txt": "3 3\n1 2\n2 3\n1 3\n",
+    "pairs.csv": "a,b\nb,c\na,c\n",
+    "entries.mtx": "%%MatrixMarket matrix coordinate pattern symmetric\n3 3 3\n2 1\n3 2\n3 1\n",
+    "graph.graphml": '<graphml><graph edgedefault="undirected"><node id="a"/><node id="b"/><node id="c"/>'
+    '<edge source="a" target="b"/><edge source="b" target="c"/><edge source="a" target="c"/></graph></graphml>',
+    "graph.json": '{"nodes": [{"id": 1}, {"id": 2}, {"id": 3}], "edges": [{"source": 1, "target": 2}, '
+    '{"source": 2, "target": 3}, {"source": 1, "target": 3}]}',
+}
+
+
+@pytest.mark.parametrize("name", COLOURABLE)
+def test_how_many_colours_there_are_may_be_asked_for(tmp_path, name):
+    path = written(tmp_path, name, COLOURABLE[name])
+    problem = read_problem(path, "colouring", colours=4)
+    assert (len(problem), problem.encoding.colours) == (12, 4)
+    with pytest.raises(ProblemError, match="Say --colours 3"):
+        read_problem(path, "colouring")
+    with pytest.raises(ProblemError, match=f"{name}: colours is 1; expected a whole number from 2 to 1000"):
+        read_problem(path, "colouring", colours=1)
+    with pytest.raises(ProblemError, match=r"colours belongs to kind colouring, but .* is of kind maxcut"):
+        read_problem(path, "maxcut", colours=3)
+
+
+def test_colours_asked_for_go_before_those_that_a_file_states(tmp_path):
+    path = written(tmp_path, "edges.txt", "# kind = colouring\n# colours = 3\n2 1\n1 2\n")
+    assert read_problem(path).encoding.colours == 3
+    differs = "2 colours, as asked for; the file states 3"
+    assert differs not in read_problem(path, colours=3).notes
+    other = read_problem(path, colours=2)
+    assert other.encoding.colours == 2
+    assert differs in other.notes
+
+
+@pytest.mark.parametrize("name", ["clauses.cnf", "numbers.txt", "choices.json"])
+def test_files_that_hold_no_graph_have_no_colours(tmp_path, name):
+    choices = {"a": ["x", "y"]}, [{"if": [["a", "x"]], "cost": 1}]
+    texts = {
+        "clauses.cnf": "p cnf 2 1\n1 2 0\n",
+        "numbers.txt": "# kind = partition\n1 2 3\n",
+        "choices.json": json.dumps(
+            {"layout": "patchwalk choices", "version": 1, "choices": choices[0], "costs": choices[1]}
+        ),
+    }
+    path = written(tmp_path, name, texts[name])
+    with pytest.raises(ProblemError, match="colours belongs to kind colouring"):
+        read_problem(path, colours=3)
+
+
 def test_the_help_says_what_a_file_may_mean():
     said = CliRunner().invoke(solve_command, ["--help"]).stdout
     for kind in KINDS:

@@ -118,6 +118,57 @@ def test_an_answer_is_recomputed(lattice: Path, tmp_path: Path) -> None:
     command("audit", lattice, answer, code=3)
 
 
+def test_an_answer_that_breaks_a_constraint_or_lies_is_refuted(tmp_path: Path) -> None:
+    """Nothing is mended on the way; every form in which answers are written is read, and held against its words."""
+    graph, answer = tmp_path / "graph.csv", tmp_path / "answer.csv"
+    graph.write_text("ash,bay\nbay,cob\ncob,Dünë\n")
+    kind = ("--kind", "vertex_cover")
+    answer.write_text("name,cover\nbay,1\ncob,1\n")
+    good = command("audit", graph, answer, *kind)
+    assert (good["status"], good["feasible"], good["weight"], good["energy"]) == ("confirmed", True, 2, 2)
+    answer.write_text("# valid; weight 1\nname,cover\nbay,1\n")
+    wrong = command("audit", graph, answer, *kind, code=1)
+    assert (wrong["status"], wrong["feasible"]) == ("refuted", False)
+    assert wrong["message"] == "NOT VALID: 1 constraint broken"
+    assert wrong["broken"] == ["cob and Dünë are joined, and neither is in the cover"]
+    solved = command("solve", graph, *kind, "--cluster-size", 3, "--calls", 30, "--quiet")
+    printed = tmp_path / "printed.json"
+    for change, complaint in (
+        ({}, None),
+        ({"weight": 1}, "it states weight 1, but it is 2"),
+        ({"energy": -3.5}, "it states energy -3.5, but it is 2"),
+        ({"weight": "two"}, "it states weight two, but it is 2"),
+        ({"kind": "maxcut"}, "it answers a problem of kind maxcut, this one is of kind vertex_cover"),
+        ({"spins": [-1, -1, -1, -1]}, "NOT VALID: 1 constraint broken"),  # the words beside it say something else
+    ):
+        printed.write_text(json.dumps({**solved, **change}))
+        found = command("audit", graph, printed, *kind, code=int(complaint is not None))
+        assert complaint is None or complaint in found["message"]
+    printed.write_text('{"cover": ["elm"]}')
+    command("audit", graph, printed, *kind, code=3)
+
+
+def test_a_run_without_a_valid_answer_says_so(tmp_path: Path) -> None:
+    graph, run = tmp_path / "graph.csv", tmp_path / "run.sqlite"
+    graph.write_text("a,b\nb,c\nc,a\n")
+    options = ("--kind", "colouring", "--colours", 2)
+    command("solve", graph, *options, "--cluster-size", 3, "--calls", 20, "--run", run, "--quiet", code=5)
+    found = command("audit", graph, run, *options)
+    assert (found["status"], found["feasible"], found["conflicts"]) == ("confirmed", False, 1)
+    assert "the best configuration is NOT VALID: 1 constraint broken" in found["message"]
+    assert len(found["broken"]) == 1
+
+
+def test_signs_and_fields_are_read_as_solve_reads_them(tmp_path: Path) -> None:
+    pairs, fields = tmp_path / "pairs.csv", tmp_path / "fields.csv"
+    pairs.write_text("a,b,1\nb,c,1\n")
+    fields.write_text("a,5\nc,2\n")
+    options = ("--kind", "ising", "--field-file", fields, "--flip-sign")
+    bound = command("bound", pairs, *options, "--run", tmp_path / "run.sqlite", "--quiet")
+    assert (bound["energy"], bound["lower_bound"]) == (-9, pytest.approx(-9))
+    assert command("audit", pairs, tmp_path / "run.sqlite", *options)["status"] == "confirmed"
+
+
 def test_python_and_command_line_agree(lattice: Path, tmp_path: Path) -> None:
     printed = command("bound", lattice, "--run", tmp_path / "one.sqlite", "--quiet")
     found = patchwalk.bound(lattice, run=tmp_path / "two.sqlite")

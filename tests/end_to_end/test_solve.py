@@ -439,6 +439,7 @@ EVERY_SETTING: dict[str, Any] = {
 }  # fmt: skip
 ELSEWHERE = {
     "start", "run", "seeds", "answer", "callers", "field_file",  # paths, and what cannot stand beside others: below
+    "colours",  # of another kind: below
     "engine", "scheduler", "bound",  # test_workers, test_bound
 }  # fmt: skip
 
@@ -479,6 +480,33 @@ def test_file_command_line_and_python_are_one(instances: Path, tmp_path: Path) -
     assert isinstance(solution.spins, np.ndarray)
     assert solution.spins.dtype == np.int8
     assert solution.run_path == Path("3.sqlite")
+
+
+def test_colours_are_the_same_in_file_command_line_and_python(tmp_path: Path) -> None:
+    (tmp_path / "graph.csv").write_text("a,b\nb,c\nc,a\nc,d\n")
+    options = ("--subsolver", "enumeration", "--cluster-size", 6, "--calls", 60)
+    (tmp_path / "job.toml").write_text('input = "graph.csv"\nkind = "colouring"\ncolours = 3\n')
+    by_file = solved("job.toml", *options)
+    by_options = solved("graph.csv", "--kind", "colouring", "--colours", 3, *options)
+    by_python = patchwalk.solve(
+        "graph.csv", kind="colouring", colours=3, subsolver="enumeration", cluster_size=6, calls=60
+    )
+    assert bits_of(by_file) == bits_of(by_options) == bits_of(json.loads(json.dumps(by_python.as_json())))
+    assert by_file["conflicts"] == 0
+    assert len(by_file["spins"]) == 12
+    assert patchwalk.forecast("job.toml").structure.spins == 12
+    bound = patchwalk.bound("job.toml", colours=2, seconds=20, run="bound.sqlite")
+    assert len(bound.spins) == 8
+    assert bound.lower_bound == pytest.approx(1), "a triangle has no two colours"
+    again = patchwalk.resume(by_options["run_path"])
+    assert again.answer == by_options["answer"]
+    with pytest.raises(patchwalk.settings_checks.SettingsError, match="colours: must be greater than or equal to 2"):
+        patchwalk.solve("graph.csv", kind="colouring", colours=1)
+    with pytest.raises(
+        patchwalk.settings_checks.SettingsError,
+        match="colours is 3, but the problem is given as it is; leave colours out",
+    ):
+        patchwalk.solve(patchwalk.make("sk", 10), colours=3)
 
 
 CALLERS = [
