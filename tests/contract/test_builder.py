@@ -229,26 +229,23 @@ def dear_middle() -> ProblemBuilder:
     return builder
 
 
-def forbidden(at_most_one: bool) -> ProblemBuilder:
-    """A reward for what a rule forbids."""
+def forbidden(rule: Callable[[ProblemBuilder], None], names: str = "ab") -> ProblemBuilder:
+    """A reward of 6 for every name, of which a rule forbids one."""
     builder = ProblemBuilder()
-    builder.yes_no("a")
-    builder.yes_no("b")
-    if at_most_one:
-        builder.cost(-6, "a")
-        builder.cost(-6, "b")
-        builder.at_most_one(["a", "b"])
-    else:
-        builder.cost(-6, "a")
-        builder.total(["a", "b"], 0, 0)
+    for name in names:
+        builder.yes_no(name)
+        builder.cost(-6, name)
+    rule(builder)
     return builder
 
 
 TIGHT: dict[str, Callable[[], ProblemBuilder]] = {
     "one-hot": lambda: triangle("one-hot"),
     "a domain wall": dear_middle,
-    "an equation": lambda: forbidden(at_most_one=False),
-    "two that exclude each other": lambda: forbidden(at_most_one=True),
+    "an equation": lambda: forbidden(lambda builder: builder.total(["a", "a", "b"], 2, 2)),
+    "two that exclude each other": lambda: forbidden(lambda builder: builder.at_most_one(["a", "b"])),
+    "exactly one": lambda: forbidden(lambda builder: builder.exactly_one(["a", "b"])),
+    "an inequality with slack": lambda: forbidden(lambda builder: builder.total(["a", "b", "c"], 0, 2), "abc"),
 }
 
 
@@ -376,7 +373,7 @@ def test_problems_that_cannot_be_built_say_why(state: Callable[[ProblemBuilder],
 
 
 def test_a_known_answer_that_breaks_a_rule_is_refused() -> None:
-    builder = forbidden(at_most_one=True)
+    builder = TIGHT["two that exclude each other"]()
     with pytest.raises(
         ProblemError, match="the known answer breaks the rules: rule 1: the total is 2, allowed at most 1"
     ):
