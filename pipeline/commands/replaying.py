@@ -8,8 +8,9 @@ import time
 from collections.abc import Callable, Sequence
 from dataclasses import asdict, dataclass
 from pathlib import Path
-from typing import Any, Protocol
+from typing import Any, Literal, Protocol
 
+from patchwalk.commands.crew import Crew
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.retracing import retrace
 from patchwalk.evidence.drops import REPETITIONS
@@ -22,7 +23,7 @@ from patchwalk.evidence.sweep_curves import CallName, StateBefore
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import Status, Subsolver
 from patchwalk.subsolvers.registry import spelled, subsolver_from
-from patchwalk.workers import Workers, cores, workers_for
+from patchwalk.workers import Workers
 
 USUAL_RIVALS = ("enumeration", "elimination", NONE)
 """Who is replayed where nobody is named: the strongest classical answers, and plain sweeps."""
@@ -130,19 +131,24 @@ def replay(
     seed: int = 1,
     repetitions: int = REPETITIONS,
     workers: int | None = None,
+    engine: Literal["threads", "dask"] = "threads",
+    scheduler: str | None = None,
+    mixed_workers: bool = False,
 ) -> Replayed:
     """Run every rival, and the run's own subsolver, on the clusters that runs called for; rows go into the run files.
 
     ``rivals`` are subsolvers, spelled or made, and ``none``: carrier sweeps in the place of the call. ``calls`` is the
     size of a sample per run, stratified by stage, size and who was asked and drawn from ``seed``; by default all calls
     with rows are replayed. ``repetitions`` is how often those are asked whose drop is only sampled. What is in the
-    files already is left as it is.
+    files already is left as it is. ``workers``, ``engine``, ``scheduler`` and ``mixed_workers`` say who carries the
+    work out, as for ``solve``; they change no bit. Sweeps for ``none`` stay here, with the states they begin from.
 
     Raises ``RunFileError``, ``SubsolverError`` or ``SettingsError`` with the reason. Ctrl-C ends after the slice in
     flight; the same call then goes on.
     """
     paths = [Path(runs)] if isinstance(runs, (str, Path)) else [Path(run) for run in runs]
-    return carry_out(paths, rivals, SilentReplayWatcher(), calls, seed, repetitions, workers)
+    return carry_out(paths, rivals, SilentReplayWatcher(), calls, seed, repetitions,
+                     Crew(workers, engine, scheduler, mixed_workers))  # fmt: skip
 
 
 def carry_out(
@@ -152,20 +158,18 @@ def carry_out(
     calls: int | None = None,
     seed: int = 1,
     repetitions: int = REPETITIONS,
-    workers: int | None = None,
+    crew: Crew | None = None,
 ) -> Replayed:
     """:func:`replay`, watched."""
-    plan = _plan_from(paths, rivals, calls, seed, repetitions, workers)
+    crew = crew or Crew()
+    plan = _plan_from(paths, rivals, calls, seed, repetitions, crew)
     began = time.perf_counter()
     rows: list[RivalReplayed] = []
     notes: list[str] = []
     with listening(watcher.stopping) as interrupted:
-        hands = workers_for(cores() if workers is None else workers, None, False, False)
-        try:
+        with crew.hired() as workers:
             for path in paths:
-                _replay_file(path, plan, hands, watcher, interrupted, rows, notes)
-        finally:
-            hands.close()
+                _replay_file(path, plan, workers, watcher, interrupted, rows, notes)
         status = "interrupted" if interrupted() else "finished"
     if status == "interrupted":
         notes.append("interrupted; what is done is in the run file, and the same command goes on from there")
@@ -174,11 +178,12 @@ def carry_out(
 
 def _plan_from(
     paths: Sequence[Path], rivals: Sequence[str | Subsolver], calls: int | None, seed: int, repetitions: int,
-    workers: int | None,
+    crew: Crew,
 ) -> ReplayPlan:  # fmt: skip
     """What to do, checked before anything is opened for writing."""
     complaints = [] if paths else ["no run is named; give one run file or more"]
-    for name, value, least in (("calls", calls, 1), ("repetitions", repetitions, 2), ("workers", workers, 1)):
+    complaints += crew.complaints()
+    for name, value, least in (("calls", calls, 1), ("repetitions", repetitions, 2)):
         if value is not None and (not isinstance(value, int) or isinstance(value, bool) or value < least):
             complaints.append(f"{name}: is {value!r}; give a whole number of at least {least}")
     if isinstance(rivals, str):

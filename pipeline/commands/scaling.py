@@ -15,6 +15,7 @@ from typing import Any, Literal
 
 import numpy as np
 
+from patchwalk.commands.crew import Crew
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.scaling_instances import Instances
 from patchwalk.commands.scaling_measurements import measured_rows, timed_variants
@@ -24,7 +25,7 @@ from patchwalk.evidence.time_to_solution import runs_unrounded
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import F64, ClusterBatch, Subsolver
 from patchwalk.subsolvers.registry import SubsolverError, spelled, subsolver_from
-from patchwalk.workers import Workers, cores, workers_for
+from patchwalk.workers import Workers
 
 GUESSING = "guessing"
 
@@ -94,14 +95,18 @@ def scale(
     shots: int = 200,
     seed: int = 1,
     workers: int | None = None,
+    engine: Literal["threads", "dask"] = "threads",
+    scheduler: str | None = None,
+    mixed_workers: bool = False,
     run: str | Path = "patchwalk-scaling.sqlite",
     csv: str | Path | None = None,
     **options: Any,
 ) -> Scaled:
     """Success probability against size for a family (``options`` are those of ``make``) or for clusters of files.
 
-    What the run file ``run`` holds already is not measured again. Raises ``SettingsError``, ``SubsolverError``,
-    ``ProblemError`` or ``RunFileError`` naming what cannot be used.
+    What the run file ``run`` holds already is not measured again; ``workers``, ``engine``, ``scheduler`` and
+    ``mixed_workers`` say who measures, as for ``solve``, and change no bit. Raises ``SettingsError``,
+    ``SubsolverError``, ``ProblemError`` or ``RunFileError`` naming what cannot be used.
 
     >>> import os, tempfile
     >>> with tempfile.TemporaryDirectory() as folder:
@@ -116,23 +121,20 @@ def scale(
     found = Instances(chosen, instances, seed, within, rule, boundary, kind, options)
     _check(list(sizes), made)
     setup = {"instances": found.described(), "seed": str(seed)}
-    crew = workers_for(cores() if workers is None else workers, None, False, False)
-    try:
-        with listening() as interrupted, scaling_file(Path(run), setup) as database:
-            survey = _Survey(found, sorted(sizes), shots, database, crew, interrupted)
-            curves = [curve for one in made for curve in survey.curves(one, tune)]
-            if csv is not None:
-                write_csv(Path(csv), all_rows(database))
-            return Scaled(
-                found.described(), (*curves, survey.guessing()), limit_sentence(sizes), survey.failed,
-                "interrupted" if interrupted() else "finished", Path(run),
-            )  # fmt: skip
-    finally:
-        crew.close()
+    crew = Crew(workers, engine, scheduler, mixed_workers)
+    with crew.hired() as hands, listening() as interrupted, scaling_file(Path(run), setup) as database:
+        survey = _Survey(found, sorted(sizes), shots, database, hands, interrupted)
+        curves = [curve for one in made for curve in survey.curves(one, tune)]
+        if csv is not None:
+            write_csv(Path(csv), all_rows(database))
+        return Scaled(
+            found.described(), (*curves, survey.guessing()), limit_sentence(sizes), survey.failed,
+            "interrupted" if interrupted() else "finished", Path(run),
+        )  # fmt: skip
 
 
 def _check(sizes: list[int], subsolvers: Sequence[Subsolver]) -> None:
-    if len(set(sizes)) < len(sizes) or not sizes or min(sizes) < 1:
+    if not sizes or len(set(sizes)) < len(sizes) or min(sizes) < 1:
         raise SettingsError([f"sizes are {sizes}; give different whole numbers, as 6..14 or 6,8,10"])
     if not subsolvers:
         raise SubsolverError("name at least one --subsolver")

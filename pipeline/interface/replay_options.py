@@ -4,11 +4,13 @@ from __future__ import annotations
 
 import time
 from pathlib import Path
+from typing import Any
 
 import click
 from rich.console import Console
 
 from patchwalk.interface.cli import fail, print_json
+from patchwalk.interface.crew_options import crew_options
 
 
 @click.command(context_settings={"max_content_width": 110})
@@ -26,12 +28,12 @@ from patchwalk.interface.cli import fail, print_json
     "--repetitions", type=click.IntRange(min=2), default=16, show_default=True, metavar="NUMBER",
     help="How often a call is asked where its drop is only sampled.",
 )  # fmt: skip
-@click.option("--workers", type=click.IntRange(min=1), default=None, metavar="NUMBER", help="Threads; all cores.")
+@crew_options
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 @click.option("--quiet", is_flag=True, help="No progress on standard error.")
 def replay_command(
     runs: tuple[Path, ...], rivals: tuple[str, ...], calls: int | None, seed: int, repetitions: int,
-    workers: int | None, as_json: bool, quiet: bool,
+    as_json: bool, quiet: bool, **given: Any,
 ) -> None:  # fmt: skip
     """Run rivals on the clusters that RUN called for, and write what each call was worth into the same run file.
 
@@ -44,10 +46,12 @@ def replay_command(
     known. The run's own subsolver is always replayed, too. Rows that are there are kept, so that a replay that was
     stopped goes on. Exit codes: 0 finished, 1 error, 2 settings, 130 interrupted.
     """
+    from patchwalk.commands.crew import Crew
     from patchwalk.commands.replaying import USUAL_RIVALS, carry_out
 
     try:
-        replayed = carry_out(runs, rivals or USUAL_RIVALS, ReplayTeller(quiet), calls, seed, repetitions, workers)
+        watcher = ReplayTeller(quiet)
+        replayed = carry_out(runs, rivals or USUAL_RIVALS, watcher, calls, seed, repetitions, Crew(**given))
     except Exception as error:
         fail(error, as_json)
         return

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Any
 import click
 
 from patchwalk.interface.cli import fail, print_json
+from patchwalk.interface.crew_options import crew_options
 
 if TYPE_CHECKING:
     from patchwalk.commands.scaling import Scaled, ScalingCurve
@@ -45,7 +46,7 @@ PATH = click.Path(path_type=Path)
     help="Shots drawn per instance where no exact probability is known.",
 )  # fmt: skip
 @click.option("--seed", type=click.IntRange(min=0), default=1, show_default=True, help="Same seed, same instances.")
-@click.option("--workers", type=click.IntRange(1, 1024), help="Slices worked on at once; as many as cores if left out.")
+@crew_options
 @click.option(
     "--run", type=PATH, default=Path("patchwalk-scaling.sqlite"), show_default=True,
     help="The run file; what it holds already is not measured again.",
@@ -85,14 +86,14 @@ def sizes_from(text: str) -> list[int]:
     """Sizes written as 6..14 or 6,8,10."""
     from patchwalk.settings_checks import SettingsError
 
-    sizes: list[int] = []
     try:
-        for part in text.split(","):
-            first, dots, last = part.strip().partition("..")
-            sizes.extend(range(int(first), int(last if dots else first) + 1))
+        ends = [[int(end) for end in part.split("..", 1)] for part in text.split(",")]
     except ValueError:
         raise SettingsError([f"--sizes: {text!r} is not a list of sizes; write 6..14 or 6,8,10"]) from None
-    return sizes
+    for first, last in ((own[0], own[-1]) for own in ends):
+        if last < first:
+            raise SettingsError([f"--sizes: {first}..{last} runs downwards; write {last}..{first}"])
+    return [size for own in ends for size in range(own[0], own[-1] + 1)]
 
 
 def in_words(found: Scaled) -> str:

@@ -15,8 +15,9 @@ from typing import Any
 import numpy as np
 import pytest
 
-from patchwalk import make, solve, workers
+from patchwalk import make, replay, scale, solve, workers
 from patchwalk.problem.ising import Problem
+from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import ClusterBatch, Proposals, Subsolver, Work, all_well
 from patchwalk.subsolvers.walk import Walk
 from patchwalk.workers import DaskWorkers, Serial, Threads, Workers, WorkersError, workers_for
@@ -75,6 +76,48 @@ def test_one_worker_threads_and_dask_give_the_same_bits(way: str, cluster: Any, 
 def test_a_local_cluster_is_started_where_none_is_named(in_small_pieces: None) -> None:
     settings = {**WAYS["cooling"], "subsolver": "metropolis"}
     assert bits("dask", **settings, workers=2, engine="dask") == bits("serial", **settings, workers=1)
+
+
+REPLAYED = (
+    "rival, round, replica, place, mean_drop, drop_error, hit_probability, amplitude_updates, spin_updates, weight"
+)
+
+
+def test_replays_have_the_same_bits_whoever_carries_them_out(cluster: Any, in_small_pieces: None) -> None:
+    """Exact laws, a calibrated rival, and drops that are sampled from seeds."""
+    run = solve(GLASS, **COUNTED | {"calls": 120}, subsolver="walk", run="run.sqlite").run_path
+    found = {}
+    ways: dict[str, dict[str, Any]] = {
+        "serial": {"workers": 1}, "threads": {"workers": 3}, "dask": {"scheduler": cluster.scheduler_address},
+    }  # fmt: skip
+    for name, way in ways.items():
+        copy = Path(f"{name}.sqlite")
+        copy.write_bytes(run.read_bytes())
+        replayed = replay(copy, ["walk,hopping=calibrated", "metropolis", "tabu", "none"], calls=60, **way)
+        assert replayed.status == "finished"
+        with closing(sqlite3.connect(copy)) as database:
+            found[name] = database.execute(f"SELECT {REPLAYED} FROM replays ORDER BY 1, 2, 3, 4").fetchall()
+    assert len(found["serial"]) >= 5 * 60
+    assert found["threads"] == found["serial"]
+    assert found["dask"] == found["serial"]
+
+
+def test_success_against_size_has_the_same_bits_whoever_measures_it(cluster: Any, in_small_pieces: None) -> None:
+    settings: dict[str, Any] = {"sizes": [4, 5], "subsolvers": ["walk", "metropolis"], "instances": 12, "fields": True}
+    alone = scale("sk", **settings, workers=1, run="serial.sqlite")
+    shared = scale("sk", **settings, scheduler=cluster.scheduler_address, run="dask.sqlite")
+    for one, other in zip(alone.curves, shared.curves, strict=True):
+        assert one.name == other.name
+        assert {size: own.tobytes() for size, own in one.success.items()} == {
+            size: own.tobytes() for size, own in other.success.items()
+        }
+
+
+def test_a_crew_that_cannot_be_is_refused_before_any_work() -> None:
+    with pytest.raises(SettingsError, match=r"(?s)workers: is 0;.*engine: is 'cloud'; it is one of: threads, dask"):
+        replay("nowhere.sqlite", workers=0, engine="cloud")  # type: ignore[arg-type]
+    with pytest.raises(SettingsError, match="workers: is 'many'"):
+        scale("sk", [3, 4], workers="many")  # type: ignore[arg-type]
 
 
 def all_workers(cluster: Any) -> list[Workers]:

@@ -14,11 +14,13 @@ from typing import Any
 
 import numpy as np
 import pytest
+from click.testing import CliRunner
 
 from patchwalk import make, scale, write_problem
 from patchwalk.commands.scaling_instances import Instances
 from patchwalk.commands.scaling_measurements import energies_of
 from patchwalk.evidence.layout import RunFileError
+from patchwalk.interface.cli import program
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers import make_subsolver
 
@@ -130,6 +132,16 @@ def test_no_two_instances_are_alike_whatever_size_or_seed() -> None:
 def test_mistakes_are_named(changed: dict[str, Any], sentence: str) -> None:
     with pytest.raises(SettingsError, match=sentence):
         scale(**({"source": "sk", "sizes": [3, 4], "run": "a.sqlite"} | changed))
+
+
+@pytest.mark.parametrize(
+    ("sizes", "sentence"),
+    [("5..3", "--sizes: 5..3 runs downwards; write 3..5"), ("4,x", "is not a list of sizes; write 6..14 or 6,8,10")],
+)
+def test_sizes_that_cannot_be_read_are_named(sizes: str, sentence: str) -> None:
+    told = CliRunner().invoke(program, ["scale", "sk", "--sizes", sizes])
+    assert told.exit_code == 2
+    assert sentence in told.stderr
 
 
 def test_the_command_prints_and_writes() -> None:
