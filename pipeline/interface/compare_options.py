@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -14,6 +15,7 @@ from patchwalk.settings import SolveSettings
 if TYPE_CHECKING:
     from patchwalk.commands.comparing import Comparison
     from patchwalk.commands.comparing_tasks import Entry
+    from patchwalk.evidence.time_to_solution import TimeToSolution
 
 LEFT_OUT = (
     "subsolver", "callers", "start", "seed", "run", "target", "stall", "total_sweeps", "answer", "bound",
@@ -97,10 +99,7 @@ def in_words(found: Comparison) -> str:
         solution = one.solution
         lines.append(one.contender)
         lines.append(f"  residual energy per spin    {one.residual}")
-        lines.append(
-            f"  time to solution at 99 %    {solution.value:.4g} {found.unit} [{solution.low:.4g}, {solution.high:.4g}]"
-            f" ({solution.successes} of {solution.trials} runs met the reference)"
-        )
+        lines.append(f"  time to solution at 99 %    {_solution_words(solution, found.unit)}")
         if one.median_reach is not None:
             lines.append(f"  median time to target       {one.median_reach:.4g} {found.unit}")
     for duel in found.duels:
@@ -113,6 +112,15 @@ def in_words(found: Comparison) -> str:
         lines.append("interrupted; the same command goes on from here")
     lines.append(f"run file: {found.run_path}")
     return "\n".join(lines)
+
+
+def _solution_words(solution: TimeToSolution, unit: str) -> str:
+    """The time with its interval; an end that no number of these runs could tell is said in words."""
+    met = f"({solution.successes} of {solution.trials} runs met the reference)"
+    if math.isinf(solution.value):
+        return f"unknown, at least {solution.low:.4g} {unit} {met}"
+    high = "no upper end" if math.isinf(solution.high) else f"{solution.high:.4g}"
+    return f"{solution.value:.4g} {unit} [{solution.low:.4g}, {high}] {met}"
 
 
 def _curve_lines(found: Comparison) -> list[str]:

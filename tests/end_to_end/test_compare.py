@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import json
+import math
 import shlex
 import sqlite3
 import subprocess
@@ -18,6 +19,7 @@ from patchwalk.commands import comparing
 from patchwalk.commands.comparing_tasks import calls_worth, entries_of, question_from
 from patchwalk.cost import sweep_seconds
 from patchwalk.evidence.stored import stored_file
+from patchwalk.interface.compare_options import in_words
 from patchwalk.settings_checks import SettingsError
 
 PROGRAM = Path(sys.executable).with_name("patchwalk")
@@ -70,6 +72,17 @@ def test_a_planted_energy_is_the_reference_and_a_target_goes_before_it() -> None
     assert not any("best energy of all these runs" in note for note in found.notes)
     aimed = compare(planted, ["enumeration", "none"], seeds=[1, 2], run="a.sqlite", target=0.0, **SMALL)
     assert aimed.references == {"problem 1": 0.0}
+
+
+def test_a_time_that_these_runs_cannot_tell_is_said_in_words() -> None:
+    """No run reaches an energy below all: the least time follows from the binomial interval, 3 runs of 24 calls."""
+    found = compare(GLASS, ["walk", "uniform"], seeds="1..3", target=-100.0, run="a.sqlite", **SMALL)
+    words = in_words(found)
+    least = 24 * math.ceil(math.log(0.01) / math.log(0.025 ** (1 / 3)))  # 1 - p for the upper end of 0 in 3
+    assert words.count(f"unknown, at least {least} calls (0 of 3 runs met the reference)") == 2
+    assert "inf " not in words
+    told = json.loads(json.dumps(found.as_json(), allow_nan=False))
+    assert [one["solution"]["value"] for one in told["standings"]] == [None, None]
 
 
 def test_nobody_is_called_by_none() -> None:
