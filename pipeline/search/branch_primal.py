@@ -140,19 +140,19 @@ class Incumbent:
             return ()
         members = self._members(x, wanted)
         spins, local_fields = spins.copy(), self.problem.local_fields(spins)
-        energy, done = self.problem.energy(spins), []
+        whole = (spins[None], local_fields[None], np.array([self.problem.energy(spins)]))
+        done = []
         for answered in answers(self.subsolver, self._question(members, spins, local_fields)):
             own = members[answered.start : answered.start + len(answered.batch)]
             chosen, change, accepted = judge(answered.batch, answered.proposals)
-            before = energy + np.concatenate([[0.0], np.cumsum(np.where(accepted, change, 0.0))])
-            energy = float(before[-1])
-            flip_accepted(*self._csr, spins, local_fields, own, answered.proposals.outcomes, chosen, accepted)
+            first, before = np.zeros(len(own), np.int64), np.empty(len(own))
+            flip_accepted(*self._csr, *whole, first, own, answered.proposals.outcomes, chosen, change, accepted, before)
             self.calls += len(own)
             self._count_failures(answered.proposals.status, answered.proposals.messages)
             done.append(
                 Calls(
-                    own, np.zeros(len(own), np.int64), np.arange(answered.start, answered.start + len(own)), RULE_NAME,
-                    self.subsolver, answered.batch, answered.proposals, chosen, change, accepted, before[:-1],
+                    own, first, np.arange(answered.start, answered.start + len(own)), RULE_NAME,
+                    self.subsolver, answered.batch, answered.proposals, chosen, change, accepted, before,
                     answered.seconds,
                 )
             )  # fmt: skip
@@ -170,8 +170,11 @@ class Incumbent:
             batch = self._question(members, spins, fields)
             self.subsolver = prepared(self.subsolver, batch)
             judge(batch, failed(batch, "rehearsal"))
-            outcomes, chosen = batch.spins[:, None, :].copy(), np.zeros(1, np.int64)
-            flip_accepted(*self._csr, spins, fields, members, outcomes, chosen, np.zeros(1, np.bool_))
+            nobody, zero = np.zeros(1, np.bool_), np.zeros(1, np.int64)
+            flip_accepted(
+                *self._csr, spins[None], fields[None], np.zeros(1), zero, members, batch.spins[:, None, :].copy(), zero,
+                np.zeros(1), nobody, np.empty(1),
+            )  # fmt: skip
         _sweep_down(*self._csr, spins, fields, np.zeros(1), stream_for(0))
         descend(*self._csr, spins, fields, self.problem.tie_tolerance)
         rounded(self.graph, half, 0, 1)

@@ -19,15 +19,14 @@ import numpy as np
 from patchwalk.bounds.certificate import Certificate
 from patchwalk.bounds.clusters import ClusterBound, cluster_bound, promising
 from patchwalk.bounds.cuts import Cuts
-from patchwalk.bounds.cycle_certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, settled_energy
-from patchwalk.bounds.cycles import CycleProgram, Multipliers, tightening
-from patchwalk.bounds.energy_step import lower_energy
+from patchwalk.bounds.cycle_certificate import BOUNDED, BRANCHED, EMPTY, SETTLED
+from patchwalk.bounds.cycles import CycleProgram, tightening
 from patchwalk.engine import release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
 from patchwalk.search.bound_search import BoundSearch, BranchPlan, NodeLine
-from patchwalk.search.branch_pairs import Half, PairChooser
 from patchwalk.search.branch_tree import Node, Tree
+from patchwalk.search.branch_work import NodeWork
 from patchwalk.subsolvers.contract import I8, Subsolver
 
 ROUNDS_AT_ROOT, ROUNDS_AT_NODE = 400, 20
@@ -38,15 +37,8 @@ many couplings (measured: 50 x 50 +-J in 2 s of processor time instead of 2 to 1
 LEAST_SHARE = 0.1
 """Below the root, rounds of cuts go on while they gain such a share of what is missing to close the node."""
 
-NEAR = 1e-4
-"""Relative gap below which it is worth looking whether reduced costs leave one configuration only."""
-
 LATER_COOLINGS = 2
 """By how much coolings after the first are shorter."""
-
-ROW_GROWTH = 1.5
-"""Rows are thinned out when there are so many times as many as after the root."""
-
 
 OUTCOMES = {BRANCHED: "split", BOUNDED: "bounded", EMPTY: "empty", SETTLED: "settled"}
 
@@ -70,8 +62,7 @@ class BranchAndBound(BoundSearch):
         self.beside: ClusterBound | None = None
         self.nodes_done = 0
         self._current: Node | None = None
-        self._epoch, self._root_rows = 0, 0
-        self._chooser = PairChooser(self.program, self.tree)
+        self._work = NodeWork(problem, self.program, self.tree)
 
     @property
     def lower_bound(self) -> float:
@@ -127,10 +118,10 @@ class BranchAndBound(BoundSearch):
             self.beside = ClusterBound(certificate.bound, certificate.arrays, 0)
             return
         self.tree = Tree.taken_up(self.problem, self.graph, certificate)
-        self._chooser = PairChooser(self.program, self.tree)
         given = certificate.arrays
         self.program.add(Cuts(given["cut_starts"], given["cut_edges"], given["cut_odd"]))
-        self._root_rows = len(self.program.rows)
+        self._work = NodeWork(self.problem, self.program, self.tree)
+        self._work.note_root()
         if len(self.tree.nodes) > 1:  # the program's first point, for roundings
             self.program.solve(interior=False, seconds=self.seconds_left())
 
@@ -191,11 +182,7 @@ class BranchAndBound(BoundSearch):
         if node.bound >= self.goal:
             self._note(node)
             return
-        self.program.confine(*self.tree.box(node))
-        if node.basis is not None and node.epoch == self._epoch:
-            self.program.start_from(node.basis)
-        if node.number and not self.program.solve(interior=False, seconds=self.seconds_left()):
-            self.program.solve(interior=True, seconds=self.seconds_left())
+        self._work.enter(node, self.seconds_left)
         self._learn(node)
         yield from self._tighten(node)
         if self.stopped() and not self._closed(node):
@@ -203,13 +190,19 @@ class BranchAndBound(BoundSearch):
             return
         self.nodes_done += 1
         if node.number == 0:
-            self._root_rows = len(self.program.rows)
+            self._work.note_root()
             self._try_clusters(node)
         if self._floor >= self.goal:
             self.tree.open(node)
         elif not self._closed(node):
-            self._split(node)
+            self._work.split(node, self.goal, self.seconds_left)
         self._note(node)
+
+    def _learn(self, node: Node) -> None:
+        self._work.learn(node, self.best_spins, self.best_energy)
+
+    def _closed(self, node: Node) -> bool:
+        return self._work.closed(node, self.best_energy)
 
     def _try_clusters(self, root: Node) -> None:
         """Where the root leaves a gap and clusters promise to prove more, let their bound stand beside the tree."""
@@ -275,57 +268,10 @@ class BranchAndBound(BoundSearch):
         x = self.program.x
         return bool(np.all(np.minimum(x, 1.0 - x) < 1e-6))
 
-    def _learn(self, node: Node) -> None:
-        """Take over what the program now says about its box, if that is more than the node knows."""
-        program = self.program
-        if program.infeasible:
-            node.outcome, node.bound, node.multipliers = EMPTY, math.inf, program.multipliers
-            return
-        bound = self.tree.rounded_up(program.bound)
-        if bound > node.bound or (bound == node.bound and node.number == 0):
-            node.bound, node.multipliers = bound, program.multipliers
-        near = self.best_energy - program.bound < NEAR * abs(self.best_energy)
-        if bound < self.goal and (near or np.all(program.lower == program.upper)):
-            self._try_to_settle(node)
-
-    def _try_to_settle(self, node: Node) -> None:
-        """Close the node where reduced costs leave one configuration; that one is offered."""
-        program, target = self.program, lower_energy(self.problem, self.best_spins)
-        value = program.value
-        sure = np.abs(value.reduced) >= target - value.bound
-        if np.count_nonzero(sure | (program.lower == program.upper)) < self.graph.vertices - 1:
-            return
-        pairs = np.stack([self.graph.heads, self.graph.tails], axis=1)
-        reached = settled_energy(self.problem, pairs, value, program.lower, program.upper, target)
-        if reached >= target:
-            node.outcome, node.bound, node.multipliers = SETTLED, reached, program.multipliers
-
-    def _closed(self, node: Node) -> bool:
-        return node.outcome != BOUNDED or node.bound >= self.goal
-
-    def _split(self, node: Node) -> None:
-        """Choose a pair, and open the two halves."""
-        program = self.program
-        if self._root_rows and len(program.rows) > ROW_GROWTH * self._root_rows:
-            program.drop_slack()
-            self._epoch += 1
-            program.solve(interior=False, seconds=self.seconds_left())
-        basis = program.basis
-        split = self._chooser.choose(basis, self.goal, self.seconds_left)
-        node.outcome = BRANCHED
-        for side, half in enumerate((split.agree, split.differ)):
-            child = self.tree.add(node, split.edge, side, node.bound, node.multipliers)
-            child.basis, child.epoch = basis, self._epoch
-            _inherit(child, half, self.tree)
-            if child.outcome == EMPTY:
-                continue
-            self.tree.open(child)
-        node.basis, node.multipliers = None, Multipliers(np.empty(0, np.int32), np.empty(0))
-
     def _note(self, node: Node) -> None:
         best, bound = self.best_energy, self.lower_bound
         if node.outcome == BRANCHED:  # the node is not what is open any longer, its halves are
-            bound = min(self.tree.lowest_open, best)
+            bound = max(min(self.tree.lowest_open, best), self._floor)
         self.log.append(
             NodeLine(
                 node.number, node.depth, min(node.bound, best), bound, best, (best - bound) / max(1.0, abs(best)),
@@ -333,13 +279,3 @@ class BranchAndBound(BoundSearch):
             )
         )  # fmt: skip
         self.told()
-
-
-def _inherit(child: Node, half: Half | None, tree: Tree) -> None:
-    """Give a new node what trying it out proved."""
-    if half is None:
-        return
-    if half.empty:
-        child.outcome, child.bound, child.multipliers = EMPTY, math.inf, half.multipliers
-    elif tree.rounded_up(half.bound) > child.bound:
-        child.bound, child.multipliers = tree.rounded_up(half.bound), half.multipliers

@@ -22,10 +22,9 @@ from patchwalk.engine import Answered, answers
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls
 from patchwalk.search.replicas import Replicas
-from patchwalk.subsolvers.compiled import compiled
+from patchwalk.search.sweeps import flip_accepted
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64, ClusterBatch, Subsolver
 from patchwalk.subsolvers.draws import call_seeds, seed_for
-from patchwalk.subsolvers.neighbours import turn
 from patchwalk.workers import Serial, Workers
 
 RULE, CALL = 2, 4
@@ -147,7 +146,7 @@ class Caller:
         own = cut.rows(slice(answered.start, answered.start + len(batch)))
         chosen, change, accepted = judge(batch, proposals, self.acceptance)
         before = np.empty(len(batch))
-        _flip_accepted(
+        flip_accepted(
             self.problem.row_starts, self.problem.neighbours, self.problem.couplings, replicas.spins,
             replicas.local_fields, replicas.energies, own.replicas, own.members, proposals.outcomes, chosen, change,
             accepted, before,
@@ -168,33 +167,3 @@ def rehearsing(caller: Caller) -> Caller:
 
 def _joined(parts: list[Cut]) -> Cut:
     return parts[0] if len(parts) == 1 else Cut(*(np.concatenate(arrays) for arrays in zip(*parts, strict=True)))
-
-
-@compiled
-def _flip_accepted(
-    row_starts: I64,
-    neighbours: I32,
-    couplings: F64,
-    all_spins: I8,
-    all_local_fields: F64,
-    energies: F64,
-    replicas: I64,
-    members: I32,
-    outcomes: I8,
-    chosen: I64,
-    change: F64,
-    accepted: npt.NDArray[np.bool_],
-    before: F64,
-) -> None:
-    """Put the chosen outcomes (B, m, k) of accepted calls into their replicas; ``before`` gets the energies before."""
-    for row in range(len(members)):
-        replica = replicas[row]
-        before[row] = energies[replica]
-        if not accepted[row]:
-            continue
-        energies[replica] += change[row]
-        spins, local_fields = all_spins[replica], all_local_fields[replica]
-        for i in range(members.shape[1]):
-            spin = members[row, i]
-            if spins[spin] != outcomes[row, chosen[row], i]:
-                turn(spin, spins, local_fields, row_starts, neighbours, couplings)

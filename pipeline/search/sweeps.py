@@ -189,17 +189,26 @@ def flip_accepted(
     row_starts: I64,
     neighbours: I32,
     couplings: F64,
-    spins: I8,
-    local_fields: F64,
+    all_spins: I8,
+    all_local_fields: F64,
+    energies: F64,
+    replicas: I64,
     members: I32,
     outcomes: I8,
     chosen: I64,
+    change: F64,
     accepted: npt.NDArray[np.bool_],
+    before: F64,
 ) -> None:
-    """Put the chosen outcomes (B, m, k) of all accepted calls into the configuration."""
+    """Put the chosen outcomes (B, m, k) of accepted calls into their replicas; ``before`` gets the energies before."""
     for row in range(len(members)):
+        replica = replicas[row]
+        before[row] = energies[replica]
         if not accepted[row]:
             continue
+        energies[replica] += change[row]
+        spins, local_fields = all_spins[replica], all_local_fields[replica]
         for i in range(members.shape[1]):
-            if spins[members[row, i]] != outcomes[row, chosen[row], i]:
-                turn(members[row, i], spins, local_fields, row_starts, neighbours, couplings)
+            spin = members[row, i]
+            if spins[spin] != outcomes[row, chosen[row], i]:
+                turn(spin, spins, local_fields, row_starts, neighbours, couplings)

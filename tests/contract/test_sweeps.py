@@ -74,15 +74,27 @@ def test_descent_ends_where_no_flip_lowers_the_energy() -> None:
 
 
 def test_accepted_calls_and_only_those_are_put_in() -> None:
+    """Two replicas, three clusters: the first refused, the others taken, and energies carried along."""
     problem = make("lattice2d", 6, seed=1)
-    spins, local = begin(problem, 1)
-    expected = spins.copy()
-    members = np.array([[0, 1, 2], [14, 15, 20]], np.int32)
-    outcomes = np.stack([-spins[members], spins[members]], axis=1)
-    flip_accepted(*graph(problem), spins, local, members, outcomes, np.array([0, 0]), np.array([False, True]))
-    expected[[14, 15, 20]] *= -1
+    spins, local = (np.stack(both) for both in zip(begin(problem, 1), begin(problem, 2), strict=True))
+    expected, energies = spins.copy(), np.array([problem.energy(row) for row in spins])
+    members, replicas = np.array([[0, 1, 2], [14, 15, 20], [27, 28, 34]], np.int32), np.array([1, 1, 0])
+    own = spins[replicas[:, None], members]
+    outcomes = np.stack([own, -own], axis=1)
+    expected[1, [14, 15, 20]] *= -1
+    expected[0, [27, 28, 34]] *= -1
+    after = np.array([problem.energy(row) for row in expected])
+    change, before = np.array([5.0, after[1] - energies[1], after[0] - energies[0]]), np.empty(3)
+    first = energies.copy()
+    flip_accepted(
+        *graph(problem), spins, local, energies, replicas, members, outcomes, np.ones(3, np.int64), change,
+        np.array([False, True, True]), before,
+    )  # fmt: skip
     assert np.array_equal(spins, expected)
-    np.testing.assert_allclose(local, problem.local_fields(spins))
+    assert np.array_equal(before, first[[1, 1, 0]])
+    np.testing.assert_allclose(energies, after)
+    for row in range(2):
+        np.testing.assert_allclose(local[row], problem.local_fields(spins[row]))
 
 
 def test_cooling_goes_from_hot_to_cold_in_the_problems_units() -> None:
