@@ -9,11 +9,13 @@ from typing import Any
 
 import numpy as np
 
-from patchwalk.subsolvers.contract import WORK_FIELDS, ClusterBatch, Proposals, Status, Work
+from patchwalk.subsolvers.compiled import compiled
+from patchwalk.subsolvers.contract import I8, WORK_FIELDS, ClusterBatch, Proposals, Status, Work
 
-PER_CALL = ("log_ratio", "hit_probability", "noiseless_hit")
+PROBABILITIES = ("hit_probability", "noiseless_hit")
+OPTIONAL_MEMBERS = ("log_ratio", "times", *PROBABILITIES)
 WORK_MEMBERS = tuple((f"work.{name}", name) for name in WORK_FIELDS)
-LAST_STATUS = max(Status)
+LAST_STATUS = int(max(Status))
 
 
 def shape_complaint(proposals: object, batch: ClusterBatch) -> str:
@@ -34,9 +36,8 @@ def shape_complaint(proposals: object, batch: ClusterBatch) -> str:
         return "messages must be texts"
     if not isinstance(proposals.work, Work):
         return f"work is a {type(proposals.work).__name__}, expected Work"
-    for name, (values, shape) in _extras(proposals).items():
-        if values is None:
-            continue
+    for name, values in _extras(proposals):
+        shape = outcomes.shape[:2] if name == "times" else (rows,)
         if not isinstance(values, np.ndarray) or values.dtype.kind not in "iuf" or values.shape != shape:
             return f"{name} must be an array of shape {shape} that holds numbers"
     return ""
@@ -44,23 +45,33 @@ def shape_complaint(proposals: object, batch: ClusterBatch) -> str:
 
 def value_complaint(proposals: Proposals) -> str:
     """What is wrong with the numbers in an answer of the right shape, or nothing; nan marks a call that has none."""
-    if not np.all(np.abs(proposals.outcomes) == 1):
+    if not _are_spins(proposals.outcomes):
         return "outcomes holds numbers other than +1 and -1"
     if proposals.status.max() > LAST_STATUS:
         return f"status holds {proposals.status.max()}, it is 0, 1 or 2"
-    for name, (values, _) in _extras(proposals).items():
-        if values is None or name == "log_ratio":
+    for name, values in _extras(proposals):
+        if name == "log_ratio":
             continue
-        if np.any(np.less(values, 0)):
+        if np.fmin.reduce(values, axis=None) < 0:
             return f"{name} holds a negative number"
-        if name in PER_CALL and np.any(np.greater(values, 1 + 1e-6)):
+        if name in PROBABILITIES and np.fmax.reduce(values) > 1 + 1e-6:
             return f"{name} holds a probability above 1"
     return ""
 
 
-def _extras(proposals: Proposals) -> dict[str, tuple[Any, tuple[int, ...]]]:
-    """The optional members and the counted work, each with the shape that it must have."""
-    rows, shots, _ = proposals.outcomes.shape
-    extras: dict[str, tuple[Any, tuple[int, ...]]] = {name: (getattr(proposals, name), (rows,)) for name in PER_CALL}
-    extras["times"] = (proposals.times, (rows, shots))
-    return extras | {key: (getattr(proposals.work, name), (rows,)) for key, name in WORK_MEMBERS}
+@compiled
+def _are_spins(outcomes: I8) -> bool:
+    for row in range(outcomes.shape[0]):
+        for shot in range(outcomes.shape[1]):
+            for spin in outcomes[row, shot]:
+                if spin != 1 and spin != -1:
+                    return False
+    return True
+
+
+def _extras(proposals: Proposals) -> list[tuple[str, Any]]:
+    """The optional members and the counted work that are there, each under its name."""
+    extras = [(name, values) for name in OPTIONAL_MEMBERS if (values := getattr(proposals, name)) is not None]
+    work = proposals.work
+    extras += [(key, values) for key, name in WORK_MEMBERS if (values := getattr(work, name)) is not None]
+    return extras

@@ -76,11 +76,13 @@ def next_below(stream: U64, limit: int) -> int:
 
 
 @compiled
-def call_seeds(base: np.uint64, count: int) -> U64:
-    """Seeds (count,) of the calls of one round: 63 bits each, so that any database keeps them as plain integers."""
+def call_seeds(base: np.uint64, count: int, first: int = 0) -> U64:
+    """Seeds (count,) of the calls ``first`` and following of one round: 63 bits each, so that any database keeps them
+    as plain integers.
+    """
     seeds = np.empty(count, np.uint64)
     for index in range(count):
-        seeds[index] = combine(base, np.uint64(index)) >> np.uint64(1)
+        seeds[index] = combine(base, np.uint64(first + index)) >> np.uint64(1)
     return seeds
 
 

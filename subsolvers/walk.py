@@ -131,7 +131,8 @@ class Walk:
             few = few_clusters(sample)
             factor = best_factor(few, lambda factor: self._with_factor(factor).distribution(few))
             ready = self._with_factor(factor)
-        ready.propose(sample.rows(0, 1))
+        for tolerance in (DOUBLE_FLOOR, 0.5):  # both precisions: calls to come may need the other one
+            replace(ready, tolerance=tolerance).propose(sample.rows(0, 1))
         return ready
 
     def forecast(self, batch: ClusterBatch) -> Forecast:

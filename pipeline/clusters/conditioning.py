@@ -6,7 +6,10 @@ energy change inside the cluster is the energy change of the problem, exactly.
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
+import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.compiled import compiled
@@ -31,20 +34,28 @@ def condition(
     to k = 64 and as edges above.
     """
     rows, size = members.shape
-    whole, local = np.atleast_2d(spins), np.atleast_2d(local_fields)
-    source = np.zeros(rows, np.int64) if replicas is None else replicas
+    if replicas is None:
+        spins, local_fields, replicas = spins[None], local_fields[None], np.zeros(rows, np.int64)
     fields, own = np.empty((rows, size)), np.empty((rows, size), np.int8)
-    temperatures = np.full(rows, temperature, np.float64)
+    temperatures = temperature if isinstance(temperature, np.ndarray) else np.full(rows, temperature, np.float64)
     graph = (problem.row_starts, problem.neighbours, problem.couplings)
     if size <= DENSE_LIMIT:
         couplings = np.zeros((rows, size, size))
-        _fold_dense(*graph, members, source, whole, local, places, fields, own, couplings)
+        _fold_dense(*graph, members, replicas, spins, local_fields, places, fields, own, couplings)
+        _lock(fields, own, couplings)
         return ClusterBatch(fields, own, temperatures, seeds, couplings=couplings)
     offsets = np.zeros(rows + 1, np.int64)
     _count_inner(*graph[:2], members, places, offsets)
     pairs, weights = np.empty((offsets[-1], 2), np.int32), np.empty(offsets[-1])
-    _fold_sparse(*graph, members, source, whole, local, places, fields, own, offsets, pairs, weights)
+    _fold_sparse(*graph, members, replicas, spins, local_fields, places, fields, own, offsets, pairs, weights)
+    _lock(fields, own, offsets, pairs, weights)
     return ClusterBatch(fields, own, temperatures, seeds, edges=Edges(offsets, pairs, weights))
+
+
+def _lock(*arrays: npt.NDArray[Any]) -> None:
+    """Nobody else holds these arrays: a batch takes what is read-only as it is and copies the rest."""
+    for array in arrays:
+        array.flags.writeable = False
 
 
 @compiled
@@ -84,18 +95,19 @@ def _fold_dense(
         for i in range(size):
             spin = cluster[i]
             own[row, i] = spins[spin]
+            field = local_fields[spin]
             first, last = row_starts[spin], row_starts[spin + 1]
             if last - first > 8 * size:  # a dense row: look the members up instead of reading all of it
                 for j in range(size):
-                    inner[row, i, j] = _coupling(neighbours, couplings, first, last, cluster[j])
+                    coupling = _coupling(neighbours, couplings, first, last, cluster[j])
+                    inner[row, i, j] = coupling
+                    field -= coupling * spins[cluster[j]]
             else:
                 for edge in range(first, last):
                     place = places[neighbours[edge]]
                     if place >= 0:
                         inner[row, i, place] = couplings[edge]
-            field = local_fields[spin]
-            for j in range(size):
-                field -= inner[row, i, j] * spins[cluster[j]]
+                        field -= couplings[edge] * spins[neighbours[edge]]
             fields[row, i] = field
         for i in range(size):
             places[cluster[i]] = -1

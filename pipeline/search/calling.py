@@ -93,11 +93,9 @@ class Caller:
             seed = seed_for(self.seed, RULE, replica, number)
             base, first = np.uint64(seed_for(self.seed, CALL, replica, number)), 0
             for members in rule.pick(self.problem, self.cluster_size, share, seed, self._marks, view):
-                rows = len(members)
-                seeds = call_seeds(base, first + rows)[first:]
-                cut = Cut(members, np.full(rows, replica), np.arange(first, first + rows), seeds)
+                cut = Cut(members, *_places(len(members), replica, first, base))
                 by_size.setdefault(members.shape[1], []).append(cut)
-                first += rows
+                first += len(members)
         return [_joined(parts) for _, parts in sorted(by_size.items())]
 
     def question(self, cut: Cut, replicas: Replicas, temperatures: F64) -> ClusterBatch:
@@ -143,7 +141,8 @@ class Caller:
     def settle(self, cut: Cut, answered: Answered, rule: str, subsolver: Subsolver, replicas: Replicas) -> Calls:
         """Accept or refuse the answers of one slice and bring the configurations up to date."""
         batch, proposals = answered.batch, answered.proposals
-        own = cut.rows(slice(answered.start, answered.start + len(batch)))
+        whole = len(batch) == len(cut.members)
+        own = cut if whole else cut.rows(slice(answered.start, answered.start + len(batch)))
         chosen, change, accepted = judge(batch, proposals, self.acceptance)
         before = np.empty(len(batch))
         flip_accepted(
@@ -167,3 +166,9 @@ def rehearsing(caller: Caller) -> Caller:
 
 def _joined(parts: list[Cut]) -> Cut:
     return parts[0] if len(parts) == 1 else Cut(*(np.concatenate(arrays) for arrays in zip(*parts, strict=True)))
+
+
+@compiled
+def _places(rows: int, replica: int, first: int, base: np.uint64) -> tuple[I64, I64, U64]:
+    """The last three arrays of a :class:`Cut` of one replica, whose first cluster is number ``first`` of its round."""
+    return np.full(rows, replica), np.arange(first, first + rows), call_seeds(base, rows, first)

@@ -6,7 +6,11 @@ from dataclasses import dataclass, field
 
 import numpy as np
 
+from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8
+
+BLOCK = 128
+"""Spins compared before looking whether that was enough."""
 
 
 @dataclass(eq=False)
@@ -36,16 +40,55 @@ class Elites:
         """Keep the configuration if it is good, or better than all those close to it."""
         if not self.wants(energy):
             return
-        apart = self._distances(spins) >= self.distance
-        if not apart.all() and self.energies[~apart][0] <= energy:
-            return
-        kept, configurations = self.energies[apart], self.spins[apart]
-        place = int(np.searchsorted(kept, energy, side="right"))
-        self.energies = np.concatenate([kept[:place], [energy], kept[place:]])[: self.limit]
-        self.spins = np.concatenate([configurations[:place], spins[None], configurations[place:]])[: self.limit]
+        room = min(self.limit, len(self.energies) + 1)
+        energies, configurations = np.empty(room), np.empty((room, len(spins)), np.int8)
+        kept = _with(
+            self.energies, self.spins, energy, spins, self.distance, self.symmetric, energies, configurations
+        )  # fmt: skip
+        if kept:
+            self.energies, self.spins = energies[:kept], configurations[:kept]
 
-    def _distances(self, spins: I8) -> np.typing.NDArray[np.int64]:
-        apart: np.typing.NDArray[np.int64] = np.array(
-            [np.count_nonzero(kept != spins) for kept in self.spins], np.int64
-        )
-        return np.minimum(apart, len(spins) - apart) if self.symmetric else apart
+
+@compiled
+def _with(
+    energies: F64,
+    configurations: I8,
+    energy: float,
+    spins: I8,
+    distance: int,
+    symmetric: bool,
+    new_energies: F64,
+    new_configurations: I8,
+) -> int:
+    """Fill the new list with the old one, without what is close to ``spins``, and ``spins`` at its place; returns how
+    many it holds, 0 where one of those close to it is as good.
+    """
+    close = np.empty(len(energies), np.bool_)
+    for row in range(len(energies)):
+        close[row] = _is_close(configurations[row], spins, distance, symmetric)
+        if close[row] and energies[row] <= energy:
+            return 0
+    filled, placed = 0, False
+    for row in range(len(energies) + 1):
+        if not placed and (row == len(energies) or (not close[row] and energies[row] > energy)):
+            new_energies[filled], new_configurations[filled] = energy, spins
+            filled, placed = filled + 1, True
+        if filled == len(new_energies):
+            break
+        if row < len(energies) and not close[row]:
+            new_energies[filled], new_configurations[filled] = energies[row], configurations[row]
+            filled += 1
+    return filled
+
+
+@compiled
+def _is_close(one: I8, other: I8, distance: int, symmetric: bool) -> bool:
+    """Whether fewer than ``distance`` spins differ, or are equal where that counts; reads no more than it needs."""
+    differing = 0
+    for first in range(0, len(one), BLOCK):
+        last = min(first + BLOCK, len(one))
+        for spin in range(first, last):
+            differing += one[spin] != other[spin]
+        if differing >= distance and (not symmetric or last - differing >= distance):
+            return False
+    return True

@@ -11,6 +11,7 @@ from __future__ import annotations
 import time
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
+from typing import TypeVar
 
 import numpy as np
 
@@ -27,6 +28,7 @@ from patchwalk.search.ends import Ends, Spent
 from patchwalk.search.replicas import Replicas
 from patchwalk.search.sweeps import descend
 from patchwalk.search.temperature import Temperatures
+from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, Status, Subsolver
 from patchwalk.subsolvers.draws import generator_for, seed_for
 from patchwalk.workers import Serial, Workers
@@ -34,6 +36,8 @@ from patchwalk.workers import Serial, Workers
 FAILED = int(Status.FAILED)
 RESTART, MIXTURE = 6, 7
 """Words that tell the streams of one run seed apart."""
+
+A = TypeVar("A", F64, I8, I64)
 
 REFRESH_ROUNDS = 1000
 """Local fields and energies are derived afresh after this many rounds, so that rounding cannot pile up."""
@@ -154,10 +158,13 @@ class NeighbourhoodSearch:
         """Compile the loop's kernels on a small ring."""
         caller = rehearsing(self.caller)
         ring, counts = Replicas.random(caller.problem, 1, 1), np.zeros(len(caller.problem), np.int64)
-        for cut in caller.cuts(self.plan.rules.rules[0], ring, 0, 1, counts, ring.spins):
+        cuts = [caller.cuts(rule, ring, 0, 1, counts, ring.spins) for rule in self.plan.rules.rules]
+        for cut in cuts[0]:
             batch = caller.question(cut, ring, np.zeros(1))
             caller.settle(cut, Answered(0, batch, failed(batch, "rehearsal"), 0.0), "rehearsal", self.subsolver, ring)
+        _count(np.zeros((0, 1), np.int32), counts)
         descend(*_graph(caller.problem), ring.spins[0], ring.local_fields[0], 0.0)
+        Elites.none_yet(len(caller.problem), 1, 1, symmetric=True).offer(0.0, ring.spins[0])
 
     def rounds(self) -> Iterator[Round]:
         """Search until an end is reached, one round at a time; then the subsolvers are let go."""
@@ -214,7 +221,7 @@ class NeighbourhoodSearch:
         return self.interrupted() or self.plan.ends.out_of_time(self.elapsed)
 
     def _one_round(self) -> Round:
-        self._resume_point = self._state()
+        self._resume_point = self._state(self._resume_point)
         number, stage = self.round, self.stage
         temperatures = self.plan.temperatures.at(stage)
         calls = tuple(self._call(temperatures, stage))
@@ -240,7 +247,7 @@ class NeighbourhoodSearch:
         for calls in self.caller.carry_out(cuts, name, self.replicas, temperatures, stage, self._must_stop):
             self.calls += len(calls)
             self.failures.count(calls)
-            np.add.at(self.counts, calls.members.ravel(), 1)
+            _count(calls.members, self.counts)
             if several:
                 worth.count(np.maximum(0.0, -calls.change) * calls.accepted, calls)
             yield calls
@@ -308,7 +315,8 @@ class NeighbourhoodSearch:
         """The state after the last whole round, from which a run can be resumed to the same bits."""
         return self._state() if self._resume_point.round != self.round else self._resume_point
 
-    def _state(self) -> Snapshot:
+    def _state(self, spare: Snapshot | None = None) -> Snapshot:
+        """The state as it is now; in the arrays of ``spare``, which nobody looks at any more, if there is one."""
         details = {
             "temperatures": self.plan.temperatures.as_state(),
             "rules": self.weights.as_state(),
@@ -320,10 +328,14 @@ class NeighbourhoodSearch:
             "rounds_without_own_gain": self._rounds_without_own_gain.tolist(),
             "elite_energies": self.elites.energies.tolist(),
         }
+        replicas = self.replicas
         return Snapshot(
-            self.round, self.calls, self.sweeps, self.elapsed, self.replicas.spins.copy(),
-            self.replicas.local_fields.copy(), self.replicas.energies.copy(), float(self.best_energy),
-            self.best_spins, self.elites.spins, self.counts.copy(), details,
+            self.round, self.calls, self.sweeps, self.elapsed,
+            _copied(replicas.spins, spare.spins if spare else None),
+            _copied(replicas.local_fields, spare.local_fields if spare else None),
+            _copied(replicas.energies, spare.energies if spare else None),
+            float(self.best_energy), self.best_spins, self.elites.spins,
+            _copied(self.counts, spare.counts if spare else None), details,
         )  # fmt: skip
 
     def go_on_from(self, state: Snapshot) -> None:
@@ -345,6 +357,22 @@ class NeighbourhoodSearch:
         self._rounds_without_own_gain = np.array(details["rounds_without_own_gain"], np.int64)
         self._improvements.clear()
         self._resume_point = self._state()
+
+
+def _copied(array: A, spare: A | None) -> A:
+    """A copy, in ``spare`` if that is there: memory taken anew every round would cost more than the copying."""
+    if spare is None:
+        return array.copy()
+    spare[...] = array
+    return spare
+
+
+@compiled
+def _count(members: I32, counts: I64) -> None:
+    """Add one for every call that a spin was in."""
+    for row in range(len(members)):
+        for spin in members[row]:
+            counts[spin] += 1
 
 
 def _graph(problem: Problem) -> tuple[I64, I32, F64]:

@@ -43,6 +43,7 @@ def test_call_seeds_differ_and_fit_a_signed_integer() -> None:
     seeds = call_seeds(np.uint64(99), 10_000)
     assert len(set(seeds.tolist())) == 10_000
     assert int(seeds.max()) < 2**63
+    assert call_seeds(np.uint64(99), 3, 7).tolist() == seeds[7:10].tolist(), "told by the number of the call alone"
 
 
 def test_units_are_uniform_and_whole_numbers_even() -> None:

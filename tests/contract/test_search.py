@@ -3,11 +3,13 @@
 from __future__ import annotations
 
 import itertools
+import sys
 from dataclasses import replace
 from typing import Any
 
 import numpy as np
 import pytest
+from numba.core.dispatcher import Dispatcher
 
 from patchwalk import engine
 from patchwalk.clusters.mixture import mixture_of
@@ -44,6 +46,29 @@ def test_energies_are_those_of_the_configurations() -> None:
     assert [round_.number for round_ in rounds] == list(range(len(rounds)))
     assert all(earlier.stage < later.stage for earlier, later in itertools.pairwise(rounds))
     assert rounds[0].temperatures[0] > rounds[-1].temperatures[0]
+
+
+def kernels() -> dict[str, int]:
+    """How many kinds of arguments every loaded kernel of ours is compiled for."""
+    ours = [module for name, module in sys.modules.items() if name.startswith("patchwalk")]
+    return {
+        f"{kernel.__module__}.{kernel.__name__}": len(kernel.signatures)
+        for module in ours
+        for kernel in vars(module).values()
+        if isinstance(kernel, Dispatcher)
+    }
+
+
+@pytest.mark.parametrize("replicas", [1, 3])
+def test_everything_is_compiled_before_the_clock_starts(replicas: int) -> None:
+    """Also what only some calls need: hot clusters walk in another precision than cold ones."""
+    plan = replace(plan_for(GLASS, calls=400), replicas=replicas, cluster_size=10, rules=mixture_of("ball,loose"))
+    plan.temperatures = GeometricCooling(0.5, 0.05, GLASS.field_scale, replicas=replicas)
+    search = NeighbourhoodSearch(GLASS, plan, 3)
+    search.prepare()
+    before = kernels()
+    assert len(list(search.rounds())) > 10
+    assert {name for name, count in kernels().items() if count != before.get(name)} == set()
 
 
 def test_slices_change_no_bit(monkeypatch: pytest.MonkeyPatch) -> None:
