@@ -11,6 +11,7 @@ Slices may be carried out side by side (:mod:`patchwalk.workers`), but only by a
 
 from __future__ import annotations
 
+import collections
 import time
 from collections.abc import Iterator
 from typing import NamedTuple
@@ -33,8 +34,9 @@ class Answered(NamedTuple):
     seconds: float
 
 
-SHARES = 4
-"""Every worker gets about so many slices of a batch, so that none waits long for the others."""
+SHARES = 2
+"""A slice for several workers holds one part in so many of every worker's share of what is left of the batch: slices
+grow shorter, so that there are few of them and yet none of the workers waits long for the others at the end."""
 
 BAD_NEWS = (Exception, SystemExit)
 """What a stranger's code may raise without ending the run; an interrupt is none of it."""
@@ -81,41 +83,52 @@ def answers(subsolver: Subsolver, batch: ClusterBatch, workers: Workers | None =
         sentence = f"{subsolver.name}: its forecast failed: {type(error).__name__}: {error}"
         yield Answered(0, batch, failed(batch, sentence), 0.0)
         return
-    tasks = [(subsolver, start, batch.rows(start, stop)) for start, stop in bounds]
-    if len(tasks) == 1:
-        yield timed_answer(tasks[0])
+    if len(bounds) == 1:
+        yield Answered(0, batch, *timed_answer((subsolver, batch)))
         return
-    for (_, start, part), (_, _, proposals, seconds) in zip(tasks, workers.ordered(timed_answer, tasks), strict=True):
-        yield Answered(start, part, proposals, seconds)
+    asked: collections.deque[tuple[int, ClusterBatch]] = collections.deque()
+
+    def tasks() -> Iterator[tuple[Subsolver, ClusterBatch]]:
+        for start, stop in bounds:  # one after the other, so that the first worker begins at once
+            asked.append((start, batch.rows(start, stop)))
+            yield subsolver, asked[-1][1]
+
+    for proposals, seconds in workers.ordered(timed_answer, tasks()):
+        yield Answered(*asked.popleft(), proposals, seconds)
 
 
-def timed_answer(task: tuple[Subsolver, int, ClusterBatch]) -> Answered:
+def timed_answer(task: tuple[Subsolver, ClusterBatch]) -> tuple[Proposals, float]:
     """One slice asked and timed, wherever this is carried out."""
-    subsolver, start, batch = task
     began = time.perf_counter()
-    proposals = ask(subsolver, batch)
-    return Answered(start, batch, proposals, time.perf_counter() - began)
+    proposals = ask(*task)
+    return proposals, time.perf_counter() - began
 
 
 def slice_bounds(subsolver: Subsolver, batch: ClusterBatch, workers: Workers | None = None) -> list[tuple[int, int]]:
-    """Row ranges whose forecast price is at most a slice each, or one row; shorter where there are workers to share
-    them.
+    """Row ranges whose forecast price is at most a slice each, or one row; shorter, and ever shorter, where there are
+    workers to share them.
     """
     rows = len(batch)
     if rows == 1:
         return [(0, 1)]
     prices = priced(subsolver.forecast(batch).work, rows)
     longest = getattr(subsolver, "largest_batch", rows)
-    limit = SLICE_SECONDS
-    if workers is not None and workers.count > 1:
-        limit = min(limit, max(workers.smallest_task_seconds, prices.sum() / (SHARES * workers.count)))
-    if prices.sum() <= limit and rows <= longest:
+    left = float(prices.sum())
+    shared = workers is not None and workers.count > 1
+    if left <= SLICE_SECONDS and rows <= longest and not shared:
         return [(0, rows)]
-    bounds, start, spent = [], 0, 0.0
-    for row, price in enumerate(prices):
-        if row > start and (spent + price > limit or row - start >= longest):
+
+    def limit() -> float:
+        if workers is None or not shared:
+            return SLICE_SECONDS
+        return min(SLICE_SECONDS, max(workers.smallest_task_seconds, left / (SHARES * workers.count)))
+
+    bounds, start, spent, most = [], 0, 0.0, limit()
+    for row, price in enumerate(prices.tolist()):
+        if row > start and (spent + price > most or row - start >= longest):
             bounds.append((start, row))
-            start, spent = row, 0.0
+            left -= spent
+            start, spent, most = row, 0.0, limit()
         spent += price
     return [*bounds, (start, rows)]
 

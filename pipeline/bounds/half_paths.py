@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import numpy as np
+
 from patchwalk.bounds.walks import tree_path
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32

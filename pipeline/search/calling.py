@@ -23,6 +23,7 @@ from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls
 from patchwalk.search.replicas import Replicas
 from patchwalk.search.sweeps import flip_accepted
+from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U64, ClusterBatch, Subsolver
 from patchwalk.subsolvers.draws import call_seeds, seed_for
 from patchwalk.workers import Serial, Workers

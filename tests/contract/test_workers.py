@@ -16,6 +16,7 @@ import numpy as np
 import pytest
 
 from patchwalk import make, replay, scale, solve, workers
+from patchwalk.engine import slice_bounds
 from patchwalk.problem.ising import Problem
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import ClusterBatch, Proposals, Subsolver, Work, all_well
@@ -259,3 +260,22 @@ def test_replicas_are_dealt_out_in_whole_groups(in_small_pieces: None) -> None:
     runs = [solve(problem, **settings, workers=count, run=f"{count}.sqlite") for count in (1, 2, 3)]
     assert len({run.spins.tobytes() for run in runs}) == 1
     assert len({run.energy for run in runs}) == 1
+
+
+def test_slices_for_several_workers_grow_shorter() -> None:
+    """A quarter of the rows first for two workers, one row at last; never shorter than is worth handing over."""
+    fields = np.zeros((64, 10))
+    batch = ClusterBatch(fields, np.ones((64, 10), np.int8), fields[:, 0], np.arange(64).astype(np.uint64),
+                         couplings=np.zeros((64, 10, 10)))  # fmt: skip
+    asked, threads = Walk(), Threads(2)
+    threads.smallest_task_seconds = 0.0
+    assert slice_bounds(asked, batch) == [(0, 64)]
+    bounds = slice_bounds(asked, batch, threads)
+    assert (bounds[0], bounds[-1]) == ((0, 16), (63, 64))
+    assert [stop for _, stop in bounds[:-1]] == [start for start, _ in bounds[1:]]
+    lengths = [stop - start for start, stop in bounds]
+    assert lengths == sorted(lengths, reverse=True)
+    assert len(lengths) <= 16
+    threads.smallest_task_seconds = 60.0
+    assert slice_bounds(asked, batch, threads) == [(0, 64)]
+    threads.close()
