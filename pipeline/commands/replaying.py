@@ -83,19 +83,20 @@ class Replayed:
         lines = []
         for path, run, seed in dict.fromkeys((one.run_path, one.run, one.seed) for one in self.rivals):
             lines.append(f"{path}, run {run}, seed {seed}")
-            lines.append(f"  {'rival':<34}{'calls':>8}{'failed':>8}{'exact':>7}{'drop':>12}{'improves':>10}{'hits':>8}"
-                         f"{'seconds':>10}")  # fmt: skip
             own = [one for one in self.rivals if (one.run_path, one.run) == (path, run)]
             shown = shown_names(one.rival for one in own)
-            lines.extend(_line(one, shown[one.rival]) for one in own)
+            names = [f"{shown[one.rival]} (the run's own)" if one.own else shown[one.rival] for one in own]
+            width = max(33, *map(len, names)) + 1
+            lines.append(f"  {'rival':<{width}}{'calls':>8}{'failed':>8}{'exact':>7}{'drop':>12}{'improves':>10}"
+                         f"{'hits':>8}{'seconds':>10}")  # fmt: skip
+            lines.extend(f"  {name:<{width}}{_columns(one)}" for name, one in zip(names, own, strict=True))
         return "\n".join([*lines, *self.notes])
 
 
-def _line(one: RivalReplayed, shown: str) -> str:
+def _columns(one: RivalReplayed) -> str:
     hits = "-" if math.isnan(one.hit_probability) else f"{one.hit_probability:.4f}"
-    name = f"{shown} (the run's own)" if one.own else shown
     return (
-        f"  {name:<34}{one.calls:>8,}{one.failed:>8,}{one.exact:>7.0%}{one.mean_drop:>12.5g}"
+        f"{one.calls:>8,}{one.failed:>8,}{one.exact:>7.0%}{one.mean_drop:>12.5g}"
         f"{one.improve_probability:>10.4f}{hits:>8}{one.call_seconds:>10.2g}"
     )
 

@@ -71,6 +71,8 @@ def _factor(sums: F64, statistic: Callable[[F64], F64]) -> Interval:
 def _reason(own: str, drop: float, rival: str, rival_drop: float) -> str:
     if drop <= 0.0:
         return f"the mean drop of {own} is not positive, so that no speed makes it worth calling"
+    if rival_drop <= 0.0 and rival == NONE:
+        return f"sweeps from where {own} was called gain nothing on average, so that there is no pace to keep up with"
     if rival_drop <= 0.0:
         return f"the mean drop of {rival} is not positive, so that {own} is ahead at any price"
     return ""

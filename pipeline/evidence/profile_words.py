@@ -59,7 +59,7 @@ def lines_of(profile: Profile) -> list[str]:
         body += ["", *_map_lines(profile.map)]
     body += [line for limit in profile.noise for line in ("", *_noise_lines(limit))]
     body += [line for best in profile.settings for line in ("", *_setting_lines(best, own))]
-    body += ["", *_rule_lines(profile), "", f"{MODEL}; {NO_CLOCK}"]
+    body += ["", *_rule_lines(profile), "", *_caution_lines(profile), f"{MODEL}; {NO_CLOCK}"]
     return [*lines, *(abbreviated(line, one.answers) for line in body), profile.sentence]
 
 
@@ -173,6 +173,16 @@ def _setting_lines(best: BestSetting, own: str) -> Iterator[str]:
 
 def _member_line(one: Member) -> str:
     return f"  {one.setting or 'default':<14}drop {one.drop}  worth {one.worth} a call"
+
+
+def _caution_lines(profile: Profile) -> Iterator[str]:
+    """What a call is worth where it was made is not yet what it is worth to a run."""
+    if profile.baseline == NONE and profile.helps[NONE].rival_drop <= 0.0:
+        yield (
+            "Carrier sweeps from these configurations raise the energy, at the temperature of the call: what calls "
+            "gain there, later sweeps may take back."
+        )
+    yield "A call is judged where it was made; whether whole runs end lower with it, patchwalk compare tells."
 
 
 def _rule_lines(profile: Profile) -> list[str]:

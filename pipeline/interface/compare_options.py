@@ -104,7 +104,7 @@ def in_words(found: Comparison) -> str:
             lines.append(f"  median time to target       {one.median_reach:.4g} {found.unit}")
     for duel in found.duels:
         counts = f"lower in {duel.wins}, equal in {duel.ties}, higher in {duel.losses}"
-        lines.append(f"{duel.one} less {duel.other}: {duel.difference} per spin; {counts}")
+        lines.append(f"energy of {duel.one} minus that of {duel.other}: {duel.difference} per spin; {counts}")
     lines.extend(_curve_lines(found))
     lines.extend(found.sentences)
     lines.extend(found.notes)

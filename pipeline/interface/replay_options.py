@@ -43,8 +43,10 @@ def replay_command(
     patchwalk replay walked.sqlite --rival enumeration --rival tabu --rival none
 
     The drop of a call is its expected energy decrease under the run's acceptance rule, exact where the law of a shot is
-    known. The run's own subsolver is always replayed, too. Rows that are there are kept, so that a replay that was
-    stopped goes on. Exit codes: 0 finished, 1 error, 2 settings, 130 interrupted.
+    known. Beside it are printed the chance to lower the energy (improves), the chance that one shot lands in a minimum
+    of its cluster (hits), and the simulator time of a call. The run's own subsolver is always replayed, too. Rows that
+    are there are kept, so that a replay that was stopped goes on. Exit codes: 0 finished, 1 error, 2 settings, 130
+    interrupted.
     """
     from patchwalk.commands.crew import Crew
     from patchwalk.commands.replaying import USUAL_RIVALS, carry_out

@@ -102,6 +102,17 @@ def test_a_program_of_the_users_is_called_by_its_own_name() -> None:
     assert sum("one.py" in line for line in lines) == 1
 
 
+def test_sweeps_that_lose_energy_are_said_to_do_so() -> None:
+    """Below equilibrium any call looks good against sweeps, whatever whole runs do in the end."""
+    count = RUNS * CALLS
+    losing = replace(made_up(none=answers(-np.ones(count))), curves=np.tile([-0.25, -1.0], (count, 1)))
+    text, usual = str(profile_of(losing)), str(profile_of(made_up()))
+    assert "sweeps from where walk was called gain nothing on average" in text
+    assert "what calls gain there, later sweeps may take back" in text
+    assert "may take back" not in usual
+    assert "whether whole runs end lower with it, patchwalk compare tells" in usual
+
+
 def test_what_is_the_same_for_all_calls_takes_one_line() -> None:
     lines = str(profile_of(made_up())).splitlines()
     assert "the same for all calls: degree 2, degeneracy 1" in lines

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import html
 import sqlite3
 import sys
 from contextlib import closing
@@ -106,6 +107,14 @@ def test_a_run_without_rows_says_so(tmp_path: Path) -> None:
     replayed = replay(path.run_path, ["tabu", "none"])
     assert replayed.rivals == ()
     assert "3 cheap calls have no row" in replayed.notes[0]
+
+
+def test_a_notebook_shows_the_table(walked: Path) -> None:
+    replayed = replay(walked, ["uniform"], calls=10)
+    lines = str(replayed).splitlines()
+    assert lines[1].split() == ["rival", "calls", "failed", "exact", "drop", "improves", "hits", "seconds"]
+    assert len({len(line) for line in lines[1:]}) == 1  # columns are straight
+    assert replayed._repr_html_() == f"<pre>{html.escape(str(replayed))}</pre>"
 
 
 def test_weights_make_up_for_what_a_sample_leaves_out(walked: Path) -> None:
