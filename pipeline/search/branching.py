@@ -44,8 +44,8 @@ OUTCOMES = {BRANCHED: "split", BOUNDED: "bounded", EMPTY: "empty", SETTLED: "set
 
 
 class BranchAndBound(BoundSearch):
-    """The tree of odd-cycle programs. Another proof may stand beside it, such as the cluster bound where the root
-    leaves a gap and clusters promise more: the higher of the two is the bound."""
+    """The tree of odd-cycle programs. Another proof may stand beside it, such as the cluster bound where clusters
+    promise more: the higher of the two is the bound."""
 
     def __init__(
         self,
@@ -143,6 +143,7 @@ class BranchAndBound(BoundSearch):
             if self.plan.heuristic and self.plan.sweeps:
                 self.incumbent.cool(self.plan.sweeps, self.stopped)
                 yield self.next_round(())
+            self._try_clusters()
             program = self.program
             if not self.tree.nodes:
                 root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
@@ -191,10 +192,7 @@ class BranchAndBound(BoundSearch):
         self.nodes_done += 1
         if node.number == 0:
             self._work.note_root()
-            self._try_clusters(node)
-        if self._floor >= self.goal:
-            self.tree.open(node)
-        elif not self._closed(node):
+        if not self._closed(node):
             self._work.split(node, self.goal, self.seconds_left)
         self._note(node)
 
@@ -204,11 +202,15 @@ class BranchAndBound(BoundSearch):
     def _closed(self, node: Node) -> bool:
         return self._work.closed(node, self.best_energy)
 
-    def _try_clusters(self, root: Node) -> None:
-        """Where the root leaves a gap and clusters promise to prove more, let their bound stand beside the tree."""
-        if self._closed(root) or not self.plan.clusters or not promising(self.problem):
+    def _try_clusters(self) -> None:
+        """Where clusters promise to prove more, let their bound stand beside the tree, in half of the seconds at most.
+
+        Before the root, which takes longer on such problems and leaves more of the gap.
+        """
+        if not self.plan.clusters or not promising(self.problem):
             return
-        found = cluster_bound(self.problem, stopped=self.stopped)
+        half = 0.5 * self.seconds_left()
+        found = cluster_bound(self.problem, stopped=lambda: self.stopped() or self.seconds_left() < half)
         if self.beside is None or found.lower_bound > self.beside.lower_bound:
             self.beside = found
 
