@@ -20,7 +20,7 @@ from __future__ import annotations
 
 import difflib
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from pathlib import Path
 from typing import Any
 
@@ -72,6 +72,11 @@ class Policy:
     def looks_at_spins(self) -> bool:
         """Whether any condition depends on the cluster's own spins, which sampling does not admit."""
         return any(name in FEATURES and FEATURES[name].looks_at_spins for name in self.quantities)
+
+    def answered_by(self, number: int, subsolver: Subsolver) -> Policy:
+        """The same policy with another subsolver in one case."""
+        cases = [replace(case, subsolver=subsolver) if own == number else case for own, case in enumerate(self.cases)]
+        return Policy(tuple(cases))
 
     def assign(self, batch: ClusterBatch, stage: float, scale: float) -> I64:
         """The number of the case that each cluster falls under, i64 (B,), -1 where nobody is called.

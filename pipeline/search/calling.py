@@ -18,7 +18,7 @@ from patchwalk.clusters.conditioning import condition
 from patchwalk.clusters.policy import Policy
 from patchwalk.clusters.rules import ClusterRule, Marks, View
 from patchwalk.cost import priced
-from patchwalk.engine import Answered, answers
+from patchwalk.engine import Answered, answers, forecast_of, prepared, release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls
 from patchwalk.search.replicas import Replicas
@@ -64,6 +64,14 @@ class Worth:
         return float(np.concatenate(self._gains).sum()), float(np.concatenate(self._prices).sum())
 
 
+class Ready(NamedTuple):
+    """The subsolver of a case of the policy, ready for clusters of ``size`` spins."""
+
+    case: int
+    size: int
+    subsolver: Subsolver
+
+
 @dataclass(eq=False)
 class Caller:
     """Carries out the calls of a round on replicas of one problem; ``seed`` is that of the run."""
@@ -76,6 +84,8 @@ class Caller:
     workers: Workers
     ask: Callable[[Subsolver, ClusterBatch, Workers], Iterator[Answered]] = answers
     skipped: int = 0
+    by_size: tuple[Ready, ...] | None = None
+    """Who answers where readiness depends on the size of clusters; None before anybody was made ready."""
 
     def __post_init__(self) -> None:
         self._marks = Marks.for_problem(self.problem)
@@ -106,6 +116,47 @@ class Caller:
             self._places, cut.replicas,
         )  # fmt: skip
 
+    def prepare(self, samples: list[ClusterBatch]) -> None:
+        """Make the subsolvers ready, once for each size: on sample batches, one for each size, the largest last.
+
+        Where getting ready comes out the same for every size, one stands for all. A resumed run knows already who
+        answers which size.
+        """
+        found = [
+            Ready(number, batch.size, prepared(case.subsolver, batch))
+            for number, case in enumerate(self.policy.cases)
+            if case.subsolver is not None
+            for batch in samples
+        ]
+        for one in found:  # the last one of a case is for the largest clusters
+            forecast_of(one.subsolver, samples[-1])  # compiles what slicing will need
+            self.policy = self.policy.answered_by(one.case, one.subsolver)
+        if self.by_size is None:
+            differ = any(one.subsolver != self.policy.cases[one.case].subsolver for one in found)
+            self.by_size = tuple(found) if differ else ()
+            return
+        nearest = [min(samples, key=lambda batch: abs(batch.size - one.size)) for one in self.by_size]
+        self.by_size = tuple(
+            one._replace(subsolver=prepared(one.subsolver, batch))
+            for one, batch in zip(self.by_size, nearest, strict=True)
+        )
+
+    def subsolver_for(self, case: int, size: int) -> Subsolver | None:
+        """Who answers clusters of this size under a case of the policy: whoever is ready for the nearest size."""
+        own = [one for one in self.by_size or () if one.case == case]
+        if not own:
+            return self.policy.cases[case].subsolver
+        return min(own, key=lambda one: abs(one.size - size)).subsolver
+
+    def release(self) -> None:
+        """Let go of whatever the subsolvers keep running."""
+        for subsolver in (
+            *(case.subsolver for case in self.policy.cases),
+            *(one.subsolver for one in self.by_size or ()),
+        ):
+            if subsolver is not None:
+                release(subsolver)
+
     def carry_out(
         self, cuts: list[Cut], rule: str, replicas: Replicas, temperatures: F64, stage: float, stop: Callable[[], bool]
     ) -> Iterator[Calls]:
@@ -113,7 +164,7 @@ class Caller:
         for cut in cuts:
             batch = self.question(cut, replicas, temperatures)
             for case, own_cut, own_batch in self._assigned(cut, batch, replicas, temperatures, stage):
-                subsolver = self.policy.cases[case].subsolver
+                subsolver = self.subsolver_for(case, own_batch.size)
                 if subsolver is None:
                     self.skipped += len(own_batch)
                     continue

@@ -10,7 +10,7 @@ from __future__ import annotations
 
 import time
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 from typing import TypeVar
 
 import numpy as np
@@ -18,10 +18,10 @@ import numpy as np
 from patchwalk.acceptance import AcceptanceRule
 from patchwalk.clusters.mixture import Mixture, RuleWeights
 from patchwalk.clusters.policy import Policy
-from patchwalk.engine import Answered, failed, prepared, release
+from patchwalk.engine import Answered, failed
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
-from patchwalk.search.calling import Caller, Cut, Worth, rehearsing
+from patchwalk.search.calling import Caller, Cut, Ready, Worth, rehearsing
 from patchwalk.search.carrying import Carrying
 from patchwalk.search.elites import Elites
 from patchwalk.search.ends import Ends, Spent
@@ -29,8 +29,10 @@ from patchwalk.search.replicas import Replicas
 from patchwalk.search.sweeps import descend
 from patchwalk.search.temperature import Temperatures
 from patchwalk.subsolvers.compiled import compiled
+from patchwalk.subsolvers.complaints import value_complaint
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, Status, Subsolver
 from patchwalk.subsolvers.draws import generator_for, seed_for
+from patchwalk.subsolvers.registry import spelled, subsolver_from
 from patchwalk.workers import Serial, Workers
 
 FAILED = int(Status.FAILED)
@@ -145,12 +147,8 @@ class NeighbourhoodSearch:
         """Compile everything and let the subsolvers calibrate on sample clusters, before the clock starts."""
         temperatures = self.plan.temperatures.at(0.0)
         cuts = self._cuts(self.plan.clusters_per_round)
-        sample = self.caller.question(cuts[0], self.replicas, np.zeros_like(temperatures))
-        cases = tuple(
-            replace(case, subsolver=prepared(case.subsolver, sample)) if case.subsolver is not None else case
-            for case in self.caller.policy.cases
-        )
-        self.caller.policy = replace(self.caller.policy, cases=cases)
+        cold = np.zeros_like(temperatures)
+        self.caller.prepare([self.caller.question(cut, self.replicas, cold) for cut in cuts])
         self._rehearse()
         self.carrying.rehearse(self.replicas, temperatures)
 
@@ -161,7 +159,9 @@ class NeighbourhoodSearch:
         cuts = [caller.cuts(rule, ring, 0, 1, counts, ring.spins) for rule in self.plan.rules.rules]
         for cut in cuts[0]:
             batch = caller.question(cut, ring, np.zeros(1))
-            caller.settle(cut, Answered(0, batch, failed(batch, "rehearsal"), 0.0), "rehearsal", self.subsolver, ring)
+            answered = Answered(0, batch, failed(batch, "rehearsal"), 0.0)
+            value_complaint(answered.proposals)
+            caller.settle(cut, answered, "rehearsal", self.subsolver, ring)
         _count(np.zeros((0, 1), np.int32), counts)
         descend(*_graph(caller.problem), ring.spins[0], ring.local_fields[0], 0.0)
         Elites.none_yet(len(caller.problem), 1, 1, symmetric=True).offer(0.0, ring.spins[0])
@@ -173,9 +173,7 @@ class NeighbourhoodSearch:
             while not self._ended():
                 yield self._one_round()
         finally:
-            for case in self.caller.policy.cases:
-                if case.subsolver is not None:
-                    release(case.subsolver)
+            self.caller.release()
         self._resume_point = self.snapshot()  # before the last descent, which no resumed run would know of
         if self.plan.sweeps_per_round:
             self._polish()
@@ -327,6 +325,7 @@ class NeighbourhoodSearch:
             "own_best": self._own_best.tolist(),
             "rounds_without_own_gain": self._rounds_without_own_gain.tolist(),
             "elite_energies": self.elites.energies.tolist(),
+            "ready": [(one.case, one.size, spelled(one.subsolver)) for one in self.caller.by_size or ()],
         }
         replicas = self.replicas
         return Snapshot(
@@ -351,6 +350,9 @@ class NeighbourhoodSearch:
         self.plan.temperatures.set_state(details["temperatures"])
         self.weights = RuleWeights.from_state(self.rules, details["rules"])
         self.caller.skipped = details["skipped"]
+        self.caller.by_size = tuple(
+            Ready(case, size, subsolver_from(spelling)) for case, size, spelling in details.get("ready", ())
+        )
         self.failures = Failures(details["failed_calls"], details["failed_in_a_row"])
         self._rounds_without_gain = details["rounds_without_gain"]
         self._own_best = np.array(details["own_best"], np.float64)

@@ -9,13 +9,12 @@ Several temperatures form a ladder whose replicas trade places (:mod:`patchwalk.
 from __future__ import annotations
 
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 
 from patchwalk.clusters.mixture import Mixture, RuleWeights
 from patchwalk.clusters.policy import Policy
-from patchwalk.engine import prepared, release
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Round
 from patchwalk.search.calling import Caller, Cut, Worth
@@ -112,12 +111,7 @@ class BoltzmannSampling:
     def prepare(self) -> None:
         """Compile, and let subsolvers calibrate on the clusters of the first round; nothing is calibrated later."""
         cuts = self._cuts(self.rules.drawn(seed_for(self.seed, MIXTURE, 0)))
-        sample = self.caller.question(cuts[0], self.replicas, self._temperatures())
-        cases = tuple(
-            case if case.subsolver is None else replace(case, subsolver=prepared(case.subsolver, sample))
-            for case in self.caller.policy.cases
-        )
-        self.caller.policy = replace(self.caller.policy, cases=cases)
+        self.caller.prepare([self.caller.question(cut, self.replicas, self._temperatures()) for cut in cuts])
         self.carrying.rehearse(self.replicas, self._temperatures())
 
     def sample(self) -> Iterator[Round]:
@@ -126,9 +120,7 @@ class BoltzmannSampling:
             while self.round < self.plan.burn_in + self.plan.rounds and not self.interrupted():
                 yield self._one_round()
         finally:
-            for case in self.caller.policy.cases:
-                if case.subsolver is not None:
-                    release(case.subsolver)
+            self.caller.release()
 
     @property
     def stage(self) -> float:

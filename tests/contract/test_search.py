@@ -3,8 +3,9 @@
 from __future__ import annotations
 
 import itertools
+import json
 import sys
-from dataclasses import replace
+from dataclasses import dataclass, replace
 from typing import Any
 
 import numpy as np
@@ -17,10 +18,13 @@ from patchwalk.clusters.policy import Case, Policy
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Round
+from patchwalk.search.calling import Ready
 from patchwalk.search.ends import Ends
 from patchwalk.search.neighbourhood import NeighbourhoodSearch, Plan
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers import make_subsolver
+from patchwalk.subsolvers.contract import ClusterBatch
+from patchwalk.subsolvers.uniform import Uniform
 
 GLASS = make("lattice2d", 14, couplings="gaussian", seed=5)
 
@@ -69,6 +73,49 @@ def test_everything_is_compiled_before_the_clock_starts(replicas: int) -> None:
     before = kernels()
     assert len(list(search.rounds())) > 10
     assert {name for name, count in kernels().items() if count != before.get(name)} == set()
+
+
+@dataclass(frozen=True)
+class Tuned(Uniform):
+    """Uniform guesses that remember the size of the clusters they got ready on."""
+
+    tuned_for: int = 0
+
+    def prepare(self, sample: ClusterBatch) -> Tuned:
+        return replace(self, tuned_for=sample.size)
+
+
+def grouped_glass() -> Problem:
+    """Groups of four and five that stay whole, so that clusters of eight come out smaller here and there."""
+    groups = (*np.arange(60).reshape(12, 5), *np.arange(60, 108).reshape(12, 4))
+    return replace(make("lattice2d", 12, couplings="gaussian", seed=5), groups=groups)
+
+
+def test_every_size_of_cluster_is_answered_by_who_got_ready_for_it() -> None:
+    problem = grouped_glass()
+    plan = plan_for(problem, calls=200)
+    plan.policy = Policy((Case(Tuned()),))
+    search, rounds = run(problem, plan)
+    ready = [one.size for one in search.caller.by_size or ()]
+    assert len(ready) > 2
+    called = {(calls.batch.size, calls.subsolver) for round_ in rounds for calls in round_.calls}
+    assert len(called) > 2
+    for size, subsolver in called:
+        assert isinstance(subsolver, Tuned)
+        assert abs(subsolver.tuned_for - size) == min(abs(k - size) for k in ready)
+
+
+def test_a_resumed_run_knows_who_was_ready_for_which_size() -> None:
+    problem = grouped_glass()
+    search = NeighbourhoodSearch(problem, plan_for(problem, calls=200), 3)
+    ready = tuple(Ready(0, size, make_subsolver("walk", hopping_factor=size / 4)) for size in (4, 5, 8))
+    search.caller.by_size = ready
+    next(search.rounds())
+    state = search.snapshot()
+    again = NeighbourhoodSearch(problem, plan_for(problem, calls=200), 3)
+    again.go_on_from(replace(state, details=json.loads(json.dumps(state.details))))
+    again.prepare()
+    assert again.caller.by_size == ready
 
 
 def test_slices_change_no_bit(monkeypatch: pytest.MonkeyPatch) -> None:
