@@ -36,7 +36,7 @@ import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.sources import Source, quoted
-from patchwalk.problem.tables import table_rows
+from patchwalk.problem.table_rows import table_rows
 
 CAUTION = (
     "The beacons are invented: this is no licence or navigation advice, for which local rules and licensed practice "

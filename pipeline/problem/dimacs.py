@@ -16,12 +16,13 @@ import re
 from array import array
 from collections.abc import Iterable, Iterator
 from dataclasses import replace
-from itertools import chain, combinations, islice
+from itertools import chain, islice
 from typing import IO
 
 import numpy as np
 import numpy.typing as npt
 
+from patchwalk.problem.clause_notes import notes_on
 from patchwalk.problem.edges import (
     BLOCK,
     MOST_NUMBERED,
@@ -235,7 +236,7 @@ class _Clauses:
         size = self.size if self.header else int(np.abs(literals).max(initial=0))
         if size > SPARE_VERTICES + VERTICES_PER_MENTION * literals.size:
             source.fail(self.header or None, f"{size} variables, of which {self.count} clauses name but few; correct N")
-        notes = _notes_on(literals, weights)
+        notes = notes_on(literals, weights)
         literals, weights = literals[weights > 0], weights[weights > 0]
         if not np.any(literals):
             source.fail(None, "there is nothing to decide: no clause has a literal and a weight above 0")
@@ -247,27 +248,6 @@ class _Clauses:
                 literals[:, :2] if kind == "max2sat" else literals, weights, size, names=names, notes=notes
             )
         return replace(problem, details={**problem.details, **source.details()})
-
-
-def _notes_on(literals: I64, weights: F64) -> list[str]:
-    """What is odd about the clauses, literals i64 (m, width)."""
-    ordered = np.sort(literals, axis=1)
-    span = 2 * int(np.abs(literals).max(initial=0)) + 1
-    if span ** literals.shape[1] < 2**62:  # one number for each clause sorts much faster
-        keys = np.sort(ordered @ span ** np.arange(literals.shape[1]))[:, None]
-    else:
-        keys = ordered[np.lexsort(ordered.T)]
-    repeated = int(np.count_nonzero(np.all(keys[1:] == keys[:-1], axis=1)))
-    always = np.zeros(len(literals), bool)
-    for one, other in combinations(literals.T, 2):
-        always |= (one == -other) & (one != 0)
-    counts = {
-        "like an earlier one; each counts": repeated,
-        "empty and never satisfied": int(np.count_nonzero(~np.any(literals, axis=1))),
-        "satisfied always, by a variable and its negation": int(np.count_nonzero(always)),
-        "of weight 0 and left out": int(np.count_nonzero(weights == 0)),
-    }
-    return [f"{count} clause{'s are' if count > 1 else ' is'} {what}" for what, count in counts.items() if count]
 
 
 def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:

@@ -13,45 +13,26 @@ from typing import NamedTuple
 import numpy as np
 import numpy.typing as npt
 
+from patchwalk.problem.glasses import (
+    MOST_COUPLINGS,
+    cubic_lattice,
+    fully_connected,
+    random_fault,
+    random_glass,
+    regular_fault,
+    regular_glass,
+    square_lattice,
+)
+from patchwalk.problem.instance_request import Request
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.planted import plant_loops, plant_tiles, plant_wishart
 from patchwalk.problem.quillmere import MOST_BEACONS, draw_coast
-from patchwalk.problem.random_graphs import independent_pairs, regular_pairs
 from patchwalk.subsolvers.draws import generator_for
 
 F64 = npt.NDArray[np.float64]
 
 COUPLINGS = ("pm1", "gaussian")
-MOST_COUPLINGS = 20_000_000  # at about 200 bytes each while the problem is put together
 MOST_BITS = 330  # numbers of so many bits stay below 1e100
-
-
-class Request(NamedTuple):
-    """What is to be made, checked; options that the family does not have are None."""
-
-    family: str
-    size: int
-    seed: int
-    couplings: str | None
-    open: bool
-    fields: bool
-    degree: int | None
-    density: float | None
-    draws: np.random.Generator
-
-    def weights(self, count: int) -> F64:
-        """Couplings or fields (count,) of mean 0 and variance 1, from the requested law."""
-        if self.couplings == "gaussian":
-            return self.draws.standard_normal(count)
-        return np.where(self.draws.integers(0, 2, count) == 1, 1.0, -1.0)
-
-    def recipe(self) -> tuple[str, ...]:
-        """How to make the same instance again."""
-        options = {"couplings": self.couplings, "degree": self.degree, "density": self.density}
-        spelled = [f"--{name} {value}" for name, value in options.items() if value is not None]
-        flags = ["--open"] * self.open + ["--fields"] * self.fields
-        words = [f"make {self.family} --size {self.size}", *spelled, *flags, f"--seed {self.seed}"]
-        return (" ".join(words),)
 
 
 class Family(NamedTuple):
@@ -164,93 +145,6 @@ def _size_faults(known: Family, size: int) -> list[str]:
     return []
 
 
-def _sk(request: Request) -> Problem:
-    size = request.size
-    heads, tails = np.triu_indices(size, 1)
-    scale = 1 / np.sqrt(size)
-    return Problem.from_arrays(
-        heads,
-        tails,
-        scale * request.weights(len(heads)),
-        size=size,
-        fields=scale * request.weights(size) if request.fields else None,
-        details={"recipe": request.recipe()},
-    )
-
-
-def _lattice(request: Request, dimension: int) -> Problem:
-    """A square or cubic lattice; the site (x, y, z) is spin x + L y + L^2 z."""
-    side = request.size
-    sites = np.arange(side**dimension).reshape((side,) * dimension)
-    # on a ring of two sites the closing bond would be the other bond once more
-    closed = not request.open and side > 2
-    heads, tails = [], []
-    for axis in reversed(range(dimension)):
-        bonds = np.arange(side if closed else side - 1)
-        heads.append(sites.take(bonds, axis).ravel())
-        tails.append(sites.take((bonds + 1) % side, axis).ravel())
-    first, second = np.concatenate(heads), np.concatenate(tails)
-    doubled = side == 2 and not request.open
-    return Problem.from_arrays(
-        first,
-        second,
-        request.weights(len(first)),
-        size=sites.size,
-        fields=request.weights(sites.size) if request.fields else None,
-        notes=("L = 2: the closing bonds would double the others and are left out",) if doubled else (),
-        details={"recipe": request.recipe()},
-    )
-
-
-def _lattice2d(request: Request) -> Problem:
-    return _lattice(request, 2)
-
-
-def _lattice3d(request: Request) -> Problem:
-    return _lattice(request, 3)
-
-
-def _on_graph(request: Request, pairs: npt.NDArray[np.int64]) -> Problem:
-    """Couplings, and fields where asked for, on the edges (m, 2) of a graph."""
-    return Problem.from_arrays(
-        pairs[:, 0],
-        pairs[:, 1],
-        request.weights(len(pairs)),
-        size=request.size,
-        fields=request.weights(request.size) if request.fields else None,
-        details={"recipe": request.recipe()},
-    )
-
-
-def _regular(request: Request) -> Problem:
-    assert request.degree is not None
-    return _on_graph(request, regular_pairs(request.size, request.degree, request.draws))
-
-
-def _regular_fault(request: Request) -> str | None:
-    size, degree = request.size, request.degree
-    assert degree is not None
-    if not 1 <= degree < size or size * degree % 2:
-        return f"degree {degree}: no graph of {size} spins has it; take 1 to {size - 1}, even where the size is odd"
-    return _couplings_fault(size * degree / 2)
-
-
-def _random(request: Request) -> Problem:
-    assert request.density is not None
-    return _on_graph(request, independent_pairs(request.size, request.density, request.draws))
-
-
-def _random_fault(request: Request) -> str | None:
-    assert request.density is not None
-    return _couplings_fault(request.density * request.size * (request.size - 1) / 2)
-
-
-def _couplings_fault(count: float) -> str | None:
-    if count <= MOST_COUPLINGS:
-        return None
-    return f"about {count:.0f} couplings are out of reach; the most is {MOST_COUPLINGS}: ask for a smaller size"
-
-
 def _max2sat(request: Request) -> Problem:
     """Clauses on two different variables, every such clause equally likely, each drawn on its own."""
     from patchwalk.problem.encodings import encode_max2sat
@@ -313,19 +207,19 @@ _MOST_DENSE = int((2 * MOST_COUPLINGS) ** 0.5)
 _LAW = ("couplings", "fields")
 
 FAMILIES: Mapping[str, Family] = {
-    "sk": Family(_sk, 1, "the number of spins", 2, _MOST_DENSE, _LAW, "gaussian"),
+    "sk": Family(fully_connected, 1, "the number of spins", 2, _MOST_DENSE, _LAW, "gaussian"),
     "lattice2d": Family(
-        _lattice2d, 2, "the side L", 2, int((MOST_COUPLINGS / 2) ** (1 / 2)), ("couplings", "open", "fields"), "pm1"
+        square_lattice, 2, "the side L", 2, int((MOST_COUPLINGS / 2) ** (1 / 2)), ("couplings", "open", "fields"), "pm1"
     ),
     "lattice3d": Family(
-        _lattice3d, 3, "the side L", 2, int((MOST_COUPLINGS / 3) ** (1 / 3)), ("couplings", "open", "fields"), "pm1"
+        cubic_lattice, 3, "the side L", 2, int((MOST_COUPLINGS / 3) ** (1 / 3)), ("couplings", "open", "fields"), "pm1"
     ),
     "regular": Family(
-        _regular, 5, "the number of spins", 2, _MOST_SPINS, (*_LAW, "degree"), "pm1", degree=3, fault=_regular_fault
+        regular_glass, 5, "the number of spins", 2, _MOST_SPINS, (*_LAW, "degree"), "pm1", degree=3, fault=regular_fault
     ),
     "random": Family(
-        _random, 6, "the number of spins", 2, _MOST_SPINS, (*_LAW, "density"), "pm1",
-        density=lambda size: min(1.0, 4 / (size - 1)), fault=_random_fault,
+        random_glass, 6, "the number of spins", 2, _MOST_SPINS, (*_LAW, "density"), "pm1",
+        density=lambda size: min(1.0, 4 / (size - 1)), fault=random_fault,
     ),
     "max2sat": Family(
         _max2sat, 7, "the number of variables", 2, _MOST_SPINS, ("density",), density=lambda _: 2.0, most_density=10.0

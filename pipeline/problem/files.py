@@ -53,7 +53,7 @@ def read_problem(
         if given[option] and problem.kind != own:
             raise ProblemError(f"{option} belongs to kind {own}, but {path} is of kind {problem.kind}; leave it out")
     if field_file is not None:
-        from patchwalk.problem.tables import read_fields
+        from patchwalk.problem.field_tables import read_fields
 
         fields, notes = read_fields(field_file, problem)
         problem = replace(problem, fields=problem.fields + fields, notes=(*problem.notes, *notes))

@@ -1,6 +1,6 @@
-"""CSV files of pairs: ``name, name`` or ``name, name, weight``, and of fields: ``name, field``.
+"""CSV files of pairs: ``name, name`` or ``name, name, weight``.
 
-Both with or without a header line. Blocks of plain lines are taken as a whole; from the first line with a quotation
+With or without a header line. Blocks of plain lines are taken as a whole; from the first line with a quotation
 mark or anything else that is not plain, rows are read one by one, which also finds the line that an error names.
 """
 
@@ -11,7 +11,7 @@ import csv
 import io
 import json
 from array import array
-from collections.abc import Iterable, Iterator
+from collections.abc import Iterable
 from itertools import chain, islice
 from typing import IO
 
@@ -32,20 +32,12 @@ from patchwalk.problem.sources import (
     quoted,
     write_lines,
 )
+from patchwalk.problem.table_rows import LINES_LOOKED_AT, is_comment, is_title, number_in, separator_of, table_rows
 
-SEPARATORS = {";": "semicolon", "\t": "tab", ",": "comma"}
-LINES_LOOKED_AT = 50
 # A first row of two names is taken for a header only if both are such words and neither comes again.
 HEADER_WORDS = frozenset(
     ("first", "second", "from", "to", "source", "target", "one", "other", "node", "neighbour", "vertex")
 )
-
-Rows = Iterator[tuple[int, list[str]]]
-
-
-def is_comment(text: str) -> bool:
-    """Whether a line of a CSV is a comment: a ``#`` alone or before a space, as names may begin with ``#``."""
-    return text.startswith("#") and not text[1:2].strip()
 
 
 def read(path: PathLike, kind: str | None, colours: int | None = None) -> Problem:
@@ -69,7 +61,7 @@ def _read_pairs(source: Source, kind: str) -> Problem:
     """
     table = _Table(source, kind)
     sample = list(islice(source.lines, LINES_LOOKED_AT))
-    separator = _separator(sample, table.notes)
+    separator = separator_of(sample, table.notes)
     lines = chain(sample, source.lines)
     first, cells = next(table_rows(source, lines, separator), (0, []))
     if first == 0:
@@ -77,7 +69,7 @@ def _read_pairs(source: Source, kind: str) -> Problem:
     table.width = len(cells)
     if table.width not in (2, 3):
         source.fail(first, f"expected two or three columns (name, name, weight) but it has {table.width}")
-    if table.width == 3 and _is_title(cells[2]):
+    if table.width == 3 and is_title(cells[2]):
         table.notes.append(f"line {first} was read as a header: {quoted(cells[2])} is not a number")
     else:
         table.take_row(first, cells)
@@ -151,7 +143,7 @@ class _Table:
         if not head or not tail:
             self.source.fail(line, "a name is missing; expected two names and perhaps a weight")
         if self.width == 3:
-            self.pairs.weights.append(_weight(self.source, line, cells[2]))
+            self.pairs.weights.append(number_in(self.source, line, cells[2]))
         if head == tail and not self.pairs.takes_loops:
             self.pairs.refuse_loop(line, quoted(head))
         self.pairs.heads.append(self._place(line, head))
@@ -175,35 +167,6 @@ def _numbers(cells: list[str]) -> npt.NDArray[np.float64] | None:
     except ValueError:
         return None
     return values if plain(text) and np.all(np.abs(values) <= LARGEST_NUMBER) else None
-
-
-def read_fields(path: PathLike, problem: Problem) -> tuple[npt.NDArray[np.float64], list[str]]:
-    """Fields f64 (n,) for the spins of a problem from a CSV of names and fields, and notes.
-
-    Spins without names are numbered from 1. Raises :class:`ProblemError` with file and line.
-    """
-    names = problem.names or map(str, range(1, len(problem) + 1))
-    places = {name: place for place, name in enumerate(names)}
-    fields, seen, notes = np.zeros(len(problem)), np.zeros(len(problem), np.int64), list[str]()
-    with contextlib.closing(numbered_lines(path)) as lines:
-        source = open_source(path, lines, is_comment)
-        sample = list(islice(source.lines, LINES_LOOKED_AT))
-        separator = _separator(sample, notes)
-        for number, (line, cells) in enumerate(table_rows(source, chain(sample, source.lines), separator)):
-            if len(cells) != 2:
-                source.fail(line, f"expected two columns (name, field) but it has {len(cells)}")
-            name, value = cells
-            if number == 0 and name not in places and _is_title(value):
-                notes.append(f"line {line} was read as a header: {quoted(value)} is not a number")
-                continue
-            if name not in places:
-                source.fail(line, f"spin {quoted(name)} is not in the problem; correct the name")
-            fields[places[name]] += _weight(source, line, value, "field")
-            seen[places[name]] += 1
-    repeated = int(np.count_nonzero(seen > 1))
-    if repeated:
-        notes.append(f"{repeated} spins have more than one row of fields; their values were summed")
-    return fields, notes
 
 
 def write(problem: Problem, stream: IO[bytes], recipe: Iterable[str]) -> None:
@@ -234,59 +197,6 @@ def _row(*cells: str) -> str:
     text = io.StringIO()
     csv.writer(text, lineterminator="", quoting=csv.QUOTE_MINIMAL).writerow(cells)
     return text.getvalue()
-
-
-def _separator(sample: list[tuple[int, str]], notes: list[str]) -> str:
-    """The separator that gives every line looked at two or three cells; else the first that occurs at all."""
-    texts = [text for _, text in sample if text.strip() and not is_comment(text)]
-    widths = {mark: _widths(texts, mark) for mark in SEPARATORS}
-    # three cells say more than two: 'a;b;1,5' is no pair of 'a;b;1' and '5'
-    fitting = sorted((mark for mark in SEPARATORS if widths[mark] <= {0, 2, 3}), key=lambda mark: -max(widths[mark]))
-    if len(fitting) > 1:
-        notes.append(f"read with {SEPARATORS[fitting[0]]} as separator; {SEPARATORS[fitting[1]]} would fit too")
-    occurring = [mark for mark in SEPARATORS if any(mark in text for text in texts)]
-    return (fitting + occurring + [","])[0]
-
-
-def _widths(texts: list[str], mark: str) -> set[int]:
-    try:
-        return {len(row) for row in csv.reader(texts, delimiter=mark, skipinitialspace=True)}
-    except csv.Error:  # a cell beyond the limit, most likely a quotation mark without its partner
-        return {1}
-
-
-def table_rows(source: Source, lines: Lines, separator: str) -> Rows:
-    """The rows of a CSV that hold anything, cells stripped, each with the line it ends on."""
-    number = 0
-
-    def texts() -> Iterator[str]:
-        nonlocal number
-        for line, text in lines:
-            number = line
-            yield "\n" if is_comment(text) else text
-
-    reader = csv.reader(texts(), delimiter=separator, skipinitialspace=True, strict=True)
-    try:
-        for row in reader:
-            cells = [cell.strip() for cell in row]
-            if any(cells):
-                yield number, cells
-    except csv.Error as error:
-        source.fail(number, f"not a row of a CSV ({error}); look for a quotation mark without its partner")
-
-
-def _is_title(cell: str) -> bool:
-    try:
-        float(cell)
-    except ValueError:
-        return bool(cell[:1].isalpha())
-    return False
-
-
-def _weight(source: Source, line: int, cell: str, what: str = "weight") -> float:
-    if "," in cell and plain(cell):
-        source.fail(line, f"{what} {quoted(cell)} is not a number; write decimals with a point")
-    return source.number(cell, line, what)
 
 
 def _settle_header(table: _Table, first: int, cells: list[str]) -> None:

@@ -57,7 +57,12 @@ def test_a_pair_of_a_vertex_with_itself_is_its_weight(tmp_path, kind):
 @pytest.mark.parametrize(
     ("kind", "name", "text", "message"),
     [
-        ("colouring", "g.txt", "2 1\n1 2\n", 'how many colours are there? Say so in a line before all others: "# col'),
+        (
+            "colouring",
+            "g.txt",
+            "2 1\n1 2\n",
+            "how many colours are there? Say --colours 3 or colours=3, or # colours = 3 in",
+        ),
         ("colouring", "g.txt", "# colours = 1\n2 1\n1 2\n", "line 1: colours '1' is not a whole number from 2 to"),
         ("colouring", "g.txt", f"# colours = {'9' * 5000}\n2 1\n1 2\n", "line 1: colours '9999"),
         ("colouring", "g.csv", "# colours = 3\na,a\n", "line 2: vertex 'a' is joined to itself"),
