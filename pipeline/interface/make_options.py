@@ -68,6 +68,14 @@ def make_command(
     patchwalk make regular --size 1000 --degree 4 --couplings gaussian -o graph.txt.gz
     patchwalk make max2sat --size 200 --density 1.5 -o clauses.cnf
     patchwalk make tiles --size 100 -o tiles.txt
+
+    Loops are easy up to a density of 0.1, moderate from 0.15 to 0.2 and hard from 0.3 on. Planted lattices are best
+    answered by strips, each solved exactly, under one slow cooling. At 10,000 spins this reached the planted energy of
+    loops of density 0.15 with every seed tried; of tiles with some, coming within 0.05 % with the others. The defaults
+    stay about 1 % above it in as long a time.
+
+    \b
+    patchwalk solve tiles.txt --rule strip --subsolver elimination --cluster-size 400 --coolings 1 --calls 2000
     """
     from patchwalk.problem.families import make
     from patchwalk.problem.files import write_problem
