@@ -312,7 +312,7 @@ class Problem:
     def summary(self) -> str:
         """One line: spins, couplings, fields, kind and sign."""
         fielded = int(np.count_nonzero(self.fields))
-        fields = "no fields" if fielded == 0 else f"{fielded:,} fields"
+        fields = "no fields" if fielded == 0 else f"{fielded:,} field{'s' * (fielded != 1)}"
         return (
             f"{len(self):,} spins, {self.coupling_count:,} couplings, {fields}; "
             f"kind {self.kind}: {KINDS[self.kind].sentence}"
