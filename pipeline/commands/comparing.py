@@ -197,7 +197,7 @@ def _concluded(
 ) -> Comparison:  # fmt: skip
     problems = {entry.compared.instance: entry.task.problem for entry in entries}
     references = {name: _reference(problem, name, runs, target) for name, problem in problems.items()}
-    outcomes = [_outcome(run, problems[run.run.instance], references[run.run.instance]) for run in runs]
+    outcomes = [outcome_of(run, problems[run.run.instance], references[run.run.instance]) for run in runs]
     contenders = [contender_name(one) for one in question.contenders]
     idle = next((name for name in contenders if all(one.contender != name for one in outcomes)), None)
     if idle is not None and status != "interrupted":
@@ -221,7 +221,7 @@ def _reference(problem: Problem, name: str, runs: Sequence[FinishedRun], target:
     return min((run.energy for run in runs if run.run.instance == name), default=math.inf)
 
 
-def _outcome(run: FinishedRun, problem: Problem, reference: float) -> Outcome:
+def outcome_of(run: FinishedRun, problem: Problem, reference: float) -> Outcome:
     """Measured from the reference; a run that lost it again in mending its answer counts by what it ended with."""
     ceiling = reference + problem.tie_tolerance
     scale = 1.0 if run.run.unit == "seconds" else run.run.budget

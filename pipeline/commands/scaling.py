@@ -168,8 +168,9 @@ class _Survey:
 
     def guessing(self) -> ScalingCurve:
         """The share of minima among all configurations, as a curve of its own."""
-        shares = {self._spins[size]: np.array(list(own.values())) for size, own in self._guesses.items() if own}
-        return ScalingCurve(GUESSING, shares, True, scaling_fits(shares), {"calls": _cost_fits(shares)})
+        return guessing_curve(
+            {self._spins[size]: np.array(list(own.values())) for size, own in self._guesses.items() if own}
+        )
 
     def _best_of(self, size: int, variants: Sequence[Subsolver]) -> Subsolver:
         tuning = range(0, self.instances.count, 2)
@@ -210,15 +211,24 @@ class _Survey:
     def _curve(
         self, name: str, rows: dict[int, list[ScalingRow]], chosen: dict[int, str] | None = None
     ) -> ScalingCurve:
-        by_spins = {self._spins[size]: own for size, own in rows.items() if own}
-        success = {size: np.array([row.success for row in own]) for size, own in by_spins.items()}
-        costs = {"calls": _cost_fits(success)}
-        for word in ("seconds_priced", "amplitude_updates", "spin_updates"):
-            prices = {size: np.array([getattr(row, word) for row in own]) for size, own in by_spins.items()}
-            if prices and all(np.all(np.nan_to_num(values) > 0.0) for values in prices.values()):
-                costs[word.replace("_", " ")] = _cost_fits(success, prices)
-        exact = all(row.exact for own in by_spins.values() for row in own)
-        return ScalingCurve(name, success, exact, scaling_fits(success), costs, chosen or {})
+        return curve_of(name, {self._spins[size]: own for size, own in rows.items() if own}, chosen)
+
+
+def curve_of(name: str, by_spins: dict[int, list[ScalingRow]], chosen: dict[int, str] | None = None) -> ScalingCurve:
+    """The curve through rows measured, by their number of spins; ``chosen`` are the tuned spellings by size."""
+    success = {size: np.array([row.success for row in own]) for size, own in by_spins.items()}
+    costs = {"calls": _cost_fits(success)}
+    for word in ("seconds_priced", "amplitude_updates", "spin_updates"):
+        prices = {size: np.array([getattr(row, word) for row in own]) for size, own in by_spins.items()}
+        if prices and all(np.all(np.nan_to_num(values) > 0.0) for values in prices.values()):
+            costs[word.replace("_", " ")] = _cost_fits(success, prices)
+    exact = all(row.exact for own in by_spins.values() for row in own)
+    return ScalingCurve(name, success, exact, scaling_fits(success), costs, chosen or {})
+
+
+def guessing_curve(shares: dict[int, F64]) -> ScalingCurve:
+    """The share of minima among all configurations, f64 (instances,) by number of spins, as a curve of its own."""
+    return ScalingCurve(GUESSING, shares, True, scaling_fits(shares), {"calls": _cost_fits(shares)})
 
 
 def _cost_fits(success: dict[int, F64], prices: dict[int, F64] | None = None) -> list[ScalingFit]:
