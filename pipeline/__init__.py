@@ -19,6 +19,7 @@ if TYPE_CHECKING:
     from patchwalk.commands.sampling import sample
     from patchwalk.commands.scaling import scale
     from patchwalk.commands.solving import Solution, solve
+    from patchwalk.interface.page.writing import report
     from patchwalk.problem.builder import ProblemBuilder
     from patchwalk.problem.families import make
     from patchwalk.problem.files import read_problem, write_problem
@@ -36,6 +37,7 @@ _HOMES = {
     "make": "patchwalk.problem.families",
     "profile": "patchwalk.commands.profiling",
     "replay": "patchwalk.commands.replaying",
+    "report": "patchwalk.interface.page.writing",
     "resume": "patchwalk.commands.resuming",
     "read_problem": "patchwalk.problem.files",
     "sample": "patchwalk.commands.sampling",
@@ -57,6 +59,7 @@ __all__ = [
     "profile",
     "read_problem",
     "replay",
+    "report",
     "resume",
     "sample",
     "scale",

@@ -27,6 +27,7 @@ COMMANDS = {
     ),
     "compare": ("patchwalk.interface.compare_options:compare_command", "Whole runs at equal budget, paired by seed."),
     "scale": ("patchwalk.interface.scale_options:scale_command", "Success probability against cluster size."),
+    "report": ("patchwalk.interface.report_options:report_command", "One self-contained page about runs."),
     "make": ("patchwalk.interface.make_options:make_command", "Write a seeded instance of a known family."),
     "backends": ("patchwalk.interface.backends_options:backends_command", "List backends, check one, or time one."),
 }
