@@ -31,7 +31,7 @@ def resume_command(run: Path, as_json: bool, quiet: bool, **given: Any) -> None:
     """
     from patchwalk.commands.resuming import carry_on
     from patchwalk.interface.progress import Narrator
-    from patchwalk.interface.report import in_words
+    from patchwalk.interface.solution_text import in_words
 
     try:
         chosen = {key: value for key, value in given.items() if value is not None}

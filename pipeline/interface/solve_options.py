@@ -87,7 +87,7 @@ def solve_command(source: str, as_json: bool, quiet: bool, **given: Any) -> None
     from patchwalk.commands.solving import carry_out
     from patchwalk.commands.tasks import task_from
     from patchwalk.interface.progress import Narrator
-    from patchwalk.interface.report import in_words
+    from patchwalk.interface.solution_text import in_words
 
     try:
         task = task_from(source, {key: value for key, value in given.items() if value is not None}, "--{}")

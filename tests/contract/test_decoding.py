@@ -14,7 +14,7 @@ from hypothesis import strategies as st
 
 import patchwalk
 from patchwalk.commands.answers import answer_for, settled, spoken
-from patchwalk.interface.report import in_words
+from patchwalk.interface.solution_text import in_words
 from patchwalk.problem import encodings
 from patchwalk.problem.decoding import audit_answer, encoding_of, read_answer, verdict, write_answer
 from patchwalk.problem.families import make
