@@ -21,7 +21,7 @@ def audit_command(source: str, evidence: str, number: int | None, as_json: bool,
     """Hold an ANSWER (spins, or what --json or --answer wrote) or the certificate of a RUN file against INPUT.
 
     \b
-    patchwalk solve graph.csv --kind vertex_cover --answer cover.csv --quiet
+    patchwalk solve graph.csv --kind vertex_cover --calls 500 --answer cover.csv
     patchwalk audit graph.csv cover.csv --kind vertex_cover
 
     The objective is recomputed and every broken constraint named; nothing is mended, and nothing of the search is used:
