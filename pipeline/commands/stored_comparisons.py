@@ -13,6 +13,7 @@ from typing import Any
 from patchwalk.commands.comparing import Comparison, outcome_of
 from patchwalk.evidence.compared_runs import FinishedRun, finished_identities, finished_runs
 from patchwalk.evidence.comparing import Duel, Outcome, duels, performance_curves, standings
+from patchwalk.evidence.layout import RunFileError
 from patchwalk.evidence.stored import StoredFile
 from patchwalk.problem.files import read_problem
 from patchwalk.problem.ising import Problem, ProblemError
@@ -30,8 +31,11 @@ class StoredComparison:
 
 def stored_comparisons(file: StoredFile) -> list[StoredComparison]:
     """Every comparison in a file of compared runs, nothing run again."""
-    with contextlib.closing(sqlite3.connect(f"file:{file.path}?mode=ro", uri=True)) as database:
-        runs = finished_runs(database, dict.fromkeys(sorted(finished_identities(database))))
+    try:
+        with contextlib.closing(sqlite3.connect(f"file:{file.path}?mode=ro", uri=True)) as database:
+            runs = finished_runs(database, dict.fromkeys(sorted(finished_identities(database))))
+    except sqlite3.Error as error:
+        raise RunFileError(f"{file.path}: could not be read: {error}") from error
     runs.sort(key=lambda run: (run.run.instance, run.run.seed, run.run.contender))
     budgets = dict.fromkeys((run.run.unit, run.run.budget) for run in runs)
     return [_comparison(file, [run for run in runs if (run.run.unit, run.run.budget) == one]) for one in budgets]

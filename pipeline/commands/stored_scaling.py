@@ -27,9 +27,12 @@ def stored_scaling(file: StoredFile) -> Scaled:
 
     Spellings that only stand there because times were tuned have no curve of their own.
     """
-    with contextlib.closing(sqlite3.connect(f"file:{file.path}?mode=ro", uri=True)) as database:
-        rows = all_rows(database)
-        setup = dict(database.execute("SELECT key, value FROM scaling_setup"))
+    try:
+        with contextlib.closing(sqlite3.connect(f"file:{file.path}?mode=ro", uri=True)) as database:
+            rows = all_rows(database)
+            setup = dict(database.execute("SELECT key, value FROM scaling_setup"))
+    except sqlite3.Error as error:
+        raise RunFileError(f"{file.path}: could not be read: {error}") from error
     if not rows:
         raise RunFileError(f"{file.path}: holds no scaling measurement; patchwalk scale takes them")
     measured = [row for row in rows if not np.isnan(row.success)]

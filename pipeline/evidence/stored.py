@@ -71,14 +71,11 @@ class StoredFile:
     def runs(self) -> list[StoredRun]:
         """All runs in the order they began."""
         query = "SELECT runs.*, problems.source FROM runs JOIN problems ON runs.problem = fingerprint ORDER BY run"
-        return [
-            StoredRun(
-                row["run"], row["seed"], row["problem"], row["source"], row["subsolver"], json.loads(row["settings"]),
-                row["settings_file"], json.loads(row["settings_table"]), json.loads(row["versions"]), row["rows_kept"],
-                row["status"], row["message"],
-            )
-            for row in self.rows(query)
-        ]  # fmt: skip
+        rows = list(self.rows(query))
+        try:
+            return [_stored_run(row) for row in rows]
+        except ValueError as error:
+            raise RunFileError(f"{self.path}: its table of runs is damaged: {error}") from error
 
     def problem(self, fingerprint: str) -> Problem:
         """The problem as the run file holds it: without names, but to the last bit."""
@@ -95,6 +92,14 @@ class StoredFile:
         if row is None:
             raise RunFileError(f"{self.path}: run {run} has no checkpoint")
         return _snapshot(row, problem)
+
+
+def _stored_run(row: sqlite3.Row) -> StoredRun:
+    return StoredRun(
+        row["run"], row["seed"], row["problem"], row["source"], row["subsolver"], json.loads(row["settings"]),
+        row["settings_file"], json.loads(row["settings_table"]), json.loads(row["versions"]), row["rows_kept"],
+        row["status"], row["message"],
+    )  # fmt: skip
 
 
 def _snapshot(row: sqlite3.Row, problem: Problem) -> Snapshot:

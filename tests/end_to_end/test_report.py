@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+import contextlib
 import csv
 import io
 import json
 import re
 import shutil
+import sqlite3
 import urllib.parse
 from html.parser import HTMLParser
 from pathlib import Path
@@ -14,7 +16,7 @@ from pathlib import Path
 import pytest
 from click.testing import CliRunner, Result
 
-from patchwalk import bound, compare, make, profile, replay, report, resume, scale, solve, write_problem
+from patchwalk import bound, compare, make, profile, replay, report, resume, sample, scale, solve, write_problem
 from patchwalk.interface.cli import program
 from patchwalk.interface.page.appearance import COLOURS
 from patchwalk.interface.page.markup import Table, download, element, escaped
@@ -259,6 +261,38 @@ def test_compared_runs_and_scaling(tmp_path: Path) -> None:
     }
     assert scaled.caution[1:] in read.text
     assert read.text.count("In four lines") == 2
+
+
+def test_sampling_runs_have_their_averages(tmp_path: Path) -> None:
+    found = sample(make("lattice2d", 4, seed=1), subsolver="walk,start=incumbent", cluster_size=4, rounds=50,
+                   temperatures=[1.0, 2.0], run=tmp_path / "run.sqlite")  # fmt: skip
+    page = report(tmp_path / "run.sqlite", tmp_path / "page.html")
+    text = Page(page.path.read_text()).text
+    assert "Energies averaged over the Boltzmann law" in text
+    for level in found.levels:
+        assert f"{level.energy.value:,.6g}" in text
+
+
+def test_a_killed_run_is_told_as_far_as_it_came(run: Path, tmp_path: Path) -> None:
+    """Its last checkpoint is what there is, and the page says so."""
+    path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path
+    with contextlib.closing(sqlite3.connect(path)) as database, database:
+        database.execute(
+            "UPDATE runs SET status = 'running', message = NULL, energy = NULL, spins = NULL, calls = NULL"
+        )
+    text = Page(report(path, tmp_path / "page.html").path.read_text()).text
+    assert "Killed, or not yet over" in text
+    assert "Not carried through to the end of the budget: seed 1" in text
+
+
+def test_a_damaged_file_is_named(run: Path, tmp_path: Path) -> None:
+    path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path
+    with contextlib.closing(sqlite3.connect(path)) as database, database:
+        database.execute("UPDATE runs SET settings = '{\"seed'")
+    told = patchwalk("report", path, "-o", tmp_path / "page.html")
+    assert told.exit_code == 1
+    assert f"{path}: its table of runs is damaged" in told.stderr
+    assert not (tmp_path / "page.html").exists()
 
 
 @pytest.mark.parametrize(

@@ -26,10 +26,12 @@ STEPS_DRAWN, ROWS_KEPT = 600, 4000
 FATES = (("accepted", "accepted"), ("moved", "changed a spin"), ("improved", "lowered the energy"))
 
 
-def progress(chapter: RunsChapter, name: str) -> Picture:
-    """Incumbent of every run and the bound, in the user's objective, against seconds."""
+def progress(chapter: RunsChapter, name: str) -> Picture | None:
+    """Incumbent of every run and the bound, in the user's objective, against seconds; None where none was kept."""
     problem, runs, thinned = chapter.problem, chapter.runs, False
     finite = [run for run in runs if run.incumbents]
+    if not finite:
+        return None
     earliest = _earliest(finite)
     with canvas(270.0, name) as figure:
         axes = figure.add_subplot()
@@ -59,6 +61,8 @@ def progress(chapter: RunsChapter, name: str) -> Picture:
     direction = "down" if problem.objective(1.0) > 0 else "up"
     bound = chapter.lower_bound
     said = "No bound was computed." if bound is None else f"The bound is {problem.objective(bound):,.8g}."
+    if bound is not None and not any(run.bounds for run in runs):
+        said += " It was looked for after the search, and stands across all of it."
     caption = (
         f"Best {problem.objective_name.replace('_', ' ')} so far, run by run; it goes {direction} as the search gets "
         f"better. {said} Seconds of a simulated subsolver say nothing about a device."

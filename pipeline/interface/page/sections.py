@@ -20,6 +20,7 @@ from patchwalk.commands.reporting import (
 )
 from patchwalk.evidence.profiling import Profile
 from patchwalk.evidence.replayed import NONE
+from patchwalk.evidence.scaling import AVERAGES
 from patchwalk.interface.page import help_figures, run_figures, whole_figures, words
 from patchwalk.interface.page.drawing import Picture
 from patchwalk.interface.page.markup import Markup, Table, download, element, joined, listed, sentence
@@ -281,7 +282,9 @@ def _scaling_parts(chapter: ScalingChapter, name: str) -> Iterator[Markup]:
     scaled = chapter.scaled
     yield element("p", f"{scaled.what}; {chapter.file}")
     yield pictures(whole_figures.scaling_figure(scaled, f"{name}-scaling"))
-    yield whole_figures.fits_table(scaled).as_html("Fits; of a cost, a is negative where it grows")
+    yield whole_figures.fits_table(scaled).as_html("Fits of the mean, with 95 % intervals over instances")
+    every = whole_figures.fits_table(scaled, tuple(AVERAGES))
+    yield element("p", download(every, f"{name}-fits", "fits of mean, median and mean of logarithms as CSV"))
     chosen = [[curve.name, size, spelling] for curve in scaled.curves for size, spelling in curve.chosen.items()]
     if chosen:
         yield Table(["curve", "size", "tuned to"], chosen).as_html("Times that were tuned")

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -206,15 +207,19 @@ def _scaling_table(scaled: Scaled) -> Table:
     return Table(header, rows)
 
 
-def fits_table(scaled: Scaled) -> Table:
-    """Every fit in numbers."""
-    rows = [
-        [curve.name, what, fit.average, fit.exponent, fit.low, fit.high, fit.best_model]
-        for curve in scaled.curves
-        for what, fits in (("success", curve.fits), *((f"cost in {key}", fits) for key, fits in curve.costs.items()))
-        for fit in fits
-    ]
-    return Table(["curve", "of", "average", "a in 2^(-a k)", "low", "high", "law that fits best"], rows)
+def fits_table(scaled: Scaled, averages: Sequence[str] = ("mean",)) -> Table:
+    """Fits of success, which falls, and of what success at 99 % costs, which grows, in numbers."""
+    rows: list[list[object]] = []
+    for curve in scaled.curves:
+        for fit in curve.fits:
+            told = [fit.exponent, fit.low, fit.high, fit.best_model]
+            rows.append([curve.name, "success falls as 2^(-a k)", fit.average, *told])
+        for currency, fits in curve.costs.items():
+            for fit in fits:
+                told = [-fit.exponent, -fit.high, -fit.low, fit.best_model]
+                rows.append([curve.name, f"cost in {currency} grows as 2^(a k)", fit.average, *told])
+    kept = [row for row in rows if row[2] in averages]
+    return Table(["curve", "law", "average", "a", "low", "high", "laws that fit"], kept)
 
 
 def _ends(low: float | None, high: float | None) -> tuple[float, float]:
