@@ -273,6 +273,29 @@ def test_sampling_runs_have_their_averages(tmp_path: Path) -> None:
         assert f"{level.energy.value:,.6g}" in text
 
 
+def test_what_is_too_much_is_thinned_and_said(tmp_path: Path) -> None:
+    """Far more improvements than a picture shows: it stays small, and the page says what it left out."""
+    path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path
+    rows = [(1, -1e-4 * place, "sweeps", place, place, place, 1e-4 * place) for place in range(50_000)]
+    with contextlib.closing(sqlite3.connect(path)) as database, database:
+        database.executemany("INSERT INTO incumbents VALUES (?,?,?,?,?,?,?)", rows)
+    found = report(path, tmp_path / "page.html")
+    read = Page(found.path.read_text())
+    assert found.size < 1_000_000
+    assert "Drawn are 600 improvements of a run at most." in read.text
+    every = re.search(r"The data hold one row in (\d+)\.", read.text)
+    assert every is not None
+    assert len(read.tables()["c1-progress.csv"]) - 1 == pytest.approx(50_000 / int(every.group(1)), abs=2)
+
+
+@pytest.mark.slow
+def test_five_thousand_calls_and_six_rivals_stay_below_five_megabytes(tmp_path: Path) -> None:
+    glass = make("lattice2d", 24, seed=5, couplings="gaussian")
+    path = solve(glass, subsolver="walk", cluster_size=9, calls=5000, run=tmp_path / "run.sqlite").run_path
+    replay(path, rivals=["enumeration", "elimination", "metropolis", "tabu", "uniform", "none"])
+    assert report(path, tmp_path / "page.html").size < 5_000_000
+
+
 def test_a_killed_run_is_told_as_far_as_it_came(run: Path, tmp_path: Path) -> None:
     """Its last checkpoint is what there is, and the page says so."""
     path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path

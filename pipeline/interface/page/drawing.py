@@ -11,6 +11,7 @@ import io
 import math
 import re
 import textwrap
+import unicodedata
 import warnings
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
@@ -108,13 +109,28 @@ def label(text: Any, letters: int = LABEL_LETTERS) -> str:
     """A user's words inside a picture, cut in their middle where they are too long for it.
 
     >>> label("walk,time_in_hops=[0.65,1.05]", 15)
-    'walk,ti…5,1.05]'
+    'walk,ti…,1.05]'
     """
     words = " ".join(shown(text).split())
-    if len(words) <= letters:
+    if sum(map(_breadth, words)) <= letters:
         return words
-    half = (letters - 1) // 2
-    return f"{words[: letters - 1 - half]}…{words[-half:]}"
+    head, tail, room = "", "", letters - 1.0
+    for first, last in zip(words, reversed(words), strict=True):
+        room -= _breadth(first)
+        if room < 0.0:
+            break
+        head += first
+        room -= _breadth(last)
+        if room < 0.0:
+            break
+        tail = last + tail
+    return f"{head}…{tail}"
+
+
+def _breadth(letter: str) -> float:
+    """About how wide a letter is, in small ones."""
+    wide = 1.8 if unicodedata.east_asian_width(letter) in "WF" else 1.0
+    return 1.4 if letter.isupper() or letter in "mw@%" else wide
 
 
 def wrapped(text: str, letters: int = 56) -> str:

@@ -104,7 +104,7 @@ def map_of_help(profile: Profile, name: str) -> Picture | None:
     with canvas(96.0 + 27.0 * len(down), name) as figure:
         axes = figure.add_subplot()
         _draw_cells(axes, grid)
-        axes.set_xticks(range(len(across)), [text.replace(" to ", "\nto ") for text in across])
+        axes.set_xticks(range(len(across)), [_in_two_lines(text) for text in across])
         axes.set_yticks(range(len(down)), down)
         axes.set_xlabel(grid.second)
         axes.set_ylabel(grid.first)
@@ -268,6 +268,13 @@ def _ranges(edges: np.typing.NDArray[np.float64]) -> list[str]:
         return ["all"]
     inner = [f"{low} to {high}" for low, high in itertools.pairwise(ends)]
     return [f"below {ends[0]}", *inner, f"from {ends[-1]}"]
+
+
+def _in_two_lines(text: str) -> str:
+    """A range as it stands below a narrow column."""
+    for word, broken in ((" to ", "\nto "), ("below ", "below\n"), ("from ", "from\n")):
+        text = text.replace(word, broken)
+    return text
 
 
 def _finite_ends(low: float, high: float) -> tuple[float, float]:

@@ -69,7 +69,7 @@ def progress(chapter: RunsChapter, name: str) -> Picture | None:
     )
     caption += " Early improvements may lie outside the picture; all are in the data." if len(table.rows) > 3 else ""
     caption += f" Drawn are {STEPS_DRAWN} improvements of a run at most." if thinned else ""
-    caption += f" The data hold every {shortened}th row." if shortened > 1 else ""
+    caption += f" The data hold one row in {shortened}." if shortened > 1 else ""
     alternative = f"Step lines of {len(finite)} runs against time, ending at {_ends(chapter)}. {said}"
     return Picture(name, "Incumbent and bound against time", caption, alternative, svg, table)
 

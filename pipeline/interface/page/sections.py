@@ -247,7 +247,7 @@ def _values(values: Sequence[Any], most: int = 4) -> str:
 def _compared_parts(chapter: ComparedChapter, name: str) -> Iterator[Markup]:
     found = chapter.compared.comparison
     yield element("p", f"{len(found.outcomes)} whole runs, each worth {found.budget:g} {found.unit}, on "
-                  f"{len(found.instances)} instance(s): {', '.join(map(str, found.instances))}")  # fmt: skip
+                  f"{len(found.instances)} instance(s): {_values(found.instances, 8)}")  # fmt: skip
     yield element("h3", "The answer")
     yield listed(map(sentence, found.sentences), class_="lead")
     yield pictures(
