@@ -102,10 +102,10 @@ th{{font-weight:600;color:var(--soft);font-size:.82rem}}
 .closing p{{margin:.2rem 0}}
 footer{{color:var(--soft);font-size:.85rem;padding-bottom:2rem}}
 @media print{{
-body{{font-size:10.5pt}} nav,.data{{display:none}}
+html{{font-size:13px}} body{{font-size:1rem}} nav,.data{{display:none}}
 main,header,footer{{padding:0;max-width:none}}
 .wide{{overflow:visible}} table{{font-size:8.5pt}} .number{{white-space:normal}}
-td,th{{overflow-wrap:anywhere;padding-right:.5rem}}
+td,th{{padding-right:.5rem}} td{{overflow-wrap:anywhere}}
 figure,tr,.facts div{{break-inside:avoid}} h2,h3,h4{{break-after:avoid}}
 .pictures{{columns:2;column-gap:1.6rem}} figure{{max-width:none}} .pairs{{columns:2}}
 }}
