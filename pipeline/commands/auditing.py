@@ -16,6 +16,7 @@ from patchwalk.bounds.certificate import Certificate, check
 from patchwalk.bounds.certificate_error import CertificateError
 from patchwalk.evidence.certificates import stored_certificate
 from patchwalk.evidence.layout import RunFileError
+from patchwalk.evidence.stored import read_only
 from patchwalk.problem.decoding import audit_answer, encoding_of, read_answer, verdict
 from patchwalk.problem.files import read_problem
 from patchwalk.problem.ising import Problem, ProblemError
@@ -76,7 +77,7 @@ def audit(
     if not _is_run_file(Path(evidence)):
         return _audited_answer(problem, evidence)
     try:
-        with contextlib.closing(sqlite3.connect(f"file:{evidence}?mode=ro", uri=True)) as database:
+        with contextlib.closing(read_only(Path(evidence))) as database:
             return _audited_run(problem, database, run, Path(evidence))
     except sqlite3.Error as error:
         raise RunFileError(f"{evidence}: cannot be read as a run file: {error}") from error
@@ -127,7 +128,7 @@ def _false_statements(problem: Problem, answer: Mapping[str, Any], objective: fl
 
 def stored_run(problem: Problem, path: Path, run: int) -> tuple[I8, Certificate]:
     """Best configuration and certificate of a run, as they stand in the file: check them before use."""
-    with contextlib.closing(sqlite3.connect(f"file:{path}?mode=ro", uri=True)) as database:
+    with contextlib.closing(read_only(path)) as database:
         (blob,) = database.execute("SELECT spins FROM runs WHERE run = ?", (run,)).fetchone()
         stored = stored_certificate(database, run)
         if stored is None:

@@ -113,9 +113,13 @@ def _earlier_run(path: Path, problem: Problem) -> tuple[I8, Certificate]:
 
 
 def default_size(problem: Problem, subsolver: Subsolver) -> int:
-    """Spins in a cluster where nothing is said: by the couplings per spin for elimination, else up to 12."""
+    """Spins in a cluster where nothing is said: by the couplings per spin for elimination, else up to 12.
+
+    Clusters of more than half of a periodic lattice would meet themselves, too wide to be eliminated.
+    """
     degree = 2 * problem.coupling_count / len(problem)
     size = next((size for most, size in SIZES if degree <= most), DENSE_SIZE)
+    size = min(size, max(DENSE_SIZE, len(problem) // 2))
     if subsolver.name != DEFAULT_SUBSOLVER:
         size = DEFAULT_CLUSTER_SIZE
     return min(size, len(problem), subsolver.max_spins)

@@ -14,7 +14,7 @@ from patchwalk.commands.comparing import Comparison, outcome_of
 from patchwalk.evidence.compared_runs import FinishedRun, finished_identities, finished_runs
 from patchwalk.evidence.comparing import Duel, Outcome, duels, performance_curves, standings
 from patchwalk.evidence.layout import RunFileError
-from patchwalk.evidence.stored import StoredFile
+from patchwalk.evidence.stored import StoredFile, read_only
 from patchwalk.problem.files import read_problem
 from patchwalk.problem.ising import Problem, ProblemError
 
@@ -32,7 +32,7 @@ class StoredComparison:
 def stored_comparisons(file: StoredFile) -> list[StoredComparison]:
     """Every comparison in a file of compared runs, nothing run again."""
     try:
-        with contextlib.closing(sqlite3.connect(f"file:{file.path}?mode=ro", uri=True)) as database:
+        with contextlib.closing(read_only(file.path)) as database:
             runs = finished_runs(database, dict.fromkeys(sorted(finished_identities(database))))
     except sqlite3.Error as error:
         raise RunFileError(f"{file.path}: could not be read: {error}") from error

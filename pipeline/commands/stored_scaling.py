@@ -13,7 +13,7 @@ from patchwalk.commands.scaling_measurements import timed_variants
 from patchwalk.evidence.layout import RunFileError
 from patchwalk.evidence.scaling import limit_sentence
 from patchwalk.evidence.scaling_rows import ScalingRow, all_rows
-from patchwalk.evidence.stored import StoredFile
+from patchwalk.evidence.stored import StoredFile, read_only
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import ProblemError
 from patchwalk.subsolvers.registry import NotReadyError, SubsolverError, spelled, subsolver_from
@@ -28,7 +28,7 @@ def stored_scaling(file: StoredFile) -> Scaled:
     Spellings that only stand there because times were tuned have no curve of their own.
     """
     try:
-        with contextlib.closing(sqlite3.connect(f"file:{file.path}?mode=ro", uri=True)) as database:
+        with contextlib.closing(read_only(file.path)) as database:
             rows = all_rows(database)
             setup = dict(database.execute("SELECT key, value FROM scaling_setup"))
     except sqlite3.Error as error:

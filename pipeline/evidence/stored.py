@@ -38,6 +38,11 @@ class StoredRun:
     message: str | None
 
 
+def read_only(path: Path) -> sqlite3.Connection:
+    """A connection that can only read, whatever signs the name of the file holds."""
+    return sqlite3.connect(f"{path.absolute().as_uri()}?mode=ro", uri=True, isolation_level=None)
+
+
 class StoredFile:
     """A run file opened for reading; raises :class:`RunFileError` for anything that is none."""
 
@@ -46,7 +51,7 @@ class StoredFile:
         if not path.exists():
             raise RunFileError(f"{path}: there is no such run file")
         try:
-            self._database = sqlite3.connect(f"file:{path}?mode=ro", uri=True, isolation_level=None)
+            self._database = read_only(path)
             self._database.row_factory = sqlite3.Row
             layout = self._database.execute("SELECT value FROM about WHERE key = 'layout'").fetchone()
         except sqlite3.Error as error:

@@ -10,6 +10,7 @@ import subprocess
 import sys
 import time
 from collections.abc import Callable
+from contextlib import closing
 from pathlib import Path
 from typing import Any
 
@@ -356,3 +357,10 @@ def test_a_gaussian_torus(instance: Callable[[str], Path], tmp_path: Path) -> No
     found = patchwalk.bound(instance("torusg3-8.dat"), kind="maxcut", seconds=600, run=tmp_path / "run.sqlite")
     assert found.status == "proved_optimal"
     assert found.objective == 41684814.0
+
+
+def test_clusters_of_its_own_choice_can_be_answered(tmp_path: Path) -> None:
+    glass = patchwalk.make("lattice2d", 12, couplings="gaussian", seed=3)
+    found = patchwalk.bound(glass, run=tmp_path / "bound.sqlite")
+    with closing(sqlite3.connect(tmp_path / "bound.sqlite")) as database:
+        assert database.execute("SELECT count(*), max(status) FROM calls").fetchone() == (found.calls, 0)

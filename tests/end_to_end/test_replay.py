@@ -35,6 +35,15 @@ def run(tmp_path: Path) -> Path:
     ).run_path
 
 
+def test_the_file_alone_holds_everything_whatever_its_name(run: Path) -> None:
+    odd = run.rename(run.with_name("run #1? 100%.sqlite"))
+    told = patchwalk("replay", odd, "--rival", "enumeration", "--workers", 1)
+    assert told.exit_code == 0, told.output
+    copied = odd.with_name("copied.sqlite")
+    copied.write_bytes(odd.read_bytes())  # as if sent by mail, without a log beside it
+    assert count(copied) == count(odd) == 2 * 80
+
+
 def test_a_table_for_people(run: Path) -> None:
     told = patchwalk("replay", run, "--rival", "enumeration", "--rival", "none", "--workers", 1)
     assert told.exit_code == 0, told.output
