@@ -12,9 +12,6 @@ from patchwalk.subsolvers.contract import F64, I32, I64, U64
 from patchwalk.subsolvers.draws import seed_for, stream_for
 from patchwalk.workers import Serial, Workers
 
-SIDE_BY_SIDE = 16
-"""Replicas are dealt out in groups of so many, which a carrier sweeps at once."""
-
 SWEEP, GROUPS = 3, 8
 """The words of the streams that sweeps and moves inside groups draw from."""
 
@@ -52,13 +49,14 @@ class Carrying:
             )
 
         workers = self.workers if self.workers.same_memory else Serial()
-        for _ in workers.ordered(part, self._parts(len(replicas), workers.count)):
+        for _ in workers.ordered(part, self.parts(len(replicas))):
             pass
 
-    def _parts(self, count: int, workers: int) -> list[tuple[int, int]]:
+    def parts(self, count: int) -> list[tuple[int, int]]:
         """Replicas dealt out to the workers in whole groups of those that are swept side by side."""
+        workers, together = self.workers.count if self.workers.same_memory else 1, self.carrier.together
         share = -(-count // workers)
-        share = -(-share // SIDE_BY_SIDE) * SIDE_BY_SIDE
+        share = -(-share // together) * together
         return [(first, min(count, first + share)) for first in range(0, count, share)]
 
     def _sweep_groups(self, replicas: Replicas, temperatures: F64, number: int, first: int) -> None:

@@ -14,7 +14,7 @@ import numpy.typing as npt
 
 from patchwalk.problem.ising import Problem
 from patchwalk.search.sweep_colours import LANES, sweep_listed, sweep_packed
-from patchwalk.search.sweep_replicas import LaneTables, lane_tables, sweep_side_by_side
+from patchwalk.search.sweep_replicas import NARROW, LaneTables, lane_tables, sweep_side_by_side
 from patchwalk.search.sweep_rows import fields_from_matrix, sweep_matrix
 from patchwalk.search.sweep_tables import U32, Batches, batches_of, palette_of
 from patchwalk.subsolvers.compiled import compiled
@@ -65,6 +65,12 @@ class Carrier:
             return sweep_packed(*self._packed, spins, local_fields, cold, stream, sweeps)
         return sweep_listed(*self._batched_lists, spins, local_fields, cold, stream, sweeps)
 
+    @property
+    def together(self) -> int:
+        """How many replicas :meth:`sweep_replicas` takes at once: to divide so many between threads gains nothing."""
+        small = self.representation == "matrix" and len(self.problem) <= LARGEST_CACHED_MATRIX
+        return 1 if small else NARROW
+
     def sweep_replicas(
         self, spins: I8, local_fields: F64 | None, temperatures: F64, seeds: U64, sweeps: int = 1
     ) -> F64:
@@ -80,7 +86,7 @@ class Carrier:
         gives, which takes about as long as one sweep. With None they are not wanted: faster in lanes, slower for
         dense problems, which then have to find them first.
         """
-        if self.representation == "matrix" and len(self.problem) <= LARGEST_CACHED_MATRIX:
+        if self.together == 1:
             return self._one_after_the_other(spins, local_fields, temperatures, seeds, sweeps)
         return sweep_side_by_side(self.problem, self._lane_tables, spins, local_fields, temperatures, seeds, sweeps)
 

@@ -26,12 +26,15 @@ import numpy as np
 
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
+from patchwalk.search.carrying import Carrying
+from patchwalk.search.replicas import Replicas
 from patchwalk.search.sweeps import carrier_for, metropolis_sweep
 from patchwalk.search.temperature import GeometricCooling
 from patchwalk.subsolvers.compiled import compiled
 from patchwalk.subsolvers.contract import F64, I8, I32, I64
 from patchwalk.subsolvers.draws import call_seeds, seed_for, stream_for
 from patchwalk.subsolvers.neighbours import TIE_CHANCE
+from patchwalk.workers import Serial, Threads, Workers
 
 RUNS = 6
 REPLICAS = 32
@@ -168,6 +171,24 @@ def threads(problem: Problem, sweeps: int = 400) -> None:
     print(f"two threads: {max(ratios):.2f} times one (five tries: {', '.join(f'{ratio:.2f}' for ratio in ratios)})")
 
 
+def searched(problem: Problem, sweeps: int = 400) -> None:
+    """32 replicas, as a search carries them, with one worker and with two threads."""
+    temperatures, seconds = np.full(32, problem.field_scale), []
+    pools: tuple[Workers, Workers] = (Serial(), Threads(2))
+    for number in range(6):
+        seconds.append([])
+        for workers in pools:
+            replicas, carrying = Replicas.random(problem, 32, 1), Carrying(problem, 1, workers)
+            carrying.sweep(replicas, temperatures, 0, 0, 1)
+            began = time.perf_counter()
+            carrying.sweep(replicas, temperatures, number, 0, sweeps)
+            seconds[-1].append(time.perf_counter() - began)
+    ratios = [alone / shared for alone, shared in seconds[1:]]
+    pools[1].close()
+    print(f"a search's 32 replicas: two threads {max(ratios):.2f} times one (aim 1.8; "
+          f"five tries: {', '.join(f'{ratio:.2f}' for ratio in ratios)})")  # fmt: skip
+
+
 def one_size(edge: int) -> None:
     """Seconds per sweep and peak memory on a cubic lattice, at equal acceptance; run in a process of its own."""
     problem = make("lattice3d", edge, seed=1)
@@ -234,4 +255,6 @@ if __name__ == "__main__":
             print(words)
             one_by_one(problem())
         threads(make("lattice3d", 22))
+        searched(make("lattice3d", 22))
+        searched(make("sk", 500), 40)
         sizes()

@@ -18,6 +18,8 @@ import pytest
 from patchwalk import make, replay, scale, solve, workers
 from patchwalk.engine import slice_bounds
 from patchwalk.problem.ising import Problem
+from patchwalk.search.carrying import Carrying
+from patchwalk.search.replicas import Replicas
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import ClusterBatch, Proposals, Subsolver, Work, all_well
 from patchwalk.subsolvers.walk import Walk
@@ -260,6 +262,20 @@ def test_replicas_are_dealt_out_in_whole_groups(in_small_pieces: None) -> None:
     runs = [solve(problem, **settings, workers=count, run=f"{count}.sqlite") for count in (1, 2, 3)]
     assert len({run.spins.tobytes() for run in runs}) == 1
     assert len({run.energy for run in runs}) == 1
+
+
+@pytest.mark.parametrize(("family", "parts"), [("sk", [(0, 8), (8, 16)]), ("lattice2d", [(0, 16)])])
+def test_a_default_ladder_is_divided_where_that_gains_anything(family: str, parts: list[tuple[int, int]]) -> None:
+    """Small dense problems are swept one replica after the other, all others sixteen at a time."""
+    problem = make(family, 64 if family == "sk" else 8, seed=1)
+    ends: list[bytes] = []
+    for pool in (Serial(), Threads(2)):
+        carrying, replicas = Carrying(problem, 5, pool), Replicas.random(problem, 16, 2)
+        carrying.sweep(replicas, np.full(16, 0.5), 0, 0, 10)
+        ends.append(replicas.spins.tobytes() + replicas.energies.tobytes() + replicas.local_fields.tobytes())
+        assert carrying.parts(16) == (parts if pool.count == 2 else [(0, 16)])
+        pool.close()
+    assert ends[0] == ends[1]
 
 
 def test_slices_for_several_workers_grow_shorter() -> None:
