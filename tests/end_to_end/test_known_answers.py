@@ -139,3 +139,15 @@ def test_on_the_demo_walks_come_clearly_lower_than_random_configurations(tmp_pat
     walk = lowest_energies(DEMO, "walk,shots=2", tmp_path, calls=2000)
     uniform = lowest_energies(DEMO, "uniform,shots=2", tmp_path, calls=2000)
     assert max(walk) < 0.97 * min(uniform)
+
+
+def test_the_optimum_of_the_demo_is_proved_and_the_proof_checked(tmp_path: Path) -> None:
+    beacons = DEMO.with_name("quillmere.csv")
+    found = patchwalk.bound(beacons, run=tmp_path / "demo.sqlite")
+    assert found.status == "proved_optimal"
+    assert found.energy == pytest.approx(2446.01, abs=0.005)  # the README's figure
+    assert patchwalk.audit(beacons, tmp_path / "demo.sqlite").proved_optimal
+    whole = patchwalk.solve(
+        beacons, subsolver="elimination", cluster_size=600, calls=1, sweeps=0, replicas=1, run=tmp_path / "one.sqlite"
+    )
+    assert whole.energy == pytest.approx(found.lower_bound)
