@@ -34,11 +34,11 @@ class BoundStep(NamedTuple):
 class StageCount(NamedTuple):
     """All calls of a subsolver (spelled) in one tenth of the budget of a run, counted by what became of them.
 
-    ``moved`` changed a spin, ``improved`` lowered the energy; ``hits`` is the sum of the hit probabilities of the
-    ``surveyed`` calls for which one is known.
+    ``run`` names file and number, for numbers begin anew in every file. ``moved`` changed a spin, ``improved`` lowered
+    the energy; ``hits`` is the sum of the hit probabilities of the ``surveyed`` calls for which one is known.
     """
 
-    run: int
+    run: str
     subsolver: str
     tenth: int
     calls: int
@@ -123,7 +123,7 @@ def stage_counts(file: StoredFile, run: int) -> list[StageCount]:
         for place, value in enumerate(tuple(row)[2:]):
             sums[place] += value
     return [
-        StageCount(run, who, tenth, int(n), int(a), int(m), int(i), int(f), hits, int(surveyed))
+        StageCount(f"{file.path}, run {run}", who, tenth, int(n), int(a), int(m), int(i), int(f), hits, int(surveyed))
         for (who, tenth), (n, a, m, i, f, hits, surveyed) in sorted(found.items())
     ]
 

@@ -210,6 +210,20 @@ def test_a_bound_stands_beside_the_runs_of_its_problem(tmp_path: Path) -> None:
     assert "lower bound" in kinds
 
 
+def test_runs_of_several_files_are_as_many_runs(tmp_path: Path) -> None:
+    """Numbers of runs begin anew in every file; intervals over runs are those of one file that holds all runs."""
+    write_problem(make("lattice2d", 5, seed=1), tmp_path / "glass.txt")
+    files = {}
+    for name, seeds in (("one", [1]), ("other", [2]), ("both", [1, 2])):
+        files[name] = tmp_path / f"{name}.sqlite"
+        solve(tmp_path / "glass.txt", subsolver="walk", cluster_size=5, calls=40, seeds=seeds, run=files[name])
+    apart = Page(report([files["one"], files["other"]], tmp_path / "apart.html").path.read_text()).tables()
+    together = Page(report(files["both"], tmp_path / "together.html").path.read_text()).tables()
+    header, *rows = apart["c1-fates.csv"]
+    assert all(row[header.index("accepted low")] for row in rows)
+    assert apart["c1-fates.csv"] == together["c1-fates.csv"]
+
+
 def test_the_demos_caution_comes_with_the_demo(tmp_path: Path) -> None:
     write_problem(make("beacons", 30, seed=1), tmp_path / "coast.csv")
     path = solve(tmp_path / "coast.csv", cluster_size=6, calls=20, run=tmp_path / "run.sqlite").run_path
