@@ -28,6 +28,7 @@ from patchwalk.problem.files import read_problem
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.problem.kinds.plain import PlainSpins
 from patchwalk.problem.meanings import Answer, Encoding
+from patchwalk.settings import ProblemSettings
 from patchwalk.statistics import Estimate, mean_of
 
 SPOKEN_SPINS = 20_000
@@ -183,12 +184,8 @@ def _problem_of(run: StoredRun, kept: Problem) -> tuple[Problem, list[str]]:
     if not Path(run.source).is_file():
         return kept, [f"the problem's own file is not there: {bare}"]
     try:
-        found = read_problem(
-            run.source,
-            kind=run.settings.get("kind"),
-            field_file=run.settings.get("field_file"),
-            flip_sign=bool(run.settings.get("flip_sign")),
-        )
+        told = {key: run.settings.get(key) for key in ProblemSettings.model_fields}
+        found = read_problem(run.source, **{key: value for key, value in told.items() if value is not None})
     except (ProblemError, OSError):
         return kept, [f"the problem's own file can no longer be read: {bare}"]
     if found.fingerprint != kept.fingerprint:

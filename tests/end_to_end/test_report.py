@@ -248,6 +248,16 @@ def test_an_answer_that_cannot_be_checked_is_not_called_valid(tmp_path: Path) ->
     assert "answernot checked" in bare
 
 
+def test_how_a_file_was_read_is_how_it_is_read_again(tmp_path: Path) -> None:
+    """A colouring whose number of colours stands in the settings alone."""
+    (tmp_path / "map.csv").write_text("a,b\nb,c\nc,a\nc,d\n")
+    run = tmp_path / "run.sqlite"
+    solve(tmp_path / "map.csv", kind="colouring", colours=3, subsolver="enumeration", cluster_size=3, calls=40, run=run)
+    text = Page(report(run, tmp_path / "page.html").path.read_text()).text
+    assert "has changed since" not in text
+    assert "not checked" not in text
+
+
 def test_compared_runs_and_scaling(tmp_path: Path) -> None:
     """The page of a comparison says what the comparison said, that of scaling what scale found."""
     glass = tmp_path / "glass.txt"
