@@ -20,7 +20,7 @@ from patchwalk.commands.scaling import Scaled
 from patchwalk.commands.stored_comparisons import StoredComparison, stored_comparisons
 from patchwalk.commands.stored_scaling import stored_scaling
 from patchwalk.commands.told_runs import StageCount, ToldRun, has_table, stage_counts, told_run
-from patchwalk.evidence.layout import RunFileError, as_f64
+from patchwalk.evidence.layout import RunFileError, as_f64, undamaged
 from patchwalk.evidence.profiling import Profile
 from patchwalk.evidence.stored import StoredFile, StoredRun, stored_file
 from patchwalk.problem.decoding import answer_lines, encoding_of, verdict
@@ -230,7 +230,8 @@ def _averages(told: Sequence[tuple[StoredFile, StoredRun, ToldRun]]) -> Iterator
     for file, run, _ in told:
         query = "SELECT temperature, copies, energies FROM measurements WHERE run = ? ORDER BY temperature"
         for row in file.rows(query, (run.number,)):
-            series = as_f64(row["energies"]).reshape(-1, row["copies"])
+            with undamaged(file.path, f"a measured series of run {run.number}"):
+                series = as_f64(row["energies"]).reshape(-1, row["copies"])
             if len(series) > 1:
                 yield row["temperature"], mean_of(np.ascontiguousarray(series))
 

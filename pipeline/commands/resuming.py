@@ -13,7 +13,7 @@ from patchwalk.commands.answers import answered, settled
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.solving import Silent, Solution, Watcher, best_of, carry_out_one, delivered, hired, runs_of
 from patchwalk.commands.tasks import Task, policy_of, read_again
-from patchwalk.evidence.layout import RunFileError, unpacked, unpacked_rows
+from patchwalk.evidence.layout import RunFileError, undamaged, unpacked, unpacked_rows
 from patchwalk.evidence.runfile import RunFile
 from patchwalk.evidence.stored import StoredFile, StoredRun, stored_file
 from patchwalk.problem.ising import Problem, ProblemError
@@ -153,7 +153,8 @@ def _start_of(stored: StoredFile, run: StoredRun, settings: SolveSettings, probl
         return None
     query = "SELECT spins FROM checkpoints WHERE run = ? AND round = 0"
     row = next(stored.rows(query, (run.number,)))
-    return unpacked_rows(row["spins"], len(problem))[-1]  # the coldest replica
+    with undamaged(stored.path, f"the start of run {run.number}"):
+        return unpacked_rows(row["spins"], len(problem))[-1]  # the coldest replica
 
 
 def _bits_may_differ(run: StoredRun) -> list[str]:
@@ -167,8 +168,10 @@ def _bits_may_differ(run: StoredRun) -> list[str]:
 def _solution_of(stored: StoredFile, run: StoredRun, task: Task) -> Solution:
     """The solution of a run that has ended."""
     row = next(stored.rows("SELECT * FROM runs WHERE run = ?", (run.number,)))
+    with undamaged(stored.path, f"the answer of run {run.number}"):
+        spins = unpacked(row["spins"], len(task.problem))
     return Solution(
-        **answered(task.problem, _found_by(stored, run, task.problem, unpacked(row["spins"], len(task.problem)))),
+        **answered(task.problem, _found_by(stored, run, task.problem, spins)),
         status=row["status"], message=row["message"], seconds=row["seconds"], compile_seconds=row["compile_seconds"],
         calls=row["calls"], failed_calls=row["failed_calls"], skipped=row["skipped"], sweeps=row["sweeps"],
         seed=run.seed, run_path=task.run_path, notes=task.problem.notes, lower_bound=row["lower_bound"],
@@ -178,5 +181,7 @@ def _solution_of(stored: StoredFile, run: StoredRun, task: Task) -> Solution:
 def _found_by(stored: StoredFile, run: StoredRun, problem: Problem, spins: I8) -> I8:
     """What the search found before it was mended to ``spins``, so that the repair can be told once more."""
     query = "SELECT best_spins FROM checkpoints WHERE run = ? ORDER BY round DESC LIMIT 1"
-    found = unpacked(next(stored.rows(query, (run.number,)))["best_spins"], len(problem))
+    row = next(stored.rows(query, (run.number,)))
+    with undamaged(stored.path, f"the last state of run {run.number}"):
+        found = unpacked(row["best_spins"], len(problem))
     return found if np.array_equal(settled(problem, found), spins) else spins

@@ -22,7 +22,7 @@ from patchwalk.commands.tasks import Task, policy_of
 from patchwalk.cost import priced
 from patchwalk.engine import Answered, answers, prepared
 from patchwalk.evidence.cost_models import work_of
-from patchwalk.evidence.layout import unpacked_rows
+from patchwalk.evidence.layout import undamaged, unpacked_rows
 from patchwalk.evidence.stored import StoredFile, StoredRun
 from patchwalk.evidence.sweep_curves import CallName, StateBefore
 from patchwalk.search.neighbourhood import NeighbourhoodSearch
@@ -66,7 +66,9 @@ def _task_of(stored: StoredFile, run: StoredRun) -> Task:
     start = None
     if settings.start is not None:
         query = "SELECT spins FROM checkpoints WHERE run = ? AND round = 0"
-        start = unpacked_rows(next(stored.rows(query, (run.number,)))["spins"], len(problem))[-1]  # the coldest replica
+        row = next(stored.rows(query, (run.number,)))
+        with undamaged(stored.path, f"the start of run {run.number}"):
+            start = unpacked_rows(row["spins"], len(problem))[-1]  # the coldest replica
     assert settings.cluster_size is not None
     return Task(
         problem=problem, source=run.source, settings=settings, policy=policy_of(settings, Path(), ""),

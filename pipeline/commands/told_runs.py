@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 from typing import Any, NamedTuple
 
-from patchwalk.evidence.layout import unpacked
+from patchwalk.evidence.layout import undamaged, unpacked
 from patchwalk.evidence.stored import StoredFile, StoredRun
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import I8, Status
@@ -90,11 +90,13 @@ def told_run(file: StoredFile, run: StoredRun, problem: Problem) -> ToldRun | No
     if not ended and state is None:
         return None
     known = row if ended or state is None else state
-    spins = unpacked(row["spins"] if ended or state is None else state["best_spins"], len(problem))
+    with undamaged(file.path, f"the answer of run {run.number}"):
+        spins = unpacked(row["spins"] if ended or state is None else state["best_spins"], len(problem))
+    proved = _proved(file, run.number) if row["lower_bound"] is None else row["lower_bound"]
     return ToldRun(
         file=str(file.path), number=run.number, seed=run.seed, command=_command(run), subsolver=run.subsolver,
         status=run.status if ended else "unfinished", message=(run.message or "") if ended else CUT_SHORT,
-        energy=problem.energy(spins), spins=spins, lower_bound=row["lower_bound"] or _proved(file, run.number),
+        energy=problem.energy(spins), spins=spins, lower_bound=proved,
         calls=known["calls"] or 0, failed_calls=row["failed_calls"] or 0, skipped=row["skipped"] or 0,
         sweeps=known["sweeps"] or 0, seconds=known["seconds"] or 0.0, begun=row["begun"],
         incumbents=_incumbents(file, run.number), bounds=_bounds(file, run.number), settings=run.settings,

@@ -8,8 +8,12 @@ float64, ``counts`` int64, measured series float64 (rounds, copies). A problem's
 
 from __future__ import annotations
 
+import contextlib
 import io
 import zipfile
+import zlib
+from collections.abc import Iterator
+from pathlib import Path
 
 import numpy as np
 
@@ -82,6 +86,15 @@ class RunFileError(Exception):
     """A run file that cannot be made, written or read; the message names it and the way out."""
 
 
+@contextlib.contextmanager
+def undamaged(path: Path, what: str) -> Iterator[None]:
+    """Bytes of a run file are read within the block; raises :class:`RunFileError` where they are not as written."""
+    try:
+        yield
+    except (ValueError, TypeError, IndexError) as error:
+        raise RunFileError(f"{path}: {what} is damaged: {error}") from error
+
+
 def packed(spins: I8) -> bytes:
     """Spins (n,) or (R, n) as bits, 1 for -1.
 
@@ -126,8 +139,8 @@ def problem_from_blob(blob: bytes, kind: str) -> Problem:
                 fields=arrays["fields"], offset=float(arrays["offset"]), kind=kind,
                 groups=tuple(groups),
             )  # fmt: skip
-    except (ValueError, KeyError, OSError, zipfile.BadZipFile) as error:
-        raise RunFileError(f"the problem inside the run file is damaged: {error}") from error
+    except (ValueError, TypeError, KeyError, OSError, EOFError, zlib.error, zipfile.BadZipFile) as error:
+        raise RunFileError(f"the problem inside is damaged: {error}") from error
 
 
 def follow_from_spins(problem: Problem) -> bool:

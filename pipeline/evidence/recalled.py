@@ -15,6 +15,7 @@ import numpy as np
 import numpy.typing as npt
 
 from patchwalk.clusters.conditioning import condition
+from patchwalk.evidence.layout import undamaged
 from patchwalk.evidence.stored import StoredFile
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import F64, I8, I32, I64, U8, WORK_FIELDS, ClusterBatch, Work
@@ -73,14 +74,23 @@ def recalled_calls(
                 continue
             piece.append(row)
             if len(piece) == ROWS_AT_ONCE:
-                yield _recalled(piece, problem)
+                yield _recalled(file, piece, problem)
                 piece = []
         if piece:
-            yield _recalled(piece, problem)
+            yield _recalled(file, piece, problem)
 
 
-def _recalled(rows: list[sqlite3.Row], problem: Problem) -> RecalledCalls:
-    members = np.stack([np.frombuffer(row["members"], "<i4") for row in rows]).astype(np.int32)
+def _recalled(file: StoredFile, rows: list[sqlite3.Row], problem: Problem) -> RecalledCalls:
+    first, last = rows[0], rows[-1]
+    what = f"a call of run {first['run']}, one of those of rounds {first['round']} to {last['round']},"
+    with undamaged(file.path, what):
+        members = _stacked(rows, "members", "<i4").astype(np.int32)
+        if members.min() < 0 or members.max() >= len(problem):
+            raise ValueError(f"its members are no spins of the problem, which has {len(problem):,}")
+        return _as_arrays(rows, members, problem)
+
+
+def _as_arrays(rows: list[sqlite3.Row], members: I32, problem: Problem) -> RecalledCalls:
     return RecalledCalls(
         run=rows[0]["run"],
         subsolver=rows[0]["subsolver"],
@@ -91,7 +101,7 @@ def _recalled(rows: list[sqlite3.Row], problem: Problem) -> RecalledCalls:
         places=_column(rows, "place", np.int64),
         stages=_column(rows, "stage", np.float64),
         rules=tuple(row["rule"] for row in rows),
-        proposals=np.stack([np.frombuffer(row["proposal"], np.int8) for row in rows]),
+        proposals=_stacked(rows, "proposal", np.int8),
         changes=_column(rows, "change", np.float64),
         accepted=_column(rows, "accepted", np.bool_),
         energies_before=_column(rows, "energy_before", np.float64),
@@ -112,13 +122,18 @@ def _question(rows: list[sqlite3.Row], members: I32, problem: Problem) -> Cluste
         problem, members, np.ones(size, np.int8), np.zeros(size), temperatures, seeds, np.full(size, -1, np.int32)
     )
     return ClusterBatch(
-        fields=np.stack([np.frombuffer(row["boundary_fields"], "<f8") for row in rows]),
-        spins=np.stack([np.frombuffer(row["spins_before"], np.int8) for row in rows]),
+        fields=_stacked(rows, "boundary_fields", "<f8"),
+        spins=_stacked(rows, "spins_before", np.int8),
         temperature=temperatures,
         seeds=seeds,
         couplings=blank.couplings,
         edges=blank.edges,
     )
+
+
+def _stacked(rows: list[sqlite3.Row], name: str, dtype: Any) -> npt.NDArray[Any]:
+    """The blobs of a column, k values each, as (B, k)."""
+    return np.stack([np.frombuffer(row[name], dtype, count=row["k"]) for row in rows])
 
 
 def _column(rows: list[sqlite3.Row], name: str, dtype: Any) -> npt.NDArray[Any]:

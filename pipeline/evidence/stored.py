@@ -12,7 +12,15 @@ from typing import Any
 
 import numpy as np
 
-from patchwalk.evidence.layout import LAYOUT, RunFileError, as_f64, problem_from_blob, unpacked, unpacked_rows
+from patchwalk.evidence.layout import (
+    LAYOUT,
+    RunFileError,
+    as_f64,
+    problem_from_blob,
+    undamaged,
+    unpacked,
+    unpacked_rows,
+)
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Snapshot
 
@@ -77,15 +85,16 @@ class StoredFile:
         """All runs in the order they began."""
         query = "SELECT runs.*, problems.source FROM runs JOIN problems ON runs.problem = fingerprint ORDER BY run"
         rows = list(self.rows(query))
-        try:
+        with undamaged(self.path, "its table of runs"):
             return [_stored_run(row) for row in rows]
-        except ValueError as error:
-            raise RunFileError(f"{self.path}: its table of runs is damaged: {error}") from error
 
     def problem(self, fingerprint: str) -> Problem:
         """The problem as the run file holds it: without names, but to the last bit."""
         row = next(self.rows("SELECT arrays, kind FROM problems WHERE fingerprint = ?", (fingerprint,)))
-        problem = problem_from_blob(row["arrays"], row["kind"])
+        try:
+            problem = problem_from_blob(row["arrays"], row["kind"])
+        except RunFileError as error:
+            raise RunFileError(f"{self.path}: {error}") from error
         if problem.fingerprint != fingerprint:
             raise RunFileError(f"{self.path}: the problem inside does not have the fingerprint {fingerprint[:12]}")
         return problem
@@ -96,7 +105,8 @@ class StoredFile:
         row = next(self.rows(query, (run,)), None)
         if row is None:
             raise RunFileError(f"{self.path}: run {run} has no checkpoint")
-        return _snapshot(row, problem)
+        with undamaged(self.path, f"the last state of run {run}"):
+            return _snapshot(row, problem)
 
 
 def _stored_run(row: sqlite3.Row) -> StoredRun:

@@ -224,6 +224,13 @@ def test_runs_of_several_files_are_as_many_runs(tmp_path: Path) -> None:
     assert apart["c1-fates.csv"] == together["c1-fates.csv"]
 
 
+def test_a_bound_of_zero_is_a_bound(tmp_path: Path) -> None:
+    path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path
+    with contextlib.closing(sqlite3.connect(path)) as database, database:
+        database.execute("UPDATE runs SET lower_bound = 0.0")
+    assert "bound on the energy0" in Page(report(path, tmp_path / "page.html").path.read_text()).text
+
+
 def test_the_demos_caution_comes_with_the_demo(tmp_path: Path) -> None:
     write_problem(make("beacons", 30, seed=1), tmp_path / "coast.csv")
     path = solve(tmp_path / "coast.csv", cluster_size=6, calls=20, run=tmp_path / "run.sqlite").run_path
@@ -320,7 +327,7 @@ def test_five_thousand_calls_and_six_rivals_stay_below_five_megabytes(tmp_path: 
     assert report(path, tmp_path / "page.html").size < 5_000_000
 
 
-def test_a_killed_run_is_told_as_far_as_it_came(run: Path, tmp_path: Path) -> None:
+def test_a_killed_run_is_told_as_far_as_it_came(tmp_path: Path) -> None:
     """Its last checkpoint is what there is, and the page says so."""
     path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path
     with contextlib.closing(sqlite3.connect(path)) as database, database:
@@ -332,14 +339,53 @@ def test_a_killed_run_is_told_as_far_as_it_came(run: Path, tmp_path: Path) -> No
     assert "Not carried through to the end of the budget: seed 1" in text
 
 
-def test_a_damaged_file_is_named(run: Path, tmp_path: Path) -> None:
-    path = solve(make("lattice2d", 4, seed=1), cluster_size=4, calls=20, run=tmp_path / "run.sqlite").run_path
+DAMAGE = {
+    "UPDATE runs SET settings = '{\"seed'": "its table of runs is damaged",
+    "UPDATE runs SET spins = x''": "the answer of run 1 is damaged",
+    "UPDATE runs SET spins = x'010203'": "the answer of run 1 is damaged",
+    "UPDATE runs SET spins = NULL; UPDATE checkpoints SET best_spins = x'01'": "the answer of run 1 is damaged",
+    "UPDATE problems SET arrays = x'504b'": "the problem inside is damaged",
+    "UPDATE problems SET arrays = 'text'": "the problem inside is damaged",
+    "UPDATE problems SET arrays = CAST(substr(arrays, 1, 99) || zeroblob(99) || substr(arrays, 199) AS BLOB)": (
+        "the problem inside is damaged"
+    ),
+}
+
+
+@pytest.mark.parametrize("damage", DAMAGE)
+def test_a_damaged_file_is_named(run: Path, damage: str, tmp_path: Path) -> None:
+    path = tmp_path / "run.sqlite"
+    shutil.copy(run, path)
     with contextlib.closing(sqlite3.connect(path)) as database, database:
-        database.execute("UPDATE runs SET settings = '{\"seed'")
+        database.executescript(damage)
     told = patchwalk("report", path, "-o", tmp_path / "page.html")
     assert told.exit_code == 1
-    assert f"{path}: its table of runs is damaged" in told.stderr
+    assert f"{path}: {DAMAGE[damage]}" in told.stderr
     assert not (tmp_path / "page.html").exists()
+
+
+@pytest.mark.parametrize(
+    "damage",
+    [
+        "proposal = x'01'",
+        "spins_before = x''",
+        "boundary_fields = 'text'",
+        "members = zeroblob(3)",
+        "members = CAST(x'ffffff7f' || substr(members, 5) AS BLOB)",
+    ],
+)
+def test_a_damaged_call_is_named(run: Path, damage: str, tmp_path: Path) -> None:
+    """By all that read calls: a replay, a profile, and the report, which says so where help would stand."""
+    path = tmp_path / "run.sqlite"
+    shutil.copy(run, path)
+    with contextlib.closing(sqlite3.connect(path)) as database, database:
+        database.execute(f"UPDATE calls SET {damage}")
+    said = f"{path}: a call of run 1, one of those of rounds"
+    for words in (("replay", path, "--rival", "tabu", "--calls", 5), ("profile", path)):
+        told = patchwalk(*words)
+        assert told.exit_code == 1
+        assert said in told.stderr
+    assert said in Page(report(path, tmp_path / "page.html").path.read_text()).text
 
 
 @pytest.mark.parametrize(
