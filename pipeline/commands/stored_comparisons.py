@@ -62,7 +62,9 @@ def _comparison(file: StoredFile, runs: list[FinishedRun]) -> StoredComparison:
         tuple(standings(outcomes, contenders)), tuple(found), tuple(performance_curves(outcomes, contenders)),
         tuple(notes), "finished", file.path,
     )  # fmt: skip
-    first = file.runs()[0]
+    query = "SELECT run FROM compared_runs WHERE identity = ?"
+    number = next(file.rows(query, (runs[0].run.identity,)))["run"]
+    first = next(run for run in file.runs() if run.number == number)
     return StoredComparison(comparison, tuple(runs), first.settings, first.versions)
 
 

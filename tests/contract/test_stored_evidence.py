@@ -21,6 +21,7 @@ def test_a_comparison_for_each_budget(tmp_path: Path) -> None:
     assert sorted(found) == [20.0, 40.0]
     for one in made:
         again = found[one.budget].comparison
+        assert found[one.budget].settings["calls"] == one.budget
         assert {(run.contender, run.seed, run.residual, run.reached) for run in again.outcomes} == {
             (run.contender, run.seed, run.residual, run.reached) for run in one.outcomes
         }

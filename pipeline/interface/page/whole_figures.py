@@ -109,7 +109,10 @@ def budget_figure(compared: StoredComparison, name: str) -> Picture:
         axes.set_ylabel("residual energy per spin")
         figure.legend(loc="outside lower center", ncols=1)
         svg = finished(figure, name)
-    table = Table(["share", *means], [[share, *(own[at] for own in means.values())] for at, share in enumerate(shares)])
+    table = Table(
+        ["seconds" if in_seconds else "share", *means],
+        [[share, *(own[at] for own in means.values())] for at, share in enumerate(shares)],
+    )
     caption = "The incumbent's energy above the reference, per spin, averaged over all runs of a contender."
     told = "; ".join(f"{contender} ends at {values[-1]:.3g}" for contender, values in means.items())
     return Picture(name, "Incumbent against budget", caption, f"Mean residual energy: {told}.", svg, table)
