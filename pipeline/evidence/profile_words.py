@@ -105,15 +105,17 @@ def _cost_lines(profile: Profile) -> list[str]:
             f"  help per second    {found.per_second}",
             f"  break-even factor  {profile.break_evens[rival]}",
         ]
+    return lines + [line for line in [exact_sentence(profile)] if line]
+
+
+def exact_sentence(profile: Profile) -> str:
+    """Which exact rivals win per call, and that this was to be expected; empty where none does."""
     exact = [
         name for name, found in profile.helps.items() if name.split(",")[0] in EXACT and found.per_call.value <= 0.0
     ]
-    if exact:
-        wins = "wins" if len(exact) == 1 else "win"
-        lines.append(
-            f"{' and '.join(exact)} {wins} per call, as exact answers to small clusters must: look at the cost"
-        )
-    return lines
+    wins = "wins" if len(exact) == 1 else "win"
+    told = f"{' and '.join(exact)} {wins} per call, as exact answers to small clusters must: look at the cost"
+    return told if exact else ""
 
 
 def _feature_lines(profile: Profile) -> Iterator[str]:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import contextlib
 import csv
+import dataclasses
 import io
 import json
 import re
@@ -20,6 +21,7 @@ from patchwalk import bound, compare, make, profile, replay, report, resume, sam
 from patchwalk.interface.cli import program
 from patchwalk.interface.page.appearance import COLOURS
 from patchwalk.interface.page.markup import Table, download, element, escaped
+from patchwalk.interface.page.words import helps_line
 
 NASTY = '<img src=x onerror="boom()">&$x_1$'
 NAMED = f'"{NASTY.replace(chr(34), chr(34) * 2)}"'
@@ -101,10 +103,18 @@ def test_everything_asked_for_is_on_the_page(page: Path, run: Path) -> None:
     assert [closing.index(word) for word in ("Helps:", "Where:", "Break-even:", "Untested:")] == sorted(
         closing.index(word) for word in ("Helps:", "Where:", "Break-even:", "Untested:")
     )
+    assert "Enumeration wins per call, as exact answers to small clusters must: look at the cost." in read.text
     assert "rivals not replayed: elimination, metropolis, tabu, descent" in closing
     assert "90 of 180 calls of walk were not replayed" in closing
     assert "its drop is signed" in read.text
     assert "no licence" not in read.text  # the caution of the demo belongs to the demo
+
+
+def test_losing_to_everybody_is_a_sentence_too(run: Path) -> None:
+    found = profile(run)
+    lost = dataclasses.replace(found, helps={"enumeration": found.helps["enumeration"]})
+    assert lost.helps["enumeration"].per_call.below_zero
+    assert "a call of walk, in energy units, is worth less than enumeration (" in helps_line(lost)
 
 
 def test_every_figure_has_its_data(page: Path, run: Path) -> None:
@@ -300,6 +310,7 @@ def test_sampling_runs_have_their_averages(tmp_path: Path) -> None:
     page = report(tmp_path / "run.sqlite", tmp_path / "page.html")
     text = Page(page.path.read_text()).text
     assert "Energies averaged over the Boltzmann law" in text
+    assert "no interval" not in text  # series have their errors, run by run
     for level in found.levels:
         assert f"{level.energy.value:,.6g}" in text
 

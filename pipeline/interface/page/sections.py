@@ -18,6 +18,7 @@ from patchwalk.commands.reporting import (
     ScalingChapter,
     settings_told,
 )
+from patchwalk.evidence.profile_words import exact_sentence
 from patchwalk.evidence.profiling import Profile
 from patchwalk.evidence.replayed import NONE
 from patchwalk.evidence.scaling import AVERAGES
@@ -165,17 +166,15 @@ def _rival_tables(profile: Profile) -> Iterator[Markup]:
     yield Table(header, rows).as_html("Rivals on the very same clusters, in energy units")
     factors = [[rival, str(one)] for rival, one in profile.break_evens.items()]
     yield Table(["rival", "break-even factor"], factors).as_html("How many times faster calls must become")
-    exact = [rival for rival, one in profile.helps.items()
-             if rival.split(",")[0] in ("enumeration", "elimination") and one.per_call.value <= 0.0]  # fmt: skip
+    exact = exact_sentence(profile)
     if exact:
-        yield element("p", f"{' and '.join(exact)} win per call, as exact answers to small clusters must: "
-                      "look at the cost.", class_="soft")  # fmt: skip
+        yield element("p", sentence(exact), class_="soft")
 
 
 def _families(profile: Profile) -> Iterator[Markup]:
     """Noise, shots and times, where rivals differ in them alone."""
     for limit in profile.noise:
-        yield element("p", f"Noise: {limit.sentence}.")
+        yield element("p", f"Noise, {limit.parameter}: {limit.sentence}.")
     for best in profile.settings:
         rows = [[one.setting or "default", str(one.drop), str(one.per_second), str(one.worth)] for one in best.members]
         yield Table([best.parameter, "drop", "drop per second", f"worth against {profile.baseline}"], rows).as_html(
@@ -221,7 +220,7 @@ def _runs_table(chapter: RunsChapter) -> Iterator[Markup]:
     if len(energies) > 1:
         spread = bootstrap(np.stack([energies, np.ones(len(energies))], axis=1), lambda sums: sums[:, 0] / sums[:, 1])
         yield element("p", f"Mean energy of {len(energies)} runs: {spread}, a 95 % interval over runs.")
-    else:
+    elif len(energies) == 1:
         yield element("p", "One run has no interval; solve with --seeds 1..5 for one.")
 
 
@@ -268,7 +267,9 @@ def _compared_parts(chapter: ComparedChapter, name: str) -> Iterator[Markup]:
               if value is not None and key not in ("seed", "seeds", "subsolver", "callers", "run")]  # fmt: skip
     yield from _made_of(chapter.compared.versions, [("seeds", [seeds]), *shared])
     yield element(
-        "p", "Settings are those of the first run; contenders may differ in what their names say.", class_="soft"
+        "p",
+        "Settings are those of the first of these runs; contenders may differ in what their names say.",
+        class_="soft",
     )
     yield element("h3", "Cautions")
     yield listed([*map(sentence, found.notes), words.SIMULATED, words.SAME_BITS])

@@ -104,7 +104,7 @@ def helps_line(profile: Profile) -> str:
     for rival, one in profile.helps.items():
         side = more if one.per_call.above_zero else less if one.per_call.below_zero else unclear
         side.append(f"{rival} ({one.per_call})")
-    beginnings = (("is worth more than", more), ("less than", less), ("cannot be told from", unclear))
+    beginnings = (("is worth more than", more), ("is worth less than", less), ("cannot be told from", unclear))
     parts = [f"{words} {', '.join(those)}" for words, those in beginnings if those]
     verdict = {"call": "yes", "call when": "as part of the rule below", "do not call": "no"}
     told = verdict.get(profile.verdict, "cannot tell")
@@ -155,8 +155,7 @@ def break_even_line(profile: Profile) -> str:
 def _untested_runs(chapter: RunsChapter, others: Sequence[object]) -> Iterator[str]:
     """What these runs leave open."""
     yield "no device was asked" if not _asked_external(chapter) else "devices were asked at their own pace"
-    solved = [run for run in chapter.runs if run.command != "bound"]
-    if len(solved) < 2:
+    if [run.command for run in chapter.runs].count("solve") == 1:
         yield "one run, so no interval: solve with --seeds 1..5"
     profile = chapter.worth.profile
     if profile is None:
