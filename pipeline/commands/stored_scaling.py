@@ -37,7 +37,8 @@ def stored_scaling(file: StoredFile) -> Scaled:
         raise RunFileError(f"{file.path}: holds no scaling measurement; patchwalk scale takes them")
     measured = [row for row in rows if not np.isnan(row.success)]
     what = setup.get("instances", "instances of an unknown source")
-    spins = {row.size: _spins_of(row, what) for row in rows}
+    first = {row.size: row for row in reversed(rows)}
+    spins = {size: _spins_of(first[size], what) for size in sorted(first)}
     by_spelling: dict[str, Rows] = {}
     for row in measured:
         by_spelling.setdefault(row.subsolver, {}).setdefault(row.size, {})[row.instance] = row
@@ -55,8 +56,8 @@ def stored_scaling(file: StoredFile) -> Scaled:
 def _curves(by_spelling: Mapping[str, Rows], spins: Mapping[int, int]) -> Iterator[ScalingCurve]:
     """As given, then tuned; variants come with whom they vary."""
     variants = {name: _variants(name) for name in by_spelling}
-    sizes = max((own.keys() for own in by_spelling.values()), key=len)
-    most = max(len(one) for own in by_spelling.values() for one in own.values())
+    sizes = max((own.keys() for own in by_spelling.values()), key=len, default=())
+    most = max((len(one) for own in by_spelling.values() for one in own.values()), default=0)
     whole = [name for name, own in by_spelling.items() if all(len(own.get(size, ())) == most for size in sizes)]
     tuned_from = {name: next((one for one in whole if one != name and name in variants[one]), None) for name in whole}
     given = [name for name in whole if tuned_from[name] is None or _default(name, variants)]
@@ -99,7 +100,7 @@ def _spins_of(row: ScalingRow, what: str) -> int:
     """The number of spins: the size of a cluster, or of an instance made anew."""
     if not what.startswith("whole instances of "):
         return row.size
-    family, size, _, seed = row.origin.split()
     with contextlib.suppress(ProblemError, ValueError, TypeError):
+        family, size, _, seed = row.origin.split()
         return len(make(family, int(size), seed=int(seed)))
     return row.size

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import contextlib
+import sqlite3
 from pathlib import Path
 
 import pytest
@@ -70,3 +72,16 @@ def test_curves_as_given_tuned_and_guessing(
             size: values.tolist() for size, values in curve.success.items()
         }
     assert (found.what, found.failed) == (made.what, made.failed)
+
+
+def test_where_every_call_failed_there_is_guessing_alone(tmp_path: Path) -> None:
+    """And an origin that nobody wrote leaves the size as it is."""
+    run = tmp_path / "run.sqlite"
+    scale("sk", [3, 4], subsolvers=["uniform"], instances=4, tune=False, run=run)
+    with contextlib.closing(sqlite3.connect(run)) as database, database:
+        database.execute("UPDATE scaling_rows SET success = NULL, origin = 'unknown'")
+    with stored_file(run) as file:
+        found = stored_scaling(file)
+    assert [curve.name for curve in found.curves] == ["guessing"]
+    assert sorted(found.curves[0].success) == [3, 4]
+    assert found.failed == 8
