@@ -140,8 +140,9 @@ class RunFile:
     def close(self) -> None:
         """Fold the write-ahead log into the file and let go of it; a file that holds no run is removed."""
         empty = self.database.execute("SELECT count(*) FROM runs").fetchone()[0] == 0
-        # the last connection to close would do it, but not where that one may only read
-        self.database.execute("PRAGMA wal_checkpoint(TRUNCATE)")
+        # the last connection to close would do it, but not where that one may only read; on a full disk the log stays
+        with contextlib.suppress(sqlite3.Error):
+            self.database.execute("PRAGMA wal_checkpoint(TRUNCATE)")
         self.database.close()
         if empty:
             self.path.unlink(missing_ok=True)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import json
+import resource
 import sqlite3
 from collections.abc import Iterator
 from contextlib import closing, contextmanager
@@ -17,6 +18,7 @@ from patchwalk import make, solve
 from patchwalk.clusters.conditioning import condition
 from patchwalk.evidence.layout import RunFileError, packed, unpacked
 from patchwalk.evidence.runfile import RunFile
+from patchwalk.evidence.stored import stored_file
 from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import ClusterBatch
 from patchwalk.subsolvers.registry import subsolver_from
@@ -160,6 +162,23 @@ def test_an_existing_file_is_left_alone(tmp_path: Path) -> None:
     blocked = tmp_path / "run.sqlite" / "inside.sqlite"
     with pytest.raises(RunFileError, match="writable place"):
         RunFile(blocked)
+
+
+def test_a_disk_that_is_full_at_the_end_loses_nothing(tmp_path: Path) -> None:
+    """What cannot be folded into the file stays in its log, and is read from there."""
+    path = solve(GLASS, cluster_size=4, calls=5, run=tmp_path / "run.sqlite").run_path
+    file = RunFile(path, reopen=True)
+    file.database.execute("CREATE TABLE filler (bytes BLOB)")
+    file.database.execute("INSERT INTO filler VALUES (zeroblob(1000000))")
+    limits = resource.getrlimit(resource.RLIMIT_FSIZE)
+    resource.setrlimit(resource.RLIMIT_FSIZE, (path.stat().st_size, limits[1]))
+    try:
+        file.close()
+    finally:
+        resource.setrlimit(resource.RLIMIT_FSIZE, limits)
+    assert path.with_name("run.sqlite-wal").stat().st_size > 1_000_000
+    with stored_file(path) as stored:
+        assert [row["size"] for row in stored.rows("SELECT length(bytes) AS size FROM filler")] == [1_000_000]
 
 
 def test_spins_as_bits() -> None:
