@@ -5,7 +5,8 @@
 The demo and a 3D glass are solved with the walk, replayed and profiled under two cost models; each rule learnt is then
 run on fresh seeds. Beside it stand the walk called for every cluster, sweeps alone, and sweeps alone for as many model
 seconds as always calling costs. Prints energies with 95 % intervals over seeds, calls made and their cost in model
-seconds; asserts nothing. The device's cost model is invented. Some ten minutes on two quiet cores.
+seconds, every call charged at the walk's price, whoever was called; asserts nothing. The device's cost model is
+invented. Some ten minutes on two quiet cores.
 """
 
 from __future__ import annotations
@@ -127,7 +128,8 @@ def table(contenders: dict[str, list[Solution]], one_sweep: float, fast: float, 
     energies = {name: np.array([one.energy for one in runs]) for name, runs in contenders.items()}
     same = np.zeros(len(energies["always"]), np.int64)
     heads = f"{'energy':<28}{'minus always':<30}{'minus never':<30}{'calls':>7}"
-    print(f"  {'':<60}{heads}{'fast device':>13}{'simulator':>11}{'sweeps':>9}  (model seconds)")
+    print("  the last three columns are model seconds; every call is charged at the walk's price, whoever was called")
+    print(f"  {'':<60}{heads}{'fast device':>13}{'simulator':>11}{'sweeps':>9}")
     for name, runs in contenders.items():
         made, sweeps = (float(np.mean([getattr(one, what) for one in runs])) for what in ("calls", "sweeps"))
         less = [
