@@ -151,10 +151,7 @@ def test_no_request_and_no_complaint(browser: Any, pages: dict[str, Path]) -> No
     """All that is asked for is the page itself and data inside it."""
     for page in pages.values():
         opened(browser, page, 400, "light")
-        events = [json.loads(entry["message"])["message"] for entry in browser.get_log("performance")]
-        asked = [
-            event["params"]["request"]["url"] for event in events if event["method"] == "Network.requestWillBeSent"
-        ]
+        asked = requests_of(browser)
         assert page.as_uri() in asked
         assert [url for url in asked if url != page.as_uri() and not url.startswith("data:")] == []
         assert browser.get_log("browser") == []
