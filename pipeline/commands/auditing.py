@@ -15,7 +15,7 @@ import numpy as np
 from patchwalk.bounds.certificate import Certificate, check
 from patchwalk.bounds.certificate_error import CertificateError
 from patchwalk.evidence.certificates import stored_certificate
-from patchwalk.evidence.layout import RunFileError
+from patchwalk.evidence.layout import RunFileError, undamaged
 from patchwalk.evidence.stored import read_only
 from patchwalk.problem.decoding import audit_answer, encoding_of, read_answer, verdict
 from patchwalk.problem.files import read_problem
@@ -130,14 +130,22 @@ def stored_run(problem: Problem, path: Path, run: int) -> tuple[I8, Certificate]
     """Best configuration and certificate of a run, as they stand in the file: check them before use."""
     with contextlib.closing(read_only(path)) as database:
         (blob,) = database.execute("SELECT spins FROM runs WHERE run = ?", (run,)).fetchone()
-        stored = stored_certificate(database, run)
-        if stored is None:
+        certificate = _certificate(database, run, path)
+        if certificate is None:
             raise RunFileError(f"{path}: run {run} has no certificate")
-        return _unpacked(blob, problem), Certificate(*stored)
+        return _unpacked(blob, problem, run, path), certificate
 
 
-def _unpacked(blob: bytes, problem: Problem) -> I8:
-    bits = np.unpackbits(np.frombuffer(blob, np.uint8), count=len(problem), bitorder="little")
+def _certificate(database: sqlite3.Connection, run: int, path: Path) -> Certificate | None:
+    with undamaged(path, f"the certificate of run {run}"):
+        stored = stored_certificate(database, run)
+    return None if stored is None else Certificate(*stored)
+
+
+def _unpacked(blob: bytes, problem: Problem, run: int, path: Path) -> I8:
+    with undamaged(path, f"the answer of run {run}"):
+        words = np.frombuffer(blob, np.uint8, count=-(-len(problem) // 8))
+    bits = np.unpackbits(words, count=len(problem), bitorder="little")
     return np.where(bits == 1, -1, 1).astype(np.int8)
 
 
@@ -153,16 +161,15 @@ def _audited_run(problem: Problem, database: sqlite3.Connection, wanted: int | N
     rows = database.execute("SELECT run, problem, energy, spins, status FROM runs ORDER BY energy, run").fetchall()
     if wanted is not None:
         rows = [row for row in rows if row[0] == wanted]
-    rows = [row for row in rows if row[3] is not None]
+    rows = [row for row in rows if isinstance(row[2], float) and row[3] is not None]
     if not rows:
         raise RunFileError(f"{path}: holds no finished run" + (f" numbered {wanted}" if wanted is not None else ""))
-    proved = [row for row in rows if stored_certificate(database, row[0]) is not None]
+    proved = [row for row in rows if _certificate(database, row[0], path) is not None]
     run, fingerprint, energy, blob, status = (proved or rows)[0]
     if fingerprint != problem.fingerprint:
         raise RunFileError(f"{path}: run {run} was made on another problem; the fingerprints differ")
-    stored = stored_certificate(database, run)
-    certificate = None if stored is None else Certificate(*stored)
-    return _audited(problem, _unpacked(blob, problem), certificate, run, energy, status)
+    certificate = _certificate(database, run, path)
+    return _audited(problem, _unpacked(blob, problem, run, path), certificate, run, energy, status)
 
 
 def _audited(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import json
 import os
+import re
 import signal
 import sqlite3
 import subprocess
@@ -99,6 +100,25 @@ def test_an_energy_that_was_made_up(lattice: Path, tmp_path: Path) -> None:
     with sqlite3.connect(run) as database:
         database.execute("UPDATE runs SET energy = energy - 1")
     assert "the configuration has" in command("audit", lattice, run, code=1)["message"]
+
+
+@pytest.mark.parametrize(
+    ("damage", "said"),
+    [
+        ("UPDATE certificate_arrays SET data = x'010203'", "the certificate of run 1 is damaged"),
+        ("UPDATE certificate_arrays SET shape = '['", "the certificate of run 1 is damaged"),
+        ("UPDATE runs SET spins = x'01'", "the answer of run 1 is damaged"),
+        ("UPDATE runs SET energy = NULL", "holds no finished run"),
+    ],
+)
+def test_a_damaged_proof_is_named(damage: str, said: str, tmp_path: Path) -> None:
+    run, glass = tmp_path / "proof.sqlite", patchwalk.make("lattice2d", 4, seed=1)
+    patchwalk.bound(glass, seconds=20, run=run)
+    assert patchwalk.audit(glass, run).status == "confirmed"
+    with closing(sqlite3.connect(run)) as database, database:
+        database.execute(damage)
+    with pytest.raises(RunFileError, match=re.escape(f"{run}: {said}")):
+        patchwalk.audit(glass, run)
 
 
 def test_another_problem_is_refused(lattice: Path, tmp_path: Path) -> None:
