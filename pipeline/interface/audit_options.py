@@ -15,7 +15,10 @@ from patchwalk.settings import ProblemSettings
 @click.argument("source", metavar="INPUT")
 @click.argument("evidence", metavar="ANSWER|RUN")
 @setting_options(ProblemSettings)
-@click.option("--number", type=click.IntRange(min=1), default=None, help="Which run of the run file; the proved one.")
+@click.option(
+    "--number", type=click.IntRange(min=1), default=None, metavar="NUMBER",
+    help="Which run of the run file.  [default: the best with a certificate, else the best]",
+)  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 def audit_command(source: str, evidence: str, number: int | None, as_json: bool, **given: Any) -> None:
     """Hold an ANSWER (spins, or what --json or --answer wrote) or the certificate of a RUN file against INPUT.

@@ -15,9 +15,15 @@ from patchwalk.interface.cli import fail, print_json
     "-o", "--output", metavar="FILE.html", type=click.Path(path_type=Path), required=True,
     help="Where the page goes; an earlier report is replaced, any other file is left as it is.",
 )  # fmt: skip
-@click.option("--cost", metavar="FILE", help="A cost model in TOML, as for profile.")
-@click.option("--subsolver", metavar="NAME[,key=value...]", help="Whose calls; as spelled in the run, the busiest.")
-@click.option("--against", metavar="RIVAL", help="Whom tables and rule are held against: none, else the strongest.")
+@click.option("--cost", metavar="FILE", help="A cost model in TOML.  [default: the fixed prices of counted work]")
+@click.option(
+    "--subsolver", metavar="NAME[,key=value...]",
+    help="Whose calls, spelled as in the run.  [default: who made most of them]",
+)  # fmt: skip
+@click.option(
+    "--against", metavar="RIVAL",
+    help="The rival that tables and rule are held against.  [default: none, else the strongest replayed]",
+)  # fmt: skip
 @click.option("--json", "as_json", is_flag=True, help="Print one JSON object on standard output and nothing else.")
 def report_command(
     runs: tuple[str, ...], output: Path, cost: str | None, subsolver: str | None, against: str | None, as_json: bool
