@@ -148,7 +148,8 @@ class _Survey:
         interrupted: Callable[[], bool],
     ) -> None:  # fmt: skip
         self.instances, self.sizes, self.shots, self.workers = instances, sizes, shots, workers
-        self.database, self.interrupted, self.failed = database, interrupted, 0
+        self.database, self.interrupted = database, interrupted
+        self._failures: set[tuple[int, str, int]] = set()
         self._made: dict[int, tuple[ClusterBatch, list[str]]] = {}
         self._guesses: dict[int, dict[int, float]] = {}
         self._spins: dict[int, int] = {}
@@ -165,6 +166,11 @@ class _Survey:
             spellings = {size: spelled(one) for size, one in chosen.items()}
             curves.append(self._curve(f"{spelled(subsolver)}, times tuned", tuned, spellings))
         return curves
+
+    @property
+    def failed(self) -> int:
+        """Calls that failed, each once, however many curves asked for it."""
+        return len(self._failures)
 
     def guessing(self) -> ScalingCurve:
         """The share of minima among all configurations, as a curve of its own."""
@@ -198,7 +204,7 @@ class _Survey:
             add_rows(self.database, fresh)
             there |= {row.instance: row for row in fresh}
         rows = [there[number] for number in numbers if number in there]
-        self.failed += sum(math.isnan(row.success) for row in rows)
+        self._failures |= {(size, spelling, row.instance) for row in rows if math.isnan(row.success)}
         self._guesses.setdefault(size, {}).update({row.instance: row.guess for row in rows})
         return [row for row in rows if not np.isnan(row.success)]
 

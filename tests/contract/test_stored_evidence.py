@@ -85,3 +85,16 @@ def test_where_every_call_failed_there_is_guessing_alone(tmp_path: Path) -> None
     assert [curve.name for curve in found.curves] == ["guessing"]
     assert sorted(found.curves[0].success) == [3, 4]
     assert found.failed == 8
+
+
+def test_a_call_that_failed_is_counted_once(tmp_path: Path) -> None:
+    """Though the curve as given and the tuning of times both ask for it."""
+    run = tmp_path / "run.sqlite"
+    scale("sk", [3, 4], subsolvers=["walk"], instances=4, run=run)
+    with contextlib.closing(sqlite3.connect(run)) as database, database:
+        database.execute(
+            "UPDATE scaling_rows SET success = NULL WHERE size = 3 AND instance = 0 AND subsolver = 'walk'"
+        )
+    assert scale("sk", [3, 4], subsolvers=["walk"], instances=4, run=run).failed == 1
+    with stored_file(run) as file:
+        assert stored_scaling(file).failed == 1
