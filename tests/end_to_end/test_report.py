@@ -309,10 +309,19 @@ def test_sampling_runs_have_their_averages(tmp_path: Path) -> None:
                    temperatures=[1.0, 2.0], run=tmp_path / "run.sqlite")  # fmt: skip
     page = report(tmp_path / "run.sqlite", tmp_path / "page.html")
     text = Page(page.path.read_text()).text
+    assert "too few samples" not in text
     assert "Energies averaged over the Boltzmann law" in text
     assert "no interval" not in text  # series have their errors, run by run
     for level in found.levels:
         assert f"{level.energy.value:,.6g}" in text
+
+
+def test_a_short_series_has_no_error_bar(tmp_path: Path) -> None:
+    found = sample(make("lattice2d", 4, seed=1), subsolver="walk,start=incumbent", cluster_size=4, rounds=3,
+                   temperatures=[1.0], run=tmp_path / "run.sqlite")  # fmt: skip
+    assert not found.levels[0].energy.reliable
+    text = Page(report(tmp_path / "run.sqlite", tmp_path / "page.html").path.read_text()).text
+    assert text.count("too few samples") == 1
 
 
 def test_what_is_too_much_is_thinned_and_said(tmp_path: Path) -> None:

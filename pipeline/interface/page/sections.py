@@ -68,7 +68,10 @@ def _runs_parts(chapter: RunsChapter, name: str, others: Sequence[Chapter]) -> I
         run_figures.progress(chapter, f"{name}-progress"), run_figures.fates(chapter.stages, f"{name}-fates")
     )
     if chapter.averages:
-        rows = [[temperature, one.value, one.error, one.tau, one.effective] for temperature, one in chapter.averages]
+        rows = [
+            [temperature, one.value, one.error if one.reliable else "too few samples", one.tau, one.effective]
+            for temperature, one in chapter.averages
+        ]
         header = ["temperature", "mean energy", "standard error", "autocorrelation time, rounds", "effective values"]
         yield Table(header, rows).as_html("Energies averaged over the Boltzmann law")
     yield from _worth(chapter.worth, name)
