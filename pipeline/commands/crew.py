@@ -1,4 +1,4 @@
-"""Who carries out the work of a command that is no search: chosen by the same words as in a search's settings."""
+"""Who carries out the work of a command, chosen by the same words everywhere."""
 
 from __future__ import annotations
 

@@ -10,6 +10,7 @@ from pathlib import Path
 from typing import Any, Protocol
 
 from patchwalk.commands.answers import answered
+from patchwalk.commands.crew import Crew
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.tasks import Task, task_from
 from patchwalk.evidence.certificates import store_certificate
@@ -24,7 +25,7 @@ from patchwalk.search.neighbourhood import NeighbourhoodSearch
 from patchwalk.settings import SearchSettings
 from patchwalk.subsolvers.contract import I8
 from patchwalk.subsolvers.registry import spelled
-from patchwalk.workers import Workers, WorkersError, cores, workers_for
+from patchwalk.workers import Workers, WorkersError
 
 
 @dataclass(frozen=True, eq=False)
@@ -163,15 +164,9 @@ def carry_out(task: Task, watcher: Watcher) -> Solution:
         runfile.close()  # also takes the file away again where no run came to be written
 
 
-@contextlib.contextmanager
-def hired(settings: SearchSettings) -> Iterator[Workers]:
+def hired(settings: SearchSettings) -> contextlib.AbstractContextManager[Workers]:
     """The workers that the settings ask for, let go at the end."""
-    count = settings.workers if settings.workers is not None else cores()
-    workers = workers_for(count, settings.scheduler, settings.engine == "dask", settings.mixed_workers)
-    try:
-        yield workers
-    finally:
-        workers.close()
+    return Crew(settings.workers, settings.engine, settings.scheduler, settings.mixed_workers).hired()
 
 
 def runs_of(
