@@ -48,11 +48,9 @@ def check(problem: Problem, certificate: Certificate) -> float:
         raise CertificateError("the certificate belongs to another problem: the fingerprints differ")
     if not math.isfinite(certificate.bound):
         raise CertificateError(f"the certificate states the bound {certificate.bound}, which is no number to prove")
-    if certificate.method == "cycles":
-        return CycleTree(problem, certificate.bound, certificate.arrays).proved()
     try:
-        proved = _proved_otherwise(problem, certificate)
-    except (ValueError, KeyError, IndexError) as error:
+        proved = _proved(problem, certificate)
+    except (ValueError, KeyError, IndexError, OverflowError) as error:
         raise CertificateError(f"the certificate ({certificate.method}) does not hold: {error}") from error
     if not proved >= certificate.bound:
         raise CertificateError(
@@ -61,8 +59,10 @@ def check(problem: Problem, certificate: Certificate) -> float:
     return certificate.bound
 
 
-def _proved_otherwise(problem: Problem, certificate: Certificate) -> float:
-    """The bound that a certificate of any method but ``cycles`` proves."""
+def _proved(problem: Problem, certificate: Certificate) -> float:
+    """The bound that a certificate proves, by its method."""
+    if certificate.method == "cycles":
+        return CycleTree(problem, certificate.bound, certificate.arrays).proved()
     if certificate.method == "matching":
         from patchwalk.bounds.planar import planar_minimum
 

@@ -215,18 +215,19 @@ class CycleTree:
         constant = 0.0 if empty else self.constant
         value = dual_value(costs, constant, self.starts, self.edges, self.odd, duals, lower, upper)
         stated = float(self.node_bounds[node])
-        if abs(value.bound - stated) > 4.0 * value.margin:
+        # nan, where multipliers overflow, must not pass for true in any of these comparisons
+        if not abs(value.bound - stated) <= 4.0 * value.margin < math.inf:
             raise CertificateError(
                 f"the multipliers of node {node} prove {value.bound:.12g}, the certificate says {stated:.12g}"
             )
         if empty:
-            if value.bound <= 0.0:
+            if not value.bound > 0.0:
                 raise CertificateError(f"node {node} is said to be empty, but its multipliers do not prove that")
             return
         reached = rounded_up(self.problem, value.bound)
         if self.outcomes[node] == SETTLED:
             reached = max(reached, settled_energy(self.problem, self.pairs, value, lower, upper, self.stated))
-        if reached < self.stated:
+        if not reached >= self.stated:
             raise CertificateError(
                 f"node {node} is proved to lie above {reached:.12g} only, the certificate states {self.stated:.12g}"
             )

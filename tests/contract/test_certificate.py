@@ -11,7 +11,8 @@ import pytest
 
 from patchwalk.bounds.certificate import Certificate, check
 from patchwalk.bounds.certificate_error import CertificateError
-from patchwalk.bounds.cycle_certificate import BRANCHED, dual_value
+from patchwalk.bounds.clusters import cluster_bound
+from patchwalk.bounds.cycle_certificate import BOUNDED, BRANCHED, EMPTY, SETTLED, dual_value
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem
 from patchwalk.search.bound_search import BranchPlan
@@ -81,6 +82,39 @@ def test_a_dual_and_its_nodes_bound_altered_together(problem: Problem, tree: Cer
     bounds[node] += 1.0
     with pytest.raises(CertificateError, match=">= 0"):
         check(problem, altered(tree, duals=duals, node_bounds=bounds))
+
+
+@pytest.mark.filterwarnings("ignore::RuntimeWarning")  # what overflows on purpose
+@pytest.mark.parametrize("outcome", [BOUNDED, EMPTY, SETTLED])
+@pytest.mark.parametrize("stated", [-100.0, 0.0, math.nan])
+def test_multipliers_so_large_that_they_overflow(problem: Problem, outcome: int, stated: float) -> None:
+    """Every one is finite, yet two on the same edges add up to infinity, from which nothing follows."""
+    triangle = [[0, 1], [1, 2], [0, 2]]
+    others = [list(pair) for pair in zip(*np.triu_indices(len(problem), 1), strict=True) if list(pair) not in triangle]
+    arrays = {
+        "pairs": np.array([*triangle, *others], np.int32), "cut_starts": np.array([0, 3, 6]),
+        "cut_edges": np.array([0, 1, 2, 0, 1, 2], np.int32), "cut_odd": np.array([1, 0, 0, 1, 0, 0], np.int8),
+        "parents": np.array([-1]), "split_edges": np.array([-1], np.int32), "split_sides": np.zeros(1, np.int8),
+        "outcomes": np.array([outcome], np.int8), "node_bounds": np.array([stated]), "dual_starts": np.array([0, 2]),
+        "dual_cuts": np.array([0, 1], np.int32), "duals": np.full(2, 1.7e308),
+    }  # fmt: skip
+    for bound in (-100.0, 1e6):
+        with pytest.raises(CertificateError):
+            check(problem, Certificate(problem.fingerprint, "cycles", bound, arrays))
+
+
+@pytest.mark.filterwarnings("ignore::RuntimeWarning")
+@pytest.mark.parametrize("name", ["field_shares", "coupling_shares"])
+def test_shares_so_large_that_they_overflow(name: str) -> None:
+    lattice = make("lattice2d", 4, seed=3, couplings="gaussian", fields=True)
+    arrays = cluster_bound(lattice, cluster_size=6, steps=0).arrays
+    whole = arrays["members"] if name == "field_shares" else [tuple(pair) for pair in np.sort(arrays["pairs"]).tolist()]
+    same = [place for place, one in enumerate(whole) if one == whole[0]]
+    for signs in ((1.0, 1.0), (1.0, -1.0)):
+        shares = arrays[name].copy()
+        shares[same[:2]] = 1.7e308 * np.array(signs)
+        with pytest.raises(CertificateError):
+            check(lattice, Certificate(lattice.fingerprint, "clusters", -1e9, {**arrays, name: shares}))
 
 
 def test_every_node_missing(problem: Problem, tree: Certificate) -> None:
