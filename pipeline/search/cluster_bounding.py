@@ -96,10 +96,8 @@ class ClusterBounding(BoundSearch):
         turns = 1 if not self.plan.branching else self.plan.nodes or len(SIZES)
         steps = {} if self.plan.cuts else {"steps": 0}
         for size in SIZES[:turns]:
-            if size > max(2, len(self.problem)) or (self.held is not None and self.stopped()):
-                break
             self._hold(cluster_bound(self.problem, cluster_size=size, stopped=self.stopped, **steps), size)
-            if self.lower_bound >= self.goal:
+            if self.lower_bound >= self.goal or size >= len(self.problem) or self.stopped():
                 break
 
     def _hold(self, bound: ClusterBound, size: int) -> None:

@@ -348,6 +348,14 @@ def test_overlapping_clusters_on_a_lattice(tmp_path: Path) -> None:
     assert "clusters gives" in patchwalk.audit(problem, run).message
 
 
+def test_clusters_larger_than_the_problem(tmp_path: Path) -> None:
+    """Five spins are fewer than the smallest size; planar and without fields, they are not eliminated beforehand."""
+    ring = patchwalk.Problem.from_arrays(range(5), [1, 2, 3, 4, 0], [1.0] * 5)
+    found = patchwalk.bound(ring, method="clusters", run=tmp_path / "run.sqlite")
+    assert (found.status, found.energy, found.lower_bound) == ("proved_optimal", -3, -3)
+    assert "all 5 spins" in found.proof
+
+
 def test_for_callers_with_a_configuration_of_their_own() -> None:
     problem = patchwalk.make("lattice2d", 8, seed=3)
     found = bounds_for(problem, 60.0, start=np.ones(64, np.int8))
