@@ -202,7 +202,8 @@ def carry_out(task: BoundTask, watcher: Watcher) -> Bound:
             run = writer.run
     finally:
         runfile.close()
-    with contextlib.closing(sqlite3.connect(task.run_path)) as database:
+    lost = (sqlite3.Error,) if result.status == "error" else ()
+    with contextlib.suppress(*lost), contextlib.closing(sqlite3.connect(task.run_path)) as database:
         proof = result.certificate
         store_certificate(database, run, proof.fingerprint, proof.method, proof.bound, proof.arrays)
         store_node_log(database, run, [dataclasses.astuple(line) for line in result.log])
@@ -232,12 +233,13 @@ def _searched(task: BoundTask, search: BoundSearch, writer: RunWriter, compile_s
         search.status, search.message = "error", str(error)
     writer.add_improvements(search.take_improvements())
     result = _result(search, compile_seconds, task.run_path)
-    writer.finish(
-        search.snapshot(), status=result.status, message=result.message, energy=result.energy,
-        objective=result.objective, calls=result.calls, failed_calls=result.failed_calls,
-        sweeps=search.incumbent.sweeps, seconds=result.seconds, compile_seconds=compile_seconds, skipped=0,
-        lower_bound=result.lower_bound, spins=packed(result.spins),
-    )  # fmt: skip
+    with contextlib.suppress(*((RunFileError,) if search.status == "error" else ())):
+        writer.finish(
+            search.snapshot(), status=result.status, message=result.message, energy=result.energy,
+            objective=result.objective, calls=result.calls, failed_calls=result.failed_calls,
+            sweeps=search.incumbent.sweeps, seconds=result.seconds, compile_seconds=compile_seconds, skipped=0,
+            lower_bound=result.lower_bound, spins=packed(result.spins),
+        )  # fmt: skip
     return result
 
 

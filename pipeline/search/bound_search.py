@@ -170,7 +170,9 @@ class BoundSearch(ABC):
         return math.inf if self.plan.seconds is None else self.plan.seconds - self.elapsed
 
     def conclude(self, otherwise: str) -> None:
-        """Say how it ended: a proof, an interrupt, the seconds spent, or ``otherwise``."""
+        """Say how it ended: a proof, an interrupt, the seconds spent, or ``otherwise``; an error was told already."""
+        if self.status == "error":
+            return
         if self.lower_bound >= self.goal:
             self.status, self.message = "proved_optimal", "proved optimal"
         elif self.interrupted():

@@ -139,15 +139,15 @@ class BranchAndBound(BoundSearch):
     def rounds(self) -> Iterator[Round]:
         """Search until the bound reaches the best energy or an end is reached, one round at a time."""
         self.begin()
+        if not self.tree.nodes:
+            program = self.program
+            root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
+            self.tree.open(root)
         try:
             if self.plan.heuristic and self.plan.sweeps:
                 self.incumbent.cool(self.plan.sweeps, self.stopped)
                 yield self.next_round(())
             self._try_clusters()
-            program = self.program
-            if not self.tree.nodes:
-                root = self.tree.add(None, -1, 0, self.tree.rounded_up(program.bound), program.multipliers)
-                self.tree.open(root)
             while self.tree.open_count and not self._ended():
                 self._current = self.tree.next()
                 yield from self._work_on(self._current)

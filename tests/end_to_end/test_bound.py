@@ -21,7 +21,7 @@ import pytest
 
 import patchwalk
 from patchwalk.commands.bounding import bounds_for
-from patchwalk.evidence.runfile import RunFileError
+from patchwalk.evidence.runfile import RunFileError, RunWriter
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import ClusterBatch, Edges
 from patchwalk.subsolvers.registry import make_subsolver
@@ -354,6 +354,23 @@ def test_clusters_larger_than_the_problem(tmp_path: Path) -> None:
     found = patchwalk.bound(ring, method="clusters", run=tmp_path / "run.sqlite")
     assert (found.status, found.energy, found.lower_bound) == ("proved_optimal", -3, -3)
     assert "all 5 spins" in found.proof
+
+
+@pytest.mark.parametrize("method", ["cycles", "semidefinite", "clusters"])
+def test_a_record_that_cannot_be_kept_costs_neither_bound_nor_answer(
+    method: str, tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """Not even where that shows after the first cooling, before anything was bounded."""
+
+    def refuse(*_: object, **__: object) -> None:
+        raise RunFileError("no room is left")
+
+    monkeypatch.setattr(RunWriter, "add", refuse)
+    monkeypatch.setattr(RunWriter, "finish", refuse)
+    problem = patchwalk.make("sk", 12, seed=1)
+    found = patchwalk.bound(problem, method=method, run=tmp_path / "run.sqlite")
+    assert (found.status, found.message) == ("error", "no room is left")
+    assert -np.inf < found.lower_bound <= found.energy == problem.energy(found.spins)
 
 
 def test_for_callers_with_a_configuration_of_their_own() -> None:
