@@ -46,6 +46,9 @@ SHARE_OF_CHEAP_ROWS = 64
 """One cheap call in this many, chosen by its seed, has a row of its own."""
 
 OK = int(Status.OK)
+TallyKey = tuple[str, str, int, int]
+"""Subsolver, rule, spins in a cluster, tenth of the run."""
+
 SHARE_WORD = 0x7368617265000000
 
 
@@ -163,6 +166,7 @@ class RunWriter:
         self._keep_local_fields = not follow_from_spins(problem)
         query = "SELECT coalesce(max(number) + 1, 0) FROM groups WHERE run = ?"
         self._group = self._database.execute(query, (run,)).fetchone()[0]
+        self._tallies = _stored_tallies(self._database, run)
         self._start_group()
 
     def add(self, round_: Round) -> None:
@@ -194,8 +198,10 @@ class RunWriter:
         with self._writing() as database:
             database.execute("BEGIN")
             database.executemany(INSERT_CALL, self._rows)
-            for key, tally in self._tallies.items():
-                self._add_tally(key, tally)
+            database.executemany(
+                "INSERT OR REPLACE INTO tallies VALUES (?,?,?,?,?,?,?,?,?,?,?,?)",
+                [(self.run, *key, *map(int, tally[:4]), *tally[4:].tolist()) for key, tally in self._tallies.items()],
+            )
             database.executemany(
                 "INSERT INTO incumbents VALUES (?,?,?,?,?,?,?)",
                 [(self.run, i.energy, i.finder, i.round, i.calls, i.sweeps, i.seconds) for i in self._improvements],
@@ -238,7 +244,6 @@ class RunWriter:
         self._rows: list[tuple[Any, ...]] = []
         self._stages: list[float] = []
         self._improvements: list[Improvement] = []
-        self._tallies: dict[tuple[str, str, int, int], np.typing.NDArray[np.float64]] = {}
 
     def _spelling(self, subsolver: Subsolver) -> str:
         """The subsolver as text, spelled once; the object is held so that its identity stays its own."""
@@ -298,27 +303,16 @@ class RunWriter:
         return zip(*columns, strict=True)
 
     def _tally(self, round_: Round, calls: Calls, rest: np.typing.NDArray[np.bool_]) -> None:
-        """Add the calls that get no row of their own to the exact tallies."""
+        """Add the calls that get no row of their own to the exact tallies, which go on through the whole run."""
         key = (self._spelling(calls.subsolver), calls.rule, calls.batch.size, min(9, int(10 * round_.stage)))
         accepted, change = calls.accepted & rest, calls.change
         fall, rise = accepted & (change < 0), accepted & (change > 0)
         chosen = calls.proposals.outcomes[np.arange(len(calls)), calls.chosen]
         moved = accepted & np.any(chosen != calls.batch.spins, axis=1)
         tally = self._tallies.setdefault(key, np.zeros(7))
-        tally += [
-            rest.sum(), accepted.sum(), moved.sum(), fall.sum(), -change[fall].sum(), change[rise].sum(),
-            calls.seconds * rest.mean(),
-        ]  # fmt: skip
-
-    def _add_tally(self, key: tuple[str, str, int, int], tally: np.typing.NDArray[np.float64]) -> None:
-        counts = [int(count) for count in tally[:4]]
-        self._database.execute(
-            "INSERT INTO tallies VALUES (?,?,?,?,?,?,?,?,?,?,?,?) ON CONFLICT DO UPDATE SET "
-            "calls = calls + excluded.calls, accepted = accepted + excluded.accepted, moved = moved + excluded.moved, "
-            "improved = improved + excluded.improved, fall = fall + excluded.fall, rise = rise + excluded.rise, "
-            "seconds = seconds + excluded.seconds",
-            (self.run, *key, *counts, *tally[4:].tolist()),
-        )
+        tally[:4] += [rest.sum(), accepted.sum(), moved.sum(), fall.sum()]
+        tally[4:6] = _added(tally[4], -change[fall]), _added(tally[5], change[rise])
+        tally[6] += calls.seconds * rest.mean()
 
     def _checkpoint(self, state: Snapshot) -> None:
         """Keep the state; what only a resume needs is kept of the newest one alone."""
@@ -337,6 +331,21 @@ class RunWriter:
                 json.dumps(state.details),
             ),
         )  # fmt: skip
+
+
+def _stored_tallies(database: sqlite3.Connection, run: int) -> dict[TallyKey, np.typing.NDArray[np.float64]]:
+    """The tallies of a run so far; those of one that begins are empty."""
+    rows = database.execute(
+        "SELECT subsolver, rule, k, tenth, calls, accepted, moved, improved, fall, rise, seconds FROM tallies "
+        "WHERE run = ?",
+        (run,),
+    )
+    return {row[:4]: np.array(row[4:], np.float64) for row in rows}
+
+
+def _added(total: float, terms: np.typing.NDArray[np.float64]) -> float:
+    """The sum, one term after the other: the same bits however calls come in slices, rounds and groups."""
+    return float(np.add.accumulate(np.concatenate([[total], terms]))[-1])
 
 
 def _counts_blob(counts: np.typing.NDArray[np.int64]) -> bytes:

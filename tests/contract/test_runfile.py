@@ -95,6 +95,28 @@ def test_a_share_of_cheap_calls_has_rows_and_the_rest_is_tallied_exactly(tmp_pat
     assert counted["all"][1:] == pytest.approx(counted["share"][1:])
 
 
+def test_tallies_have_the_same_bits_however_calls_are_grouped_and_sliced(
+    tmp_path: Path, monkeypatch: pytest.MonkeyPatch
+) -> None:
+    """The clock decides when a group closes, and the workers how a round is divided: neither may show in a sum."""
+    found = []
+    for number, (seconds, workers) in enumerate(((1e9, 1), (0.0, 1), (1e9, 3))):
+        monkeypatch.setattr("patchwalk.evidence.runfile.GROUP_SECONDS", seconds)
+        monkeypatch.setattr("patchwalk.workers.Threads.smallest_task_seconds", 0.0)
+        solution = solve(
+            GLASS, subsolver="uniform", cluster_size=6, calls=2000, record="share", workers=workers,
+            run=tmp_path / f"{number}.sqlite",
+        )  # fmt: skip
+        with opened(solution.run_path) as database:
+            rows = database.execute("SELECT * FROM tallies ORDER BY subsolver, rule, k, tenth").fetchall()
+            groups = database.execute("SELECT count(*) FROM groups").fetchone()[0]
+        assert (groups > 20) == (seconds == 0.0)
+        found.append([tuple(row)[:-1] for row in rows])  # the last column is seconds
+    assert sum(row[5] for row in found[0]) > 1500
+    assert found[1] == found[0]
+    assert found[2] == found[0]
+
+
 def test_the_run_itself_is_described(tmp_path: Path) -> None:
     solution = solve(GLASS, cluster_size=7, calls=30, seeds=[3, 4], hot=0.9, replicas=1, run=tmp_path / "two.sqlite")
     with opened(solution.run_path) as database:

@@ -39,8 +39,12 @@ def last_state(path: Path) -> tuple[Any, ...]:
         rows = database.execute(
             "SELECT round, replica, place, seed, rule, proposal, change, accepted FROM calls ORDER BY 1, 2, 3, seed"
         ).fetchall()
+        tallies = database.execute(
+            "SELECT subsolver, rule, k, tenth, calls, accepted, moved, improved, fall, rise FROM tallies "
+            "ORDER BY run, subsolver, rule, k, tenth"
+        ).fetchall()
         answer = database.execute("SELECT status, message, energy, calls, sweeps, spins FROM runs").fetchall()
-    return state, rows, answer
+    return state, rows, tallies, answer
 
 
 def command(*words: object) -> list[str]:
