@@ -15,6 +15,8 @@ from typing import Any, NamedTuple
 import numpy as np
 import numpy.typing as npt
 
+from patchwalk.evidence.layout import RunFileError
+
 SCHEMA = """
 CREATE TABLE IF NOT EXISTS certificates (
     run INTEGER PRIMARY KEY, fingerprint TEXT, method TEXT, bound REAL
@@ -61,20 +63,30 @@ def store_certificate(
 def stored_certificate(database: sqlite3.Connection, run: int) -> StoredCertificate | None:
     """The certificate of a run, or None where there is none.
 
-    Raises ``ValueError`` where an array's bytes do not fit its type and shape.
+    Raises :class:`~patchwalk.evidence.layout.RunFileError` where its bound is no number, or an array's bytes do not fit
+    its type and shape.
     """
     if not _has_tables(database):
         return None
     row = database.execute("SELECT fingerprint, method, bound FROM certificates WHERE run = ?", (run,)).fetchone()
     if row is None:
         return None
-    arrays = {
-        name: np.frombuffer(data, np.dtype(dtype)).reshape(json.loads(shape))
-        for name, dtype, shape, data in database.execute(
-            "SELECT name, dtype, shape, data FROM certificate_arrays WHERE run = ? ORDER BY name", (run,)
-        )
-    }
-    return StoredCertificate(row[0], row[1], row[2], arrays)
+    columns = database.execute(
+        "SELECT name, dtype, shape, data FROM certificate_arrays WHERE run = ? ORDER BY name", (run,)
+    )
+    try:
+        arrays = {name: _array(dtype, shape, data) for name, dtype, shape, data in columns}
+        return StoredCertificate(row[0], row[1], float(row[2]), arrays)
+    except (TypeError, ValueError) as error:
+        path = database.execute("PRAGMA database_list").fetchone()[2]
+        raise RunFileError(f"{path}: the certificate of run {run} is damaged: {error}") from error
+
+
+def _array(dtype: str, shape: str, data: bytes) -> npt.NDArray[Any]:
+    """An array of numbers from its bytes."""
+    if np.dtype(dtype).kind not in "iuf":
+        raise ValueError(f"an array of type {dtype} holds no plain numbers")
+    return np.frombuffer(data, np.dtype(dtype)).reshape(json.loads(shape))
 
 
 def store_node_log(database: sqlite3.Connection, run: int, lines: Iterable[tuple[Any, ...]]) -> None:

@@ -94,6 +94,23 @@ def test_a_run_file_that_was_tampered_with(lattice: Path, tmp_path: Path) -> Non
     assert "nothing that holds proves it" in command("audit", lattice, run, code=1)["message"]
 
 
+@pytest.mark.parametrize(
+    "damage",
+    [
+        "certificate_arrays SET dtype = 'zzz'", "certificate_arrays SET dtype = '<c16'",
+        "certificate_arrays SET data = x'00'", "certificate_arrays SET data = NULL",
+        "certificate_arrays SET shape = '[3'", "certificates SET bound = NULL", "certificates SET bound = 'low'",
+    ],
+)  # fmt: skip
+def test_a_damaged_certificate_is_named_with_its_file(damage: str, tmp_path: Path) -> None:
+    run, ring = tmp_path / "run.sqlite", patchwalk.Problem.from_arrays([0, 1, 2], [1, 2, 0], [1.0] * 3)
+    patchwalk.bound(ring, run=run)
+    with closing(sqlite3.connect(run)) as database, database:
+        database.execute(f"UPDATE {damage}")
+    with pytest.raises(RunFileError, match=r"run\.sqlite: the certificate of run 1 is damaged"):
+        patchwalk.audit(ring, run)
+
+
 def test_an_energy_that_was_made_up(lattice: Path, tmp_path: Path) -> None:
     run = tmp_path / "proof.sqlite"
     command("bound", lattice, "--run", run, "--quiet")
