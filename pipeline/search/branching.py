@@ -40,6 +40,10 @@ LEAST_SHARE = 0.1
 LATER_COOLINGS = 2
 """By how much coolings after the first are shorter."""
 
+SPINS_A_SECOND = 300
+"""Clusters stand aside where there are more spins for each second of the budget: to check their shares, once when they
+are found and once at the end, takes more than a millisecond a spin."""
+
 OUTCOMES = {BRANCHED: "split", BOUNDED: "bounded", EMPTY: "empty", SETTLED: "settled"}
 
 
@@ -207,7 +211,8 @@ class BranchAndBound(BoundSearch):
 
         Before the root, which takes longer on such problems and leaves more of the gap.
         """
-        if not self.plan.clusters or not promising(self.problem):
+        most = SPINS_A_SECOND * (self.plan.seconds or math.inf)
+        if not self.plan.clusters or len(self.problem) > most or not promising(self.problem):
             return
         half = 0.5 * self.seconds_left()
         found = cluster_bound(self.problem, stopped=lambda: self.stopped() or self.seconds_left() < half)

@@ -277,6 +277,12 @@ def test_clusters_beside_the_tree() -> None:
     assert later.lower_bound == found.lower_bound
 
 
+def test_clusters_that_could_not_be_checked_in_time_stand_aside() -> None:
+    found, _ = run(crowded(150, 10, 2), seconds=0.1, clusters=True)
+    assert found.beside is None
+    assert found.certificate().method == "cycles"
+
+
 def test_promising_are_problems_full_of_small_dense_parts() -> None:
     assert promising(crowded(150, 10, 2))
     assert promising(make("beacons", 150, seed=1))
