@@ -45,11 +45,6 @@ def settled(problem: Problem, spins: I8) -> I8:
     return spins if problem.encoding is None else problem.encoding.decode(spins).spins
 
 
-def spoken(problem: Problem, spins: I8) -> list[str]:
-    """The answer in lines for a terminal; the first says whether it is valid."""
-    return list(answer_lines(problem, encoding_of(problem).decode(spins)))
-
-
 def answered(problem: Problem, found: I8) -> dict[str, Any]:
     """A configuration that was found, as fields of a solution: mended where that is cheap, judged, told in words."""
     decoded, is_encoded = encoding_of(problem).decode(found), problem.encoding is not None
