@@ -9,8 +9,8 @@ from patchwalk.problem.ising import Problem
 from patchwalk.subsolvers.contract import I8
 
 
-def answer_for(problem: Problem, spins: I8) -> tuple[bool, dict[str, Any]]:
-    """Whether the configuration is feasible, and what it means.
+def _told(problem: Problem, answer: Answer) -> dict[str, Any]:
+    """What a configuration means.
 
     ``ising``: the spin of every name (none where spins have no names). ``maxcut``: the cut, recounted edge by edge,
     and the two parts by name or, where there are no names, by number from 1. ``beacons``: the channel of every
@@ -18,11 +18,6 @@ def answer_for(problem: Problem, spins: I8) -> tuple[bool, dict[str, Any]]:
     objective recomputed, a ``verdict``, the constraints ``broken``, those ``mended`` by a cheap repair and what that
     ``changed``.
     """
-    answer = encoding_of(problem).decode(spins)
-    return answer.feasible, _told(problem, answer)
-
-
-def _told(problem: Problem, answer: Answer) -> dict[str, Any]:
     if problem.encoding is None:
         return dict(answer.value)
     return {

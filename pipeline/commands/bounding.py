@@ -20,7 +20,7 @@ from typing import Any, Protocol
 from patchwalk.bounds.certificate import Certificate, check
 from patchwalk.bounds.narrow import narrow_order
 from patchwalk.bounds.planar import MOST_FRUSTRATED, frustrated_faces, is_planar, planar_minimum
-from patchwalk.commands.answers import answer_for
+from patchwalk.commands.answers import answered
 from patchwalk.commands.bound_task import DEFAULT_SUBSOLVER, BoundTask, bound_task_from, default_size
 from patchwalk.commands.interrupts import listening
 from patchwalk.evidence.certificates import store_certificate, store_node_log
@@ -248,17 +248,17 @@ def _result(search: BoundSearch, compile_seconds: float, run_path: Path | None) 
     problem, seconds = search.problem, search.elapsed
     certificate = search.certificate()
     proved = check(problem, certificate)
-    energy = problem.energy(search.best_spins)
-    feasible, answer = answer_for(problem, search.best_spins)
+    told = answered(problem, search.best_spins)
+    energy = told["energy"]
     status, message = search.status, search.message
     if status == "proved_optimal" and proved < energy - problem.tie_tolerance:
         status, message = "budget", "the certificate proves less than the search took it for"
     return Bound(
-        spins=search.best_spins, energy=energy, lower_bound=proved,
+        spins=told["spins"], energy=energy, lower_bound=proved,
         gap=max(0.0, energy - proved) / max(1.0, abs(energy)),
         status=status, message=message, proof=search.proof,
-        objective=problem.objective(energy), objective_bound=problem.objective(proved),
-        objective_name=problem.objective_name, feasible=feasible, answer=answer, seconds=seconds,
+        objective=told["objective"], objective_bound=problem.objective(proved),
+        objective_name=problem.objective_name, feasible=told["feasible"], answer=told["answer"], seconds=seconds,
         compile_seconds=compile_seconds, nodes=search.node_count, open_nodes=search.open_count,
         calls=search.incumbent.calls, failed_calls=search.incumbent.failed_calls, seed=search.seed,
         certificate=certificate, log=tuple(_finite(line) for line in search.log), run_path=run_path,

@@ -131,17 +131,18 @@ def worths_of(replayed: Replayed, rival: str, baseline: str, costs: F64 | None =
 
 def _members(replayed: Replayed, parameter: str, without: float, baseline: str) -> tuple[Member, ...]:
     """The members of a family from the least noise, or effort, to the most, on the calls that all were replayed on;
-    empty where there is no family."""
+    empty where there is no family or no such call."""
     members = []
     given = _costs(replayed, parameter)
     worths = {rival: worths_of(replayed, rival, baseline, given) for rival in family(replayed, parameter)}
     worths = {rival: own for rival, own in worths.items() if not np.isnan(own).all()}
-    shared = ~np.isnan(np.stack(list(worths.values()))).any(axis=0) if worths else np.zeros(len(replayed), np.bool_)
+    known = ~np.isnan(np.stack(list(worths.values()))).any(axis=0) if worths else np.zeros(len(replayed), np.bool_)
+    if not known.any():
+        return ()
     for rival, setting in family(replayed, parameter).items():
         if rival not in worths:
             continue
         answers, worth = replayed.answers[rival], worths[rival]
-        known = shared if shared.any() else ~np.isnan(worth)
         runs, w = replayed.runs[known], answers.weights[known]
         drops, costs = answers.drops[known], (answers.costs if given is None else given)[known]
         members.append(

@@ -39,5 +39,5 @@ def read_fields(path: PathLike, problem: Problem) -> tuple[npt.NDArray[np.float6
             seen[places[name]] += 1
     repeated = int(np.count_nonzero(seen > 1))
     if repeated:
-        notes.append(f"{repeated} spins have more than one row of fields; their values were summed")
+        notes.append(f"spins with more than one row of fields, whose values were summed: {repeated}")
     return fields, notes

@@ -13,12 +13,13 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 import patchwalk
-from patchwalk.commands.answers import answer_for, answered, settled
+from patchwalk.commands.answers import answered, settled
 from patchwalk.interface.solution_text import in_words
 from patchwalk.problem import encodings
 from patchwalk.problem.decoding import audit_answer, encoding_of, read_answer, verdict, write_answer
 from patchwalk.problem.families import make
 from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.subsolvers.contract import I8
 
 PATH = [(0, 1), (1, 2), (2, 3)]
 NAMES = ["ash", "bay, the", "cob", "Dünë"]
@@ -69,12 +70,18 @@ def test_spins_alone_are_audited_without_any_repair(name: str, tmp_path: Path) -
             assert problem.objective(problem.energy(spins)) == pytest.approx(objective, abs=1e-12)
 
 
+def told(problem: Problem, spins: I8) -> tuple[bool, dict[str, Any]]:
+    """Whether the answer is feasible, and what it says."""
+    fields = answered(problem, spins)
+    return fields["feasible"], fields["answer"]
+
+
 @pytest.mark.parametrize("name", PROBLEMS)
 def test_what_solve_prints_can_be_audited(name: str) -> None:
     problem = PROBLEMS[name]
     for seed in range(8):
         spins = settled(problem, random_spins(problem, seed))
-        feasible, said = answer_for(problem, spins)
+        feasible, said = told(problem, spins)
         printed = json.loads(json.dumps({"spins": spins.tolist(), "answer": said}))
         objective, audited, broken = audit_answer(problem, printed)
         assert audited == feasible
@@ -105,7 +112,7 @@ def test_verdicts() -> None:
 
 def test_a_repair_is_reported_and_the_spins_are_those_of_the_answer() -> None:
     problem = PROBLEMS["independent_set"]
-    feasible, said = answer_for(problem, np.array([-1, -1, 1, -1], np.int8))
+    feasible, said = told(problem, np.array([-1, -1, 1, -1], np.int8))
     assert feasible
     assert said["repaired"] is True
     assert said["verdict"] == "valid after a repair: 1 constraint had been broken"
@@ -172,13 +179,13 @@ def test_solve_and_resume_tell_of_a_repair_in_the_answer_they_write(tmp_path: Pa
 
 def test_what_no_repair_mends_is_not_valid() -> None:
     problem = encodings.encode_max2sat([[1, 2], [-2], [2]], [1, math.inf, math.inf])
-    feasible, said = answer_for(problem, np.array([1, -1], np.int8))
+    feasible, said = told(problem, np.array([1, -1], np.int8))
     assert not feasible
     assert said["verdict"] == "NOT VALID: 1 constraint broken"
     assert said["broken"] == ["clause 2 (not 2) is not satisfied"]
     assert said["repaired"] is False
     triangle = encodings.encode_colouring([(0, 1), (1, 2), (2, 0)], 2)
-    feasible, said = answer_for(triangle, np.ones(6, np.int8))
+    feasible, said = told(triangle, np.ones(6, np.int8))
     assert not feasible
     assert said["verdict"] == "NOT VALID: 3 constraints broken"
     assert said["broken"][0] == "1 has no colours"

@@ -29,7 +29,7 @@ def test_fields_come_from_a_file_of_their_own(tmp_path):
     problem = read_problem(pairs, "ising", field_file=written(tmp_path, "fields.csv", FIELDS))
     assert problem.fields.tolist() == [-1.5, 3, 4]
     assert "line 1 was read as a header: 'field' is not a number" in problem.notes
-    assert "1 spins have more than one row of fields; their values were summed" in problem.notes
+    assert "spins with more than one row of fields, whose values were summed: 1" in problem.notes
     edges = written(tmp_path, "G.txt", "3 2\n1 2 1\n2 3 1\n")
     numbered = read_problem(edges, "ising", field_file=written(tmp_path, "numbered.csv.gz", "3;7\n1;-2\n"))
     assert numbered.fields.tolist() == [-2, 0, 7]

@@ -20,8 +20,10 @@ import numpy as np
 import pytest
 
 import patchwalk
-from patchwalk.commands.bounding import bounds_for
+from patchwalk.commands.bounding import _result, bounds_for, search_for
 from patchwalk.evidence.runfile import RunFileError, RunWriter
+from patchwalk.problem.encodings import encode_independent_set
+from patchwalk.search.bound_search import BranchPlan
 from patchwalk.settings_checks import SettingsError
 from patchwalk.subsolvers.contract import ClusterBatch, Edges
 from patchwalk.subsolvers.registry import make_subsolver
@@ -426,3 +428,19 @@ def test_clusters_of_its_own_choice_can_be_answered(tmp_path: Path) -> None:
     found = patchwalk.bound(glass, run=tmp_path / "bound.sqlite")
     with closing(sqlite3.connect(tmp_path / "bound.sqlite")) as database:
         assert database.execute("SELECT count(*), max(status) FROM calls").fetchone() == (found.calls, 0)
+
+
+def test_energy_and_objective_are_those_of_the_answer_that_is_told() -> None:
+    edges = [(i, j) for i in range(14) for j in range(i) if (i * j) % 3 == 1]
+    problem = encode_independent_set(edges, names=[f"site {i}" for i in range(14)])
+    everybody = np.full(len(problem), -1, np.int8)  # broken, and mended
+    search = search_for(problem, "cycles")(
+        problem, make_subsolver("elimination"), BranchPlan(1.0, 1, 8, heuristic=False), 1, everybody, lambda: True
+    )
+    search.prepare()
+    assert list(search.rounds()) == []  # interrupted at once
+    found = _result(search, 0.0, None)
+    assert found.feasible
+    assert found.answer["repaired"]
+    assert found.energy == pytest.approx(problem.energy(found.spins))
+    assert found.objective == found.answer[problem.objective_name]
