@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import json
 from collections.abc import Callable, Iterator
 from pathlib import Path
 from typing import Any
@@ -11,35 +10,37 @@ import numpy as np
 
 from patchwalk.commands.answers import answered, settled
 from patchwalk.commands.interrupts import listening
+from patchwalk.commands.resampling import carry_on_sampling, holds_sampling
+from patchwalk.commands.sampling import Sampled, SilentSampleWatcher
 from patchwalk.commands.solving import Silent, Solution, Watcher, best_of, carry_out_one, delivered, hired, runs_of
-from patchwalk.commands.tasks import Task, policy_of, read_again
+from patchwalk.commands.stored_tasks import bits_may_differ, changes_allowed, check_settings_file, problem_of
+from patchwalk.commands.tasks import Task, policy_of
 from patchwalk.evidence.layout import RunFileError, undamaged, unpacked, unpacked_rows
 from patchwalk.evidence.runfile import RunFile
 from patchwalk.evidence.stored import StoredFile, StoredRun, stored_file
-from patchwalk.problem.ising import Problem, ProblemError
+from patchwalk.problem.ising import Problem
 from patchwalk.search.neighbourhood import NeighbourhoodSearch
 from patchwalk.settings import SolveSettings
-from patchwalk.settings_checks import SettingsError, read_settings
 from patchwalk.subsolvers.contract import I8
-from patchwalk.workers import Workers, versions
+from patchwalk.workers import Workers
 
 UNFINISHED = ("running", "interrupted", "error")
-CHANGEABLE = ("workers", "engine", "scheduler", "mixed_workers")
-"""Settings that change no bit of a result and may be given anew."""
 
 
-def resume(run: str | Path, problem: Problem | None = None, **given: Any) -> Solution:
-    """Go on with the runs of a run file; what has ended already is given back as it is.
+def resume(run: str | Path, problem: Problem | None = None, **given: Any) -> Solution | Sampled:
+    """Go on with the runs of a run file of ``solve`` or ``sample``; what has ended already is given back as it is.
 
     ``problem`` is needed only where the run began from a :class:`Problem` whose names matter for the answer; ``given``
     may hold ``workers``, ``engine``, ``scheduler`` and ``mixed_workers``. Raises ``RunFileError`` for a file that is
     none, ``SettingsError`` or ``ProblemError`` naming what has changed since.
     """
+    if holds_sampling(Path(run)):
+        return carry_on_sampling(Path(run), given, SilentSampleWatcher(), problem)
     return carry_on(Path(run), given, Silent(), problem)
 
 
 def carry_on(path: Path, given: dict[str, Any], watcher: Watcher, problem: Problem | None = None) -> Solution:
-    """:func:`resume`, watched."""
+    """:func:`resume` for runs of ``solve``, watched."""
     with stored_file(path) as stored:
         runs = stored.runs()
         if not runs:
@@ -47,7 +48,7 @@ def carry_on(path: Path, given: dict[str, Any], watcher: Watcher, problem: Probl
         task = _task_of(path, stored, runs[0], problem, given)
         ended = {run.seed: _solution_of(stored, run, task) for run in runs if run.status not in UNFINISHED}
         begun = {run.seed: (run, stored.last_checkpoint(run.number, task.problem)) for run in runs}
-    watcher.understood([task.problem.summary(), *_bits_may_differ(runs[-1])])
+    watcher.understood([task.problem.summary(), *bits_may_differ(runs[-1])])
     seeds = task.settings.every_seed
     if all(seed in ended for seed in seeds):
         return delivered(task, best_of(task, [ended[seed] for seed in seeds]))
@@ -79,16 +80,10 @@ def _task_of(
 ) -> Task:
     """The task as it was when the run began; refuses where settings or problem have changed since."""
     _refuse_other_commands(path, stored, run)
-    _check_settings_file(run)
-    unknown = [key for key in given if key not in CHANGEABLE]
-    if unknown:
-        raise SettingsError(
-            [f"{unknown[0]} cannot be changed when a run is resumed; it may be: {', '.join(CHANGEABLE)}"]
-        )
-    changed = {"workers": None, "scheduler": None, "engine": "threads", **given}
-    settings = SolveSettings.model_validate({**run.settings, **changed, "run": path})
+    check_settings_file(run)
+    settings = SolveSettings.model_validate({**run.settings, **changes_allowed(given), "run": path})
     kept = stored.problem(run.problem)
-    problem = _problem_of(run, kept, settings, given_problem)
+    problem = problem_of(run, kept, settings, given_problem)
     assert settings.cluster_size is not None
     return Task(
         problem=problem,
@@ -104,47 +99,12 @@ def _task_of(
 
 
 def _refuse_other_commands(path: Path, stored: StoredFile, run: StoredRun) -> None:
-    """Only runs of ``solve`` are resumed; the others say how they go on."""
+    """Runs of other commands say how they go on."""
     tables = {row["name"] for row in stored.rows("SELECT name FROM sqlite_master WHERE type = 'table'")}
     if "compared_runs" in tables:
         raise RunFileError(f"{path}: holds compared runs; the same patchwalk compare command goes on with them")
     if run.settings.get("command") == "bound":
         raise RunFileError(f"{path}: holds a bound; patchwalk bound INPUT --earlier {path} goes on with it")
-    if "burn_in" in run.settings:
-        raise RunFileError(f"{path}: holds a sampling run, which cannot be resumed; sample anew with more rounds")
-
-
-def _check_settings_file(run: StoredRun) -> None:
-    """Refuse a settings file that says something else now, naming the key."""
-    path = Path(run.settings_file)
-    if not run.settings_file or not path.exists():
-        return
-    now = json.loads(json.dumps(read_settings(path)[1], default=str))
-    for key in sorted({*now, *run.settings_table}):
-        if now.get(key) != run.settings_table.get(key):
-            raise SettingsError([
-                f"{path}: {key} is {now.get(key, 'left out')!r} now, the run began with "
-                f"{run.settings_table.get(key, 'none')!r}; put it back, or begin a new run with solve"
-            ])  # fmt: skip
-
-
-def _problem_of(run: StoredRun, kept: Problem, settings: SolveSettings, given: Problem | None) -> Problem:
-    """The problem from where it came from, names and all, if it is still there and the same; else as it was kept."""
-    place = "the problem given"
-    found = given
-    if found is None:
-        if not Path(run.source).is_file():
-            return kept
-        place, found = run.source, read_again(run.source, settings)
-    if found.fingerprint == kept.fingerprint:
-        return found
-    facts = ("kind", "offset", "row_starts", "neighbours", "couplings", "fields", "groups")
-    differing = next(name for name in facts if not np.array_equal(getattr(found, name), getattr(kept, name)))
-    words = {"row_starts": "couplings", "neighbours": "couplings"}
-    raise ProblemError(
-        f"{place}: the {words.get(differing, differing)} are not those the run began with; put the file back, or begin "
-        "a new run with solve"
-    )
 
 
 def _start_of(stored: StoredFile, run: StoredRun, settings: SolveSettings, problem: Problem) -> I8 | None:
@@ -155,14 +115,6 @@ def _start_of(stored: StoredFile, run: StoredRun, settings: SolveSettings, probl
     row = next(stored.rows(query, (run.number,)))
     with undamaged(stored.path, f"the start of run {run.number}"):
         return unpacked_rows(row["spins"], len(problem))[-1]  # the coldest replica
-
-
-def _bits_may_differ(run: StoredRun) -> list[str]:
-    differing = [key for key, value in versions().items() if run.versions.get(key) != value]
-    if not differing:
-        return []
-    key = differing[0]
-    return [f"the run began with {key} {run.versions.get(key)}, here it is {versions()[key]}: bits may differ"]
 
 
 def _solution_of(stored: StoredFile, run: StoredRun, task: Task) -> Solution:

@@ -7,17 +7,19 @@ from dataclasses import dataclass
 from pathlib import Path
 from typing import Any, Protocol
 
-import numpy as np
-
 from patchwalk.commands.interrupts import listening
 from patchwalk.commands.solving import hired
 from patchwalk.commands.tasks import SamplingTask, sample_task_from
+from patchwalk.evidence.kept_answers import KeptAnswers
 from patchwalk.evidence.layout import packed
-from patchwalk.evidence.runfile import Measured, RunFacts, RunFile, RunWriter
+from patchwalk.evidence.measured import Measured, MeasuredPart
+from patchwalk.evidence.runfile import RunFacts, RunFile, RunWriter
+from patchwalk.evidence.stored import StoredRun
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Snapshot
-from patchwalk.search.observables import Level
+from patchwalk.search.observables import Level, Observables
 from patchwalk.search.sampling import BoltzmannSampling
+from patchwalk.subsolvers.contract import F64
 from patchwalk.subsolvers.registry import spelled
 
 
@@ -115,25 +117,50 @@ def carry_out(task: SamplingTask, watcher: SampleWatcher) -> Sampled:
         sampling = BoltzmannSampling(task.problem, plan, seed, task.start, interrupted, workers)
         runfile = RunFile(task.run_path)
         try:
-            return _carry_out(task, sampling, runfile, watcher)
+            return carry_out_one(task, sampling, runfile, watcher)
         finally:
             runfile.close()
 
 
-def _carry_out(task: SamplingTask, sampling: BoltzmannSampling, runfile: RunFile, watcher: SampleWatcher) -> Sampled:
+def carry_out_one(
+    task: SamplingTask,
+    sampling: BoltzmannSampling,
+    runfile: RunFile,
+    watcher: SampleWatcher,
+    earlier: tuple[StoredRun, Snapshot] | None = None,
+) -> Sampled:
+    """One run, or the rest of an ``earlier`` one that ``sampling`` has taken up: measured, recorded, averaged."""
     watcher.compiling()
     began = time.perf_counter()
     sampling.prepare()
     compile_seconds = time.perf_counter() - began
     watcher.compiled(compile_seconds)
-    writer = runfile.begin(_facts(task, sampling), _snapshot(sampling, 0.0))
-    began = time.perf_counter()
+    if earlier is None:
+        before, writer = 0.0, runfile.begin(_facts(task, sampling), sampling.snapshot(0.0))
+    else:
+        run, state = earlier
+        before, writer = state.seconds, runfile.take_up(run.number, task.problem, run.rows, state)
+    sampling.caller.ask = KeptAnswers(runfile, writer.run).answers
+    began, written = time.perf_counter(), sampling.observables.measured
     for round_ in sampling.sample():
         writer.add(round_)
+        spent = before + time.perf_counter() - began
         if writer.due:
-            writer.close_group(_snapshot(sampling, time.perf_counter() - began))
-        watcher.measured(sampling, time.perf_counter() - began)
-    return _finished(task, sampling, writer, time.perf_counter() - began, compile_seconds)
+            written = _hand_over(writer, sampling, written)
+            writer.close_group(sampling.snapshot(spent))
+        watcher.measured(sampling, spent)
+    _hand_over(writer, sampling, written)
+    return _finished(task, sampling, writer, before + time.perf_counter() - began, compile_seconds)
+
+
+def _hand_over(writer: RunWriter, sampling: BoltzmannSampling, written: int) -> int:
+    """Give the writer what was measured since ``written`` measurements were; how many there are now."""
+    seen = sampling.observables
+    new = slice(written, seen.measured)
+    if seen.measured > written:
+        series = (seen.energies[new], seen.magnetisations[new], seen.overlaps[new])
+        writer.add_part(MeasuredPart(written, *(one.tobytes() for one in series)))
+    return seen.measured
 
 
 def _finished(
@@ -143,23 +170,26 @@ def _finished(
     whole = measured == plan.rounds
     status, message = ("budget", f"all {measured:,} rounds were measured") if whole else (
         "interrupted", f"interrupted; {measured:,} of {plan.rounds:,} rounds were measured")  # fmt: skip
-    levels = tuple(
-        sampling.observables.at_level(level, float(temperature), len(task.problem))
-        for level, temperature in enumerate(plan.temperatures)
-        if measured > 1
-    )
-    state = _snapshot(sampling, seconds)
+    state = sampling.snapshot(seconds)
     writer.finish(
         state, status=status, message=message, calls=sampling.calls, failed_calls=sampling.failed_calls,
         skipped=sampling.caller.skipped, sweeps=sampling.sweeps, seconds=seconds, compile_seconds=compile_seconds,
         energy=state.best_energy, objective=task.problem.objective(state.best_energy), spins=packed(state.best_spins),
     )  # fmt: skip
-    writer.add_measurements(_series(sampling))
+    writer.write_measurements(_series(sampling), ended=whole)
     return Sampled(
-        levels=levels, status=status, message=message, rounds=measured, burn_in=plan.burn_in, calls=sampling.calls,
-        failed_calls=sampling.failed_calls, sweeps=sampling.sweeps, seconds=seconds, compile_seconds=compile_seconds,
-        seed=sampling.seed, run_path=task.run_path,
+        levels=levels_of(sampling.observables, plan.temperatures, len(task.problem)), status=status, message=message,
+        rounds=measured, burn_in=plan.burn_in, calls=sampling.calls, failed_calls=sampling.failed_calls,
+        sweeps=sampling.sweeps, seconds=seconds, compile_seconds=compile_seconds, seed=sampling.seed,
+        run_path=task.run_path,
     )  # fmt: skip
+
+
+def levels_of(seen: Observables, temperatures: F64, size: int) -> tuple[Level, ...]:
+    """The averages at each temperature of a problem of ``size`` spins; none of fewer than two measured rounds."""
+    if seen.measured < 2:
+        return ()
+    return tuple(seen.at_level(level, float(one), size) for level, one in enumerate(temperatures))
 
 
 def _series(sampling: BoltzmannSampling) -> list[Measured]:
@@ -181,16 +211,4 @@ def _facts(task: SamplingTask, sampling: BoltzmannSampling) -> RunFacts:
     return RunFacts(
         problem=task.problem, source=task.source, seed=sampling.seed, subsolver=callers, settings=settings,
         settings_file=task.settings_file, settings_table=task.settings_table, rows=task.settings.record,
-    )  # fmt: skip
-
-
-def _snapshot(sampling: BoltzmannSampling, seconds: float) -> Snapshot:
-    replicas = sampling.replicas
-    lowest = int(np.argmin(replicas.energies))
-    return Snapshot(
-        round=sampling.round, calls=sampling.calls, sweeps=sampling.sweeps, seconds=seconds,
-        spins=replicas.spins.copy(), local_fields=replicas.local_fields.copy(), energies=replicas.energies.copy(),
-        best_energy=float(replicas.energies[lowest]), best_spins=replicas.spins[lowest].copy(),
-        elites=np.empty((0, len(sampling.problem)), np.int8), counts=sampling.counts.copy(),
-        details={"ladders": [ladder.as_state() for ladder in sampling.ladders]},
     )  # fmt: skip

@@ -18,7 +18,7 @@ from dataclasses import dataclass
 from datetime import UTC, datetime
 from importlib.metadata import version
 from pathlib import Path
-from typing import Any, NamedTuple
+from typing import Any
 
 import numpy as np
 
@@ -33,6 +33,7 @@ from patchwalk.evidence.layout import (
     packed,
     problem_blob,
 )
+from patchwalk.evidence.measured import Measured, MeasuredPart, write_part, write_series
 from patchwalk.problem.ising import Problem
 from patchwalk.records import Calls, Improvement, Round, Snapshot
 from patchwalk.subsolvers.contract import WORK_FIELDS, ClusterBatch, Status, Subsolver
@@ -50,16 +51,6 @@ TallyKey = tuple[str, str, int, int]
 """Subsolver, rule, spins in a cluster, tenth of the run."""
 
 SHARE_WORD = 0x7368617265000000
-
-
-class Measured(NamedTuple):
-    """The series measured at one temperature, as bytes of float64: energies and mean spins (rounds, copies)."""
-
-    temperature: float
-    copies: int
-    energies: bytes
-    magnetisations: bytes
-    overlaps: bytes
 
 
 @dataclass(frozen=True, eq=False)
@@ -213,6 +204,8 @@ class RunWriter:
                     (self.run, self._group, self._first_round, self._last_round, self._calls, len(self._rows), stages),
                 )
                 self._group += 1
+            for part in self._parts:
+                write_part(database, self.run, part)
             self._checkpoint(state)
             database.execute("DELETE FROM kept_answers WHERE run = ?", (self.run,))
         self.rows_written += len(self._rows)
@@ -225,10 +218,14 @@ class RunWriter:
         with self._writing() as database:
             database.execute(f"UPDATE runs SET {columns} WHERE run = ?", (*facts.values(), self.run))
 
-    def add_measurements(self, series: Iterable[Measured]) -> None:
-        """Write the series that a sampling run measured."""
+    def add_part(self, part: MeasuredPart) -> None:
+        """Take in what was measured since the last group; it is written when the next one closes."""
+        self._parts.append(part)
+
+    def write_measurements(self, series: Iterable[Measured], ended: bool) -> None:
+        """Write the series that a sampling run measured; unless it has ``ended``, their parts are kept for a resume."""
         with self._writing() as database:
-            database.executemany("INSERT INTO measurements VALUES (?,?,?,?,?,?)", [(self.run, *one) for one in series])
+            write_series(database, self.run, series, ended)
 
     @contextlib.contextmanager
     def _writing(self) -> Iterator[sqlite3.Connection]:
@@ -244,6 +241,7 @@ class RunWriter:
         self._rows: list[tuple[Any, ...]] = []
         self._stages: list[float] = []
         self._improvements: list[Improvement] = []
+        self._parts: list[MeasuredPart] = []
 
     def _spelling(self, subsolver: Subsolver) -> str:
         """The subsolver as text, spelled once; the object is held so that its identity stays its own."""

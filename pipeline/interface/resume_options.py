@@ -26,15 +26,21 @@ def resume_command(run: Path, as_json: bool, quiet: bool, **given: Any) -> None:
     patchwalk solve glass.txt --calls 5000 --run glass.sqlite
     patchwalk resume glass.sqlite --workers 1
 
-    Budgets are totals. A run with counted budgets ends with the very bits it would have had without the break, on the
-    same kind of processor with the same library versions. A problem or settings file that has changed is refused.
+    Budgets are totals. A run with counted budgets, or one of sample, ends with the very bits it would have had without
+    the break, on the same kind of processor with the same library versions. A problem or settings file that has changed
+    is refused.
     """
+    from patchwalk.commands.resampling import carry_on_sampling, holds_sampling
     from patchwalk.commands.resuming import carry_on
     from patchwalk.interface.progress import Narrator
+    from patchwalk.interface.sample_options import Teller, leave_with_averages
     from patchwalk.interface.solution_text import in_words
 
+    chosen = {key: value for key, value in given.items() if value is not None}
     try:
-        chosen = {key: value for key, value in given.items() if value is not None}
+        if holds_sampling(run):
+            sampled = carry_on_sampling(run, chosen, Teller(quiet))
+            leave_with_averages(sampled, as_json)
         solution = carry_on(run, chosen, Narrator(quiet))
     except Exception as error:
         fail(error, as_json)

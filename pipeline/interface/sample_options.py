@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import time
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, NoReturn
 
 import click
 from rich.console import Console
@@ -31,6 +31,7 @@ def sample_command(source: str, as_json: bool, quiet: bool, **given: Any) -> Non
     patchwalk sample glass.txt --temperatures 0.8 --subsolver elimination,draw=boltzmann --rule strip --rounds 300
 
     Every average comes with its autocorrelation time, the number of independent values it is worth, and an error bar.
+    A run that was stopped or killed goes on with patchwalk resume.
     What would sample another law is refused with the reason: subsolvers without detailed balance, and rules or
     conditions that look at the spins. Temperatures are in energy units.
     """
@@ -43,6 +44,11 @@ def sample_command(source: str, as_json: bool, quiet: bool, **given: Any) -> Non
     except Exception as error:
         fail(error, as_json)
         return
+    leave_with_averages(sampled, as_json)
+
+
+def leave_with_averages(sampled: Sampled, as_json: bool) -> NoReturn:
+    """Print what was measured, and leave."""
     if as_json:
         print_json(sampled.as_json())
     else:

@@ -16,8 +16,8 @@ import numpy as np
 from patchwalk.clusters.mixture import Mixture, RuleWeights
 from patchwalk.clusters.policy import Policy
 from patchwalk.problem.ising import Problem
-from patchwalk.records import Calls, Round
-from patchwalk.search.calling import Caller, Cut, Worth
+from patchwalk.records import Calls, Round, Snapshot
+from patchwalk.search.calling import Caller, Cut, Ready, Worth
 from patchwalk.search.carrying import Carrying
 from patchwalk.search.ladder import Ladder
 from patchwalk.search.neighbourhood import MIXTURE
@@ -25,7 +25,7 @@ from patchwalk.search.observables import Observables
 from patchwalk.search.replicas import Replicas
 from patchwalk.subsolvers.contract import F64, I8, I64, Status
 from patchwalk.subsolvers.draws import seed_for
-from patchwalk.subsolvers.registry import spelled
+from patchwalk.subsolvers.registry import spelled, subsolver_from
 from patchwalk.workers import Serial, Workers
 
 ADMISSIBLE = (
@@ -121,6 +121,39 @@ class BoltzmannSampling:
                 yield self._one_round()
         finally:
             self.caller.release()
+
+    def snapshot(self, seconds: float) -> Snapshot:
+        """The state between two rounds, from which :meth:`go_on_from` goes on to the same bits; series stand apart."""
+        replicas = self.replicas
+        lowest = int(np.argmin(replicas.energies))
+        details = {
+            "ladders": [ladder.as_state() for ladder in self.ladders],
+            "rules": self.weights.as_state(),
+            "skipped": self.caller.skipped,
+            "failed_calls": self.failed_calls,
+            "ready": [(one.case, one.size, spelled(one.subsolver)) for one in self.caller.by_size or ()],
+        }
+        return Snapshot(
+            round=self.round, calls=self.calls, sweeps=self.sweeps, seconds=seconds,
+            spins=replicas.spins.copy(), local_fields=replicas.local_fields.copy(), energies=replicas.energies.copy(),
+            best_energy=float(replicas.energies[lowest]), best_spins=replicas.spins[lowest].copy(),
+            elites=np.empty((0, len(self.problem)), np.int8), counts=self.counts.copy(), details=details,
+        )  # fmt: skip
+
+    def go_on_from(self, state: Snapshot) -> None:
+        """Take up a run where :meth:`snapshot` left it; ``observables`` must hold what was measured until then."""
+        details = state.details
+        self.round, self.calls, self.sweeps = state.round, state.calls, state.sweeps
+        self.replicas.spins[:], self.replicas.local_fields[:] = state.spins, state.local_fields
+        self.replicas.energies[:] = state.energies
+        self.counts[:] = state.counts
+        for ladder, kept in zip(self.ladders, details["ladders"], strict=True):
+            ladder.set_state(kept)
+        self.weights = RuleWeights.from_state(self.rules, details["rules"])
+        self.caller.skipped, self.failed_calls = details["skipped"], details["failed_calls"]
+        self.caller.by_size = tuple(
+            Ready(case, size, subsolver_from(spelling)) for case, size, spelling in details["ready"]
+        )
 
     @property
     def stage(self) -> float:

@@ -16,7 +16,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from patchwalk import bound, make, resume, sample, solve, write_problem
+from patchwalk import bound, make, resume, solve, write_problem
 from patchwalk.evidence.layout import RunFileError, unpacked_rows
 from patchwalk.problem.ising import Problem, ProblemError
 from patchwalk.settings_checks import SettingsError
@@ -226,9 +226,6 @@ def test_what_has_changed_is_named(tmp_path: Path) -> None:
 
 def test_runs_of_other_commands_say_how_they_go_on(tmp_path: Path) -> None:
     ring = Problem.from_arrays(range(9), [*range(1, 9), 0], [1.0] * 9)
-    sample(ring, cluster_size=3, subsolver="walk,start=incumbent", rounds=3, run=tmp_path / "sampled.sqlite")
-    with pytest.raises(RunFileError, match="sampling run, which cannot be resumed"):
-        resume(tmp_path / "sampled.sqlite")
     bound(ring, run=tmp_path / "bound.sqlite")
     with pytest.raises(RunFileError, match="holds a bound; patchwalk bound INPUT --earlier"):
         resume(tmp_path / "bound.sqlite")
