@@ -10,7 +10,7 @@ import numpy as np
 
 from patchwalk.commands.answers import answered, settled
 from patchwalk.commands.interrupts import listening
-from patchwalk.commands.resampling import carry_on_sampling, holds_sampling
+from patchwalk.commands.resuming_sampling import carry_on_sampling, holds_sampling
 from patchwalk.commands.sampling import Sampled, SilentSampleWatcher
 from patchwalk.commands.solving import Silent, Solution, Watcher, best_of, carry_out_one, delivered, hired, runs_of
 from patchwalk.commands.stored_tasks import bits_may_differ, changes_allowed, check_settings_file, problem_of

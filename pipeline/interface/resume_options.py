@@ -30,8 +30,8 @@ def resume_command(run: Path, as_json: bool, quiet: bool, **given: Any) -> None:
     the break, on the same kind of processor with the same library versions. A problem or settings file that has changed
     is refused.
     """
-    from patchwalk.commands.resampling import carry_on_sampling, holds_sampling
     from patchwalk.commands.resuming import carry_on
+    from patchwalk.commands.resuming_sampling import carry_on_sampling, holds_sampling
     from patchwalk.interface.progress import Narrator
     from patchwalk.interface.sample_options import Teller, leave_with_averages
     from patchwalk.interface.solution_text import in_words
