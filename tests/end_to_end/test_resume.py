@@ -138,10 +138,11 @@ def test_an_interrupted_run_goes_on_to_the_same_bits(tmp_path: Path) -> None:
 
 
 class Fickle:
-    """Answers that are never the same twice, and a list of what was asked."""
+    """Answers that are never the same twice, a list of what was asked, and one Ctrl-C when patience is at its end."""
 
     name, max_spins, deterministic, balance = "fickle", 20, False, "none"
     asked: list[int]
+    interrupted = False
 
     def __init__(self, patience: int) -> None:
         self._inner, self._patience, self.asked = subsolver_from("uniform"), patience, []
@@ -153,7 +154,8 @@ class Fickle:
         return self._inner.forecast(batch)
 
     def propose(self, batch: ClusterBatch) -> Proposals:
-        if len(self.asked) > self._patience:
+        if len(self.asked) > self._patience and not self.interrupted:
+            self.interrupted = True  # a second one would end the whole process
             os.kill(os.getpid(), signal.SIGINT)
         self.asked.extend(batch.seeds.tolist())
         answer = self._inner.propose(batch)
@@ -164,7 +166,9 @@ class Fickle:
 def test_what_cannot_be_asked_again_is_not(tmp_path: Path, monkeypatch: pytest.MonkeyPatch) -> None:
     monkeypatch.setattr("patchwalk.evidence.runfile.GROUP_SECONDS", 1e9)  # no checkpoint but the first
     moody = Fickle(300)
-    first = solve(GLASS, subsolver=moody, cluster_size=8, calls=400, clusters_per_round=8, run=tmp_path / "run.sqlite")
+    first = solve(
+        GLASS, subsolver=moody, cluster_size=8, calls=40_000, clusters_per_round=8, run=tmp_path / "run.sqlite"
+    )
     assert first.status == "interrupted"
     with closing(sqlite3.connect(tmp_path / "run.sqlite")) as database:
         asked_before = {row[0] for row in database.execute("SELECT seed FROM calls")}
