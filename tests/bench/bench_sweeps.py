@@ -79,7 +79,7 @@ def one_by_one(problem: Problem) -> None:
     per_call = max(1, 10_000 // len(problem))
     calls = max(50, 1_000_000 // len(problem) // per_call)
     cooling = GeometricCooling(1.0, 0.05, problem.field_scale)
-    temperatures = [cooling.at(call / (calls - 1)) for call in range(calls)]
+    temperatures = [float(cooling.at(call / (calls - 1))[0]) for call in range(calls)]
     graph, carrier = (problem.row_starts, problem.neighbours, problem.couplings), carrier_for(problem)
 
     def plainly(spins: I8, local: F64, run: int) -> None:
