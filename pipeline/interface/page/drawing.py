@@ -138,25 +138,16 @@ def wrapped(text: str, letters: int = 56) -> str:
     return "\n".join(textwrap.wrap(text, letters))
 
 
-def spread_scale(axes: Axes, values: Sequence[float]) -> bool:
-    """Make the upright axis linear near zero and logarithmic beyond where values differ in size a hundredfold."""
+def spread_scale(axes: Axes, values: Sequence[float], across: bool = False) -> bool:
+    """Make the upright axis, or that ``across``, linear near zero and logarithmic beyond where values differ in size a
+    hundredfold."""
     limit = _linear_limit(values)
     if limit is None:
         return False
-    axes.set_yscale("symlog", linthresh=limit)
-    plain_log(axes.yaxis)
-    axes.set_ylim(*_room(axes.get_ylim(), values, limit))
-    return True
-
-
-def spread_scale_across(axes: Axes, values: Sequence[float]) -> bool:
-    """The same for the axis across."""
-    limit = _linear_limit(values)
-    if limit is None:
-        return False
-    axes.set_xscale("symlog", linthresh=limit)
-    plain_log(axes.xaxis)
-    axes.set_xlim(*_room(axes.get_xlim(), values, limit))
+    (axes.set_xscale if across else axes.set_yscale)("symlog", linthresh=limit)
+    plain_log(axes.xaxis if across else axes.yaxis)
+    ends = axes.get_xlim() if across else axes.get_ylim()
+    (axes.set_xlim if across else axes.set_ylim)(*_room(ends, values, limit))
     return True
 
 

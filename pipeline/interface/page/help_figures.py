@@ -22,7 +22,6 @@ from patchwalk.interface.page.drawing import (
     marked,
     plain_log,
     spread_scale,
-    spread_scale_across,
 )
 from patchwalk.interface.page.markup import Table
 
@@ -141,7 +140,7 @@ def rivals_figure(profile: Profile, name: str) -> Picture:
     with canvas(62.0 + 42.0 * len(rivals), name) as figure:
         axes = figure.add_subplot()
         rows = [Row(rival, one.value, one.low, one.high) for rival, one in zip(rivals, spreads, strict=True)]
-        bent = spread_scale_across(axes, [one.value for one in spreads])
+        bent = spread_scale(axes, [one.value for one in spreads], across=True)
         interval_rows(axes, rows, 0.0)
         axes.set_xlabel("help per call, energy units: right of zero the call is worth more")
         svg = finished(figure, name)
